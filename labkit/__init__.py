@@ -1,0 +1,52 @@
+"""How much headroom a fleet needs when its work can go only to a few places each."""
+
+from importlib import import_module
+from typing import Any
+
+__version__ = "0.1.0"
+
+# Public name -> module that defines it. Nothing heavy is imported before a name is used.
+_HOMES = {
+    "InputError": "labkit.errors",
+    "StoreError": "labkit.errors",
+    "HeadroomExceeded": "labkit.errors",
+    "TooFewReplicates": "labkit.errors",
+    "Fleet": "labkit.fleet.model",
+    "read_fleet": "labkit.fleet.readers",
+    "fleet_from_graph": "labkit.fleet.graphs",
+    "ring": "labkit.fleet.families",
+    "torus": "labkit.fleet.families",
+    "hypercube": "labkit.fleet.families",
+    "ladder": "labkit.fleet.families",
+    "complete": "labkit.fleet.families",
+    "random_regular": "labkit.fleet.families",
+    "ring_with_chords": "labkit.fleet.families",
+    "OneChoice": "labkit.policies.one_choice",
+    "LeastLoaded": "labkit.policies.least_loaded",
+    "Mixed": "labkit.policies.mixed",
+    "policy": "labkit.policies.own_rule",
+    "Fresh": "labkit.engine.information",
+    "Snapshot": "labkit.engine.information",
+    "place": "labkit.engine.placement",
+    "Outcome": "labkit.engine.placement",
+    "headroom": "labkit.analysis.headroom",
+    "replicates_needed": "labkit.analysis.headroom",
+    "compare": "labkit.analysis.comparison",
+    "begin_run": "labkit.records.run",
+    "begin_answer": "labkit.studies.subject",
+    "read_study_records": "labkit.studies.reading",
+}
+
+__all__ = [*_HOMES, "__version__"]
+
+
+def __getattr__(name: str) -> Any:
+    if name not in _HOMES:
+        raise AttributeError(f"module 'labkit' has no attribute {name!r}")
+    value = getattr(import_module(_HOMES[name]), name)
+    globals()[name] = value
+    return value
+
+
+def __dir__() -> list[str]:
+    return sorted({*globals(), *_HOMES})

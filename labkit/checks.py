@@ -1,0 +1,59 @@
+"""Small checks used at the public door only; each refusal is one sentence."""
+
+import difflib
+import math
+import numbers
+from collections.abc import Iterable
+from typing import Any
+
+from labkit.errors import InputError
+
+
+def check_whole(name: str, value: Any, *, least: int = 1) -> int:
+    """Return `value` as an int when it is a whole number of at least `least`."""
+    whole = isinstance(value, numbers.Integral) and not isinstance(value, bool)
+    if not whole or int(value) < least:
+        raise InputError(f"{name} is {value!r}; give a whole number of at least {least}.")
+    return int(value)
+
+
+def check_number(name: str, value: Any) -> float:
+    """Return `value` as a float when it is a finite real number."""
+    real = isinstance(value, numbers.Real) and not isinstance(value, bool)
+    if not real or not math.isfinite(float(value)):
+        raise InputError(f"{name} is {value!r}; give a finite number.")
+    return float(value)
+
+
+def check_positive(name: str, value: Any) -> float:
+    """Return `value` as a float when it is finite and above zero."""
+    number = check_number(name, value)
+    if number <= 0:
+        raise InputError(f"{name} is {value!r}; give a number above 0.")
+    return number
+
+
+def check_fraction(name: str, value: Any, *, closed: bool = False) -> float:
+    """Return `value` as a float when it lies inside (0, 1), or in [0, 1] when `closed`."""
+    number = check_number(name, value)
+    inside = 0 <= number <= 1 if closed else 0 < number < 1
+    if not inside:
+        bounds = "from 0 to 1" if closed else "above 0 and below 1"
+        raise InputError(f"{name} is {value!r}; give a number {bounds}.")
+    return number
+
+
+def check_member(name: str, value: Any, allowed: Iterable[str]) -> str:
+    """Return `value` when it is one of the `allowed` words; the refusal names the nearest."""
+    words = list(allowed)
+    if value in words:
+        return str(value)
+    raise InputError(f"{name} is {value!r}; {nearest(value, words)}.")
+
+
+def nearest(value: Any, words: Iterable[str]) -> str:
+    """Return the end of a refusal: the nearest allowed word, or the whole list."""
+    words = list(words)
+    close = difflib.get_close_matches(str(value), words, n=1)
+    guess = f"did you mean {close[0]!r}? " if close else ""
+    return f"{guess}allowed: {', '.join(words)}"

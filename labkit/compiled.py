@@ -1,0 +1,150 @@
+"""Everything about compiling in one place: numba's options, its cache, and the few low-level pieces.
+
+Options, each with its reason: ``nogil`` so that replicates run in threads; ``error_model="numpy"`` because a
+checked division costs a branch; no ``fastmath``, because results must be equal to the bit on every machine.
+Indices are unsigned (``np.uint64``), since a signed index costs a wrap-around test.
+
+Numba keys a cached function by its own file only, so an edited helper elsewhere would leave old machine code
+in use. The cache folder here is keyed by a digest of all sources of the package instead.
+"""
+
+import hashlib
+import types
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any
+
+import numba
+import numpy as np
+from llvmlite import ir
+from numba.core import cgutils
+from numba.extending import intrinsic
+from platformdirs import user_cache_path
+
+OPTIONS: dict[str, Any] = {"nogil": True, "error_model": "numpy"}
+
+compiled = numba.njit(**OPTIONS)
+# Inlined before compiling proper: inside a hot loop even an uncalled-for reference count would cost more than
+# the rest of the loop. Such helpers have no array in only one branch, for the same reason.
+inlined = numba.njit(inline="always", **OPTIONS)
+
+
+def source_digest(folder: Path) -> str:
+    """Return a short digest of every Python source below `folder`."""
+    total = hashlib.sha256()
+    for path in sorted(folder.rglob("*.py")):
+        total.update(path.relative_to(folder).as_posix().encode())
+        total.update(path.read_bytes())
+    return total.hexdigest()[:16]
+
+
+def _use_cache_folder() -> None:
+    if not numba.config.CACHE_DIR:
+        digest = source_digest(Path(__file__).parent)
+        numba.config.CACHE_DIR = str(user_cache_path("labkit", appauthor=False) / f"compiled-{digest}")
+
+
+def bind(function: Callable, name: str, **pieces: Any) -> types.FunctionType:
+    """Return a copy of a plain function, renamed, whose given global names stand for the given pieces."""
+    copy = types.FunctionType(function.__code__, {**function.__globals__, **pieces}, function.__name__)
+    copy.__qualname__ = f"{function.__qualname__}_{name}"
+    copy.__module__ = function.__module__
+    return copy
+
+
+def specialise(loop: Callable, name: str, *, cache: bool, **pieces: Any) -> Callable:
+    """Compile a copy of `loop` in which the given global names stand for the given compiled pieces.
+
+    Parameters
+    ----------
+    loop : function
+        A plain Python function that calls its variable pieces by global names.
+    name : str
+        A word for this copy; it keys the cache, so equal names must mean equal pieces.
+    cache : bool
+        Keep the machine code on disk. Set it to False for pieces that a user may edit.
+    **pieces
+        Compiled functions by the global name that the loop calls them by.
+    """
+    copy = bind(loop, name, **pieces)
+    if cache:
+        _use_cache_folder()
+        try:
+            return numba.njit(cache=True, **OPTIONS)(copy)
+        except RuntimeError:  # no folder can be written: compile afresh in each process
+            pass
+    return numba.njit(**OPTIONS)(copy)
+
+
+if numba.config.DISABLE_JIT:
+
+    def multiply_wide(a, b):  # noqa: D103
+        product = int(a) * int(b)
+        return np.uint64(product >> 64), np.uint64(product & 0xFFFFFFFFFFFFFFFF)
+
+    def prefetch(array, row):  # noqa: D103
+        return None
+
+else:
+
+    @intrinsic
+    def multiply_wide(typingctx, a, b):
+        """Return the high and the low 64 bits of the product of two unsigned 64-bit words."""
+        signature = numba.types.UniTuple(numba.uint64, 2)(numba.uint64, numba.uint64)
+
+        def generate(context, builder, signature, arguments):
+            word, wide = ir.IntType(64), ir.IntType(128)
+            left, right = (builder.zext(argument, wide) for argument in arguments)
+            product = builder.mul(left, right)
+            high = builder.trunc(builder.lshr(product, ir.Constant(wide, 64)), word)
+            return context.make_tuple(builder, signature.return_type, [high, builder.trunc(product, word)])
+
+        return signature, generate
+
+    @intrinsic
+    def prefetch(typingctx, array, row):
+        """Ask the processor to fetch `array[row]` (first axis, no bounds check) into its caches."""
+        signature = numba.void(array, numba.uint64)
+
+        def generate(context, builder, signature, arguments):
+            kind = signature.args[0]
+            struct = context.make_array(kind)(context, builder, arguments[0])
+            stride = cgutils.unpack_tuple(builder, struct.strides, kind.ndim)[0]
+            byte, flag = ir.IntType(8).as_pointer(), ir.IntType(32)
+            place = builder.gep(builder.bitcast(struct.data, byte), [builder.mul(arguments[1], stride)])
+            fetch = cgutils.get_or_insert_function(
+                builder.module, ir.FunctionType(ir.VoidType(), [byte, flag, flag, flag]), "llvm.prefetch.p0i8"
+            )
+            builder.call(fetch, [place, *(ir.Constant(flag, value) for value in (0, 3, 1))])
+            return context.get_dummy_value()
+
+        return signature, generate
+
+
+@inlined
+def advance(a, b, c, counter):
+    """Step SFC64 once: return the raw 64-bit output and the four words of the new state.
+
+    The generator of Doty-Humphrey's PractRand as NumPy ships it (``numpy.random.SFC64``); equal bit for bit.
+    """
+    out = a + b + counter
+    return (
+        out,
+        b ^ (b >> np.uint64(11)),
+        c + (c << np.uint64(3)),
+        ((c << np.uint64(24)) | (c >> np.uint64(40))) + out,
+        counter + np.uint64(1),
+    )
+
+
+@compiled
+def next_raw(state):
+    """Return one raw output of the SFC64 state, uint64 of shape (4,), which is changed in place."""
+    out, state[0], state[1], state[2], state[3] = advance(state[0], state[1], state[2], state[3])
+    return out
+
+
+@inlined
+def unit_interval(word):
+    """Return the top 53 bits of a word as a float in [0, 1)."""
+    return (word >> np.uint64(11)) * 2.0**-53
