@@ -1,0 +1,127 @@
+"""The placement loop: one for all policies, information models, arrival laws and task sizes."""
+
+import numpy as np
+
+from labkit.compiled import advance, inlined
+from labkit.engine.arrivals import AHEAD, draw_from_all, draw_from_table, draw_row, options_in
+from labkit.engine.measures import measure
+
+
+@inlined
+def choose(state, seen, capacity, options, row, count, coin, own):
+    """Stand for the policy's chooser until `labkit.compiled.specialise` puts it in place."""
+    return np.uint64(0)
+
+
+def place_near(
+    options, threshold, alias, several, arrival_state, own, state, capacity, sizes, loads, seen, first, start, stop
+):
+    """Place the tasks ``start + 1 .. stop``, each as it is drawn; arguments and result as in `place_tasks`."""
+    choices = np.uint64(options.shape[0])
+    a, b, c, counter = arrival_state[0], arrival_state[1], arrival_state[2], arrival_state[3]
+    failed = 0
+    for task in range(start, stop):
+        word, a, b, c, counter = advance(a, b, c, counter)
+        row, coin = draw_row(word, choices, threshold, alias)
+        count = 2 if several is None else options_in(options, row)
+        position = choose(state, seen, capacity, options, row, count, coin, own)
+        if position >= np.uint64(count):
+            failed = task + 1
+            break
+        server = np.uint64(options[row, position])
+        loads[server] += 1 if sizes is None else sizes[np.uint64(task - first)]
+    arrival_state[0], arrival_state[1], arrival_state[2], arrival_state[3] = a, b, c, counter
+    return failed
+
+
+def place_drawn(picked, coins, batch, several, own, state, capacity, sizes, loads, seen, first, start):
+    """Place the `batch` tasks after `start` that were drawn ahead; arguments and result as in `place_tasks`."""
+    for index in range(batch):
+        row = np.uint64(index)
+        count = 2 if several is None else options_in(picked, row)
+        position = choose(state, seen, capacity, picked, row, count, coins[row], own)
+        if position >= np.uint64(count):
+            return start + index + 1
+        server = np.uint64(picked[row, position])
+        loads[server] += 1 if sizes is None else sizes[np.uint64(start + index - first)]
+    return 0
+
+
+def place_tasks(
+    arrivals, several, arrival_state, own, state, capacity, sizes, loads, seen, every, ahead,
+    first, last, checkpoints, demand, pairs_of, out,
+):  # fmt: skip
+    """Place the tasks ``first + 1 .. last`` of one replicate and measure at the checkpoints among them.
+
+    Parameters
+    ----------
+    arrivals : Arrivals
+    several : bool or None
+        None when every choice has exactly two options: the loop is then compiled for pairs.
+    arrival_state, own : uint64 arrays, shape (4,)
+        The stream of arrivals and the policy's own stream, changed in place.
+    state : tuple
+        The policy's prepared state.
+    capacity : float64 array, shape (servers,), or None when all are equal
+    sizes : float64 array, shape (last - first,), or None for unit tasks
+    loads : int64 (unit tasks) or float64 array, shape (servers,), changed in place
+    seen : array like `loads`
+        What the policy sees: `loads` itself when information is fresh, else a snapshot, changed in place.
+    every : int
+        A snapshot is taken just before the tasks 1, every + 1, 2 every + 1, ...; 0 when information is fresh.
+    ahead : bool
+        Draw arrivals ahead of their placement (fleets larger than cache; fleets without a table of choices).
+    first, last : int
+    checkpoints : int64 array
+        Increasing; those in (first, last] are measured, just after their placement.
+    demand, pairs_of
+        See `labkit.engine.measures.measure`.
+    out : float64 array, shape (checkpoints, measures), changed in place
+
+    Returns
+    -------
+    int
+        0, or the number of the task whose chooser named a position outside its choice.
+    """
+    picked = np.empty((AHEAD, arrivals.options.shape[1]), np.uint32)
+    coins = np.empty(AHEAD, np.uint64)
+    rows = np.empty(AHEAD, np.uint64)
+    mark = np.searchsorted(checkpoints, first + 1)
+    done = first
+    while done < last:
+        stop = last
+        if mark < checkpoints.size and checkpoints[mark] < stop:
+            stop = checkpoints[mark]
+        if every > 0:
+            if done % every == 0:
+                seen[:] = loads
+            stop = min(stop, done - done % every + every)
+        failed = 0
+        if ahead:
+            while done < stop and failed == 0:
+                batch = min(AHEAD, stop - done)
+                if arrivals.servers == np.uint64(0):
+                    draw_from_table(
+                        arrivals.options, arrivals.threshold, arrivals.alias, arrival_state, seen,
+                        picked, coins, rows, batch,
+                    )  # fmt: skip
+                else:
+                    draw_from_all(
+                        arrivals.servers, arrivals.distinct, arrival_state, seen, picked, coins, batch
+                    )
+                failed = place_drawn(
+                    picked, coins, batch, several, own, state, capacity, sizes, loads, seen, first, done
+                )
+                done += batch
+        else:
+            failed = place_near(
+                arrivals.options, arrivals.threshold, arrivals.alias, several, arrival_state, own, state,
+                capacity, sizes, loads, seen, first, done, stop,
+            )  # fmt: skip
+            done = stop
+        if failed:
+            return failed
+        if mark < checkpoints.size and done == checkpoints[mark]:
+            measure(loads, capacity, arrivals.options, demand, pairs_of, out[mark])
+            mark += 1
+    return 0

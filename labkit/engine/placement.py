@@ -1,0 +1,297 @@
+"""Work that arrives and stays: the public function, its checks, and its table of measures."""
+
+from collections.abc import Callable, Iterable
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass
+from functools import cached_property, lru_cache
+from typing import Any
+
+import numba
+import numpy as np
+import pandas as pd
+
+from labkit.checks import check_whole
+from labkit.compiled import inlined, specialise
+from labkit.engine.arrivals import Arrivals, arrivals_of, read_only
+from labkit.engine.information import Fresh, Information
+from labkit.engine.loop import place_drawn, place_near, place_tasks
+from labkit.engine.measures import MEASURED
+from labkit.engine.sizes import Sizes, sizes_of
+from labkit.errors import InputError
+from labkit.fleet.model import ABSENT, Fleet
+from labkit.policies.base import Policy
+from labkit.policies.naming import parse_policy
+from labkit.randomness import ARRIVALS, COINS, kernel_state, seed_sequence
+from labkit.survey.optimum import optimum_if_practical
+
+# A fleet whose loads and choices fill more than this is larger than the caches next to a core.
+NEAR_BYTES = 1 << 20
+
+
+@dataclass(frozen=True)
+class Outcome:
+    """What `place` measured.
+
+    Attributes
+    ----------
+    measures : pandas.DataFrame
+        One row a replicate and checkpoint: policy, replicate, tasks, mean_load, max_load, min_load,
+        max_utilisation, gap, excess, load_variance, edge_difference. Loads in work units; gap and excess in
+        utilisation (equal to loads where capacities are one).
+    loads : numpy.ndarray, shape (replicates, servers)
+        Loads after the last task, int64 for unit tasks, float64 for tasks with sizes.
+    policy, information : str
+        The rule and what it could see, in words.
+    """
+
+    fleet: Fleet
+    policy: str
+    information: str
+    loads: np.ndarray
+    checkpoints: np.ndarray
+    measured: np.ndarray
+
+    @cached_property
+    def measures(self) -> pd.DataFrame:
+        """The table of measures, one row a replicate and checkpoint."""
+        replicates, count, _ = self.measured.shape
+        columns = dict(zip(MEASURED, np.moveaxis(self.measured, -1, 0).reshape(len(MEASURED), -1), strict=True))
+        work = columns["mean_load"] * self.fleet.size
+        optimum = optimum_if_practical(self.fleet)
+        table = pd.DataFrame(
+            {
+                "policy": self.policy,
+                "replicate": np.repeat(np.arange(replicates), count),
+                "tasks": np.tile(self.checkpoints, replicates),
+                **{name: columns[name] for name in MEASURED[:4]},
+                "gap": columns["max_utilisation"] - work / self.fleet.total_capacity,
+                "excess": columns["max_utilisation"] - optimum * work,
+                **{name: columns[name] for name in MEASURED[4:]},
+            }
+        )
+        return table
+
+    def __repr__(self) -> str:
+        replicates, servers = self.loads.shape
+        return (
+            f"<outcome of {self.policy}, information {self.information}: {replicates} replicates, "
+            f"{servers} servers, {self.checkpoints.size} checkpoints up to {self.checkpoints[-1]} tasks>"
+        )
+
+
+def place(
+    fleet: Fleet,
+    policy: Policy | str,
+    *,
+    tasks: int,
+    replicates: int = 1,
+    rng: Any,
+    checkpoints: Iterable[int] | None = None,
+    sizes: Any | Callable | None = None,
+    information: Information | None = None,
+    start: Any | None = None,
+    workers: int = 1,
+) -> Outcome:
+    """Place tasks that arrive one by one on choices drawn by demand, and stay.
+
+    Parameters
+    ----------
+    fleet : Fleet
+    policy : Policy or str
+        The rule, or its name such as ``"least-loaded"`` or ``"mixed(beta=0.5)"``.
+    tasks : int
+        Number of tasks placed in each replicate, at least 1.
+    replicates : int
+        Independent repetitions.
+    rng : int, numpy.random.SeedSequence or numpy.random.Generator
+        The same int or SeedSequence gives every policy the same arrivals (common random numbers).
+    checkpoints : sequence of int, optional
+        Increasing numbers of tasks, from 1 to `tasks`; measured just after that task. Default: the end only.
+    sizes : array or callable, optional
+        Sizes of the tasks in work units, finite and at least 0: shape (tasks,), the same for every replicate;
+        or (replicates, tasks); or ``sizes(generator, count)``, which returns that many sizes and is called
+        for blocks of tasks in order. Default: every task has size 1.
+    information : Fresh or Snapshot, optional
+        What the policy sees. Default: ``Fresh()``.
+    start : array, shape (servers,) or (replicates, servers), optional
+        Loads before the first task, in work units (whole numbers when tasks have no sizes). Default: empty.
+    workers : int
+        Threads that share the replicates. The result does not depend on it.
+
+    Returns
+    -------
+    Outcome
+
+    Raises
+    ------
+    InputError
+        For any argument that is refused; nothing is computed then.
+
+    Notes
+    -----
+    Replicate ``r`` uses ``SeedSequence(entropy, spawn_key=(*key, r, stream))``, stream 0 for arrivals, 1 for the
+    policy's own coins, 2 for sizes. See `labkit.randomness.DRAWS` for how a raw word becomes an arrival.
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> outcome = lk.place(lk.ring(16), "least-loaded", tasks=1600, replicates=3, rng=7)
+    >>> outcome.measures[["replicate", "tasks", "mean_load"]].values.tolist()
+    [[0.0, 1600.0, 100.0], [1.0, 1600.0, 100.0], [2.0, 1600.0, 100.0]]
+    """
+    if not isinstance(fleet, Fleet):
+        raise InputError(f"fleet is {type(fleet).__name__}; give a labkit Fleet, such as lk.read_fleet(folder).")
+    rule = parse_policy(policy)
+    tasks = check_whole("tasks", tasks)
+    replicates = check_whole("replicates", replicates)
+    workers = check_whole("workers", workers)
+    seed = seed_sequence(rng)
+    moments = _checked_checkpoints(checkpoints, tasks)
+    information = _checked_information(information)
+    work = sizes_of(sizes, tasks, replicates)
+    loads = _starting_loads(start, fleet.size, replicates, work)
+    measured = np.empty((replicates, moments.size, len(MEASURED)))
+
+    job = _Job(fleet, rule, seed, information.every, moments, tasks, work)
+
+    def run(replicate: int) -> None:
+        job.run(replicate, loads[replicate], measured[replicate])
+
+    job.compile(loads[0], measured[0])
+    if workers == 1:
+        for replicate in range(replicates):
+            run(replicate)
+    else:
+        with ThreadPoolExecutor(workers) as pool:
+            list(pool.map(run, range(replicates)))
+    return Outcome(fleet, rule.name, information.name, loads, moments, measured)
+
+
+class _Job:
+    """One call of `place`, prepared: what all its replicates share."""
+
+    def __init__(
+        self,
+        fleet: Fleet,
+        rule: Policy,
+        seed: np.random.SeedSequence,
+        every: int,
+        checkpoints: np.ndarray,
+        tasks: int,
+        work: Sizes | None,
+    ) -> None:
+        self.rule, self.seed, self.every, self.checkpoints = rule, seed, every, checkpoints
+        self.tasks, self.work = tasks, work
+        self.arrivals = arrivals_of(fleet)
+        self.capacity = fleet.capacity
+        self.demand = read_only(np.empty(0)) if fleet.demand is None else fleet.demand
+        self.state = rule.prepare(fleet)
+        self._no_sizes = None if work is None else np.empty(0)
+        self.pairs_of = _pairs_of(fleet)
+        self.several = None if only_pairs(self.arrivals) else True
+        touched = 8 * fleet.size * (1 if self.capacity is None else 2) + self.arrivals.options.nbytes
+        self.ahead = fleet.implicit is not None or touched > NEAR_BYTES
+        self.loop = loop_of(rule)
+
+    def compile(self, loads: np.ndarray, out: np.ndarray) -> None:
+        """Place no task at all, so that the loop is compiled before threads share it."""
+        self._place(np.zeros(4, np.uint64), np.zeros(4, np.uint64), loads, loads, 0, 0, self._no_sizes, out)
+
+    def run(self, replicate: int, loads: np.ndarray, out: np.ndarray) -> None:
+        """Place all tasks of one replicate: loads and measures are written into the two arrays."""
+        arriving = kernel_state(self.seed, replicate, ARRIVALS)
+        own = kernel_state(self.seed, replicate, COINS)
+        seen = loads if self.every == 0 else loads.copy()
+        blocks = [(0, self.tasks, None)] if self.work is None else self.work.blocks(self.seed, replicate)
+        for first, last, sizes in blocks:
+            self._place(arriving, own, loads, seen, first, last, sizes, out)
+
+    def _place(
+        self,
+        arriving: np.ndarray,
+        own: np.ndarray,
+        loads: np.ndarray,
+        seen: np.ndarray,
+        first: int,
+        last: int,
+        sizes: np.ndarray | None,
+        out: np.ndarray,
+    ) -> None:
+        # Without the compiler unsigned words are NumPy scalars, which warn when they wrap around.
+        with np.errstate(over="ignore" if numba.config.DISABLE_JIT else "warn"):
+            failed = self.loop(
+                self.arrivals, self.several, arriving, own, self.state, self.capacity, sizes, loads, seen,
+                self.every, self.ahead, first, last, self.checkpoints, self.demand, self.pairs_of, out,
+            )  # fmt: skip
+        if failed:
+            raise InputError(
+                f"policy {self.rule.name} picked a position outside the options of task {failed}; "
+                "it must return a whole number from 0 to the number of options less 1."
+            )
+
+
+@lru_cache(maxsize=64)
+def _loop(kernel_name: str, choose: Callable, cache: bool) -> Callable:
+    chosen = inlined(choose)
+    near = specialise(place_near, kernel_name, cache=False, choose=chosen)
+    drawn = specialise(place_drawn, kernel_name, cache=False, choose=chosen)
+    return specialise(place_tasks, kernel_name, cache=cache, place_near=near, place_drawn=drawn)
+
+
+def loop_of(rule: Policy) -> Callable:
+    """Return the placement loop compiled for a policy's chooser (one copy a chooser)."""
+    return _loop(rule.kernel_name, rule.choose, rule.cached)
+
+
+def only_pairs(arrivals: Arrivals) -> bool:
+    """Tell whether every choice has exactly two options."""
+    options = arrivals.options
+    return options.shape[1] == 2 or bool((options[:, 2:] == ABSENT).all() and options.shape[0] > 0)
+
+
+def _pairs_of(fleet: Fleet) -> int:
+    if fleet.implicit is None:
+        return 0
+    if fleet.implicit.options != 2:
+        return 3
+    return 1 if fleet.implicit.distinct else 2
+
+
+def _checked_checkpoints(checkpoints: Iterable[int] | None, tasks: int) -> np.ndarray:
+    if checkpoints is None:
+        return np.array([tasks], np.int64)
+    moments = np.asarray(list(checkpoints) if not isinstance(checkpoints, np.ndarray) else checkpoints)
+    whole = moments.ndim == 1 and moments.size > 0 and moments.dtype.kind in "iu"
+    if not whole or moments[0] < 1 or moments[-1] > tasks or np.any(np.diff(moments.astype(np.int64)) <= 0):
+        raise InputError(
+            f"checkpoints is {checkpoints!r}; give increasing whole numbers from 1 to the number of tasks, {tasks}."
+        )
+    return moments.astype(np.int64)
+
+
+def _checked_information(information: Information | None) -> Information:
+    if information is None:
+        return Fresh()
+    if isinstance(information, Information):
+        return information
+    raise InputError(f"information is {information!r}; give lk.Fresh() or lk.Snapshot(every=k).")
+
+
+def _starting_loads(start: Any, servers: int, replicates: int, work: Sizes | None) -> np.ndarray:
+    kind = np.int64 if work is None else np.float64
+    loads = np.zeros((replicates, servers), kind)
+    if start is None:
+        return loads
+    given = np.asarray(start)
+    shape_fits = given.shape in ((servers,), (replicates, servers))
+    if not shape_fits or given.dtype.kind not in "iuf" or not np.all(np.isfinite(given)):
+        raise InputError(
+            f"start has shape {given.shape} and type {given.dtype}; give finite numbers, one for each of the "
+            f"{servers} servers (or one row of them for each replicate)."
+        )
+    if work is None and np.any(given != np.floor(given)):
+        raise InputError("start holds loads that are not whole; give whole numbers, or give the tasks sizes.")
+    if np.any(given < 0):
+        raise InputError(f"start holds the load {given.min()}; give loads of at least 0.")
+    loads[:] = given
+    return loads

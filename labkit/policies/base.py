@@ -1,0 +1,54 @@
+"""What every policy is: a name that can be written down, a prepared state, and one compiled chooser."""
+
+from collections.abc import Callable
+from typing import Any, ClassVar
+
+from labkit.fleet.model import Fleet
+
+
+class Policy:
+    """A rule that picks a server from a choice.
+
+    A policy file defines one chooser, a plain function that numba can compile::
+
+        choose(state, seen, capacity, options, row, count, coin, own) -> position
+
+    state : tuple
+        What `prepare` returned for the fleet.
+    seen : array, shape (servers,)
+        The loads that the policy may look at.
+    capacity : array, shape (servers,), or None
+        None when all capacities are equal; a test for None costs nothing once compiled.
+    options : uint32 array of two dimensions, row : uint64, count : int
+        The task may go to the servers ``options[row, 0 .. count - 1]``.
+    coin : uint64
+        A uniform word that belongs to the arrival, the same for every policy.
+    own : uint64 array, shape (4,)
+        A second stream (``labkit.compiled.next_raw(own)``) for a policy that needs more randomness.
+    """
+
+    choose: ClassVar[Callable]
+    cached: ClassVar[bool] = True
+
+    @property
+    def name(self) -> str:
+        """The policy in words, with its parameters; `parse_policy` reads it back."""
+        raise NotImplementedError
+
+    @property
+    def kernel_name(self) -> str:
+        """The word that keys compiled code: equal for policies that share one chooser."""
+        return type(self).__name__
+
+    def prepare(self, fleet: Fleet) -> tuple[Any, ...]:
+        """Return what the chooser needs to know about the fleet, a tuple of arrays and numbers."""
+        return ()
+
+    def __repr__(self) -> str:
+        return f"<policy {self.name}>"
+
+    def __eq__(self, other: object) -> bool:
+        return isinstance(other, Policy) and self.name == other.name
+
+    def __hash__(self) -> int:
+        return hash(self.name)

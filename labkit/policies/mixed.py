@@ -1,0 +1,47 @@
+"""Mixed: least-loaded some of the time, one choice the rest."""
+
+from typing import Any
+
+import numpy as np
+
+from labkit.checks import check_fraction
+from labkit.compiled import next_raw, unit_interval
+from labkit.fleet.model import Fleet
+from labkit.policies.base import Policy
+from labkit.policies.least_loaded import least_fair
+from labkit.policies.one_choice import toss
+
+
+def choose(state, seen, capacity, options, row, count, coin, own):  # noqa: D103
+    # Both answers, then one of them: cheaper than a branch that cannot be predicted.
+    looked = least_fair(seen, capacity, options, row, count, coin)
+    tossed = toss(capacity, options, row, count, coin)
+    return looked if unit_interval(next_raw(own)) < state[0] else tossed
+
+
+class Mixed(Policy):
+    """Place by least-loaded with probability `beta`, else by one choice: the (1+beta) process.
+
+    Parameters
+    ----------
+    beta : float
+        From 0 (one-choice) to 1 (least-loaded).
+
+    Notes
+    -----
+    Peres, Talwar & Wieder (2015). It also models a dispatcher that gets load reports for only a share of tasks.
+    """
+
+    choose = staticmethod(choose)
+
+    def __init__(self, beta: float) -> None:
+        self.beta = check_fraction("beta", beta, closed=True)
+
+    @property
+    def name(self) -> str:
+        """The policy in words."""
+        return f"mixed(beta={self.beta!r})"
+
+    def prepare(self, fleet: Fleet) -> tuple[Any, ...]:
+        """Return the share of tasks that look at the loads."""
+        return (np.float64(self.beta),)

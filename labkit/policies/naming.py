@@ -1,0 +1,58 @@
+"""Policies by name: the text that stands in study files, records and tables."""
+
+import inspect
+import re
+from typing import Any
+
+from labkit.checks import nearest
+from labkit.errors import InputError
+from labkit.policies.base import Policy
+from labkit.policies.least_loaded import LeastLoaded
+from labkit.policies.mixed import Mixed
+from labkit.policies.one_choice import OneChoice
+
+BUILT_IN: dict[str, type[Policy]] = {"one-choice": OneChoice, "least-loaded": LeastLoaded, "mixed": Mixed}
+_FORM = re.compile(r"\s*([\w-]+)\s*(?:\((.*)\))?\s*")
+
+
+def parse_policy(policy: Any) -> Policy:
+    """Return the policy that a text names, or the policy itself.
+
+    Parameters
+    ----------
+    policy : str or Policy
+        Such as ``"least-loaded"``, ``"least-loaded(ties=first)"`` or ``"mixed(beta=0.5)"``.
+
+    Raises
+    ------
+    InputError
+        Unknown name, unknown or missing parameter, or a value that the policy refuses.
+    """
+    if isinstance(policy, Policy):
+        return policy
+    form = _FORM.fullmatch(policy) if isinstance(policy, str) else None
+    if form is None:
+        raise InputError(f"policy is {policy!r}; give a policy or its name, such as 'mixed(beta=0.5)'.")
+    name, inside = form.groups()
+    if name not in BUILT_IN:
+        raise InputError(f"policy is {policy!r}; {nearest(name, BUILT_IN)}.")
+    kind = BUILT_IN[name]
+    known = inspect.signature(kind).parameters
+    values: dict[str, Any] = {}
+    for part in filter(None, (part.strip() for part in (inside or "").split(","))):
+        key, equals, value = (piece.strip() for piece in part.partition("="))
+        if not equals or key not in known:
+            allowed = nearest(key, known) if known else "it takes no parameters"
+            raise InputError(f"policy is {policy!r}, with {part!r}; {allowed}.")
+        values[key] = _number_or_word(value)
+    missing = [key for key, about in known.items() if about.default is about.empty and key not in values]
+    if missing:
+        raise InputError(f"policy is {policy!r}; it needs {missing[0]}, as in '{name}({missing[0]}=0.5)'.")
+    return kind(**values)
+
+
+def _number_or_word(text: str) -> float | str:
+    try:
+        return float(text)
+    except ValueError:
+        return text

@@ -1,0 +1,42 @@
+"""One choice: a coin, and no look at the loads."""
+
+import numpy as np
+
+from labkit.compiled import compiled, inlined, multiply_wide, unit_interval
+from labkit.policies.base import Policy
+
+
+@inlined
+def toss(capacity, options, row, count, coin):
+    """Return an option's position by a coin that is fair, or weighted by capacity when capacities differ."""
+    if capacity is None:
+        return multiply_wide(coin, np.uint64(count))[0]
+    total = 0.0
+    for position in range(count):
+        total += capacity[options[row, np.uint64(position)]]
+    target = unit_interval(coin) * total
+    passed = 0.0
+    picked = np.uint64(0)
+    for position in range(count - 1):
+        passed += capacity[options[row, np.uint64(position)]]
+        picked += np.uint64(passed <= target)
+    return picked
+
+
+def choose(state, seen, capacity, options, row, count, coin, own):  # noqa: D103
+    return toss(capacity, options, row, count, coin)
+
+
+class OneChoice(Policy):
+    """Place by a fair coin among the options, weighted by capacity when capacities differ.
+
+    For n tasks on n servers the gap is of order log n / log log n; for many more tasks it is near
+    sqrt(2 m ln n / n) (Raab & Steger 1998).
+    """
+
+    choose = staticmethod(choose)
+
+    @property
+    def name(self) -> str:
+        """The policy in words."""
+        return "one-choice"

@@ -1,0 +1,41 @@
+"""Run a fleet through the compiled loop and the slow one and compare every load and measure."""
+
+import pytest
+
+import labkit as lk
+from labkit.engine import placement
+from labkit.engine.arrivals import arrivals_of
+from tests import reference
+
+RULES = {
+    "one-choice": ("one-choice",),
+    "least-loaded": ("least-loaded", "random"),
+    "least-loaded(ties=first)": ("least-loaded", "first"),
+    "mixed(beta=0.3)": ("mixed", 0.3),
+}
+
+
+def assert_same_path(fleet, rule, *, ahead, entropy, every=0, sizes=None, start=None):
+    """Place 60 tasks both ways, two replicates, and compare."""
+    tasks, moments = 60, [1, 2, 17, 60]
+    near = placement.NEAR_BYTES
+    try:
+        placement.NEAR_BYTES = 0 if ahead else near
+        outcome = lk.place(
+            fleet, rule, tasks=tasks, replicates=2, rng=entropy, checkpoints=moments, sizes=sizes, start=start,
+            information=lk.Snapshot(every) if every else lk.Fresh(),
+        )  # fmt: skip
+    finally:
+        placement.NEAR_BYTES = near
+    law = arrivals_of(fleet)
+    table = None if law.threshold is None else (law.threshold, law.alias)
+    for replicate in range(2):
+        history = reference.place(
+            fleet, RULES[rule], tasks=tasks, replicate=replicate, entropy=entropy,
+            table=table, sizes=sizes, every=every, start=start,
+        )  # fmt: skip
+        assert outcome.loads[replicate].tolist() == history[-1].tolist()
+        rows = outcome.measures.query("replicate == @replicate").set_index("tasks")
+        for moment in moments:
+            for name, value in reference.measures(fleet, history[moment - 1]).items():
+                assert rows.loc[moment, name] == pytest.approx(value, rel=1e-12, abs=1e-12, nan_ok=True), name

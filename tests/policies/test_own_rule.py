@@ -1,0 +1,91 @@
+"""Rules that a user writes."""
+
+import numpy as np
+import pandas as pd
+import pytest
+
+import labkit as lk
+from labkit.policies.own_rule import recorded_source
+
+
+def test_a_users_least_loaded_equals_the_built_in_one():
+    @lk.policy
+    def my_least_loaded(options, loads, capacity, coin):
+        """Pick the emptier of two."""
+        one, other = loads[options[0]] / capacity[options[0]], loads[options[1]] / capacity[options[1]]
+        if one == other:
+            return 1 if coin >= 0.5 else 0
+        return 1 if other < one else 0
+
+    fleet = lk.torus(6, 6)
+    ours = lk.place(fleet, my_least_loaded, tasks=2_000, replicates=2, rng=3)
+    assert (ours.loads == lk.place(fleet, "least-loaded", tasks=2_000, replicates=2, rng=3).loads).all()
+    assert ours.measures["policy"].unique().tolist() == ["my-least-loaded"]
+    assert "Pick the emptier of two." in recorded_source("my-least-loaded")
+    assert "Pick the emptier of two." in my_least_loaded.__doc__
+
+
+def test_two_rules_of_one_name_do_not_share_machine_code():
+    def make(last):
+        @lk.policy
+        def edited(options, loads, capacity, coin):
+            return last
+
+        return edited
+
+    fleet = lk.Fleet(pd.DataFrame({"server": [0, 1]}), pd.DataFrame({"option_1": [0], "option_2": [1]}))
+    assert lk.place(fleet, make(0), tasks=9, rng=1).loads.tolist() == [[9, 0]]
+    assert lk.place(fleet, make(1), tasks=9, rng=1).loads.tolist() == [[0, 9]]
+
+
+def test_a_pick_outside_the_choice_is_refused_before_anything_is_written_there():
+    @lk.policy
+    def beyond(options, loads, capacity, coin):
+        return 2 if loads[options[0]] > 3 else 0
+
+    with pytest.raises(lk.InputError, match=r"policy beyond picked a position outside the options of task \d+"):
+        lk.place(lk.ring(5), beyond, tasks=10_000, rng=1)
+
+    @lk.policy
+    def negative(options, loads, capacity, coin):
+        return -1
+
+    with pytest.raises(lk.InputError, match="outside the options of task 1;"):
+        lk.place(lk.ring(5), negative, tasks=5, rng=1)
+
+
+def test_three_options_and_capacities_reach_the_rule():
+    @lk.policy
+    def largest(options, loads, capacity, coin):
+        best = 0
+        for position in range(1, len(options)):
+            if capacity[options[position]] > capacity[options[best]]:
+                best = position
+        return best
+
+    servers = pd.DataFrame({"server": list("abcd"), "capacity": [1, 5, 2, 3]})
+    choices = pd.DataFrame({"option_1": ["a", "c"], "option_2": ["b", "d"], "option_3": ["d", None]})
+    outcome = lk.place(lk.Fleet(servers, choices), largest, tasks=100, rng=1)
+    assert outcome.loads[0, [0, 2]].tolist() == [0, 0]
+    assert outcome.loads.sum() == 100
+
+
+@pytest.mark.parametrize(
+    ("function", "sentence"),
+    [
+        (lambda options, loads: 0, r"takes \(options, loads\); it must take \(options, loads, capacity, coin\)"),
+        ("least-loaded", "decorate a plain function"),
+        (np.argmin, "decorate a plain function"),
+    ],
+)
+def test_what_cannot_be_a_rule_is_refused(function, sentence):
+    with pytest.raises(lk.InputError, match=sentence):
+        lk.policy(function)
+
+
+def test_a_built_in_name_is_refused():
+    def one_choice(options, loads, capacity, coin):
+        return 0
+
+    with pytest.raises(lk.InputError, match="has the name of a built-in policy"):
+        lk.policy(one_choice)
