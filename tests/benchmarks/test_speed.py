@@ -1,0 +1,113 @@
+"""Speed of the placement loop, as ratios measured side by side in one run."""
+
+import ctypes
+import random
+import subprocess
+from pathlib import Path
+
+import numpy as np
+import pandas as pd
+import pytest
+
+import labkit as lk
+from labkit.randomness import ARRIVALS, kernel_state, seed_sequence
+from tests.benchmarks.side_by_side import ratio, seconds
+
+pytestmark = pytest.mark.benchmark
+
+
+def shuffled_ring(servers):
+    """Return a ring whose labels and rows are in random order."""
+    rng = np.random.default_rng(1)
+    names = rng.permutation(servers)
+    choices = pd.DataFrame({"option_1": names, "option_2": np.roll(names, -1)}).sample(frac=1, random_state=2)
+    return lk.Fleet(pd.DataFrame({"server": np.arange(servers)}), choices)
+
+
+@pytest.fixture(scope="module")
+def plain_loop(tmp_path_factory):
+    """Return the C loop, compiled with this machine's cc."""
+    library = tmp_path_factory.mktemp("plain") / "plain_loop.so"
+    source = Path(__file__).with_name("plain_loop.c")
+    subprocess.run(
+        ["cc", "-O3", "-march=native", "-shared", "-fPIC", str(source), "-o", str(library)], check=True
+    )
+    loaded = ctypes.CDLL(str(library)).place
+    loaded.argtypes = [ctypes.c_void_p] * 3 + [ctypes.c_uint64, ctypes.c_int64]
+
+    def place(fleet, tasks):
+        state = kernel_state(seed_sequence(1), 0, ARRIVALS)
+        loads = np.zeros(len(fleet), np.int64)
+        loaded(state.ctypes.data, fleet.options.ctypes.data, loads.ctypes.data, len(fleet.options), tasks)
+        return loads
+
+    return place
+
+
+@pytest.mark.parametrize("servers", [1_024, 2**20])
+def test_least_loaded_keeps_up_with_c(servers, plain_loop, report):
+    fleet, tasks = shuffled_ring(servers), 20_000_000
+    ours = lk.place(fleet, "least-loaded", tasks=tasks, rng=1).loads[0]
+    assert (ours == plain_loop(fleet, tasks)).all()
+    found = ratio(
+        lambda: lk.place(fleet, "least-loaded", tasks=tasks, rng=1), lambda: plain_loop(fleet, tasks)
+    )
+    each = seconds(lambda: plain_loop(fleet, tasks)) / tasks * 1e9
+    report(f"least-loaded, ring of {servers}: {found:.2f} x the time of plain C ({each:.2f} ns a task)")
+    assert found <= 1.25
+
+
+def test_least_loaded_against_plain_python(report):
+    fleet, tasks = shuffled_ring(1_024), 2_000_000
+    graph = fleet.to_networkx()
+    ends = list(graph.edges)
+
+    def loop():
+        loads = dict.fromkeys(graph, 0)
+        for _ in range(tasks // 100):
+            one, other = random.choice(ends)  # noqa: S311
+            if loads[other] < loads[one] or (loads[other] == loads[one] and random.random() < 0.5):  # noqa: S311
+                one = other
+            loads[one] += 1
+
+    found = ratio(loop, lambda: lk.place(fleet, "least-loaded", tasks=tasks, rng=1)) * 100
+    report(f"least-loaded, ring of 1024: {found:.0f} x faster than a plain Python loop over networkx edges")
+    assert found >= 100
+
+
+@pytest.mark.parametrize("policy", ["one-choice", "least-loaded(ties=first)", "mixed(beta=0.5)"])
+@pytest.mark.parametrize("servers", [1_024, 2**20])
+def test_rules_cost_at_most_three_times_least_loaded(policy, servers, report):
+    fleet, tasks = shuffled_ring(servers), 10_000_000
+    found = ratio(
+        lambda: lk.place(fleet, policy, tasks=tasks, rng=1),
+        lambda: lk.place(fleet, "least-loaded", tasks=tasks, rng=1),
+    )
+    report(f"{policy}, ring of {servers}: {found:.2f} x the time of least-loaded")
+    assert found <= 3
+
+
+@pytest.mark.parametrize(("columns", "words"), [("capacity", "unequal capacities"), ("demand", "unequal demands")])
+def test_unequal_fleets_cost_little_more(columns, words, report):
+    fleet, tasks = shuffled_ring(1_024), 10_000_000
+    uneven = np.arange(1_024) % 5 + 1.0
+    servers, choices = fleet.servers, fleet.choices
+    (servers if columns == "capacity" else choices)[columns] = uneven
+    other = lk.Fleet(servers, choices)
+    for policy in ("one-choice", "least-loaded", "mixed(beta=0.5)"):
+        found = ratio(
+            lambda policy=policy: lk.place(other, policy, tasks=tasks, rng=1),
+            lambda: lk.place(fleet, "least-loaded", tasks=tasks, rng=1),
+        )
+        report(f"{policy}, ring of 1024 with {words}: {found:.2f} x least-loaded on equal ones")
+        assert found <= 3
+
+
+def test_two_threads_share_replicates(report):
+    fleet = shuffled_ring(1_024)
+    found = ratio(
+        lambda: lk.place(fleet, "least-loaded", tasks=2_000_000, replicates=40, rng=1),
+        lambda: lk.place(fleet, "least-loaded", tasks=2_000_000, replicates=40, rng=1, workers=2),
+    )
+    report(f"two threads: {found:.2f} x as fast as one")
+    assert found >= 1.8
