@@ -1,0 +1,1 @@
+"""Pure statistics on tables of measures: no simulation, no files."""

@@ -1,0 +1,112 @@
+"""The door of the analysis room: a table of measures in, its label columns known, its rows trusted."""
+
+import numpy as np
+import pandas as pd
+
+from labkit.checks import nearest
+from labkit.errors import InputError
+
+FIRST_LABELS = ("policy", "information")
+KEYS = ("replicate", "tasks")
+
+# Text columns of a record that tell where a row came from; they never separate groups.
+PROVENANCE = frozenset(
+    {
+        *("run_id", "git_hash", "diff_digest", "versions", "bit_generator", "draws", "entropy", "spawn_key"),
+        *("notebook", "notebook_digest", "parameters", "inputs", "started"),
+    }
+)
+
+
+def prepare(measures: pd.DataFrame, of: str) -> tuple[pd.DataFrame, list[str]]:
+    """Check a table of measures and find its label columns.
+
+    Parameters
+    ----------
+    measures : pandas.DataFrame
+        One row a replicate and checkpoint: `replicate`, `tasks`, the column `of`, and any labels. Labels are
+        `policy`, `information`, every other column of text, and every named index level
+        (``pd.concat(..., names=["policy"])``); an index level replaces a column of the same name.
+    of : str
+        The column that is going to be analysed.
+
+    Returns
+    -------
+    pandas.DataFrame
+        A copy with a plain index, sorted by labels, tasks and replicate.
+    list of str
+        The label columns, policy and information first.
+
+    Raises
+    ------
+    InputError
+        When a column is missing, a value is not finite, a label is missing, or a replicate is there twice.
+    """
+    if not isinstance(measures, pd.DataFrame):
+        raise InputError(
+            f"measures is {type(measures).__name__}; give the DataFrame of outcome.measures or of records."
+        )
+    if not isinstance(of, str):
+        raise InputError(f"of is {of!r}; give the name of one column of measures, such as 'gap'.")
+    lifted = [str(name) for name in measures.index.names if name is not None and name != of]
+    table = measures.drop(columns=[name for name in lifted if name in measures.columns])
+    table = table.reset_index(lifted) if lifted else table
+    table = table.reset_index(drop=True)
+    if not len(table):
+        raise InputError("measures has no rows; place at least one replicate first.")
+    for column in (*KEYS, of):
+        if column not in table.columns:
+            raise InputError(
+                f"measures has no column {column!r}; {nearest(column, map(str, table.columns))}."
+            )
+    labels = _labels(table, lifted, of)
+    _check_values(table, of)
+    for column in (*labels, *KEYS):
+        missing = table[column].isna().to_numpy()
+        if missing.any():
+            row = int(np.flatnonzero(missing)[0])
+            raise InputError(f"measures row {row} has no {column}; fill it in or drop the column.")
+    keys = [*labels, "tasks", "replicate"]
+    repeated = table.duplicated(keys).to_numpy()
+    if repeated.any():
+        twice = table.iloc[int(np.flatnonzero(repeated)[0])]
+        raise InputError(
+            f"measures holds replicate {twice['replicate']} of {describe(twice, [*labels, 'tasks'])} "
+            "more than once; each counts once, so drop the copy or tell the two apart by a column of text."
+        )
+    return table.sort_values(keys, kind="stable", ignore_index=True), labels
+
+
+def describe(row: pd.Series, columns: list[str]) -> str:
+    """Return the words that name a group in a refusal, such as ``policy 'one-choice', tasks 100``."""
+    return ", ".join(
+        f"{name} {row[name]!r}" if isinstance(row[name], str) else f"{name} {row[name]}" for name in columns
+    )
+
+
+def _labels(table: pd.DataFrame, lifted: list[str], of: str) -> list[str]:
+    def is_label(name: str) -> bool:
+        if name in KEYS or name == of:
+            return False
+        if name in FIRST_LABELS or name in lifted:
+            return True
+        column = table[name]
+        text = pd.api.types.is_string_dtype(column) or isinstance(column.dtype, pd.CategoricalDtype)
+        return text and name not in PROVENANCE
+
+    found = [name for name in table.columns if is_label(name)]
+    first = [name for name in FIRST_LABELS if name in found]
+    return first + [name for name in found if name not in first]
+
+
+def _check_values(table: pd.DataFrame, of: str) -> None:
+    column = table[of]
+    if of in KEYS or not pd.api.types.is_numeric_dtype(column) or pd.api.types.is_bool_dtype(column):
+        raise InputError(f"of is {of!r}; name a column of measured numbers, such as 'gap' or 'excess'.")
+    wrong = ~np.isfinite(column.to_numpy(dtype=np.float64, na_value=np.nan))
+    if wrong.any():
+        row = int(np.flatnonzero(wrong)[0])
+        raise InputError(
+            f"measures row {row} has {of} {column.iloc[row]}; every {of} must be a finite number, "
+            "so choose another column or drop the row."
+        )
