@@ -1,0 +1,107 @@
+"""How far the fullest server lies above the mean while tasks arrive."""
+
+import numpy as np
+import pandas as pd
+from matplotlib.axes import Axes
+from matplotlib.figure import Figure
+from matplotlib.ticker import FuncFormatter, LogLocator, MaxNLocator, NullLocator
+
+from labkit.analysis.headroom import headroom
+from labkit.analysis.wording import reports
+from labkit.figures.style import label_ends, looks, styled
+
+BAND = (0.05, 0.95)
+
+
+@styled
+def load_against_tasks(measures: pd.DataFrame, *, risk: float, confidence: float = 0.95) -> Figure:
+    """Draw the gap against the number of tasks, one line a policy and one panel a kind of information.
+
+    The line is the median over replicates, the band holds the middle 90 % of them, and the marker above is
+    the headroom at the accepted risk with its limits at the last checkpoint.
+
+    Parameters
+    ----------
+    measures : pandas.DataFrame
+        Rows of ``outcome.measures`` or of records: policy, replicate, tasks, gap and, if there, information.
+    risk, confidence : float
+        As in `labkit.headroom`.
+
+    Returns
+    -------
+    matplotlib.figure.Figure
+
+    Raises
+    ------
+    InputError
+        When the table, the risk or the confidence is refused.
+    """
+    columns = ["policy", "replicate", "tasks", "gap"]
+    table = measures.reindex(columns=columns).assign(information=measures.get("information", "fresh"))
+    last = table[table["tasks"] == table["tasks"].max()]
+    needed = headroom(last, risk=risk, confidence=confidence).set_index(["policy", "information"])
+    kinds = sorted(table["information"].unique())
+    style = looks(table["policy"])
+    figure = Figure(figsize=(4.2 * len(kinds) + 2.6, 4.6), layout="constrained")
+    panels = figure.subplots(1, len(kinds), sharey=True, squeeze=False)[0]
+    bands = (
+        table.groupby(["information", "policy", "tasks"])["gap"].quantile(np.array([*BAND, 0.5])).unstack()
+    )
+    wide = bands.to_numpy().max() > 5 * bands[0.5].to_numpy().min() and bands.to_numpy().min() > 0
+    for axes, kind in zip(panels, kinds, strict=True):
+        ends = {}
+        for policy in sorted(table.loc[table["information"] == kind, "policy"].unique()):
+            rows = bands.loc[(kind, policy)]
+            _line(axes, rows, needed.loc[(policy, kind)], style[policy])
+            ends[policy] = needed.loc[(policy, kind), "headroom"]
+        _axes(axes, bands.loc[kind].index.get_level_values("tasks"), wide)
+        axes.set_title(f"load reports {reports(kind)}" if len(kinds) > 1 else "")
+        axes.ends = ends
+    panels[0].set_ylabel("gap: highest − mean utilisation (load ÷ capacity)")
+    percent = f"{100 * risk:g} %"
+    figure.suptitle(
+        f"line: median · band: middle 90 % of replicates · end marker: headroom at {percent} risk, "
+        f"{100 * confidence:g} % limits",
+        fontsize=9,
+        x=0.01,
+        ha="left",
+    )
+    figure.draw_without_rendering()
+    for axes in panels:
+        label_ends(axes, float(table["tasks"].max()) * 1.05, axes.ends, style)
+    return figure
+
+
+def _line(axes: Axes, rows: pd.DataFrame, needed: pd.Series, look: dict) -> None:
+    tasks = rows.index.to_numpy(np.float64)
+    axes.fill_between(tasks, rows[BAND[0]], rows[BAND[1]], color=look["color"], alpha=0.16, linewidth=0)
+    axes.plot(tasks, rows[0.5], color=look["color"], linestyle=look["linestyle"])
+    limits = [[needed["headroom"] - needed["lower"]], [needed["upper"] - needed["headroom"]]]
+    axes.errorbar(
+        [tasks[-1] * 1.05],
+        [needed["headroom"]],
+        yerr=limits,
+        color=look["color"],
+        marker=look["marker"],
+        capsize=3,
+        linewidth=1.2,
+        clip_on=False,
+    )
+
+
+def _axes(axes: Axes, tasks: pd.Index, wide: bool) -> None:
+    axes.set_xscale("log")
+    if wide:
+        axes.set_yscale("log")
+        axes.yaxis.set_major_locator(LogLocator(subs=(1, 2, 5)))
+        axes.yaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g}"))
+        axes.yaxis.set_minor_locator(NullLocator())
+    else:
+        axes.set_ylim(bottom=0)
+        axes.yaxis.set_major_locator(MaxNLocator(6))
+    axes.set_xlim(float(tasks.min()) * 0.95, float(tasks.max()) * 1.12)
+    axes.xaxis.set_major_locator(LogLocator(subs=(1, 2, 5)))
+    axes.xaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:,.0f}"))
+    axes.xaxis.set_minor_locator(NullLocator())
+    axes.set_xlabel("tasks placed")
+    axes.grid(True)
