@@ -1,0 +1,179 @@
+"""What a notebook declares: its code cells and the parameters it takes.
+
+The parameters cell (tagged ``parameters``) holds one ``name: type = literal  # help`` a line, nothing else.
+Types are int, float, str, bool and list, each also as ``type | None``. A parameter named ``fleet``, or whose
+name ends in ``_path`` or ``_folder``, is a path.
+"""
+
+import ast
+import hashlib
+import json
+from dataclasses import dataclass
+from functools import cached_property
+from pathlib import Path
+from typing import Any
+
+from labkit.checks import nearest
+from labkit.errors import InputError
+from labkit.records.project import from_root, notebook_text
+
+# What a run does with its time and place, but not with its results.
+EXECUTION_ONLY = frozenset({"study", "store", "workers"})
+
+_KINDS = {
+    "int": ("a whole number", (int,)),
+    "float": ("a number", (int, float)),
+    "str": ("a text", (str,)),
+    "bool": ("true or false", (bool,)),
+    "list": ("a list", (list,)),
+}
+
+
+def is_path(name: str) -> bool:
+    """Tell whether a parameter of this name is a path."""
+    return name == "fleet" or name.endswith(("_path", "_folder"))
+
+
+@dataclass(frozen=True)
+class Parameter:
+    """One line of a parameters cell."""
+
+    name: str
+    kind: str
+    optional: bool
+    default: Any
+
+    @property
+    def annotation(self) -> str:
+        """The type as text."""
+        return f"{self.kind} | None" if self.optional else self.kind
+
+    def checked(self, value: Any) -> Any:
+        """Return a value as this parameter's type; refuse in one sentence when it is of another.
+
+        A whole number is fine for a float. A text for a list is split at the commas outside parentheses,
+        since papermill's ``-p`` cannot pass a list.
+        """
+        if value is None and self.optional:
+            return None
+        if self.kind == "list" and isinstance(value, str):
+            value = split_list(value)
+        if value == [] and self.default:
+            raise InputError(f"{self.name} is an empty list; give at least one item.")
+        wording, types = _KINDS[self.kind]
+        if not isinstance(value, types) or (isinstance(value, bool) and self.kind != "bool"):
+            raise InputError(f"{self.name} is {value!r}; give {wording} ({self.annotation}).")
+        if self.kind == "float":
+            value = float(value)  # type: ignore[arg-type]
+            if value != value or value in (float("inf"), float("-inf")):
+                raise InputError(f"{self.name} is {value!r}; give a finite number.")
+        if is_path(self.name) and isinstance(value, str) and (value or self.default):
+            self._check_exists(value)
+        return value
+
+    def _check_exists(self, text: str) -> None:
+        if not text or not from_root(text).exists():
+            raise InputError(
+                f"{self.name} is {text!r}; nothing is there (a relative path counts from the project root): "
+                "give a path that exists."
+            )
+
+
+@dataclass(frozen=True)
+class Notebook:
+    """A saved notebook as far as a run cares: code cells in order, and the declared parameters."""
+
+    path: Path
+    cells: tuple[str, ...]
+    parameters_at: int
+    parameters: dict[str, Parameter]
+
+    @property
+    def name(self) -> str:
+        """How records and refusals call it."""
+        return notebook_text(self.path)
+
+    @cached_property
+    def digest(self) -> str:
+        """SHA-256 of what can change its results.
+
+        These are the code cells in order, where the parameters cell counts by names and types only: its
+        values are part of the run's parameters. Prose does not count: a corrected sentence keeps the records.
+        """
+        declared = json.dumps([[each.name, each.annotation] for _, each in sorted(self.parameters.items())])
+        cells = [declared if at == self.parameters_at else cell for at, cell in enumerate(self.cells)]
+        return hashlib.sha256(json.dumps(cells).encode()).hexdigest()
+
+    def check_names(self, names: Any) -> None:
+        """Refuse names that are not among the declared parameters."""
+        for name in names:
+            if name not in self.parameters:
+                raise InputError(
+                    f"{name} is no parameter of the notebook {self.name}; {nearest(name, self.parameters)}."
+                )
+
+    def checked(self, values: dict[str, Any]) -> dict[str, Any]:
+        """Return all parameters with these values checked, and defaults for those not given."""
+        self.check_names(values)
+        return {name: each.checked(values.get(name, each.default)) for name, each in self.parameters.items()}
+
+
+def read_notebook(path: Path) -> Notebook:
+    """Read a notebook file and its declared parameters.
+
+    Raises
+    ------
+    InputError
+        When the file is no notebook, has not exactly one cell tagged ``parameters``, or when this cell holds
+        anything but declarations.
+    """
+    try:
+        cells = json.loads(path.read_bytes())["cells"]
+        code = [
+            ("".join(cell["source"]).strip(), cell.get("metadata", {}).get("tags", []))
+            for cell in cells
+            if cell["cell_type"] == "code"
+        ]
+    except (OSError, ValueError, KeyError, TypeError) as error:
+        raise InputError(f"notebook {path} cannot be read as a notebook ({error}); save it anew.") from None
+    code = [(source, tags) for source, tags in code if source and "injected-parameters" not in tags]
+    at = [index for index, (_, tags) in enumerate(code) if "parameters" in tags]
+    if len(at) != 1:
+        raise InputError(
+            f"notebook {path} has {len(at)} cells tagged 'parameters'; give the tag to exactly one."
+        )
+    sources = tuple(source for source, _ in code)
+    return Notebook(path, sources, at[0], _declarations(path, sources[at[0]]))
+
+
+def _declarations(path: Path, source: str) -> dict[str, Parameter]:
+    found: dict[str, Parameter] = {}
+    for statement in ast.parse(source).body:
+        try:
+            if not isinstance(statement, ast.AnnAssign) or statement.value is None:
+                raise ValueError
+            words = [word.strip() for word in ast.unparse(statement.annotation).split("|")]
+            kinds = [word.split("[")[0] for word in words if word != "None"]
+            if len(kinds) != 1 or kinds[0] not in _KINDS or not isinstance(statement.target, ast.Name):
+                raise ValueError
+            default = ast.literal_eval(statement.value)
+        except ValueError:
+            raise InputError(
+                f"notebook {path}, parameters cell, line {statement.lineno}: {ast.unparse(statement)!r} is "
+                f"no declaration; write name: type = literal with a type among {', '.join(_KINDS)}."
+            ) from None
+        name = statement.target.id
+        found[name] = Parameter(name, kinds[0], "None" in words, default)
+    return found
+
+
+def split_list(text: str) -> list[str]:
+    """Split a text at the commas outside parentheses: "a, mixed(beta=0.5)" has two items."""
+    items, depth = [""], 0
+    for sign in text:
+        depth += (sign == "(") - (sign == ")")
+        if sign == "," and depth == 0:
+            items.append("")
+        else:
+            items[-1] += sign
+    return [item.strip() for item in items if item.strip()]

@@ -1,0 +1,58 @@
+"""Where the project is. Paths mean the same whatever the working directory."""
+
+import re
+from pathlib import Path
+from typing import Any
+
+from labkit.errors import InputError
+
+PACKAGE = Path(__file__).resolve().parents[1]
+ROOT = PACKAGE.parent
+NOTEBOOKS = ROOT / "notebooks"
+EXPERIMENTS = ROOT / "experiments"
+STORE = ROOT / "results" / "runs"
+ANSWERS = ROOT / "results" / "answers"
+
+_STUDY_NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9_.-]{0,63}")
+
+
+def find_notebook(notebook: str | Path) -> Path:
+    """Return the file of a notebook: a name from notebooks/, or the path (from the root) of an .ipynb."""
+    text = str(notebook)
+    if text.endswith(".ipynb"):
+        path = from_root(text)
+        if not path.is_file():
+            raise InputError(f"notebook is {text!r}; there is no such file: give the path of an .ipynb file.")
+        return path
+    known = sorted(path.stem for path in NOTEBOOKS.glob("*.ipynb"))
+    if text not in known:
+        raise InputError(
+            f"notebook is {text!r}; notebooks/ holds {', '.join(known) or 'none'}: name one of them."
+        )
+    return NOTEBOOKS / f"{text}.ipynb"
+
+
+def from_root(text: str | Path) -> Path:
+    """Return the absolute path that a text means: absolute as it is, relative to the project root."""
+    return (ROOT / Path(text).expanduser()).resolve()
+
+
+def path_text(path: Path) -> str:
+    """Return how a path is written down: relative to the project root when inside it, else absolute."""
+    path = path.resolve()
+    return path.relative_to(ROOT).as_posix() if path.is_relative_to(ROOT) else path.as_posix()
+
+
+def notebook_text(path: Path) -> str:
+    """Return how a notebook is written down: its bare name when it is in notebooks/, else its path."""
+    return path.stem if path.resolve().parent == NOTEBOOKS else path_text(path)
+
+
+def check_study_name(name: Any) -> str:
+    """Return the name of a study when it can be the name of a folder on every system."""
+    if isinstance(name, str) and _STUDY_NAME.fullmatch(name) and not name.endswith("."):
+        return name
+    raise InputError(
+        f"study is {name!r}; a study's name begins with a letter or digit and has up to 64 letters, digits, "
+        "dots, dashes and underscores: choose such a name."
+    )

@@ -1,0 +1,238 @@
+"""The results store: one verified parquet file a run, never half a file, never a silent replacement.
+
+A file is called ``<run id>-<first 32 hex digits of its SHA-256>.parquet``, in the folder of its study.
+It is written beside this name, read back, and moved into place; readers recompute the digest. Arrow is
+imported where a file is read or written, so that looking for a record costs nothing.
+"""
+
+import hashlib
+import os
+import platform
+import re
+import secrets
+import tempfile
+import time
+from collections.abc import Iterable, Iterator
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from labkit.errors import InputError, StoreError
+from labkit.records.project import STORE, check_study_name, from_root
+
+if TYPE_CHECKING:
+    import pyarrow as pa
+
+_NAME = re.compile(r"([0-9a-f]{16})-([0-9a-f]{32})\.parquet")
+_LEFTOVER = re.compile(r"\.[0-9a-f]{16}\.([0-9a-f]{8})\.(\d+)\.[0-9a-f]+\.tmp")
+_DAY = 86_400.0
+
+
+@dataclass(frozen=True)
+class Store:
+    """A folder of records, one folder a study inside it."""
+
+    folder: Path
+
+    def check_writable(self, study: str) -> None:
+        """Refuse, before any computing, a place where no record could be written; leave nothing behind."""
+        check_writable("store", self.folder / check_study_name(study))
+
+    def write(self, study: str, run_id: str, table: "pa.Table") -> tuple[Path, bool]:
+        """Write the record of a run.
+
+        Returns
+        -------
+        path : Path
+            The file of the record.
+        new : bool
+            False when the run was recorded before with the same measures, bit for bit; that file is kept.
+
+        Raises
+        ------
+        StoreError
+            When the folder cannot be written, a record of the run is damaged, or its measures differ.
+        """
+        from labkit.records.schema import first_difference, measured_part
+
+        present = self.find(study, run_id)
+        if present is not None:
+            difference = first_difference(measured_part(self.read(present)), measured_part(table))
+            if difference:
+                raise StoreError(
+                    f"run {run_id} was executed again and its measures differ from {present} ({difference}); "
+                    "compare versions and sources, and remove that file only when it is known to be wrong."
+                )
+            return present, False
+        folder = self.folder / check_study_name(study)
+        try:
+            folder.mkdir(parents=True, exist_ok=True)
+            _sweep(folder)
+            return _write_whole(folder, run_id, table), True
+        except OSError as error:
+            raise unwritable("store", folder, error) from None
+
+    def find(self, study: str, run_id: str) -> Path | None:
+        """Return the file that holds the record of a run, not read yet, or None."""
+        found = sorted((self.folder / study).glob(f"{run_id}-*.parquet"))
+        return found[0] if found else None
+
+    def studies(self) -> list[str]:
+        """Return the names of the studies that have a folder here."""
+        if not self.folder.is_dir():
+            return []
+        return sorted(
+            place.name for place in self.folder.iterdir() if place.is_dir() and place.name[0] != "."
+        )
+
+    def files(self, study: str) -> Iterator[Path]:
+        """Yield the record files of a study, one a run; refuse a parquet file that is no record."""
+        seen = set()
+        for path in sorted((self.folder / study).glob("[!.]*.parquet")):
+            run_id = _run_id(path)
+            if run_id not in seen:
+                seen.add(run_id)
+                yield path
+
+    def locate(self, prefix: str, study: str | None = None) -> Path:
+        """Return the record file of the one run whose id begins with `prefix`."""
+        studies = [study] if study else self.studies()
+        files = [path for name in studies for path in self.files(name)]
+        found = [path for path in files if prefix and path.name.startswith(prefix.lower())]
+        runs = sorted({path.name[:16] for path in found})
+        if len(runs) == 1:
+            return found[0]
+        if not runs:
+            raise InputError(
+                f"run is {prefix!r}; none of the {len(files)} records in {self.folder} begins so: "
+                "see labkit list for their ids."
+            )
+        raise InputError(f"run is {prefix!r}; {', '.join(runs)} begin so: give more digits.")
+
+    def read(self, path: Path) -> "pa.Table":
+        """Return a record; refuse a torn, altered or foreign file by name."""
+        import pyarrow as pa
+        import pyarrow.parquet as pq
+
+        from labkit.records.schema import ORIGIN
+
+        run_id = _run_id(path)
+        try:
+            content = path.read_bytes()
+        except OSError as error:
+            raise StoreError(
+                f"record {path} cannot be read ({error.strerror}); run its study again."
+            ) from None
+        if _digest(content) != path.stem.split("-")[1]:
+            raise StoreError(
+                f"record {path} is torn or altered: its content does not have the digest in its name; "
+                "remove it and run its study again."
+            )
+        table = pq.read_table(pa.BufferReader(content))
+        missing = [name for name in ORIGIN.names if name not in table.column_names]
+        if missing or set(table["run_id"].to_pylist()) != {run_id}:
+            raise StoreError(f"record {path} is not the record of run {run_id}; move it out of the store.")
+        return table
+
+    def read_all(self, paths: Iterable[Path]) -> "pa.Table":
+        """Return several records as one table, columns absent from some filled with nulls."""
+        import pyarrow as pa
+
+        return pa.concat_tables([self.read(path) for path in paths], promote_options="default")
+
+
+def check_writable(what: str, folder: Path) -> None:
+    """Refuse a folder, there already or not, in which nothing could be written; leave nothing behind."""
+    try:
+        present = next(place for place in (folder, *folder.parents) if os.path.lexists(place))
+        with tempfile.TemporaryFile(dir=present):
+            pass
+    except OSError as error:
+        raise unwritable(what, folder, error) from None
+
+
+def unwritable(what: str, folder: Path, error: OSError) -> StoreError:
+    """Return the refusal of a folder that cannot be written."""
+    return StoreError(f"{what} {folder} cannot be written ({error.strerror}); name a folder that can be.")
+
+
+def open_store(store: str | Path | None = None) -> Store:
+    """Return the store at a folder (relative ones count from the project root), or the project's own."""
+    return Store(from_root(store) if store else STORE)
+
+
+def _run_id(path: Path) -> str:
+    name = _NAME.fullmatch(path.name)
+    if name is None:
+        raise StoreError(f"file {path} is not a record of this store; move it elsewhere.")
+    return name[1]
+
+
+def _digest(content: bytes | memoryview) -> str:
+    return hashlib.sha256(content).hexdigest()[:32]
+
+
+def _host() -> str:
+    return hashlib.sha256(platform.node().encode()).hexdigest()[:8]
+
+
+def _write_whole(folder: Path, run_id: str, table: "pa.Table") -> Path:
+    import pyarrow as pa
+    import pyarrow.parquet as pq
+
+    from labkit.records.schema import first_difference
+
+    sink = pa.BufferOutputStream()
+    pq.write_table(table, sink, compression="zstd")
+    content = memoryview(sink.getvalue())
+    digest = _digest(content)
+    beside = folder / f".{run_id}.{_host()}.{os.getpid()}.{secrets.token_hex(4)}.tmp"
+    try:
+        with beside.open("xb") as stream:
+            stream.write(content)
+            stream.flush()
+            os.fsync(stream.fileno())
+        written = beside.read_bytes()
+        if _digest(written) != digest or first_difference(pq.read_table(pa.BufferReader(written)), table):
+            raise StoreError(f"record {beside} did not read back as written; check the disk.")
+        final = folder / f"{run_id}-{digest}.parquet"
+        os.replace(beside, final)
+    finally:
+        beside.unlink(missing_ok=True)
+    _sync(folder)
+    return final
+
+
+def _sync(folder: Path) -> None:
+    if os.name == "posix":
+        handle = os.open(folder, os.O_RDONLY)
+        try:
+            os.fsync(handle)
+        finally:
+            os.close(handle)
+
+
+def _sweep(folder: Path) -> None:
+    """Remove what writers left that died half-way; a writer elsewhere is taken for dead after a day."""
+    for path in folder.glob(".*.tmp"):
+        name = _LEFTOVER.fullmatch(path.name)
+        if name is None:
+            continue
+        try:
+            old = time.time() - path.stat().st_mtime > _DAY
+            if old or (name[1] == _host() and not _alive(int(name[2]))):
+                path.unlink()
+        except OSError:
+            continue
+
+
+def _alive(process: int) -> bool:
+    if os.name != "posix":
+        return True
+    try:
+        os.kill(process, 0)
+    except ProcessLookupError:
+        return False
+    except PermissionError:
+        return True
+    return True
