@@ -1,0 +1,1 @@
+"""Declared questions: study files, their grid points, and running notebooks for them."""

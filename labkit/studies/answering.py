@@ -1,0 +1,162 @@
+"""The answer to a study: its answer notebook executed on its runs, and one page made from it."""
+
+import csv
+import hashlib
+import json
+import os
+import shutil
+import tempfile
+from dataclasses import dataclass
+from pathlib import Path
+from threading import Thread
+from typing import Any
+
+from labkit.records.store import Store, unwritable
+from labkit.studies.execution import execute
+from labkit.studies.model import Study
+from labkit.studies.page import write_page
+from labkit.studies.warmth import sources_digest
+
+# Tells from what the answer beside it was made, so that it is not made twice.
+MADE_FROM = "made_from.json"
+
+
+@dataclass(frozen=True)
+class Answer:
+    """Where the answer is; `error` says why there is none, or what guard it fails."""
+
+    text: str
+    page: Path | None
+    error: str = ""
+    refused: bool = False
+
+
+def write_answer(study: Study, store: Store, output: Path) -> Answer:
+    """Execute the answer notebook of a study on the runs of its points, unless its answer is there already.
+
+    Everything is made in a folder aside and moved into `output` when complete. When the notebook refuses a
+    value nothing is kept; when it fails otherwise, a guard on the headroom included, what it made is kept.
+
+    Parameters
+    ----------
+    study : Study
+        A study with an answer notebook whose points are all recorded.
+    store : Store
+        Where the records are.
+    output : Path
+        The folder for the page, the executed notebook and what the notebook writes.
+
+    Raises
+    ------
+    StoreError
+        When `output` cannot be written.
+    """
+    page = output / f"{study.name}.html"
+    origin = _origin(study, store)
+    if _is_made(output, origin):
+        return Answer(_answer_text(output), page)
+    try:
+        output.parent.mkdir(parents=True, exist_ok=True)
+        aside = Path(tempfile.mkdtemp(prefix=f".{study.name}-", dir=output.parent))
+    except OSError as error:
+        raise unwritable("output", output, error) from None
+    try:
+        executed, result = _execute(study, store, aside)
+        if result.refused or not executed.exists():
+            return Answer("", None, result.error, result.refused)
+        write_page(executed, executed.with_suffix(".html"), study.title)
+        if not result.error:
+            files = {made.name: _digest(made) for made in sorted(aside.iterdir())}
+            (aside / MADE_FROM).write_text(json.dumps({**origin, "files": files}, indent=1), encoding="utf-8")
+        text = _answer_text(aside)
+        output.mkdir(exist_ok=True)
+        (output / MADE_FROM).unlink(missing_ok=True)
+        for made in sorted(aside.iterdir(), key=lambda made: made.name == MADE_FROM):
+            os.replace(made, output / made.name)
+        return Answer(text, page, result.error)
+    except OSError as error:
+        raise unwritable("output", output, error) from None
+    finally:
+        shutil.rmtree(aside, ignore_errors=True)
+
+
+def _execute(study: Study, store: Store, aside: Path) -> tuple[Path, Any]:
+    assert study.answer_notebook is not None
+    executed = aside / f"{study.name}.ipynb"
+    handed = {
+        "study": study.name,
+        "store": str(store.folder),
+        "output": str(aside),
+        "runs": [point.run_id for point in study.points],
+    }
+    converter = Thread(target=_load_converter, daemon=True)
+    converter.start()
+    result = execute(study.answer_notebook.path, (study.answer_parameters or {}) | handed, executed)
+    converter.join()
+    return executed, result
+
+
+def _load_converter() -> None:
+    from labkit.studies.light import import_jsonschema
+
+    import_jsonschema()
+    import nbconvert.exporters  # noqa: F401  (a second of imports, taken while the kernel works)
+
+
+def _origin(study: Study, store: Store) -> dict[str, Any]:
+    assert study.answer_notebook is not None
+    records = [store.find(study.name, point.run_id) for point in study.points]
+    return {
+        "study": study.name,
+        "title": study.title,
+        "notebook": study.answer_notebook.name,
+        "notebook_file": _digest(study.answer_notebook.path),
+        "parameters": study.answer_parameters,
+        "records": [record.name for record in records if record is not None],
+        "labkit_sources": sources_digest(),
+    }
+
+
+def _is_made(output: Path, origin: dict[str, Any]) -> bool:
+    try:
+        made = json.loads((output / MADE_FROM).read_bytes())
+        files = made.pop("files")
+        return made == origin and all(_digest(output / name) == digest for name, digest in files.items())
+    except (OSError, ValueError, KeyError, AttributeError):
+        return False
+
+
+def _digest(path: Path) -> str:
+    with path.open("rb") as stream:
+        return hashlib.file_digest(stream, "sha256").hexdigest()
+
+
+def _answer_text(folder: Path) -> str:
+    """Return what to print: answer.txt as it is, else answer.csv with its columns aligned."""
+    text = folder / "answer.txt"
+    if text.is_file():
+        return text.read_text(encoding="utf-8").rstrip()
+    table = folder / "answer.csv"
+    if not table.is_file():
+        return ""
+    with table.open(encoding="utf-8", newline="") as stream:
+        return align([[_short(cell) for cell in row] for row in csv.reader(stream)])
+
+
+def align(rows: list[list[str]]) -> str:
+    """Return rows of texts as lines with aligned columns; the first row is the header."""
+    widths = [max(len(cell) for cell in column) for column in zip(*rows, strict=True)]
+    return "\n".join(
+        "  ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=True)).rstrip() for row in rows
+    )
+
+
+def _short(cell: str) -> str:
+    try:
+        int(cell)
+    except ValueError:
+        try:
+            return f"{float(cell):.4g}"
+        except ValueError:
+            return cell
+    return cell

@@ -1,0 +1,128 @@
+"""Kernels that can run side by side: no port race, always this Python and this labkit, nothing left behind.
+
+Ports are picked before they are bound, so two kernels that start together can pick the same one. On POSIX
+systems each kernel gets Unix sockets in a folder of its own instead; elsewhere the usual ports.
+"""
+
+import asyncio
+import contextlib
+import os
+import re
+import shutil
+import sys
+import tempfile
+from collections.abc import Iterator
+from pathlib import Path
+from typing import Any
+
+from jupyter_client.manager import AsyncKernelManager
+from jupyter_core.utils import ensure_event_loop, run_sync
+from traitlets import default
+
+from labkit.records.project import ROOT
+
+# The kernels of this process that are alive; an interrupted command ends them.
+_alive: set["PrivateKernelManager"] = set()
+
+
+class PrivateKernelManager(AsyncKernelManager):
+    """A kernel over Unix sockets in a private folder, with the caller's Python and labkit."""
+
+    _folder: str | None = None
+    preload: tuple[str, ...] = ()
+
+    if os.name == "posix":
+        transport = "ipc"
+
+        @default("ip")
+        def _private_address(self) -> str:
+            self._folder = tempfile.mkdtemp(prefix="labkit-")
+            return os.path.join(self._folder, "k")
+
+    def format_kernel_cmd(self, extra_arguments: list[str] | None = None) -> list[str]:
+        """Return the command: this Python, whatever kernels are installed, and no history file."""
+        connection = os.path.realpath(self.connection_file)
+        command = [
+            sys.executable,
+            "-m",
+            "labkit.studies.kernel_main",
+            ",".join(self.preload),
+            "-f",
+            connection,
+        ]
+        return [*command, "--HistoryManager.enabled=False", *(extra_arguments or [])]
+
+    async def start_kernel(self, **options: Any) -> None:  # type: ignore[override]
+        """Start the kernel with this labkit first on its path."""
+        environment = dict(options.pop("env", os.environ))
+        paths = [str(ROOT), *filter(None, [environment.get("PYTHONPATH")])]
+        environment["PYTHONPATH"] = os.pathsep.join(paths)
+        environment["PYDEVD_DISABLE_FILE_VALIDATION"] = "1"
+        _alive.add(self)
+        await super().start_kernel(env=environment, **options)
+
+    async def cleanup_resources(self, restart: bool = False) -> None:  # type: ignore[override]
+        """Remove the private folder with the rest."""
+        await super().cleanup_resources(restart=restart)
+        _alive.discard(self)
+        if self._folder and not restart:
+            shutil.rmtree(self._folder, ignore_errors=True)
+
+    def end_now(self) -> None:
+        """End the kernel's process at once, from any thread."""
+        process = getattr(self.provisioner, "process", None)
+        if process is not None:
+            process.kill()
+
+
+def start_kernel(notebook: Path) -> type[PrivateKernelManager]:
+    """Start a kernel for a notebook and return a class that nbclient can call for its manager.
+
+    nbclient makes managers itself, from a class, and starts them when it is itself loaded. This kernel is on
+    its way before that, so that both load at the same time; it begins with what the notebook will import.
+    """
+    manager = PrivateKernelManager(kernel_name="python3")
+    manager.preload = _imports(notebook)
+    # the working directory that JupyterLab gives; papermill's own option would change it for all threads
+    run_sync(manager.start_kernel)(cwd=str(notebook.parent))
+
+    class Started(PrivateKernelManager):
+        def __new__(cls, **options: Any) -> Any:
+            return manager
+
+    return Started
+
+
+def end_kernel(kernel: type[PrivateKernelManager]) -> None:
+    """End a kernel and remove what it left, if that has not been done."""
+    manager: PrivateKernelManager = kernel()
+    if manager in _alive:
+        manager.end_now()
+        run_sync(manager.cleanup_resources)()
+
+
+@contextlib.contextmanager
+def own_event_loop() -> Iterator[None]:
+    """Close the event loop that jupyter makes for each thread and leaves open."""
+    loop = ensure_event_loop()
+    try:
+        yield
+    finally:
+        if not loop.is_running():
+            loop.close()
+            asyncio.set_event_loop(None)
+
+
+def end_all() -> None:
+    """End the kernels that this process started and that are still alive."""
+    for manager in list(_alive):
+        manager.end_now()
+
+
+def _imports(notebook: Path) -> tuple[str, ...]:
+    """Return the modules of labkit that a notebook uses; they bring everything that is slow to import."""
+    source = notebook.read_text(encoding="utf-8")
+    names = dict.fromkeys(re.findall(r"\blk\.(\w+)", source))
+    known = sys.modules["labkit"]._HOMES
+    homes = [known[name] for name in names if name in known]
+    return tuple(dict.fromkeys([*homes, *re.findall(r"\bfrom (labkit\.[\w.]+) import", source)]))

@@ -1,0 +1,206 @@
+"""A study: a question declared in a TOML file, and the grid points it asks for."""
+
+import itertools
+import math
+import os
+import tomllib
+from dataclasses import dataclass
+from functools import cached_property
+from pathlib import Path
+from typing import Any
+
+from labkit.checks import check_fraction, check_whole, nearest
+from labkit.errors import InputError, TooFewReplicates
+from labkit.records.declared import EXECUTION_ONLY, Notebook, Parameter, is_path, read_notebook
+from labkit.records.identity import Identity, identify
+from labkit.records.project import EXPERIMENTS, ROOT, check_study_name, find_notebook, path_text
+
+KEYS = ("title", "question", "notebook", "replicates", "entropy", "parameters", "grid", "answer")
+# Handed to an answer notebook by the runner.
+HANDED = ("study", "store", "output", "runs")
+
+
+@dataclass(frozen=True)
+class Point:
+    """One grid point: the values to run the notebook with, and the identity of that run."""
+
+    parameters: dict[str, Any]
+    identity: Identity
+
+    @property
+    def run_id(self) -> str:
+        """The id of the run."""
+        return self.identity.run_id
+
+
+@dataclass(frozen=True)
+class Study:
+    """A checked study; the fields are the keys of its file."""
+
+    name: str
+    title: str
+    question: str
+    notebook: Notebook
+    parameters: dict[str, Any]
+    grid: dict[str, list[Any]]
+    answer_notebook: Notebook | None = None
+    answer_parameters: dict[str, Any] | None = None
+
+    @cached_property
+    def points(self) -> list[Point]:
+        """The grid points in the order of the file; their identities do not depend on it."""
+        found: dict[str, Point] = {}
+        for values in itertools.product(*self.grid.values()):
+            asked = self.parameters | dict(zip(self.grid, values, strict=True))
+            point = Point(asked, identify(self.notebook, self.notebook.checked(asked)))
+            if point.run_id in found:
+                raise InputError(f"grid of study {self.name} has a point twice ({asked}); remove one.")
+            found[point.run_id] = point
+        return list(found.values())
+
+
+def read_study(study: str | Path) -> Study:
+    """Read and check a study: a name from experiments/, or the path of a TOML file.
+
+    Raises
+    ------
+    InputError
+        When there is no such file, or a key, parameter, type or path in it is refused, in one sentence.
+    """
+    path = find_study(str(study))
+    try:
+        content = tomllib.loads(path.read_text(encoding="utf-8"))
+    except (OSError, ValueError) as error:
+        raise InputError(f"study {path} cannot be read ({error}); correct the file.") from None
+    try:
+        return make_study(path.stem, content, folder=path.parent)
+    except InputError as error:
+        raise type(error)(f"study {path_text(path)}: {error}") from None
+
+
+def find_study(study: str) -> Path:
+    """Return the file of a study."""
+    path = Path(study) if study.endswith(".toml") else EXPERIMENTS / f"{study}.toml"
+    if path.is_file():
+        return path.resolve()
+    known = sorted(each.stem for each in EXPERIMENTS.glob("*.toml"))
+    raise InputError(
+        f"study is {study!r}; give the path of a .toml file or a study of experiments/: "
+        f"{nearest(study, known) if known else 'it holds none'}."
+    )
+
+
+def make_study(name: str, content: dict[str, Any], *, folder: Path) -> Study:
+    """Check the content of a study file.
+
+    Parameters
+    ----------
+    name : str
+        The name of the study.
+    content : dict
+        The decoded file.
+    folder : Path
+        Where relative paths in it start.
+    """
+    check_study_name(name)
+    _check_keys(content, KEYS, "key")
+    title = _text(content, "title", default=name)
+    question = _text(content, "question", default="")
+    notebook = _notebook(_text(content, "notebook"), folder)
+    for key in ("replicates", "entropy"):
+        if key not in content:
+            raise InputError(f"{key} is missing; give {key} = a whole number at the top of the file.")
+    fixed = dict(_table(content, "parameters"))
+    grid = {key: _grid_values(key, values) for key, values in _table(content, "grid").items()}
+    for key in (*fixed, *grid):
+        if key in EXECUTION_ONLY:
+            raise InputError(f"parameter {key} is set by labkit itself; remove it from the study.")
+        if key in ("replicates", "entropy") or (key in fixed and key in grid):
+            raise InputError(f"{key} is given twice; give it once, replicates and entropy at the top.")
+    fixed["replicates"] = check_whole("replicates", content["replicates"])
+    fixed["entropy"] = check_whole("entropy", content["entropy"], least=0)
+    fixed = _typed(notebook, fixed, folder)
+    grid = {
+        key: [_typed(notebook, {key: value}, folder)[key] for value in values] for key, values in grid.items()
+    }
+    answer = dict(_table(content, "answer"))
+    if not answer:
+        return Study(name, title, question, notebook, fixed, grid)
+    answer_notebook = _notebook(_text(answer, "notebook"), folder)
+    del answer["notebook"]
+    for key in HANDED:
+        if key in answer:
+            raise InputError(f"answer: {key} is set by labkit itself; remove it from the study.")
+        if key not in answer_notebook.parameters:
+            raise InputError(f"answer: notebook {answer_notebook.name} declares no parameter {key}; add it.")
+    answer = _typed(answer_notebook, answer, folder)
+    _check_answerable(answer_notebook.checked(answer), fixed["replicates"])
+    return Study(name, title, question, notebook, fixed, grid, answer_notebook, answer)
+
+
+def _check_answerable(answer: dict[str, Any], replicates: int) -> None:
+    """Refuse before any run a risk that these replicates could not answer after it."""
+    if "risk" not in answer:
+        return
+    risk = check_fraction("risk", answer["risk"])
+    confidence = check_fraction("confidence", answer.get("confidence", 0.95))
+    if replicates > math.log(2 / (1 - confidence)) / min(risk, 1 - risk) + 1:
+        return  # more than any rank needs, and a second of imports saved
+    from labkit.analysis.headroom import replicates_needed
+
+    needed = replicates_needed(risk, confidence)
+    if replicates < needed:
+        raise TooFewReplicates(
+            f"replicates is {replicates}; a risk of {risk:g} with {100 * confidence:g} % limits needs at "
+            f"least {needed}: raise replicates or accept a larger risk."
+        )
+
+
+def _check_keys(content: dict[str, Any], known: tuple[str, ...], what: str) -> None:
+    for key in content:
+        if key not in known:
+            raise InputError(f"unknown {what} {key!r}; {nearest(key, known)}.")
+
+
+def _text(content: dict[str, Any], key: str, default: str | None = None) -> str:
+    value = content.get(key, default)
+    if not isinstance(value, str):
+        raise InputError(f"{key} is {value!r}; give a text.")
+    return value
+
+
+def _table(content: dict[str, Any], key: str) -> dict[str, Any]:
+    value = content.get(key, {})
+    if not isinstance(value, dict):
+        raise InputError(f"{key} is {value!r}; give a table [{key}] of name = value lines.")
+    return value
+
+
+def _grid_values(key: str, values: Any) -> list[Any]:
+    if not isinstance(values, list) or not values:
+        raise InputError(f"grid: {key} is {values!r}; give a list of one or more values.")
+    return values
+
+
+def _notebook(text: str, folder: Path) -> Notebook:
+    beside = folder / text
+    if text.endswith(".ipynb") and beside.is_file():
+        return read_notebook(beside.resolve())
+    return read_notebook(find_notebook(text))
+
+
+def _typed(notebook: Notebook, values: dict[str, Any], folder: Path) -> dict[str, Any]:
+    """Return values checked against the declared types, with paths from the study's folder made absolute."""
+    notebook.check_names(values)
+    return {name: _one(notebook.parameters[name], value, folder) for name, value in values.items()}
+
+
+def _one(parameter: Parameter, value: Any, folder: Path) -> Any:
+    if is_path(parameter.name) and isinstance(value, str) and value:
+        place = Path(os.path.normpath(folder.resolve() / Path(value).expanduser()))
+        if not place.exists():
+            raise InputError(
+                f"{parameter.name} is {value!r}; {place} does not exist: give a path from the study's folder."
+            )
+        value = path_text(place) if place.is_relative_to(ROOT) else place.as_posix()
+    return parameter.checked(value)

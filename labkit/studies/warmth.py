@@ -1,0 +1,38 @@
+"""Whether compiled code is likely to be on disk already: several processes on an empty cache all compile."""
+
+import contextlib
+import hashlib
+from functools import cache
+from pathlib import Path
+
+from platformdirs import user_cache_path
+
+from labkit.records.project import PACKAGE
+
+
+@cache
+def sources_digest() -> str:
+    """Return a short digest of every source of labkit, those that only show results included."""
+    total = hashlib.sha256()
+    for path in sorted(PACKAGE.rglob("*.py")):
+        total.update(path.relative_to(PACKAGE).as_posix().encode() + path.read_bytes())
+    return total.hexdigest()[:16]
+
+
+def _mark() -> Path:
+    return user_cache_path("labkit", appauthor=False) / f"warm-{sources_digest()}"
+
+
+def is_warm() -> bool:
+    """Tell whether a run of these very sources was executed on this machine before."""
+    return _mark().exists()
+
+
+def set_warm() -> None:
+    """Remember that a run of these sources was executed; a place that cannot be written is no matter."""
+    mark = _mark()
+    with contextlib.suppress(OSError):
+        mark.parent.mkdir(parents=True, exist_ok=True)
+        for old in mark.parent.glob("warm-*"):
+            old.unlink(missing_ok=True)
+        mark.touch()
