@@ -55,5 +55,5 @@ def nearest(value: Any, words: Iterable[str]) -> str:
     """Return the end of a refusal: the nearest allowed word, or the whole list."""
     words = list(words)
     close = difflib.get_close_matches(str(value), words, n=1)
-    guess = f"did you mean {close[0]!r}? " if close else ""
-    return f"{guess}allowed: {', '.join(words)}"
+    allowed = f"allowed: {', '.join(words)}"
+    return f"did you mean {close[0]!r} ({allowed})" if close else allowed

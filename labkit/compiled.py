@@ -5,12 +5,13 @@ checked division costs a branch; no ``fastmath``, because results must be equal 
 Indices are unsigned (``np.uint64``), since a signed index costs a wrap-around test.
 
 Numba keys a cached function by its own file only, so an edited helper elsewhere would leave old machine code
-in use. The cache folder here is keyed by a digest of all sources of the package instead.
+in use. Cache folder and cached names here carry a digest of all sources of the package.
 """
 
 import hashlib
 import types
 from collections.abc import Callable
+from functools import lru_cache
 from pathlib import Path
 from typing import Any
 
@@ -21,6 +22,7 @@ from numba.core import cgutils
 from numba.extending import intrinsic
 from platformdirs import user_cache_path
 
+CONFIG: Any = numba.config
 OPTIONS: dict[str, Any] = {"nogil": True, "error_model": "numpy"}
 
 compiled = numba.njit(**OPTIONS)
@@ -38,10 +40,12 @@ def source_digest(folder: Path) -> str:
     return total.hexdigest()[:16]
 
 
-def _use_cache_folder() -> None:
-    if not numba.config.CACHE_DIR:
-        digest = source_digest(Path(__file__).parent)
-        numba.config.CACHE_DIR = str(user_cache_path("labkit", appauthor=False) / f"compiled-{digest}")
+@lru_cache(maxsize=1)
+def _sources() -> str:
+    digest = source_digest(Path(__file__).parent)
+    if not CONFIG.CACHE_DIR:
+        CONFIG.CACHE_DIR = str(user_cache_path("labkit", appauthor=False) / f"compiled-{digest}")
+    return digest
 
 
 def bind(function: Callable, name: str, **pieces: Any) -> types.FunctionType:
@@ -66,17 +70,22 @@ def specialise(loop: Callable, name: str, *, cache: bool, **pieces: Any) -> Call
     **pieces
         Compiled functions by the global name that the loop calls them by.
     """
-    copy = bind(loop, name, **pieces)
     if cache:
-        _use_cache_folder()
         try:
-            return numba.njit(cache=True, **OPTIONS)(copy)
+            # The digest is in the name as well, for a cache folder of the user's or numba's own choice.
+            return numba.njit(cache=True, **OPTIONS)(bind(loop, f"{name}_{_sources()}", **pieces))
         except RuntimeError:  # no folder can be written: compile afresh in each process
             pass
-    return numba.njit(**OPTIONS)(copy)
+    return numba.njit(**OPTIONS)(bind(loop, name, **pieces))
 
 
-if numba.config.DISABLE_JIT:
+@lru_cache(maxsize=16)
+def kept(function: Callable) -> Callable:
+    """Return a plain function compiled, its machine code kept on disk; for calls from Python."""
+    return specialise(function, "kept", cache=True)
+
+
+if CONFIG.DISABLE_JIT:
 
     def multiply_wide(a, b):  # noqa: D103
         product = int(a) * int(b)

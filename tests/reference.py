@@ -3,6 +3,7 @@
 It shares no code with the engine: raw words come from NumPy's own SFC64, products are Python integers.
 """
 
+import itertools
 from fractions import Fraction
 
 import numpy as np
@@ -48,12 +49,8 @@ def pick(rule, fleet, options, seen, coin, own):
         if fleet.capacity is None:
             return coin * len(options) // WORD
         target = float(share) * sum(capacity[s] for s in options)
-        passed, position = 0.0, 0
-        for position, server in enumerate(options):
-            passed += capacity[server]
-            if target < passed:
-                break
-        return position
+        passed = list(itertools.accumulate(capacity[server] for server in options[:-1]))
+        return sum(target >= value for value in passed)
     level = [Fraction(float(seen[s])) / Fraction(float(capacity[s])) for s in options]
     tied = [position for position, value in enumerate(level) if value == min(level)]
     return tied[0] if rule[1] == "first" else tied[coin * len(tied) // WORD]

@@ -1,0 +1,1 @@
+"""Compiled loops and the public functions around them."""

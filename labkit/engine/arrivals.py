@@ -4,7 +4,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from labkit.compiled import advance, compiled, inlined, multiply_wide, prefetch
+from labkit.compiled import advance, compiled, inlined, kept, multiply_wide, prefetch
 from labkit.fleet.model import ABSENT, Fleet
 
 # Tasks drawn ahead of their placement when a fleet is larger than cache: enough to keep some dozens of memory
@@ -36,7 +36,7 @@ def arrivals_of(fleet: Fleet) -> Arrivals:
 def _alias_table(demand: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     threshold = np.empty(demand.size, np.uint32)
     alias = np.empty(demand.size, np.uint32)
-    fill_alias_table(demand, float(np.sum(demand)), threshold, alias)
+    kept(fill_alias_table)(demand, float(np.sum(demand)), threshold, alias)
     return read_only(threshold), read_only(alias)
 
 
@@ -46,7 +46,6 @@ def read_only(array: np.ndarray) -> np.ndarray:
     return array
 
 
-@compiled
 def fill_alias_table(demand, total, threshold, alias):
     """Fill an alias table (Walker 1977) in one sweep that needs no work space.
 
@@ -146,7 +145,7 @@ def draw_from_table(options, threshold, alias, state, loads, picked, coins, rows
 
 @compiled
 def draw_from_all(servers, distinct, state, loads, picked, coins, count):
-    """Draw `count` arrivals whose options are any servers, one raw word an option; else as `draw_from_table`."""
+    """Draw `count` arrivals whose options are any servers, one raw word an option (see `draw_from_table`)."""
     a, b, c, counter = state[0], state[1], state[2], state[3]
     for index in range(count):
         here = np.uint64(index)
@@ -165,7 +164,7 @@ def draw_from_all(servers, distinct, state, loads, picked, coins, count):
 
 @compiled
 def skip_taken(picked, row, position, rank):
-    """Return the server with the given rank among those not yet picked in this row (few options: quadratic)."""
+    """Return the server with the given rank among those not yet picked in this row (few, so quadratic)."""
     if position == 1:
         return rank + np.uint64(rank >= np.uint64(picked[row, np.uint64(0)]))
     floor = np.int64(-1)

@@ -14,9 +14,22 @@ def choose(state, seen, capacity, options, row, count, coin, own):
 
 
 def place_near(
-    options, threshold, alias, several, arrival_state, own, state, capacity, sizes, loads, seen, first, start, stop
+    options,
+    threshold,
+    alias,
+    several,
+    arrival_state,
+    own,
+    state,
+    capacity,
+    sizes,
+    loads,
+    seen,
+    first,
+    start,
+    stop,
 ):
-    """Place the tasks ``start + 1 .. stop``, each as it is drawn; arguments and result as in `place_tasks`."""
+    """Place the tasks ``start + 1 .. stop``, each as it is drawn; see `place_tasks`."""
     choices = np.uint64(options.shape[0])
     a, b, c, counter = arrival_state[0], arrival_state[1], arrival_state[2], arrival_state[3]
     failed = 0
@@ -35,7 +48,7 @@ def place_near(
 
 
 def place_drawn(picked, coins, batch, several, own, state, capacity, sizes, loads, seen, first, start):
-    """Place the `batch` tasks after `start` that were drawn ahead; arguments and result as in `place_tasks`."""
+    """Place the `batch` tasks after `start` that were drawn ahead; see `place_tasks`."""
     for index in range(batch):
         row = np.uint64(index)
         count = 2 if several is None else options_in(picked, row)

@@ -6,12 +6,11 @@ from dataclasses import dataclass
 from functools import cached_property, lru_cache
 from typing import Any
 
-import numba
 import numpy as np
 import pandas as pd
 
 from labkit.checks import check_whole
-from labkit.compiled import inlined, specialise
+from labkit.compiled import CONFIG, inlined, specialise
 from labkit.engine.arrivals import Arrivals, arrivals_of, read_only
 from labkit.engine.information import Fresh, Information
 from labkit.engine.loop import place_drawn, place_near, place_tasks
@@ -55,7 +54,9 @@ class Outcome:
     def measures(self) -> pd.DataFrame:
         """The table of measures, one row a replicate and checkpoint."""
         replicates, count, _ = self.measured.shape
-        columns = dict(zip(MEASURED, np.moveaxis(self.measured, -1, 0).reshape(len(MEASURED), -1), strict=True))
+        columns = dict(
+            zip(MEASURED, np.moveaxis(self.measured, -1, 0).reshape(len(MEASURED), -1), strict=True)
+        )
         work = columns["mean_load"] * self.fleet.size
         optimum = optimum_if_practical(self.fleet)
         table = pd.DataFrame(
@@ -129,8 +130,8 @@ def place(
 
     Notes
     -----
-    Replicate ``r`` uses ``SeedSequence(entropy, spawn_key=(*key, r, stream))``, stream 0 for arrivals, 1 for the
-    policy's own coins, 2 for sizes. See `labkit.randomness.DRAWS` for how a raw word becomes an arrival.
+    Replicate ``r`` uses ``SeedSequence(entropy, spawn_key=(*key, r, stream))``, stream 0 for arrivals, 1 for
+    the policy's own coins, 2 for sizes. See `labkit.randomness.DRAWS` for how a raw word becomes an arrival.
 
     Examples
     --------
@@ -140,7 +141,9 @@ def place(
     [[0.0, 1600.0, 100.0], [1.0, 1600.0, 100.0], [2.0, 1600.0, 100.0]]
     """
     if not isinstance(fleet, Fleet):
-        raise InputError(f"fleet is {type(fleet).__name__}; give a labkit Fleet, such as lk.read_fleet(folder).")
+        raise InputError(
+            f"fleet is {type(fleet).__name__}; give a labkit Fleet, such as lk.read_fleet(folder)."
+        )
     rule = parse_policy(policy)
     tasks = check_whole("tasks", tasks)
     replicates = check_whole("replicates", replicates)
@@ -218,7 +221,7 @@ class _Job:
         out: np.ndarray,
     ) -> None:
         # Without the compiler unsigned words are NumPy scalars, which warn when they wrap around.
-        with np.errstate(over="ignore" if numba.config.DISABLE_JIT else "warn"):
+        with np.errstate(over="ignore" if CONFIG.DISABLE_JIT else "warn"):
             failed = self.loop(
                 self.arrivals, self.several, arriving, own, self.state, self.capacity, sizes, loads, seen,
                 self.every, self.ahead, first, last, self.checkpoints, self.demand, self.pairs_of, out,
@@ -264,7 +267,8 @@ def _checked_checkpoints(checkpoints: Iterable[int] | None, tasks: int) -> np.nd
     whole = moments.ndim == 1 and moments.size > 0 and moments.dtype.kind in "iu"
     if not whole or moments[0] < 1 or moments[-1] > tasks or np.any(np.diff(moments.astype(np.int64)) <= 0):
         raise InputError(
-            f"checkpoints is {checkpoints!r}; give increasing whole numbers from 1 to the number of tasks, {tasks}."
+            f"checkpoints is {checkpoints!r}; give increasing whole numbers from 1 to the number of tasks, "
+            f"{tasks}."
         )
     return moments.astype(np.int64)
 

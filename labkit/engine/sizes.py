@@ -56,4 +56,6 @@ def _refuse_bad(sizes: np.ndarray) -> None:
     bad = ~(np.isfinite(sizes) & (sizes >= 0))
     if bad.any():
         place = np.argwhere(bad)[0]
-        raise InputError(f"sizes holds {sizes[tuple(place)]} for task {place[-1] + 1}; sizes are finite and at least 0.")
+        raise InputError(
+            f"sizes holds {sizes[tuple(place)]} for task {place[-1] + 1}; sizes are finite and at least 0."
+        )

@@ -1,0 +1,1 @@
+"""How a task picks a server: one file a policy."""

@@ -1,6 +1,5 @@
 """What every policy is: a name that can be written down, a prepared state, and one compiled chooser."""
 
-from collections.abc import Callable
 from typing import Any, ClassVar
 
 from labkit.fleet.model import Fleet
@@ -27,7 +26,7 @@ class Policy:
         A second stream (``labkit.compiled.next_raw(own)``) for a policy that needs more randomness.
     """
 
-    choose: ClassVar[Callable]
+    choose: Any
     cached: ClassVar[bool] = True
 
     @property

@@ -3,7 +3,7 @@
 import numpy as np
 
 from labkit.checks import check_member
-from labkit.compiled import compiled, inlined, multiply_wide
+from labkit.compiled import inlined, multiply_wide
 from labkit.policies.base import Policy
 
 TIES = ("random", "first")
@@ -11,7 +11,7 @@ TIES = ("random", "first")
 
 @inlined
 def lower(seen, capacity, one, other):
-    """Tell whether server `one` has a lower utilisation than server `other` (cross-multiplied, no division)."""
+    """Tell whether server `one` has a lower utilisation than server `other` (cross-multiplied)."""
     if capacity is None:
         return seen[one] < seen[other]
     return seen[one] * capacity[other] < seen[other] * capacity[one]
@@ -81,7 +81,7 @@ class LeastLoaded(Policy):
 
     def __init__(self, ties: str = "random") -> None:
         self.ties = check_member("ties", ties, TIES)
-        self.choose = choose_fair if ties == "random" else choose_first  # type: ignore[misc]
+        self.choose = choose_fair if ties == "random" else choose_first
 
     @property
     def name(self) -> str:

@@ -29,7 +29,7 @@ class Mixed(Policy):
 
     Notes
     -----
-    Peres, Talwar & Wieder (2015). It also models a dispatcher that gets load reports for only a share of tasks.
+    Peres, Talwar & Wieder (2015). It also models load reports for a share of the tasks only.
     """
 
     choose = staticmethod(choose)

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from labkit.compiled import compiled, inlined, multiply_wide, unit_interval
+from labkit.compiled import inlined, multiply_wide, unit_interval
 from labkit.policies.base import Policy
 
 

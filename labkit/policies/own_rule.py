@@ -37,7 +37,7 @@ class OwnRule(Policy):
         self.source = source_of(function)
         self.digest = hashlib.sha256(self.source.encode()).hexdigest()[:8]
         self.__doc__ = function.__doc__
-        self.choose = bind(choose, self.kernel_name, rule=compiled(function))  # type: ignore[misc]
+        self.choose = bind(choose, self.kernel_name, rule=compiled(function))
         _SOURCES[self.name] = self.source
 
     @property
@@ -97,12 +97,15 @@ def policy(function: Callable) -> OwnRule:
     arguments = tuple(inspect.signature(function).parameters)
     if arguments != ARGUMENTS:
         raise InputError(
-            f"policy {function.__name__} takes ({', '.join(arguments)}); it must take ({', '.join(ARGUMENTS)})."
+            f"policy {function.__name__} takes ({', '.join(arguments)}); "
+            f"it must take ({', '.join(ARGUMENTS)})."
         )
     from labkit.policies.naming import BUILT_IN
 
     if function.__name__.replace("_", "-") in BUILT_IN:
-        raise InputError(f"policy {function.__name__} has the name of a built-in policy; give it another name.")
+        raise InputError(
+            f"policy {function.__name__} has the name of a built-in policy; give it another name."
+        )
     return OwnRule(function)
 
 
@@ -112,7 +115,7 @@ def source_of(function: Callable) -> str:
         return textwrap.dedent(inspect.getsource(function))
     except (OSError, TypeError) as reason:
         raise InputError(
-            f"policy {function.__name__} has no source text to record; define it in a file or a notebook cell."
+            f"policy {function.__name__} has no source text to record; define it in a file or a cell."
         ) from reason
 
 

@@ -1,0 +1,1 @@
+"""Exact facts about a fleet, without simulation."""

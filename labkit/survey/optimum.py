@@ -4,10 +4,8 @@ import math
 import weakref
 
 import numpy as np
-import scipy.optimize
-import scipy.sparse
 
-from labkit.compiled import compiled
+from labkit.compiled import kept
 from labkit.fleet.model import ABSENT, Fleet
 
 # Above this many choices the linear program takes minutes.
@@ -37,14 +35,13 @@ def _optimum(fleet: Fleet) -> float:
 
 
 def evenly_balanced(fleet: Fleet) -> bool:
-    """Tell whether splitting every choice in proportion to capacity gives all servers the same utilisation."""
+    """Tell whether splitting every choice in proportion to capacity fills all servers alike."""
     capacity, demand = (np.empty(0) if given is None else given for given in (fleet.capacity, fleet.demand))
     received = np.zeros(fleet.size)
-    split_evenly(fleet.options, demand, capacity, received)
+    kept(split_evenly)(fleet.options, demand, capacity, received)
     return bool(received.max() - received.min() <= 1e-12 * received.max())
 
 
-@compiled
 def split_evenly(options, demand, capacity, received):
     """Add to `received` the utilisation that an even split gives (arrays empty where all values are one)."""
     for row in range(options.shape[0]):
@@ -59,8 +56,12 @@ def split_evenly(options, demand, capacity, received):
 
 def solve(fleet: Fleet) -> float:
     """Solve the linear program and return the ratio of the set that it proves to be the bottleneck."""
+    # Half a second of imports that balanced fleets do without.
+    import scipy.optimize
+    import scipy.sparse
+
     options = fleet.options
-    choices, width = options.shape
+    choices = options.shape[0]
     demand = np.ones(choices) if fleet.demand is None else fleet.demand
     capacity = np.ones(fleet.size) if fleet.capacity is None else fleet.capacity
     demand = demand / demand.sum()
@@ -97,7 +98,9 @@ def solve(fleet: Fleet) -> float:
     return best if math.isclose(best, level, rel_tol=1e-6) else float(level)
 
 
-def confined_ratio(options: np.ndarray, demand: np.ndarray, capacity: np.ndarray, inside: np.ndarray) -> float:
+def confined_ratio(
+    options: np.ndarray, demand: np.ndarray, capacity: np.ndarray, inside: np.ndarray
+) -> float:
     """Return (demand confined to the set) / (capacity of the set) for a mask of servers."""
     confined = np.ones(options.shape[0], bool)
     for column in options.T:

@@ -29,8 +29,8 @@ if case != "torus":
     if case == "uneven":
         choices["demand"] = rng.random(2 * servers)
     del ends
-    small = lk.Fleet(table.head(1000).assign(server=range(1000)), choices.head(500) % 1000 if case == "even" else
-                     choices.head(500).assign(option_1=range(500), option_2=range(500, 1000)))
+    small = choices.head(500).assign(option_1=range(500), option_2=range(500, 1000))
+    small = lk.Fleet(pd.DataFrame({"server": range(1000)}), small)
     lk.place(small, "least-loaded", tasks=8, rng=1)
 with open("/proc/self/clear_refs", "w") as file:
     file.write("5")                                            # start the high-water mark afresh

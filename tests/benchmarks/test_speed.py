@@ -65,8 +65,8 @@ def test_least_loaded_against_plain_python(report):
     def loop():
         loads = dict.fromkeys(graph, 0)
         for _ in range(tasks // 100):
-            one, other = random.choice(ends)  # noqa: S311
-            if loads[other] < loads[one] or (loads[other] == loads[one] and random.random() < 0.5):  # noqa: S311
+            one, other = random.choice(ends)
+            if loads[other] < loads[one] or (loads[other] == loads[one] and random.random() < 0.5):
                 one = other
             loads[one] += 1
 
@@ -87,7 +87,9 @@ def test_rules_cost_at_most_three_times_least_loaded(policy, servers, report):
     assert found <= 3
 
 
-@pytest.mark.parametrize(("columns", "words"), [("capacity", "unequal capacities"), ("demand", "unequal demands")])
+@pytest.mark.parametrize(
+    ("columns", "words"), [("capacity", "unequal capacities"), ("demand", "unequal demands")]
+)
 def test_unequal_fleets_cost_little_more(columns, words, report):
     fleet, tasks = shuffled_ring(1_024), 10_000_000
     uneven = np.arange(1_024) % 5 + 1.0

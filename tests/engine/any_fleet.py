@@ -13,6 +13,7 @@ from hypothesis import strategies as st
 import labkit as lk
 from tests.engine.comparing import RULES, assert_same_path
 
+
 @st.composite
 def fleets(draw):
     """Draw a small fleet: two to four options a choice, equal or unequal capacities and demands."""
@@ -22,7 +23,8 @@ def fleets(draw):
         return lk.complete(size, options=width, distinct=draw(st.booleans()))
     count = draw(st.integers(1, 9))
     rows = [
-        draw(st.lists(st.integers(0, size - 1), min_size=2, max_size=width, unique=True)) for _ in range(count)
+        draw(st.lists(st.integers(0, size - 1), min_size=2, max_size=width, unique=True))
+        for _ in range(count)
     ]
     choices = pd.DataFrame([row + [None] * (width - len(row)) for row in rows], dtype="Int64")
     choices.columns = [f"option_{position + 1}" for position in range(width)]

@@ -22,8 +22,8 @@ def assert_same_path(fleet, rule, *, ahead, entropy, every=0, sizes=None, start=
     try:
         placement.NEAR_BYTES = 0 if ahead else near
         outcome = lk.place(
-            fleet, rule, tasks=tasks, replicates=2, rng=entropy, checkpoints=moments, sizes=sizes, start=start,
-            information=lk.Snapshot(every) if every else lk.Fresh(),
+            fleet, rule, tasks=tasks, replicates=2, rng=entropy, checkpoints=moments, sizes=sizes,
+            start=start, information=lk.Snapshot(every) if every else lk.Fresh(),
         )  # fmt: skip
     finally:
         placement.NEAR_BYTES = near

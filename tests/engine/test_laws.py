@@ -38,8 +38,9 @@ def test_threads_and_more_replicates_change_no_bit(policy):
 
 def test_another_process_gives_the_same_bits():
     script = (
-        "import labkit as lk; o = lk.place(lk.hypercube(4), 'mixed(beta=0.25)', tasks=321, replicates=2, rng=9,"
-        " sizes=lambda generator, count: generator.exponential(size=count)); print(o.loads.tobytes().hex())"
+        "import labkit as lk; o = lk.place(lk.hypercube(4), 'mixed(beta=0.25)', tasks=321, replicates=2,"
+        " rng=9, sizes=lambda generator, count: generator.exponential(size=count));"
+        " print(o.loads.tobytes().hex())"
     )
     done = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True, check=True)
     here = lk.place(
@@ -89,7 +90,9 @@ def _always_last(options, loads, capacity, coin):
 def test_a_snapshot_of_every_task_is_fresh_information():
     fleet = lk.ladder(8)
     fresh = lk.place(fleet, "least-loaded", tasks=400, replicates=3, rng=4)
-    reported = lk.place(fleet, "least-loaded", tasks=400, replicates=3, rng=4, information=lk.Snapshot(every=1))
+    reported = lk.place(
+        fleet, "least-loaded", tasks=400, replicates=3, rng=4, information=lk.Snapshot(every=1)
+    )
     assert (fresh.loads == reported.loads).all()
 
 
@@ -131,11 +134,20 @@ def test_relabelling_and_splitting_change_no_law():
     # Two-sample z-tests on the mean gap of 4,000 replicates, at 4 standard errors: false alarm 6e-5 each.
     servers = pd.DataFrame({"server": range(5), "capacity": [1.0, 2.0, 1.0, 1.0, 3.0]})
     choices = pd.DataFrame(
-        {"option_1": [0, 1, 2, 3, 4, 0], "option_2": [1, 2, 3, 4, 0, 2], "demand": [1.0, 2.0, 1.0, 1.0, 2.0, 0.5]}
+        {
+            "option_1": [0, 1, 2, 3, 4, 0],
+            "option_2": [1, 2, 3, 4, 0, 2],
+            "demand": [1.0, 2.0, 1.0, 1.0, 2.0, 0.5],
+        }
     )
     order = [3, 0, 4, 2, 1]
-    relabelled = servers.iloc[order], choices.iloc[[5, 2, 0, 4, 1, 3]].rename(columns={"option_1": "option_2", "option_2": "option_1"})
-    split = pd.concat([choices.assign(demand=choices["demand"] * 0.25), choices.assign(demand=choices["demand"] * 0.75)])
+    relabelled = (
+        servers.iloc[order],
+        choices.iloc[[5, 2, 0, 4, 1, 3]].rename(columns={"option_1": "option_2", "option_2": "option_1"}),
+    )
+    split = pd.concat(
+        [choices.assign(demand=choices["demand"] * 0.25), choices.assign(demand=choices["demand"] * 0.75)]
+    )
     gaps = [
         lk.place(lk.Fleet(*tables), "least-loaded", tasks=40, replicates=4_000, rng=seed).measures["gap"]
         for seed, tables in enumerate([(servers, choices), relabelled, (servers, split)])

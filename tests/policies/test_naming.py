@@ -25,7 +25,9 @@ def test_every_built_in_refuses_unknown_words():
             parse_policy(f"{name}(colour=red)")
 
 
-@pytest.mark.parametrize("text", ["mixed(0.5)", "mixed(beta=)", "mixed(beta=0.5", "", "least loaded", "mixed(beta=nan)"])
+@pytest.mark.parametrize(
+    "text", ["mixed(0.5)", "mixed(beta=)", "mixed(beta=0.5", "", "least loaded", "mixed(beta=nan)"]
+)
 def test_malformed_names_are_refused(text):
     with pytest.raises(lk.InputError):
         parse_policy(text)

@@ -43,7 +43,9 @@ def test_a_pick_outside_the_choice_is_refused_before_anything_is_written_there()
     def beyond(options, loads, capacity, coin):
         return 2 if loads[options[0]] > 3 else 0
 
-    with pytest.raises(lk.InputError, match=r"policy beyond picked a position outside the options of task \d+"):
+    with pytest.raises(
+        lk.InputError, match=r"policy beyond picked a position outside the options of task \d+"
+    ):
         lk.place(lk.ring(5), beyond, tasks=10_000, rng=1)
 
     @lk.policy
@@ -73,7 +75,10 @@ def test_three_options_and_capacities_reach_the_rule():
 @pytest.mark.parametrize(
     ("function", "sentence"),
     [
-        (lambda options, loads: 0, r"takes \(options, loads\); it must take \(options, loads, capacity, coin\)"),
+        (
+            lambda options, loads: 0,
+            r"takes \(options, loads\); it must take \(options, loads, capacity, coin\)",
+        ),
         ("least-loaded", "decorate a plain function"),
         (np.argmin, "decorate a plain function"),
     ],

@@ -1,8 +1,8 @@
 """Exact identities of the stationary least-loaded process (drift of the load variance is zero; derived).
 
-Samples as in `test_tiny_graphs`: replicates of long runs from empty, a burn-in left out, a stride coprime to the
-number of servers. Just before an arrival on a connected regular graph the mean over edges of E|x_u - x_v| is
-(1 - 1/n) E[W^2] / E[W] / beta.
+Samples as in `test_tiny_graphs`: replicates of long runs from empty, a burn-in left out, a stride coprime to
+the number of servers. Just before an arrival on a connected regular graph the mean over edges of
+E|x_u - x_v| is (1 - 1/n) E[W^2] / E[W] / beta.
 """
 
 import networkx as nx
@@ -36,15 +36,21 @@ def test_energy_balance_on_regular_graphs(fleet, policy, more, factor):
     assert_within(difference, factor * (1 - 1 / len(fleet)), largest_error=0.005 * factor)
 
 
-@pytest.mark.parametrize("graph", [nx.path_graph(5), nx.star_graph(4), nx.balanced_tree(2, 2)], ids=["path", "star", "tree"])
+@pytest.mark.parametrize(
+    "graph", [nx.path_graph(5), nx.star_graph(4), nx.balanced_tree(2, 2)], ids=["path", "star", "tree"]
+)
 def test_energy_balance_on_trees(graph):
-    # E[lower load of a random edge] - mean = -(1 - 1/n) / 2; trees always have a stationary state. One sample a
-    # replicate, at 3,000 tasks and the next n - 1, so that all phases count alike.
+    # E[lower load of a random edge] - mean = -(1 - 1/n) / 2; trees always have a stationary state. One
+    # sample a replicate, at 3,000 tasks and the next n - 1, so that all phases count alike.
     fleet = lk.fleet_from_graph(graph)
     size = len(fleet)
     one, other = fleet.options.T
     lower = np.zeros(4_000)
     for phase in range(size):
-        loads = lk.place(fleet, "least-loaded", tasks=3_000 + phase, replicates=4_000, rng=phase, workers=2).loads
-        lower += (np.minimum(loads[:, one], loads[:, other]) - loads.mean(axis=1, keepdims=True)).mean(axis=1) / size
+        loads = lk.place(
+            fleet, "least-loaded", tasks=3_000 + phase, replicates=4_000, rng=phase, workers=2
+        ).loads
+        lower += (np.minimum(loads[:, one], loads[:, other]) - loads.mean(axis=1, keepdims=True)).mean(
+            axis=1
+        ) / size
     assert_within(lower, -(1 - 1 / size) / 2)

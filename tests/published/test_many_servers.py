@@ -1,4 +1,4 @@
-"""Large fleets: fluid limits, exact laws of the highest load, heavily loaded limits, and other people's numbers."""
+"""Large fleets: fluid limits, exact laws of the highest load, heavily loaded limits, another simulation."""
 
 from math import factorial, prod
 
@@ -56,7 +56,8 @@ def test_fluid_limit_with_two_groups_and_ties_to_the_first():
     half = 800
     grid = np.indices((half, half)).reshape(2, -1)
     fleet = lk.Fleet(
-        pd.DataFrame({"server": range(2 * half)}), pd.DataFrame({"option_1": grid[0], "option_2": half + grid[1]})
+        pd.DataFrame({"server": range(2 * half)}),
+        pd.DataFrame({"option_1": grid[0], "option_2": half + grid[1]}),
     )
     loads = lk.place(fleet, lk.LeastLoaded(ties="first"), tasks=2 * half, replicates=300, rng=2).loads
     for level in (1, 2):
@@ -64,8 +65,8 @@ def test_fluid_limit_with_two_groups_and_ties_to_the_first():
 
 
 def test_one_choice_is_the_multinomial():
-    # 6 servers, 9 tasks: all 6^9 placements equally likely. Chi-square over the 2,002 occupancies merged to the
-    # 26 partitions of 9 into at most 6 parts; false alarm 1e-4.
+    # 6 servers, 9 tasks: all 6^9 placements equally likely. Chi-square over the 2,002 occupancies merged to
+    # the 26 partitions of 9 into at most 6 parts; false alarm 1e-4.
     loads = np.sort(lk.place(lk.complete(6), "one-choice", tasks=9, replicates=40_000, rng=13).loads, axis=1)
     seen = pd.Series(map(tuple, loads)).value_counts()
     expected = {}
@@ -102,7 +103,9 @@ def test_highest_load_of_n_tasks_on_n_servers(servers, options, replicates, law)
     # Exact laws by dynamic programming (derived); options with replacement. P(highest <= 3) for d = 2.
     policy = "one-choice" if options == 1 else "least-loaded"
     fleet = lk.complete(servers, options=max(options, 2), distinct=False)
-    highest = lk.place(fleet, policy, tasks=servers, replicates=replicates, rng=21, workers=2).measures["max_load"]
+    highest = lk.place(fleet, policy, tasks=servers, replicates=replicates, rng=21, workers=2).measures[
+        "max_load"
+    ]
     for level, probability in law.items():
         hit = (highest <= level) if (servers, level) == (4_096, 3) else (highest == level)
         if probability:
@@ -112,19 +115,20 @@ def test_highest_load_of_n_tasks_on_n_servers(servers, options, replicates, law)
 
 
 def test_highest_of_two_servers_one_choice():
-    # 200 tasks on 2 servers: E[highest] = 105.6348479009 (Sedgewick & Flajolet, Analysis of Algorithms, 2nd ed.,
-    # 9.4; value recomputed).
+    # 200 tasks on 2 servers: E[highest] = 105.6348479009 (Sedgewick & Flajolet, Analysis of Algorithms, 2nd
+    # ed., 9.4; value recomputed).
     highest = lk.place(lk.complete(2), "one-choice", tasks=200, replicates=40_000, rng=2, workers=2).measures
     assert_within(highest["max_load"], 105.6348479009)
 
 
 @pytest.mark.parametrize(("servers", "constant"), [(2, 0.56418958), (10, 1.53875273), (100, 2.50759364)])
 def test_one_choice_heavily_loaded(servers, constant):
-    # gap / sqrt(m / n) tends to the mean of the largest of n standard normals (Tippett 1925), here of exchangeable
-    # ones with correlation -1/(n-1): the mean is taken off. Order-m^(-1/2) error is below the standard error.
+    # gap / sqrt(m / n) tends to the mean of the largest of n standard normals (Tippett 1925), here of
+    # exchangeable ones with correlation -1/(n-1): the mean is taken off. The order-m^(-1/2)
+    # error is below the standard error.
     gap = lk.place(
-        lk.complete(servers, distinct=False), "one-choice", tasks=100_000 * servers // 10, replicates=2_000, rng=4,
-        workers=2,
+        lk.complete(servers, distinct=False), "one-choice", tasks=10_000 * servers, replicates=2_000,
+        rng=4, workers=2,
     ).measures["gap"]  # fmt: skip
     assert_within(gap / np.sqrt(10_000), constant)
 
@@ -157,8 +161,8 @@ def test_tail_of_two_options_heavily_loaded():
 
 @pytest.mark.parametrize(("batch", "variance"), [(1, 1.480150), (4, 4.441917)])
 def test_batches_that_see_only_the_start(batch, variance):
-    # Batches of n or 4n tasks that see the loads of the batch's start (model of Berenbrink et al. 2012; variance at
-    # batch ends derived).
+    # Batches of n or 4n tasks that see the loads of the batch's start (model of Berenbrink et al. 2012;
+    # variance at batch ends derived).
     servers = 50_000
     period = batch * servers
     table = lk.place(
@@ -189,7 +193,9 @@ def test_mean_gap_of_another_simulation(fleet, gap, error, rounds):
         fleet, "least-loaded", tasks=moments[-1], replicates=100, rng=61, checkpoints=moments, workers=2
     ).measures
     means = table.groupby("replicate")["gap"].mean()
-    halves = table.assign(half=table["tasks"] > 3 * rounds * size).groupby(["half", "replicate"])["gap"].mean()
+    halves = (
+        table.assign(half=table["tasks"] > 3 * rounds * size).groupby(["half", "replicate"])["gap"].mean()
+    )
     ours = means.std() / np.sqrt(100)
     assert abs(means.mean() - gap) < 4 * np.hypot(ours, error)
     assert_within(halves[True] - halves[False], 0.0)

@@ -1,9 +1,9 @@
 """Stationary laws of least-loaded on tiny graphs (uniform choice, fair ties).
 
 Expected values: truncated Markov chains and closed forms, derived for this project (error below 1e-11); no
-publication found. Sampling: 64 replicates of 400,000 tasks from empty, the first 4,000 left out (the chains of
-at most four servers forget their start within some dozens of tasks), one sample every 101 tasks (coprime to the
-period n of the load differences, so that all phases count alike).
+publication found. Sampling: 64 replicates of 400,000 tasks from empty, the first 4,000 left out (the chains
+of at most four servers forget their start within some dozens of tasks), one sample every 101 tasks (coprime
+to the period n of the load differences, so that all phases count alike).
 """
 
 import math
@@ -38,7 +38,14 @@ def per_replicate(column):
     ("fleet", "gap", "variance", "spread", "load_variance", "law"),
     [
         (TWO, 1 / 4, 1 / 16, 1 / 2, 1 / 8, [0.5, 0.5]),
-        (PATH, 0.639624082, 0.208555696, 1.468546257, 0.682734542, [0.1440352, 0.2610279, 0.3057151, 0.1787489]),
+        (
+            PATH,
+            0.639624082,
+            0.208555696,
+            1.468546257,
+            0.682734542,
+            [0.1440352, 0.2610279, 0.3057151, 0.1787489],
+        ),
         (
             TRIANGLE,
             2 / 3 - math.sqrt(3) / 9,
@@ -47,7 +54,14 @@ def per_replicate(column):
             8 / 27,
             [(3 - math.sqrt(3)) / 6, (3 - math.sqrt(3)) / 4, 0.3311434, 0.1217151],
         ),
-        (RING, 0.674406439, 0.168124210, 1.447602506, 0.469263292, [0.0835619, 0.1671238, 0.2174118, 0.2384849]),
+        (
+            RING,
+            0.674406439,
+            0.168124210,
+            1.447602506,
+            0.469263292,
+            [0.0835619, 0.1671238, 0.2174118, 0.2384849],
+        ),
     ],
     ids=["two servers", "path of 3", "triangle", "ring of 4"],
 )
@@ -69,7 +83,9 @@ def test_stationary_law(fleet, gap, variance, spread, load_variance, law):
 
 def test_two_servers_exactly():
     # Just after a placement the gap is 0 (even number of tasks) or 1/2 (odd).
-    table = lk.place(TWO, "least-loaded", tasks=1_000, replicates=5, rng=3, checkpoints=range(1, 1_001)).measures
+    table = lk.place(
+        TWO, "least-loaded", tasks=1_000, replicates=5, rng=3, checkpoints=range(1, 1_001)
+    ).measures
     assert (table["gap"] == (table["tasks"] % 2) / 2).all()
     assert (table["excess"] == table["gap"]).all()
     two_phases = table["gap"].to_numpy().reshape(5, 500, 2).mean(axis=2)
@@ -114,11 +130,16 @@ def test_triangle_after_six_tasks():
 
 
 def test_trees_are_stable_and_pendant_vertices_are_not():
-    # complete(4) with a pendant vertex drifts: the gap grows by 1/70 a task; the excess does not grow (derived).
+    # complete(4) with a pendant vertex drifts: the gap grows by 1/70 a task, the excess not (derived).
     graph = nx.complete_graph(4)
     graph.add_edge(0, 4)
     table = lk.place(
-        lk.fleet_from_graph(graph), "least-loaded", tasks=14_000, replicates=200, rng=4, checkpoints=[7_000, 14_000]
+        lk.fleet_from_graph(graph),
+        "least-loaded",
+        tasks=14_000,
+        replicates=200,
+        rng=4,
+        checkpoints=[7_000, 14_000],
     ).measures.pivot(index="replicate", columns="tasks", values=["gap", "excess"])
     assert_within(table["gap"][14_000] - table["gap"][7_000], 7_000 / 70)
     assert_within(table["excess"][14_000] - table["excess"][7_000], 0.0)

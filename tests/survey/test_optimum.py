@@ -36,7 +36,7 @@ def unweighted(graph):
     ids=["karate", "petersen", "lollipop", "barbell", "florentine", "miserables", "davis"],
 )
 def test_library_graphs(graph, value):
-    # Unit demand and capacity; densest-subgraph densities of networkx's built-in graphs (derived, recomputed).
+    # Unit demand and capacity; densest-subgraph densities of networkx's built-in graphs (recomputed).
     fleet = lk.fleet_from_graph(unweighted(graph))
     assert optimum_if_practical(fleet) * len(fleet.options) == pytest.approx(value, rel=1e-9)
 
@@ -52,7 +52,11 @@ def test_county_contiguity():
 def test_brute_force_over_all_server_sets(data):
     size = data.draw(st.integers(2, 6))
     rows = data.draw(
-        st.lists(st.lists(st.integers(0, size - 1), min_size=2, max_size=min(3, size), unique=True), min_size=1, max_size=8)
+        st.lists(
+            st.lists(st.integers(0, size - 1), min_size=2, max_size=min(3, size), unique=True),
+            min_size=1,
+            max_size=8,
+        )
     )
     choices = pd.DataFrame([row + [None] * (3 - len(row)) for row in rows], dtype="Int64")
     choices.columns = ["option_1", "option_2", "option_3"]
