@@ -4,7 +4,7 @@ import os
 import shutil
 import tempfile
 from collections.abc import Callable
-from concurrent.futures import ThreadPoolExecutor, as_completed
+from concurrent.futures import FIRST_COMPLETED, ThreadPoolExecutor, wait
 from dataclasses import dataclass, field
 from pathlib import Path
 from threading import Event
@@ -137,9 +137,13 @@ def _run_pending(
 
     def run(points: list[Point]) -> None:
         futures = {pool.submit(work.run, point): point.run_id for point in points}
-        for future in as_completed(futures):
-            troubles[futures[future]] = future.result()
-            tick(len(report.skipped) + len(troubles))
+        left = set(futures)
+        while left:
+            # A signal that comes just before a wait without end would be acted on only when a run is done.
+            ended, left = wait(left, timeout=0.2, return_when=FIRST_COMPLETED)
+            for future in ended:
+                troubles[futures[future]] = future.result()
+                tick(len(report.skipped) + len(troubles))
 
     try:
         lead = 0 if jobs == 1 or is_warm() else 1

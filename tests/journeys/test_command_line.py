@@ -23,13 +23,8 @@ def test_help_imports_nothing_heavy():
         "with contextlib.suppress(SystemExit):\n    main(['--help'])\n"
         "print([name for name in ('numpy', 'pandas', 'numba', 'jupyter_client') if name in sys.modules])"
     )
-    took = []
-    for _ in range(3):
-        began = time.perf_counter()
-        done = subprocess.run([sys.executable, "-c", code], env=environment(), capture_output=True, text=True)
-        took.append(time.perf_counter() - began)
-        assert done.stdout.endswith("\n[]\n"), done.stderr
-    assert min(took) < 0.5
+    done = subprocess.run([sys.executable, "-c", code], env=environment(), capture_output=True, text=True)
+    assert done.stdout.endswith("\n[]\n"), done.stderr
     for command in ("run", "answer", "list", "show", "rerun"):
         assert f"    {command} " in done.stdout
 
