@@ -8,12 +8,17 @@ from typing import Any
 
 from labkit.errors import InputError
 
+# Whole numbers up to here are exact as floats, too.
+LARGEST_WHOLE = 2**53
+
 
 def check_whole(name: str, value: Any, *, least: int = 1) -> int:
-    """Return `value` as an int when it is a whole number of at least `least`."""
+    """Return `value` as an int when it is a whole number from `least` to `LARGEST_WHOLE`."""
     whole = isinstance(value, numbers.Integral) and not isinstance(value, bool)
     if not whole or int(value) < least:
         raise InputError(f"{name} is {value!r}; give a whole number of at least {least}.")
+    if int(value) > LARGEST_WHOLE:
+        raise InputError(f"{name} is {float(value):.4g}; give a whole number of at most {LARGEST_WHOLE}.")
     return int(value)
 
 

@@ -15,7 +15,8 @@ BIT_GENERATOR = "SFC64"
 DRAWS = (
     "one raw 64-bit word an arrival, multiplied by the number of choices to 128 bits: the high half is the "
     "choice, the low half the coin; unequal demands by an alias table with 32-bit thresholds on the low "
-    "half; fleets without a table of choices take one word an option"
+    "half, whose place above or below the threshold is then the coin, to 32 bits; fleets without a table of "
+    "choices take one word an option"
 )
 
 

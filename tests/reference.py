@@ -32,9 +32,12 @@ def arrival(fleet, stream, table):
     row, coin = product // WORD, product % WORD
     if table is not None:
         threshold, alias = table
-        if coin >> 32 >= int(threshold[row]):
+        bound = int(threshold[row])
+        if coin >> 32 < bound:
+            coin = coin // bound << 32
+        else:
+            coin = (coin - (bound << 32)) // ((1 << 32) - bound) << 32
             row = int(alias[row])
-        coin = (coin % (1 << 32) << 32) | (coin >> 32)
     return [int(s) for s in fleet.options[row] if s != 0xFFFFFFFF], coin
 
 

@@ -15,7 +15,7 @@ _BLOCK = 4_000_000
 
 
 def compare(
-    measures: pd.DataFrame, *, baseline: str, of: str = "gap", confidence: float = 0.95, rng: Any = None
+    measures: pd.DataFrame, *, baseline: Any, of: str = "gap", confidence: float = 0.95, rng: Any = None
 ) -> pd.DataFrame:
     """Return how far each policy lies from the baseline on the same replicates.
 
@@ -29,7 +29,7 @@ def compare(
     measures : pandas.DataFrame
         One row a policy, replicate and checkpoint, as in ``outcome.measures``; see `headroom` for the labels.
         Policies are compared within equal tasks and equal labels.
-    baseline : str
+    baseline : str or Policy
         The policy that the others are compared with.
     of : str
         The measure that is compared.
@@ -55,6 +55,7 @@ def compare(
         When there is only one replicate.
     """
     confidence = check_fraction("confidence", confidence)
+    baseline = getattr(baseline, "name", baseline)
     seed = np.random.SeedSequence() if rng is None else seed_sequence(rng)
     table, labels = prepare(measures, of)
     if "policy" not in labels:

@@ -94,10 +94,13 @@ def draw_row(word, choices, threshold, alias):
     row, coin = multiply_wide(word, choices)
     if threshold is None:
         return row, coin
-    kept = np.uint32(coin >> np.uint64(32)) < threshold[row]
+    bound = np.uint64(threshold[row])
     other = np.uint64(alias[row])
-    # The high half has been looked at: hand its place to the low half.
-    return row if kept else other, (coin << np.uint64(32)) | (coin >> np.uint64(32))
+    kept = (coin >> np.uint64(32)) < bound
+    # Where the coin lies within its part of the interval is uniform again, to 32 bits.
+    parts = bound if kept else np.uint64(4294967296) - bound
+    inside = coin if kept else coin - (bound << np.uint64(32))
+    return row if kept else other, (inside // parts) << np.uint64(32)
 
 
 @inlined

@@ -8,7 +8,7 @@ from labkit.engine.measures import measure
 
 
 @inlined
-def choose(state, seen, capacity, options, row, count, coin, own):
+def choose(state, seen, weights, options, row, count, coin, own):
     """Stand for the policy's chooser until `labkit.compiled.specialise` puts it in place."""
     return np.uint64(0)
 
@@ -21,7 +21,7 @@ def place_near(
     arrival_state,
     own,
     state,
-    capacity,
+    weights,
     sizes,
     loads,
     seen,
@@ -37,7 +37,7 @@ def place_near(
         word, a, b, c, counter = advance(a, b, c, counter)
         row, coin = draw_row(word, choices, threshold, alias)
         count = 2 if several is None else options_in(options, row)
-        position = choose(state, seen, capacity, options, row, count, coin, own)
+        position = choose(state, seen, weights, options, row, count, coin, own)
         if position >= np.uint64(count):
             failed = task + 1
             break
@@ -47,12 +47,12 @@ def place_near(
     return failed
 
 
-def place_drawn(picked, coins, batch, several, own, state, capacity, sizes, loads, seen, first, start):
+def place_drawn(picked, coins, batch, several, own, state, weights, sizes, loads, seen, first, start):
     """Place the `batch` tasks after `start` that were drawn ahead; see `place_tasks`."""
     for index in range(batch):
         row = np.uint64(index)
         count = 2 if several is None else options_in(picked, row)
-        position = choose(state, seen, capacity, picked, row, count, coins[row], own)
+        position = choose(state, seen, weights, picked, row, count, coins[row], own)
         if position >= np.uint64(count):
             return start + index + 1
         server = np.uint64(picked[row, position])
@@ -61,7 +61,7 @@ def place_drawn(picked, coins, batch, several, own, state, capacity, sizes, load
 
 
 def place_tasks(
-    arrivals, several, arrival_state, own, state, capacity, sizes, loads, seen, every, ahead,
+    arrivals, several, arrival_state, own, state, capacity, weights, sizes, loads, seen, report, every, ahead,
     first, last, checkpoints, demand, pairs_of, out,
 ):  # fmt: skip
     """Place the tasks ``first + 1 .. last`` of one replicate and measure at the checkpoints among them.
@@ -75,11 +75,15 @@ def place_tasks(
         The stream of arrivals and the policy's own stream, changed in place.
     state : tuple
         The policy's prepared state.
-    capacity : float64 array, shape (servers,), or None when all are equal
+    capacity : float64 array, shape (servers,), or None when all are one
+    weights : float64 array, shape (servers,), or None when all are equal
+        The capacities as choosers compare them (`labkit.engine.weights`).
     sizes : float64 array, shape (last - first,), or None for unit tasks
     loads : int64 (unit tasks) or float64 array, shape (servers,), changed in place
-    seen : array like `loads`
-        What the policy sees: `loads` itself when information is fresh, else a snapshot, changed in place.
+    seen : read-only array like `loads`
+        What the policy sees: a view of `loads` when information is fresh, else of `report`.
+    report : array like `loads`
+        The last snapshot, changed in place; `loads` itself when information is fresh.
     every : int
         A snapshot is taken just before the tasks 1, every + 1, 2 every + 1, ...; 0 when information is fresh.
     ahead : bool
@@ -107,7 +111,7 @@ def place_tasks(
             stop = checkpoints[mark]
         if every > 0:
             if done % every == 0:
-                seen[:] = loads
+                report[:] = loads
             stop = min(stop, done - done % every + every)
         failed = 0
         if ahead:
@@ -123,13 +127,13 @@ def place_tasks(
                         arrivals.servers, arrivals.distinct, arrival_state, seen, picked, coins, batch
                     )
                 failed = place_drawn(
-                    picked, coins, batch, several, own, state, capacity, sizes, loads, seen, first, done
+                    picked, coins, batch, several, own, state, weights, sizes, loads, seen, first, done
                 )
                 done += batch
         else:
             failed = place_near(
                 arrivals.options, arrivals.threshold, arrivals.alias, several, arrival_state, own, state,
-                capacity, sizes, loads, seen, first, done, stop,
+                weights, sizes, loads, seen, first, done, stop,
             )  # fmt: skip
             done = stop
         if failed:

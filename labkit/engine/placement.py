@@ -9,13 +9,14 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
-from labkit.checks import check_whole
+from labkit.checks import LARGEST_WHOLE, check_whole
 from labkit.compiled import CONFIG, inlined, specialise
 from labkit.engine.arrivals import Arrivals, arrivals_of, read_only
 from labkit.engine.information import Fresh, Information
 from labkit.engine.loop import place_drawn, place_near, place_tasks
 from labkit.engine.measures import MEASURED
-from labkit.engine.sizes import Sizes, sizes_of
+from labkit.engine.sizes import LARGEST_SIZE, Sizes, as_numbers, sizes_of
+from labkit.engine.weights import comparison_weights
 from labkit.errors import InputError
 from labkit.fleet.model import ABSENT, Fleet
 from labkit.policies.base import Policy
@@ -36,7 +37,9 @@ class Outcome:
     measures : pandas.DataFrame
         One row a replicate and checkpoint: policy, replicate, tasks, mean_load, max_load, min_load,
         max_utilisation, gap, excess, load_variance, edge_difference. Loads in work units; gap and excess in
-        utilisation (equal to loads where capacities are one).
+        utilisation (equal to loads where capacities are one). `excess` is NaN on irregular fleets of more
+        than 50,000 choices, whose exact optimum would take minutes; `edge_difference` is NaN where there is
+        no two-server choice.
     loads : numpy.ndarray, shape (replicates, servers)
         Loads after the last task, int64 for unit tasks, float64 for tasks with sizes.
     policy, information : str
@@ -186,7 +189,7 @@ class _Job:
         self.rule, self.seed, self.every, self.checkpoints = rule, seed, every, checkpoints
         self.tasks, self.work = tasks, work
         self.arrivals = arrivals_of(fleet)
-        self.capacity = fleet.capacity
+        self.capacity, self.weights = fleet.capacity, comparison_weights(fleet.capacity)
         self.demand = read_only(np.empty(0)) if fleet.demand is None else fleet.demand
         self.state = rule.prepare(fleet)
         self._no_sizes = None if work is None else np.empty(0)
@@ -194,38 +197,47 @@ class _Job:
         self.several = None if only_pairs(self.arrivals) else True
         touched = 8 * fleet.size * (1 if self.capacity is None else 2) + self.arrivals.options.nbytes
         self.ahead = fleet.implicit is not None or touched > NEAR_BYTES
+        rule.check(np.int64 if work is None else np.float64)
         self.loop = loop_of(rule)
 
     def compile(self, loads: np.ndarray, out: np.ndarray) -> None:
         """Place no task at all, so that the loop is compiled before threads share it."""
-        self._place(np.zeros(4, np.uint64), np.zeros(4, np.uint64), loads, loads, 0, 0, self._no_sizes, out)
+        words = np.zeros(4, np.uint64)
+        self._place(words, words.copy(), loads, loads, 0, 0, self._no_sizes, out)
 
     def run(self, replicate: int, loads: np.ndarray, out: np.ndarray) -> None:
         """Place all tasks of one replicate: loads and measures are written into the two arrays."""
         arriving = kernel_state(self.seed, replicate, ARRIVALS)
         own = kernel_state(self.seed, replicate, COINS)
-        seen = loads if self.every == 0 else loads.copy()
+        report = loads if self.every == 0 else loads.copy()
         blocks = [(0, self.tasks, None)] if self.work is None else self.work.blocks(self.seed, replicate)
         for first, last, sizes in blocks:
-            self._place(arriving, own, loads, seen, first, last, sizes, out)
+            self._place(arriving, own, loads, report, first, last, sizes, out)
 
     def _place(
         self,
         arriving: np.ndarray,
         own: np.ndarray,
         loads: np.ndarray,
-        seen: np.ndarray,
+        report: np.ndarray,
         first: int,
         last: int,
         sizes: np.ndarray | None,
         out: np.ndarray,
     ) -> None:
-        # Without the compiler unsigned words are NumPy scalars, which warn when they wrap around.
-        with np.errstate(over="ignore" if CONFIG.DISABLE_JIT else "warn"):
-            failed = self.loop(
-                self.arrivals, self.several, arriving, own, self.state, self.capacity, sizes, loads, seen,
-                self.every, self.ahead, first, last, self.checkpoints, self.demand, self.pairs_of, out,
-            )  # fmt: skip
+        try:
+            # Without the compiler unsigned words are NumPy scalars, which warn when they wrap around.
+            with np.errstate(over="ignore" if CONFIG.DISABLE_JIT else "warn"):
+                failed = self.loop(
+                    self.arrivals, self.several, arriving, own, self.state, self.capacity, self.weights,
+                    sizes, loads, read_only(report.view()), report, self.every, self.ahead, first, last,
+                    self.checkpoints, self.demand, self.pairs_of, out,
+                )  # fmt: skip
+        except Exception as error:
+            refusal = self.rule.explain(error)
+            if refusal is None:
+                raise
+            raise refusal from error
         if failed:
             raise InputError(
                 f"policy {self.rule.name} picked a position outside the options of task {failed}; "
@@ -263,7 +275,10 @@ def _pairs_of(fleet: Fleet) -> int:
 def _checked_checkpoints(checkpoints: Iterable[int] | None, tasks: int) -> np.ndarray:
     if checkpoints is None:
         return np.array([tasks], np.int64)
-    moments = np.asarray(list(checkpoints) if not isinstance(checkpoints, np.ndarray) else checkpoints)
+    try:
+        moments = np.asarray(checkpoints if isinstance(checkpoints, np.ndarray) else list(checkpoints))
+    except (TypeError, ValueError):
+        moments = np.empty(0)
     whole = moments.ndim == 1 and moments.size > 0 and moments.dtype.kind in "iu"
     if not whole or moments[0] < 1 or moments[-1] > tasks or np.any(np.diff(moments.astype(np.int64)) <= 0):
         raise InputError(
@@ -286,13 +301,17 @@ def _starting_loads(start: Any, servers: int, replicates: int, work: Sizes | Non
     loads = np.zeros((replicates, servers), kind)
     if start is None:
         return loads
-    given = np.asarray(start)
-    shape_fits = given.shape in ((servers,), (replicates, servers))
-    if not shape_fits or given.dtype.kind not in "iuf" or not np.all(np.isfinite(given)):
+    given = as_numbers(start)
+    if given is None or given.shape not in ((servers,), (replicates, servers)):
+        found = type(start).__name__ if given is None else f"numbers of shape {given.shape}"
         raise InputError(
-            f"start has shape {given.shape} and type {given.dtype}; give finite numbers, one for each of the "
-            f"{servers} servers (or one row of them for each replicate)."
+            f"start is {found}; give one number for each of the {servers} servers (or one row of them for "
+            "each replicate)."
         )
+    most = LARGEST_WHOLE / servers if work is None else LARGEST_SIZE
+    beyond = ~(np.abs(given) <= most)
+    if beyond.any():
+        raise InputError(f"start holds the load {given[beyond][0]}; give finite loads of at most {most:.4g}.")
     if work is None and np.any(given != np.floor(given)):
         raise InputError("start holds loads that are not whole; give whole numbers, or give the tasks sizes.")
     if np.any(given < 0):

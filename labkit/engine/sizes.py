@@ -8,6 +8,9 @@ import numpy as np
 from labkit.errors import InputError
 from labkit.randomness import SIZES, generator
 
+# Larger sizes or loads could not be squared.
+LARGEST_SIZE = 1e150
+
 # Tasks a sampler is asked for at a time; part of the law of the bits, so it never changes with a setting.
 BLOCK = 1 << 16
 
@@ -26,13 +29,26 @@ class Sizes:
         draws = generator(seed, replicate, SIZES)
         for first in range(0, self.tasks, BLOCK):
             last = min(first + BLOCK, self.tasks)
-            drawn = np.ascontiguousarray(self.given(draws, last - first), dtype=np.float64)
-            if drawn.shape != (last - first,):
+            drawn = as_numbers(self._sample(draws, last - first))
+            if drawn is None or drawn.shape != (last - first,):
+                found = "no numbers" if drawn is None else f"shape {drawn.shape}"
                 raise InputError(
-                    f"sizes(generator, {last - first}) returned shape {drawn.shape}; return one size a task."
+                    f"sizes(generator, {last - first}) returned {found}; return one size a task."
                 )
             _refuse_bad(drawn)
-            yield first, last, drawn
+            yield first, last, np.array(drawn, np.float64)
+
+    def _sample(self, draws: np.random.Generator, count: int) -> Any:
+        assert callable(self.given)
+        try:
+            return self.given(draws, count)
+        except InputError:
+            raise
+        except Exception as error:
+            raise InputError(
+                f"sizes(generator, {count}) failed with {type(error).__name__}: {error}; give a function of "
+                "a NumPy Generator and a number of tasks that returns that many sizes."
+            ) from error
 
 
 def sizes_of(sizes: Any, tasks: int, replicates: int) -> Sizes | None:
@@ -41,21 +57,29 @@ def sizes_of(sizes: Any, tasks: int, replicates: int) -> Sizes | None:
         return None
     if callable(sizes):
         return Sizes(sizes, tasks)
-    given = np.asarray(sizes)
-    if given.shape not in ((tasks,), (replicates, tasks)) or given.dtype.kind not in "iuf":
+    given = as_numbers(sizes)
+    if given is None or given.shape not in ((tasks,), (replicates, tasks)):
+        found = type(sizes).__name__ if given is None else f"numbers of shape {given.shape}"
         raise InputError(
-            f"sizes has shape {given.shape} and type {given.dtype}; give {tasks} numbers, one for each task "
-            "(or one row of them for each replicate), or a function sizes(generator, count)."
+            f"sizes is {found}; give {tasks} numbers, one for each task (or one row of them for each "
+            "replicate), or a function sizes(generator, count)."
         )
-    given = np.ascontiguousarray(given, dtype=np.float64)
     _refuse_bad(given)
-    return Sizes(given, tasks)
+    return Sizes(np.array(given, np.float64), tasks)
+
+
+def as_numbers(given: Any) -> np.ndarray | None:
+    """Return an array of real numbers, or None when that is not what was given."""
+    try:
+        array = np.asarray(given)
+    except (TypeError, ValueError):
+        return None
+    return array if array.dtype.kind in "iuf" else None
 
 
 def _refuse_bad(sizes: np.ndarray) -> None:
-    bad = ~(np.isfinite(sizes) & (sizes >= 0))
+    bad = ~((sizes >= 0) & (sizes <= LARGEST_SIZE))
     if bad.any():
         place = np.argwhere(bad)[0]
-        raise InputError(
-            f"sizes holds {sizes[tuple(place)]} for task {place[-1] + 1}; sizes are finite and at least 0."
-        )
+        found = f"sizes holds {sizes[tuple(place)]} for task {place[-1] + 1}"
+        raise InputError(f"{found}; sizes are from 0 to {LARGEST_SIZE:g}.")

@@ -143,8 +143,6 @@ class Fleet:
             capacity = amounts(servers["capacity"], server_source, zero=False)
             if capacity.min() == capacity.max() == 1.0:
                 capacity = None
-            else:
-                _refuse_endless(capacity, "capacity", server_source)
         if "demand" in choices:
             demand, each = _demands(choices["demand"], choice_source)
         columns = [choices[f"option_{place + 1}"] for place in range(option_count(list(choices.columns)))]
@@ -265,15 +263,7 @@ def _demands(column: pd.Series, source: Source) -> tuple[np.ndarray | None, floa
     low, high = float(demand.min()), float(demand.max())
     if high == 0:
         raise InputError(f"{source.label}: every demand is 0; give at least one choice a demand above 0.")
-    _refuse_endless(demand, "demand", source)
     return (None, high) if low == high else (demand, float("nan"))
-
-
-def _refuse_endless(values: np.ndarray, label: str, source: Source) -> None:
-    with np.errstate(over="ignore"):
-        total = values.sum()
-    if not np.isfinite(total):
-        raise InputError(f"{source.label}: the sum of {label} is infinite; use a larger unit.")
 
 
 def _frozen(values: np.ndarray | None) -> np.ndarray | None:

@@ -73,6 +73,10 @@ def _listed(labels: list[Any]) -> str:
     return (shown + (", ..." if len(labels) > 8 else "")) or "none"
 
 
+# Ratios and products of amounts outside these bounds would leave the range of double precision.
+SMALLEST, LARGEST = 1e-150, 1e150
+
+
 def amounts(column: pd.Series, source: Source, *, zero: bool) -> np.ndarray:
     """Return a column as float64, sharing its memory when it is float64 already.
 
@@ -92,10 +96,11 @@ def amounts(column: pd.Series, source: Source, *, zero: bool) -> np.ndarray:
     """
     values = _floats(column)
     if values is not None:
-        low, high = values.min(), values.max()
-        if (low >= 0 if zero else low > 0) and high < np.inf:
+        least = np.min(values, where=values > 0, initial=np.inf) if zero else values.min()
+        if values.min() >= 0 and least >= SMALLEST and values.max() <= LARGEST:
             return np.ascontiguousarray(values)
     rule = "a finite number of at least 0" if zero else "a finite number above 0"
+    rule += f" ({SMALLEST:g} to {LARGEST:g})"
     for row in range(len(column)):
         if not _allowed(column.iloc[row], zero):
             shown = _shown(column.iloc[row])
@@ -124,7 +129,7 @@ def _allowed(value: Any, zero: bool) -> bool:
         number = float(value)
     except (TypeError, ValueError, OverflowError):
         return False
-    return (number >= 0 if zero else number > 0) and number < np.inf
+    return (zero and number == 0) or SMALLEST <= number <= LARGEST
 
 
 def _shown(value: Any) -> str:

@@ -2,6 +2,7 @@
 
 from typing import Any, ClassVar
 
+from labkit.errors import InputError
 from labkit.fleet.model import Fleet
 
 
@@ -10,14 +11,15 @@ class Policy:
 
     A policy file defines one chooser, a plain function that numba can compile::
 
-        choose(state, seen, capacity, options, row, count, coin, own) -> position
+        choose(state, seen, weights, options, row, count, coin, own) -> position
 
     state : tuple
         What `prepare` returned for the fleet.
-    seen : array, shape (servers,)
+    seen : array, shape (servers,), read-only
         The loads that the policy may look at.
-    capacity : array, shape (servers,), or None
-        None when all capacities are equal; a test for None costs nothing once compiled.
+    weights : array, shape (servers,), or None
+        Numbers in the ratio of the capacities, whole where those share a unit; None when all are equal. A
+        test for None costs nothing once compiled.
     options : uint32 array of two dimensions, row : uint64, count : int
         The task may go to the servers ``options[row, 0 .. count - 1]``.
     coin : uint64
@@ -42,6 +44,13 @@ class Policy:
     def prepare(self, fleet: Fleet) -> tuple[Any, ...]:
         """Return what the chooser needs to know about the fleet, a tuple of arrays and numbers."""
         return ()
+
+    def check(self, load: type) -> None:
+        """Refuse a rule that cannot be compiled for loads of this type."""
+
+    def explain(self, error: Exception) -> InputError | None:
+        """Return the refusal for an error inside the rule, or None when it is not the rule's."""
+        return None
 
     def __repr__(self) -> str:
         return f"<policy {self.name}>"

@@ -10,55 +10,55 @@ TIES = ("random", "first")
 
 
 @inlined
-def lower(seen, capacity, one, other):
+def lower(seen, weights, one, other):
     """Tell whether server `one` has a lower utilisation than server `other` (cross-multiplied)."""
-    if capacity is None:
+    if weights is None:
         return seen[one] < seen[other]
-    return seen[one] * capacity[other] < seen[other] * capacity[one]
+    return seen[one] * weights[other] < seen[other] * weights[one]
 
 
 @inlined
-def level(seen, capacity, one, other):
+def level(seen, weights, one, other):
     """Tell whether the two servers have the same utilisation."""
-    if capacity is None:
+    if weights is None:
         return seen[one] == seen[other]
-    return seen[one] * capacity[other] == seen[other] * capacity[one]
+    return seen[one] * weights[other] == seen[other] * weights[one]
 
 
 @inlined
-def least_fair(seen, capacity, options, row, count, coin):
+def least_fair(seen, weights, options, row, count, coin):
     """Return the position of the lowest utilisation, equal ones by a fair coin."""
     best = np.uint64(options[row, np.uint64(0)])
     if count == 2:
         other = np.uint64(options[row, np.uint64(1)])
-        tied = np.uint64(level(seen, capacity, other, best)) & (coin >> np.uint64(63))
-        return np.uint64(lower(seen, capacity, other, best)) | tied
+        tied = np.uint64(level(seen, weights, other, best)) & (coin >> np.uint64(63))
+        return np.uint64(lower(seen, weights, other, best)) | tied
     ties = np.uint64(1)
     for position in range(1, count):
         other = np.uint64(options[row, np.uint64(position)])
-        below = lower(seen, capacity, other, best)
-        ties = np.uint64(1) if below else ties + np.uint64(level(seen, capacity, other, best))
+        below = lower(seen, weights, other, best)
+        ties = np.uint64(1) if below else ties + np.uint64(level(seen, weights, other, best))
         best = other if below else best
     rank = multiply_wide(coin, ties)[0]
     passed = np.uint64(0)
     picked = np.uint64(0)
     for position in range(count):
-        tied = level(seen, capacity, np.uint64(options[row, np.uint64(position)]), best)
+        tied = level(seen, weights, np.uint64(options[row, np.uint64(position)]), best)
         picked = np.uint64(position) if tied and passed == rank else picked
         passed += np.uint64(tied)
     return picked
 
 
-def choose_fair(state, seen, capacity, options, row, count, coin, own):  # noqa: D103
-    return least_fair(seen, capacity, options, row, count, coin)
+def choose_fair(state, seen, weights, options, row, count, coin, own):  # noqa: D103
+    return least_fair(seen, weights, options, row, count, coin)
 
 
-def choose_first(state, seen, capacity, options, row, count, coin, own):  # noqa: D103
+def choose_first(state, seen, weights, options, row, count, coin, own):  # noqa: D103
     picked = np.uint64(0)
     best = np.uint64(options[row, picked])
     for position in range(1, count):
         other = np.uint64(options[row, np.uint64(position)])
-        below = lower(seen, capacity, other, best)
+        below = lower(seen, weights, other, best)
         best = other if below else best
         picked = np.uint64(position) if below else picked
     return picked

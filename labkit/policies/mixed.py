@@ -12,10 +12,10 @@ from labkit.policies.least_loaded import least_fair
 from labkit.policies.one_choice import toss
 
 
-def choose(state, seen, capacity, options, row, count, coin, own):  # noqa: D103
+def choose(state, seen, weights, options, row, count, coin, own):  # noqa: D103
     # Both answers, then one of them: cheaper than a branch that cannot be predicted.
-    looked = least_fair(seen, capacity, options, row, count, coin)
-    tossed = toss(capacity, options, row, count, coin)
+    looked = least_fair(seen, weights, options, row, count, coin)
+    tossed = toss(weights, options, row, count, coin)
     return looked if unit_interval(next_raw(own)) < state[0] else tossed
 
 

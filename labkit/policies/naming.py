@@ -41,6 +41,8 @@ def parse_policy(policy: Any) -> Policy:
     values: dict[str, Any] = {}
     for part in filter(None, (part.strip() for part in (inside or "").split(","))):
         key, equals, value = (piece.strip() for piece in part.partition("="))
+        if key in values:
+            raise InputError(f"policy is {policy!r}; give {key} once.")
         if not equals or key not in known:
             allowed = nearest(key, known) if known else "it takes no parameters"
             raise InputError(f"policy is {policy!r}, with {part!r}; {allowed}.")

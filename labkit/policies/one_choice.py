@@ -7,24 +7,24 @@ from labkit.policies.base import Policy
 
 
 @inlined
-def toss(capacity, options, row, count, coin):
+def toss(weights, options, row, count, coin):
     """Return an option's position by a coin that is fair, or weighted by capacity when capacities differ."""
-    if capacity is None:
+    if weights is None:
         return multiply_wide(coin, np.uint64(count))[0]
     total = 0.0
     for position in range(count):
-        total += capacity[options[row, np.uint64(position)]]
+        total += weights[options[row, np.uint64(position)]]
     target = unit_interval(coin) * total
     passed = 0.0
     picked = np.uint64(0)
     for position in range(count - 1):
-        passed += capacity[options[row, np.uint64(position)]]
+        passed += weights[options[row, np.uint64(position)]]
         picked += np.uint64(passed <= target)
     return picked
 
 
-def choose(state, seen, capacity, options, row, count, coin, own):  # noqa: D103
-    return toss(capacity, options, row, count, coin)
+def choose(state, seen, weights, options, row, count, coin, own):  # noqa: D103
+    return toss(weights, options, row, count, coin)
 
 
 class OneChoice(Policy):

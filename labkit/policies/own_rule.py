@@ -2,19 +2,29 @@
 
 import hashlib
 import inspect
+import re
 import textwrap
 from collections.abc import Callable
 from typing import Any
 
+import numba
 import numpy as np
+from numba.core.errors import NumbaError
 
-from labkit.compiled import bind, compiled, unit_interval
+from labkit.compiled import CONFIG, OPTIONS, bind, compiled, unit_interval
 from labkit.errors import InputError
 from labkit.fleet.model import Fleet
 from labkit.policies.base import Policy
 
 ARGUMENTS = ("options", "loads", "capacity", "coin")
+_PLAIN = "use numbers, comparisons, loops and the given arrays only"
 _SOURCES: dict[str, str] = {}
+
+# The line of numba's report that says what is wrong; its other lines say how it got there.
+_TELLING = re.compile(
+    r"(name '\w+' is not defined|Untyped global name '\w+'|Unknown attribute '\w+'|Can't unify return type"
+    r"[^\n]*|No implementation of function [^\n]*|Use of unsupported[^\n]*)"
+)
 
 
 @compiled
@@ -23,12 +33,12 @@ def rule(options, loads, capacity, coin):
     return 0
 
 
-def choose(state, seen, capacity, options, row, count, coin, own):  # noqa: D103
+def choose(state, seen, weights, options, row, count, coin, own):  # noqa: D103
     return np.uint64(rule(options[row, :count], seen, state[0], unit_interval(coin)))
 
 
 class OwnRule(Policy):
-    """A policy made by `lk.policy` from a user's function."""
+    """A policy made by `lk.policy` from a user's function; call it to try the function itself."""
 
     cached = False
 
@@ -37,7 +47,9 @@ class OwnRule(Policy):
         self.source = source_of(function)
         self.digest = hashlib.sha256(self.source.encode()).hexdigest()[:8]
         self.__doc__ = function.__doc__
-        self.choose = bind(choose, self.kernel_name, rule=compiled(function))
+        # A user's index is checked: a wrong one must not read somebody else's memory.
+        self._compiled = numba.njit(boundscheck=True, **OPTIONS)(function)
+        self.choose = bind(choose, self.kernel_name, rule=self._compiled)
         _SOURCES[self.name] = self.source
 
     @property
@@ -52,7 +64,47 @@ class OwnRule(Policy):
 
     def prepare(self, fleet: Fleet) -> tuple[Any, ...]:
         """Return the capacities, always as an array."""
-        return (np.ones(fleet.size) if fleet.capacity is None else fleet.capacity,)
+        capacity = np.ones(fleet.size) if fleet.capacity is None else fleet.capacity
+        capacity.setflags(write=False)
+        return (capacity,)
+
+    def check(self, load: type) -> None:
+        """Compile the rule alone, so that what is wrong with it can be told in one sentence."""
+        if CONFIG.DISABLE_JIT:
+            return
+
+        array: Any = numba.types.Array
+        kinds = (np.uint32, load, np.float64)
+        arrays = [array(numba.from_dtype(np.dtype(kind)), 1, "C", readonly=True) for kind in kinds]
+        signature = (*arrays, numba.float64)
+        try:
+            self._compiled.compile(signature)
+        except NumbaError as error:
+            refusal = self.explain(error)
+            assert refusal is not None
+            raise refusal from error
+        returned = self._compiled.overloads[signature].signature.return_type
+        if not isinstance(returned, numba.types.Integer | numba.types.Boolean):
+            raise InputError(
+                f"policy {self.name} returns {returned}; it must return a whole number on every path, the "
+                "position of the picked server within options."
+            )
+
+    def explain(self, error: Exception) -> InputError | None:
+        """Return the refusal for an error inside the rule."""
+        if isinstance(error, NumbaError):
+            told = _TELLING.search(str(error))
+            reason = told.group(0) if told else str(error).strip().splitlines()[-1]
+            if "setitem" in reason:
+                reason = "it changes one of its arguments"
+            return InputError(f"policy {self.name} cannot be compiled: {reason.strip(' .')}; {_PLAIN}.")
+        if isinstance(error, IndexError):
+            return InputError(f"policy {self.name} looked beyond the end of an array: {error}.")
+        return InputError(f"policy {self.name} failed with {type(error).__name__}: {error}.")
+
+    def __call__(self, options: Any, loads: Any, capacity: Any, coin: float) -> Any:
+        """Call the user's function itself, not compiled."""
+        return self.function(options, loads, capacity, coin)
 
     def __eq__(self, other: object) -> bool:
         return isinstance(other, OwnRule) and self.function is other.function
@@ -70,7 +122,8 @@ def policy(function: Callable) -> OwnRule:
         ``function(options, loads, capacity, coin)`` returns the position of the picked server *within*
         `options`, from 0. `options` (uint32 array) holds the server positions of the task's choice, `loads`
         the loads as the policy may see them, `capacity` the capacities, `coin` a uniform float in [0, 1) that
-        belongs to the arrival. It must be plain enough for numba: numbers, arrays, loops, tests.
+        belongs to the arrival. The arrays cannot be changed. It must be plain enough for numba: numbers,
+        arrays, loops, tests; constants that it uses from outside are taken as they are at its first use.
 
     Returns
     -------
@@ -81,7 +134,9 @@ def policy(function: Callable) -> OwnRule:
     Raises
     ------
     InputError
-        When the function takes other arguments, has the name of a built-in policy, or has no readable source.
+        When the function takes other arguments, has no name or that of a built-in policy, or draws random
+        numbers of its own (they could not be repeated). `labkit.place` refuses a rule that cannot be
+        compiled, returns no position, or looks beyond the end of an array.
 
     Examples
     --------
@@ -92,31 +147,38 @@ def policy(function: Callable) -> OwnRule:
     >>> lk.place(lk.ring(8), stay_first, tasks=100, rng=1).measures["policy"][0]
     'stay-first'
     """
+    from labkit.policies.naming import BUILT_IN
+
     if not inspect.isfunction(function):
         raise InputError(f"policy got {function!r}; decorate a plain function of {', '.join(ARGUMENTS)}.")
+    name = function.__name__
+    if not re.fullmatch(r"[A-Za-z]\w*", name):
+        raise InputError(f"policy got a function called {name!r}; give it a name that begins with a letter.")
     arguments = tuple(inspect.signature(function).parameters)
     if arguments != ARGUMENTS:
         raise InputError(
-            f"policy {function.__name__} takes ({', '.join(arguments)}); "
-            f"it must take ({', '.join(ARGUMENTS)})."
+            f"policy {name} takes ({', '.join(arguments)}); it must take ({', '.join(ARGUMENTS)})."
         )
-    from labkit.policies.naming import BUILT_IN
-
-    if function.__name__.replace("_", "-") in BUILT_IN:
-        raise InputError(
-            f"policy {function.__name__} has the name of a built-in policy; give it another name."
-        )
+    if name.replace("_", "-") in BUILT_IN:
+        raise InputError(f"policy {name} has the name of a built-in policy; give it another name.")
+    if "random" in function.__code__.co_names:
+        raise InputError(f"policy {name} draws random numbers of its own; use its argument coin instead.")
     return OwnRule(function)
 
 
 def source_of(function: Callable) -> str:
-    """Return the source text of a rule, as it is recorded."""
+    """Return the text of a rule as it is recorded: its source, and the values it takes from outside."""
     try:
-        return textwrap.dedent(inspect.getsource(function))
-    except (OSError, TypeError) as reason:
-        raise InputError(
-            f"policy {function.__name__} has no source text to record; define it in a file or a cell."
-        ) from reason
+        text = textwrap.dedent(inspect.getsource(function))
+    except (OSError, TypeError):
+        code = function.__code__
+        digest = hashlib.sha256(code.co_code + repr(code.co_consts).encode()).hexdigest()
+        text = f"# no source text; digest of the compiled function: {digest}\n"
+    outside = inspect.getclosurevars(function)
+    for name, value in sorted({**outside.globals, **outside.nonlocals}.items()):
+        if isinstance(value, bool | int | float | str | tuple):
+            text += f"# {name} = {value!r}\n"
+    return text
 
 
 def recorded_source(name: str) -> str | None:

@@ -9,7 +9,7 @@ from labkit.compiled import kept
 from labkit.fleet.model import ABSENT, Fleet
 
 # Above this many choices the linear program takes minutes.
-PRACTICAL_CHOICES = 20_000
+PRACTICAL_CHOICES = 50_000
 _KNOWN: weakref.WeakKeyDictionary[Fleet, float] = weakref.WeakKeyDictionary()
 
 
@@ -55,7 +55,14 @@ def split_evenly(options, demand, capacity, received):
 
 
 def solve(fleet: Fleet) -> float:
-    """Solve the linear program and return the ratio of the set that it proves to be the bottleneck."""
+    """Solve the linear program and return the ratio of the server set that it proves to be the bottleneck.
+
+    Returns
+    -------
+    float
+        NaN when no server set is found whose ratio agrees with the program's value to 1e-6: then the numbers
+        are spread too widely for double precision to tell.
+    """
     # Half a second of imports that balanced fleets do without.
     import scipy.optimize
     import scipy.sparse
@@ -65,16 +72,17 @@ def solve(fleet: Fleet) -> float:
     demand = np.ones(choices) if fleet.demand is None else fleet.demand
     capacity = np.ones(fleet.size) if fleet.capacity is None else fleet.capacity
     demand = demand / demand.sum()
+    # Scaled to a mean utilisation of one and a mean demand of one, whatever the user's units.
+    amount, room = demand * choices, capacity * (choices / capacity.sum())
     rows, columns = np.nonzero(options != ABSENT)
     servers = options[rows, columns].astype(np.int64)
     count = rows.size
     shares = np.arange(count)
-    # Variables: the share of each (choice, option), as a part of the choice's demand, then the optimum.
-    one = np.ones(count)
-    whole = scipy.sparse.csr_array((one, (rows, shares)), shape=(choices, count + 1))
+    # Variables: what each (choice, option) carries, then the highest utilisation.
+    split = scipy.sparse.csr_array((np.ones(count), (rows, shares)), shape=(choices, count + 1))
     filled = scipy.sparse.csr_array(
         (
-            np.concatenate([demand[rows] / capacity[servers], -np.ones(fleet.size) / capacity.sum()]),
+            np.concatenate([np.ones(count), -room]),
             (
                 np.concatenate([servers, np.arange(fleet.size)]),
                 np.concatenate([shares, np.full(fleet.size, count)]),
@@ -85,17 +93,18 @@ def solve(fleet: Fleet) -> float:
     cost = np.zeros(count + 1)
     cost[-1] = 1.0
     answer = scipy.optimize.linprog(
-        cost, A_ub=filled, b_ub=np.zeros(fleet.size), A_eq=whole, b_eq=np.ones(choices), method="highs"
+        cost, A_ub=filled, b_ub=np.zeros(fleet.size), A_eq=split, b_eq=amount, method="highs-ipm"
     )
-    level = answer.x[-1] / capacity.sum()
-    # The dual prices of full servers mark the bottleneck; every cut by price proves a lower bound.
-    prices = np.maximum(-answer.ineqlin.marginals / capacity, 0.0)
-    best = 0.0
-    for price in np.unique(np.round(prices[prices > 1e-12 * max(prices.max(), 1e-300)], 12)):
-        inside = prices >= price * (1 - 1e-9)
+    if not answer.success:
+        return math.nan
+    # The dual price of a full server is high inside the bottleneck: every cut by price is a candidate, and so
+    # is the whole fleet. The ratio of a set is exact to rounding, the program's value only to its tolerance.
+    prices = np.maximum(-answer.ineqlin.marginals, 0.0)
+    best = 1.0 / capacity.sum()
+    for price in np.unique(np.round(prices[prices > 0.0] / max(prices.max(), 1e-300), 9)):
+        inside = prices >= prices.max() * (price - 1e-9)
         best = max(best, confined_ratio(options, demand, capacity, inside))
-    # The set's ratio is exact to rounding; the program's value only to its tolerance.
-    return best if math.isclose(best, level, rel_tol=1e-6) else float(level)
+    return best if math.isclose(best * capacity.sum(), answer.x[-1], rel_tol=1e-6) else math.nan
 
 
 def confined_ratio(

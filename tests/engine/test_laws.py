@@ -9,6 +9,7 @@ import pytest
 
 import labkit as lk
 from labkit.engine import placement
+from labkit.engine.weights import comparison_weights
 
 POLICIES = ["one-choice", "least-loaded", "least-loaded(ties=first)", "mixed(beta=0.4)"]
 
@@ -72,18 +73,18 @@ def test_policies_meet_the_same_arrivals():
     # Rules that always take one end show the drawn choice itself.
     first, last = (
         lk.place(fleet, rule, tasks=1, replicates=50, rng=2).loads.argmax(axis=1)
-        for rule in (_always_first, _always_last)
+        for rule in (always_first, always_last)
     )
     assert {*zip(first, last, strict=True)} == {*map(tuple, fleet.options)}
 
 
 @lk.policy
-def _always_first(options, loads, capacity, coin):
+def always_first(options, loads, capacity, coin):
     return 0
 
 
 @lk.policy
-def _always_last(options, loads, capacity, coin):
+def always_last(options, loads, capacity, coin):
     return len(options) - 1
 
 
@@ -128,6 +129,49 @@ def test_equal_capacities_of_any_size_pick_alike():
     assert (scaled.loads == plain.loads).all()
     assert scaled.measures["gap"].tolist() == pytest.approx((plain.measures["gap"] / 2.5).tolist())
     assert scaled.measures["excess"].tolist() == pytest.approx(scaled.measures["gap"].tolist())
+
+
+@pytest.mark.parametrize("unit", [0.1, 1 / 3, 7.0, 1e9, 1e-6])
+@pytest.mark.parametrize("policy", ["least-loaded", "least-loaded(ties=first)"])
+def test_the_unit_of_capacity_changes_nothing(unit, policy):
+    # Equal utilisations stay equal where float products would break ties: 1 x 0.3 and 3 x 0.1 differ.
+    servers = pd.DataFrame({"server": list("abc"), "capacity": [1.0, 3.0, 6.0]})
+    choices = pd.DataFrame(
+        {"option_1": ["a", "b", "c"], "option_2": ["b", "c", "a"], "demand": [1.0, 3.0, 6.0]}
+    )
+    plain = lk.place(lk.Fleet(servers, choices), policy, tasks=500, replicates=5, rng=2)
+    scaled = lk.Fleet(servers.assign(capacity=servers["capacity"] * unit), choices)
+    other = lk.place(scaled, policy, tasks=500, replicates=5, rng=2)
+    assert (plain.loads == other.loads).all()
+    for column in ("gap", "excess", "max_utilisation"):
+        np.testing.assert_allclose(
+            other.measures[column] * unit, plain.measures[column], rtol=1e-9, atol=1e-9
+        )
+
+
+def test_capacities_without_a_common_unit_are_compared_as_they_are():
+    capacity = np.random.default_rng(1).random(50)
+    assert comparison_weights(capacity) is capacity
+    assert comparison_weights(None) is None
+    assert comparison_weights(np.full(4, 0.7)) is None
+    assert comparison_weights(np.array([0.1, 0.3, 0.25])).tolist() == [2.0, 6.0, 5.0]
+
+
+def test_the_coin_is_fair_whatever_the_number_of_choices():
+    # 2^20 choices of unequal demand leave few bits of the word: all of them must be in the coin.
+    # A coin's second bits decide; chance of a false alarm 6e-5.
+    count = 2**20
+    choices = pd.DataFrame({"option_1": 0, "option_2": 1, "demand": np.arange(count) % 7 + 1.0})
+    fleet = lk.Fleet(pd.DataFrame({"server": [0, 1]}), choices)
+    tasks = 2_000_000
+    for rule, probability in ((eleventh_bit, 0.25), (lk.OneChoice(), 0.5)):
+        [[_, second]] = lk.place(fleet, rule, tasks=tasks, rng=5).loads
+        assert abs(second / tasks - probability) < 4 * np.sqrt(probability * (1 - probability) / tasks)
+
+
+@lk.policy
+def eleventh_bit(options, loads, capacity, coin):
+    return int(coin * 4096) % 4 == 0
 
 
 def test_relabelling_and_splitting_change_no_law():

@@ -36,7 +36,7 @@ def test_the_type_of_text_does_not_show(dtype):
     [
         (SERVERS.assign(server=[3, 1, 20]), CHOICES.assign(option_2=[1, 20])),
         (SERVERS.assign(capacity=[1.0, 2.0, np.nextafter(1, 2)]), CHOICES),
-        (SERVERS, CHOICES.assign(demand=[1.0, 1e-300])),
+        (SERVERS, CHOICES.assign(demand=[1.0, 1e-100])),
         (SERVERS, CHOICES.assign(demand=[2.0, 0.0])),
         (SERVERS, CHOICES.assign(option_2=[2, 2])),
         (SERVERS[::-1], CHOICES),

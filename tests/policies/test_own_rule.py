@@ -72,13 +72,120 @@ def test_three_options_and_capacities_reach_the_rule():
     assert outcome.loads.sum() == 100
 
 
+def short(options, loads):
+    return 0
+
+
+def drawing(options, loads, capacity, coin):
+    return int(np.random.random() < 0.5)  # noqa: NPY002
+
+
+def nothing(options, loads, capacity, coin):
+    return None
+
+
+def sometimes(options, loads, capacity, coin):
+    if coin > 0.5:
+        return 1
+
+
+def half(options, loads, capacity, coin):
+    return 0.5
+
+
+def word(options, loads, capacity, coin):
+    return "first"
+
+
+def unknown(options, loads, capacity, coin):
+    return no_such_thing  # noqa: F821
+
+
+def beyond_options(options, loads, capacity, coin):
+    return loads[options[2]] > 0
+
+
+def beyond_loads(options, loads, capacity, coin):
+    return loads[1_000_000_000] > 0
+
+
+def changes_loads(options, loads, capacity, coin):
+    loads[0] = 0
+    return 0
+
+
+def changes_options(options, loads, capacity, coin):
+    options[0] = 7
+    return 0
+
+
+def changes_capacity(options, loads, capacity, coin):
+    capacity[0] = 7
+    return 0
+
+
+def gives_up(options, loads, capacity, coin):
+    if loads[options[0]] > 2:
+        raise ValueError("enough")
+    return 0
+
+
+@pytest.mark.parametrize(
+    ("function", "sentence"),
+    [
+        (nothing, "policy nothing returns none; it must return a whole number on every path"),
+        (sometimes, r"policy sometimes returns .*; it must return a whole number on every path"),
+        (half, "policy half returns float64; it must return a whole number"),
+        (word, r"policy word returns .*; it must return a whole number"),
+        (unknown, "policy unknown cannot be compiled: name 'no_such_thing' is not defined"),
+        (beyond_options, "policy beyond-options looked beyond the end of an array"),
+        (beyond_loads, "policy beyond-loads looked beyond the end of an array"),
+        (changes_loads, "policy changes-loads cannot be compiled: it changes one of its arguments"),
+        (changes_options, "policy changes-options cannot be compiled: it changes one of its arguments"),
+        (changes_capacity, "policy changes-capacity cannot be compiled: it changes one of its arguments"),
+        (gives_up, "policy gives-up failed with ValueError: enough"),
+    ],
+    ids=lambda value: getattr(value, "__name__", ""),
+)
+def test_a_rule_that_goes_wrong_is_refused_in_one_sentence(function, sentence):
+    with pytest.raises(lk.InputError, match=sentence) as refusal:
+        lk.place(lk.ring(8), lk.policy(function), tasks=200, rng=1)
+    assert "\n" not in str(refusal.value)
+
+
+def test_a_rule_made_without_source_text_is_told_apart_by_its_code():
+    made = []
+    for last in (0, 1):
+        scope = {}
+        exec(f"def quick(options, loads, capacity, coin):\n    return {last}\n", scope)
+        made.append(lk.policy(scope["quick"]))
+    assert made[0].digest != made[1].digest
+    assert "no source text" in made[0].source
+
+
+def test_values_from_outside_are_recorded_with_the_source():
+    def make(least):
+        @lk.policy
+        def patient(options, loads, capacity, coin):
+            return 1 if loads[options[1]] + least <= loads[options[0]] else 0
+
+        return patient
+
+    one, other = make(1), make(30)
+    assert "# least = 30" in other.source
+    assert one.digest != other.digest
+    assert one(np.array([0, 1]), np.array([5, 1]), np.ones(2), 0.0) == 1
+
+
 @pytest.mark.parametrize(
     ("function", "sentence"),
     [
         (
-            lambda options, loads: 0,
+            short,
             r"takes \(options, loads\); it must take \(options, loads, capacity, coin\)",
         ),
+        (lambda options, loads, capacity, coin: 0, "give it a name that begins with a letter"),
+        (drawing, "draws random numbers of its own; use its argument coin instead"),
         ("least-loaded", "decorate a plain function"),
         (np.argmin, "decorate a plain function"),
     ],

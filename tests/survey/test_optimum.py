@@ -76,6 +76,30 @@ def test_brute_force_over_all_server_sets(data):
     assert solve(fleet) * demand.sum() == pytest.approx(best, rel=1e-9)
 
 
+@settings(max_examples=40)
+@given(st.data())
+def test_the_optimum_knows_no_unit(data):
+    # Capacities in bytes as well as in tonnes, and spread over some orders of magnitude.
+    size = 6
+    rows = data.draw(
+        st.lists(
+            st.lists(st.integers(0, size - 1), min_size=2, max_size=2, unique=True), min_size=2, max_size=9
+        )
+    )
+    choices = pd.DataFrame(rows, columns=["option_1", "option_2"])
+    choices["demand"] = data.draw(st.lists(st.floats(0.1, 100), min_size=len(rows), max_size=len(rows)))
+    base = np.array(data.draw(st.lists(st.floats(0.1, 100), min_size=size, max_size=size)))
+    demand = choices["demand"].to_numpy() / choices["demand"].sum()
+    unit = 10.0 ** data.draw(st.integers(-12, 15))
+    fleet = lk.Fleet(pd.DataFrame({"server": range(size), "capacity": base * unit}), choices)
+    best = max(
+        confined_ratio(fleet.options, demand, base, np.isin(np.arange(size), chosen))
+        for count in range(1, size + 1)
+        for chosen in itertools.combinations(range(size), count)
+    )
+    assert optimum_if_practical(fleet) * unit == pytest.approx(best, rel=1e-9)
+
+
 @pytest.mark.parametrize(
     "fleet", [lk.ring(7), lk.torus(3, 4), lk.hypercube(3), lk.complete(9), lk.random_regular(10, 3, rng=1)]
 )
