@@ -94,6 +94,9 @@ if CONFIG.DISABLE_JIT:
     def prefetch(array, row):  # noqa: D103
         return None
 
+    def borrowed(array):  # noqa: D103
+        return array
+
 else:
 
     @intrinsic
@@ -128,6 +131,23 @@ else:
             return context.get_dummy_value()
 
         return signature, generate
+
+    @intrinsic
+    def borrowed(typingctx, array):
+        """Return the array without a share in its memory: nothing is counted when it is passed on.
+
+        Around a call that may raise numba cannot leave the counting out, which costs ten times the call. The
+        caller must keep the array alive.
+        """
+
+        def generate(context, builder, signature, arguments):
+            kind = signature.return_type
+            struct = context.make_array(kind)(context, builder, arguments[0])
+            struct.meminfo = cgutils.get_null_value(struct.meminfo.type)
+            struct.parent = cgutils.get_null_value(struct.parent.type)
+            return struct._getvalue()
+
+        return array(array), generate
 
 
 @inlined

@@ -13,7 +13,7 @@ KEYS = ("replicate", "tasks")
 PROVENANCE = frozenset(
     {
         *("run_id", "git_hash", "diff_digest", "versions", "bit_generator", "draws", "entropy", "spawn_key"),
-        *("notebook", "notebook_digest", "parameters", "inputs", "started"),
+        *("notebook", "notebook_digest", "parameters", "inputs", "rules", "started"),
     }
 )
 

@@ -2,8 +2,8 @@
 
 import numpy as np
 
-from labkit.compiled import advance, inlined
-from labkit.engine.arrivals import AHEAD, draw_from_all, draw_from_table, draw_row, options_in
+from labkit.compiled import advance, inlined, multiply_wide
+from labkit.engine.arrivals import AHEAD, draw_from_all, draw_from_table, options_in
 from labkit.engine.measures import measure
 
 
@@ -15,8 +15,6 @@ def choose(state, seen, weights, options, row, count, coin, own):
 
 def place_near(
     options,
-    threshold,
-    alias,
     several,
     arrival_state,
     own,
@@ -29,13 +27,17 @@ def place_near(
     start,
     stop,
 ):
-    """Place the tasks ``start + 1 .. stop``, each as it is drawn; see `place_tasks`."""
+    """Place the tasks ``start + 1 .. stop``, each as it is drawn; see `place_tasks`.
+
+    Demands are equal here. With unequal ones the coin takes a division, which the compiler would put behind a
+    branch on ties, and that cannot be predicted.
+    """
     choices = np.uint64(options.shape[0])
     a, b, c, counter = arrival_state[0], arrival_state[1], arrival_state[2], arrival_state[3]
     failed = 0
     for task in range(start, stop):
         word, a, b, c, counter = advance(a, b, c, counter)
-        row, coin = draw_row(word, choices, threshold, alias)
+        row, coin = multiply_wide(word, choices)
         count = 2 if several is None else options_in(options, row)
         position = choose(state, seen, weights, options, row, count, coin, own)
         if position >= np.uint64(count):
@@ -87,7 +89,8 @@ def place_tasks(
     every : int
         A snapshot is taken just before the tasks 1, every + 1, 2 every + 1, ...; 0 when information is fresh.
     ahead : bool
-        Draw arrivals ahead of their placement (fleets larger than cache; fleets without a table of choices).
+        Draw arrivals ahead of their placement: for fleets larger than cache, without a table of choices, or
+        with unequal demands.
     first, last : int
     checkpoints : int64 array
         Increasing; those in (first, last] are measured, just after their placement.
@@ -132,8 +135,8 @@ def place_tasks(
                 done += batch
         else:
             failed = place_near(
-                arrivals.options, arrivals.threshold, arrivals.alias, several, arrival_state, own, state,
-                weights, sizes, loads, seen, first, done, stop,
+                arrivals.options, several, arrival_state, own, state, weights, sizes, loads, seen,
+                first, done, stop,
             )  # fmt: skip
             done = stop
         if failed:

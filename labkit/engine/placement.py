@@ -196,7 +196,7 @@ class _Job:
         self.pairs_of = _pairs_of(fleet)
         self.several = None if only_pairs(self.arrivals) else True
         touched = 8 * fleet.size * (1 if self.capacity is None else 2) + self.arrivals.options.nbytes
-        self.ahead = fleet.implicit is not None or touched > NEAR_BYTES
+        self.ahead = fleet.implicit is not None or fleet.demand is not None or touched > NEAR_BYTES
         rule.check(np.int64 if work is None else np.float64)
         self.loop = loop_of(rule)
 

@@ -11,7 +11,7 @@ import numba
 import numpy as np
 from numba.core.errors import NumbaError
 
-from labkit.compiled import CONFIG, OPTIONS, bind, compiled, unit_interval
+from labkit.compiled import CONFIG, OPTIONS, bind, borrowed, compiled, unit_interval
 from labkit.errors import InputError
 from labkit.fleet.model import Fleet
 from labkit.policies.base import Policy
@@ -34,7 +34,8 @@ def rule(options, loads, capacity, coin):
 
 
 def choose(state, seen, weights, options, row, count, coin, own):  # noqa: D103
-    return np.uint64(rule(options[row, :count], seen, state[0], unit_interval(coin)))
+    among = borrowed(options)[row, :count]
+    return np.uint64(rule(among, borrowed(seen), borrowed(state[0]), unit_interval(coin)))
 
 
 class OwnRule(Policy):

@@ -1,12 +1,13 @@
 """The frame of a run notebook: `begin_run` before any computing, `Run.record` at the end."""
 
 import json
+import sys
 import time
 from collections.abc import Mapping, MutableMapping
 from datetime import UTC, datetime
 from html import escape
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -17,6 +18,9 @@ from labkit.records.identity import Identity, canonical, identify
 from labkit.records.project import check_study_name, find_notebook, from_root, path_text
 from labkit.records.session import check_session, executed_cells, injected_names
 from labkit.records.store import Store, open_store
+
+if TYPE_CHECKING:
+    import pyarrow as pa
 
 
 class Run:
@@ -98,6 +102,7 @@ class Run:
             "notebook_digest": self._notebook.digest,
             "parameters": canonical(written),
             "inputs": canonical(self._identity.inputs),
+            "rules": canonical(_own_rules(measured)),
             "started": self._started.isoformat(timespec="milliseconds"),
             "elapsed": elapsed,
         }
@@ -121,6 +126,15 @@ class Run:
             f"<tr><th>{name}</th><td>{escape(value)}</td></tr>" for name, value in self._facts().items()
         )
         return f"<table style='text-align: left'>{rows}</table>"
+
+
+def _own_rules(measured: "pa.Table") -> dict[str, str]:
+    """Return the source of each rule in a table that a user wrote in this session."""
+    home = sys.modules.get("labkit.policies.own_rule")  # not loaded: no rule was written
+    if home is None or "policy" not in measured.column_names:
+        return {}
+    sources = {name: home.recorded_source(name) for name in measured["policy"].unique().to_pylist()}
+    return {name: source for name, source in sources.items() if source is not None}
 
 
 def begin_run(notebook: str, namespace: MutableMapping[str, Any]) -> Run:

@@ -29,6 +29,7 @@ ORIGIN = pa.schema(
         ("notebook_digest", pa.string()),
         ("parameters", pa.string()),  # JSON
         ("inputs", pa.string()),  # JSON: path parameter -> SHA-256 of its content
+        ("rules", pa.string()),  # JSON: policy -> source text, for rules that a user wrote
         ("started", pa.string()),  # ISO 8601, UTC
         ("elapsed", pa.float64()),  # seconds from begin_run to record
     ]
@@ -150,7 +151,7 @@ def _bits(column: pa.ChunkedArray) -> np.ndarray:
 def row_of_origin(table: pa.Table) -> dict[str, Any]:
     """Return the origin of a record, with its JSON columns decoded."""
     row = table.select(ORIGIN.names).slice(0, 1).to_pylist()[0]
-    for name in ("versions", "parameters", "inputs", "spawn_key"):
+    for name in ("versions", "parameters", "inputs", "rules", "spawn_key"):
         row[name] = json.loads(row[name])
     row["entropy"] = int(row["entropy"])
     return row

@@ -47,6 +47,18 @@ def test_a_record_carries_where_it_comes_from(tiny, tmp_path):
     assert run.id in run._repr_html_()
 
 
+def test_a_rule_of_the_users_own_is_recorded_with_its_source(tiny, tmp_path):
+    @lk.policy
+    def even_ones(options, loads, capacity, coin):
+        return 0 if options[0] % 2 == 0 else 1
+
+    run, _ = begin(tiny, tmp_path / "runs")
+    path = run.record(pd.concat([MEASURES, MEASURES.assign(policy=even_ones.name)]))
+    rules = row_of_origin(Store(tmp_path / "runs").read(path))["rules"]
+    assert list(rules) == ["even-ones"]
+    assert "options[0] % 2 == 0" in rules["even-ones"]
+
+
 def test_the_record_is_the_same_from_any_working_directory(tiny, tmp_path, monkeypatch):
     first, _ = begin(tiny, tmp_path / "runs")
     monkeypatch.chdir("/")

@@ -29,7 +29,7 @@ RUN = "0123456789abcdef"
 def record(gap=(0.25, 0.5), run=RUN, **changes):
     frame = pd.DataFrame({"policy": "a", "replicate": range(len(gap)), "tasks": 5, "gap": list(gap)})
     origin = {name: "" for name in ORIGIN.names}
-    origin |= {name: "{}" for name in ("versions", "parameters", "inputs")}
+    origin |= {name: "{}" for name in ("versions", "parameters", "inputs", "rules")}
     origin |= {
         "run_id": run,
         "study": "s",
@@ -99,6 +99,10 @@ def test_a_foreign_file_is_refused_by_name(store):
     path.with_name("mine.parquet").write_bytes(path.read_bytes())
     with pytest.raises(lk.StoreError, match=r"mine\.parquet is not a record of this store; move it"):
         list(store.files("s"))
+    warnings = []
+    assert list(store.files("s", warn=warnings.append)) == [path]
+    assert len(warnings) == 1
+    assert store.locate(RUN[:3]) == path
     renamed = path.with_name(path.name.replace(RUN, "f" * 16))
     path.rename(renamed)
     with pytest.raises(lk.StoreError, match="is not the record of run ffff"):
@@ -160,6 +164,22 @@ def test_a_run_is_found_by_its_first_digits(store):
     for absent in ("c", ""):
         with pytest.raises(lk.InputError, match="none of the 2 records"):
             store.locate(absent)
+
+
+def test_a_damaged_copy_in_another_study_is_named_and_passed_over(store):
+    whole, _ = store.write("z", RUN, record(study="z"))
+    damaged, _ = store.write("a", RUN, record(study="a", elapsed=2.0))
+    damaged.write_bytes(b"")
+    warnings = []
+    assert store.locate(RUN, warn=warnings.append) == whole
+    assert len(warnings) == 1
+    assert f"{damaged} is torn or altered" in warnings[0]
+
+
+def test_a_record_of_another_version_is_refused_by_name(store):
+    path, _ = store.write("s", RUN, record().drop_columns(["draws"]))
+    with pytest.raises(lk.StoreError, match=r"is of another version of labkit \(it has no draws\); move it"):
+        store.read(path)
 
 
 def test_measures_keep_every_bit(store):
