@@ -53,6 +53,18 @@ def compare(
         table or a number is refused.
     TooFewReplicates
         When there is only one replicate.
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> import pandas as pd
+    >>> fleet, rules = lk.ring(20), ["one-choice", "least-loaded"]
+    >>> tables = [lk.place(fleet, rule, tasks=2000, replicates=50, rng=1).measures for rule in rules]
+    >>> paired = lk.compare(pd.concat(tables), baseline="one-choice", rng=2)
+    >>> paired[["policy", "baseline", "replicates", "share_lower"]].values.tolist()
+    [['least-loaded', 'one-choice', 50, 1.0]]
+    >>> bool(paired["upper"].item() < 0)
+    True
     """
     confidence = check_fraction("confidence", confidence)
     baseline = getattr(baseline, "name", baseline)

@@ -51,6 +51,16 @@ def headroom(
     InputError
         When the table or a number is refused.
 
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> measures = lk.place(lk.ring(20), "least-loaded", tasks=2000, replicates=400, rng=1).measures
+    >>> needed = lk.headroom(measures, risk=0.01)
+    >>> needed[["policy", "tasks", "replicates", "mean_utilisation"]].values.tolist()
+    [['least-loaded', 2000, 400, 100.0]]
+    >>> bool((needed["lower"] <= needed["headroom"]).all() and (needed["headroom"] <= needed["upper"]).all())
+    True
+
     References
     ----------
     .. [1] H. A. David and H. N. Nagaraja, "Order Statistics", 3rd edition, Wiley, 2003, section 7.1.

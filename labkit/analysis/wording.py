@@ -1,12 +1,18 @@
 """The answer in words: the decision, the aligned table and the notes under it."""
 
+import math
 import textwrap
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 
 import numpy as np
 import pandas as pd
 
 from labkit.analysis.answer import Verdict
+
+# A utilisation that needs more decimals than this is written with a power of ten.
+_DECIMALS = 6
+# Differences below this share of what was subtracted are rounding.
+_ROUNDING = 1e-12
 
 
 def decision(table: pd.DataFrame, verdict: Verdict, *, baseline: str, total_capacity: float) -> str:
@@ -27,10 +33,10 @@ def decision(table: pd.DataFrame, verdict: Verdict, *, baseline: str, total_capa
     kinds = table["information"].nunique()
     degree = "worse" if kinds == 2 else "worst"
     where = f" in the {degree} of its report settings ({reports(worst['information'])})" if kinds > 1 else ""
-    low, high = utilisation(worst["lower"]), utilisation(worst["upper"])
+    write = _row_writer(worst)
     needs = (
-        f"{utilisation(worst['headroom'])} above the mean utilisation of "
-        f"{utilisation(worst['mean_utilisation'])} ({100 * worst['confidence']:g} % limits {low} to {high}) "
+        f"{write(worst['headroom'])} above the mean utilisation of {utilisation(worst['mean_utilisation'])} "
+        f"({100 * worst['confidence']:g} % limits {write(worst['lower'])} to {write(worst['upper'])}) "
         f"at a risk of {100 * worst['risk']:g} %{where}"
     )
     opening = (
@@ -57,18 +63,22 @@ def decision(table: pd.DataFrame, verdict: Verdict, *, baseline: str, total_capa
 
 def _saving(row: pd.Series, baseline: str, total_capacity: float, subject: str = "that") -> str:
     amount, least = row["saved"], row["saved_at_least"]
-    if amount <= 0:
+    if abs(amount) <= _ROUNDING * row["capacity_needed"]:
+        return f"Against {baseline} {subject} saves nothing: both need the same."
+    if amount < 0:
         return f"Against {baseline} {subject} saves nothing: it needs {quantity(-amount)} work units more."
-    share = 100 * amount / total_capacity
+    total = quantity(total_capacity)
+    share = (
+        f"{percent(100 * amount / total_capacity)} % of the fleet's {total}"
+        if amount <= total_capacity
+        else f"{amount / total_capacity:,.3g} times the fleet's {total}"
+    )
     sure = (
         f", at least {quantity(least)} with {100 * row['confidence']:g} % confidence"
         if least > 0
         else "; the limits overlap, so the saving is not certain"
     )
-    return (
-        f"Against {baseline} {subject} saves {quantity(amount)} work units of capacity "
-        f"({share:.1f} % of the fleet's {quantity(total_capacity)}){sure}."
-    )
+    return f"Against {baseline} {subject} saves {quantity(amount)} work units of capacity ({share}){sure}."
 
 
 def text_table(table: pd.DataFrame) -> str:
@@ -86,8 +96,9 @@ def text_table(table: pd.DataFrame) -> str:
     lines = []
     for _, row in table.iterrows():
         cells = [row["policy"], *([reports(row["information"])] if several else [])]
-        cells += [utilisation(row["headroom"]), f"{utilisation(row['lower'])} – {utilisation(row['upper'])}"]
-        cells += [f"{100 * row['of_mean']:.1f}", utilisation(row["network"]), utilisation(row["rule"])]
+        write = _row_writer(row)
+        cells += [write(row["headroom"]), f"{write(row['lower'])} – {write(row['upper'])}"]
+        cells += [percent(100 * row["of_mean"]), write(row["network"]), write(row["rule"])]
         cells += [quantity(row[name]) for name in ("capacity_needed", "saved", "saved_at_least")]
         lines.append(cells)
     widths = [max(len(line[at]) for line in [heads, *lines]) for at in range(len(heads))]
@@ -136,23 +147,56 @@ def answer_text(sentences: str, table: pd.DataFrame, about: str, runs: Sequence[
 
 def page_table(table: pd.DataFrame, total_capacity: float) -> pd.DataFrame:
     """Return the answer table as text for a page, one row a policy and kind of information."""
-    shown = {
-        "policy": table["policy"],
-        "load reports": table["information"].map(reports),
-        "headroom": table["headroom"].map(utilisation),
-        f"{100 * table['confidence'].iloc[0]:g} % limits": [
-            f"{utilisation(low)} – {utilisation(high)}"
-            for low, high in zip(table["lower"], table["upper"], strict=True)
-        ],
-        "% of mean utilisation": (100 * table["of_mean"]).map("{:.1f}".format),
-        "owed to the network": table["network"].map(utilisation),
-        "owed to the rule": table["rule"].map(utilisation),
-        "capacity to provision": table["capacity_needed"].map(quantity),
-        "÷ capacity today": (table["capacity_needed"] / total_capacity).map("{:.3f}".format),
-        "saved": table["saved"].map(quantity),
-        "saved at least": table["saved_at_least"].map(quantity),
-    }
-    return pd.DataFrame(shown).set_index(["policy", "load reports"])
+    confidence = f"{100 * table['confidence'].iloc[0]:g} % limits"
+    rows = []
+    for _, row in table.iterrows():
+        write = _row_writer(row)
+        rows.append(
+            {
+                "rule": row["policy"],
+                "load reports": reports(row["information"]),
+                "headroom": write(row["headroom"]),
+                confidence: f"{write(row['lower'])} – {write(row['upper'])}",
+                "% of mean utilisation": percent(100 * row["of_mean"]),
+                "owed to the network": write(row["network"]),
+                "owed to the rule": write(row["rule"]),
+                "capacity to provision": quantity(row["capacity_needed"]),
+                "÷ capacity today": _ratio(row["capacity_needed"] / total_capacity),
+                "saved": quantity(row["saved"]),
+                "saved at least": quantity(row["saved_at_least"]),
+            }
+        )
+    return pd.DataFrame(rows).set_index(["rule", "load reports"])
+
+
+def paired_table(paired: pd.DataFrame) -> pd.DataFrame:
+    """Return the table of `labkit.compare` as text for a page, one row a policy and kind of information."""
+    band = f"{100 * paired['confidence'].iloc[0]:g} % band" if len(paired) else "band"
+    rows = []
+    for _, row in paired.iterrows():
+        write = writer(abs(row["difference"]), abs(row["upper"]), abs(row["lower"]))
+        lower = round(row["share_lower"] * row["replicates"])
+        rows.append(
+            {
+                "rule": row["policy"],
+                "load reports": reports(row["information"]),
+                f"gap less that of {row['baseline']}": write(row["difference"]),
+                band: f"{write(row['lower'])} to {write(row['upper'])}",
+                "ended lower in": f"{lower:,} of {row['replicates']:,} replicates",
+            }
+        )
+    return pd.DataFrame(rows).set_index(["rule", "load reports"]) if rows else pd.DataFrame()
+
+
+def guard(verdict: Verdict, max_headroom: float | None) -> str:
+    """Return what a guard that was not broken says; see `check_max_headroom`."""
+    if max_headroom is None:
+        return "No `max_headroom` was set for this answer."
+    upper = writer(verdict.highest["headroom"])(verdict.highest["upper"])
+    return (
+        f"The guard holds: the upper limit of the headroom that {verdict.policy} needs, {upper}, is not "
+        f"above the `max_headroom` of {max_headroom:g}."
+    )
 
 
 def horizon(measures: pd.DataFrame, policy: str) -> str:
@@ -194,15 +238,60 @@ def reports(information: str) -> str:
     return f"every {int(every):,} tasks" if every.isdigit() else information
 
 
+def writer(*sizes: float) -> Callable[[float], str]:
+    """Return a function that writes utilisations with the decimals that the first positive size calls for.
+
+    That size gets at least three significant digits: four decimals where it lies between 0.01 and 1, fewer
+    above, more below, and below 0.0001 one power of ten for all numbers. So numbers that belong together,
+    such as a headroom and its limits, are rounded alike.
+
+    Parameters
+    ----------
+    *sizes : float
+        Utilisations; those that are not positive and finite do not count.
+    """
+    size = next((each for each in sizes if np.isfinite(each) and each > 0), 0.1)
+    power = math.floor(math.log10(size) + _ROUNDING)
+    decimals = max(0, 3 - power) if power >= 0 else max(4, 2 - power)
+    unit, ending = (1.0, "") if decimals <= _DECIMALS else (10.0**power, f"e{power:03d}")
+    if ending:
+        decimals = 2
+
+    def write(value: float) -> str:
+        if not np.isfinite(value):
+            return "–"
+        return f"{value / unit:z,.{decimals}f}{ending}"
+
+    return write
+
+
+def _row_writer(row: pd.Series) -> Callable[[float], str]:
+    return writer(row["headroom"], row["upper"], row["mean_utilisation"])
+
+
 def utilisation(value: float) -> str:
-    """Return a utilisation with enough digits to compare rules: four decimals below 10, four digits above."""
+    """Return a utilisation with the decimals that its own size calls for, at least three digits."""
+    return writer(abs(value))(value)
+
+
+def _ratio(value: float) -> str:
+    return f"{value:,.3f}" if value >= 0.1 else f"{value:.3g}"
+
+
+def percent(value: float) -> str:
+    """Return a percentage: one decimal, or three digits where that would be too few."""
     if not np.isfinite(value):
         return "–"
-    return f"{value:.4f}" if abs(value) < 10 else f"{value:,.1f}"
+    return f"{value:,.1f}" if abs(value) >= 1 or value == 0 else f"{value:.3g}"
 
 
 def quantity(value: float) -> str:
-    """Return an amount of work units with thousands separated."""
+    """Return an amount of work units with thousands separated and at least three digits."""
     if not np.isfinite(value):
         return "–"
-    return f"{value:,.0f}" if abs(value) >= 100 or value == round(value) else f"{value:,.2f}"
+    size = abs(value)
+    if size >= 1e15 or 0 < size < 1e-4:
+        return f"{value:.3g}"
+    if size >= 100 or value == round(value):
+        return f"{value:,.0f}"
+    return f"{value:.{max(2, 2 - math.floor(math.log10(size)))}f}"

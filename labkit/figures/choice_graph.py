@@ -1,5 +1,6 @@
 """The fleet as a picture: which servers end fullest, and who shares work with whom."""
 
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -7,17 +8,24 @@ import pandas as pd
 from matplotlib.axes import Axes
 from matplotlib.collections import LineCollection
 from matplotlib.figure import Figure
+from matplotlib.font_manager import FontProperties
+from matplotlib.textpath import TextPath
+from scipy.spatial import KDTree
 
+from labkit.analysis.wording import writer
 from labkit.errors import InputError
-from labkit.figures.layout import positions
-from labkit.figures.style import FILL, INK, spread, styled
+from labkit.figures.layout import CIRCLE_AT_MOST, is_ring_in_order, positions
+from labkit.figures.style import FILL, INK, plain, spread, styled
 from labkit.fleet.model import ABSENT, Fleet
 
 DRAWN_AT_MOST = 2_000
 NEIGHBOURHOOD = 300
 NAMED = 5
-# Width of a letter of a name and of the panel that the names stand in, in inches.
-LETTER, PANEL = 0.075, 6.6
+# Sizes of type in points.
+TITLE, WORDS = 11, 9
+# Inches: the margin, the largest drawing, the least height, room for a dot at the edge, from the drawing to
+# the names, from line to line, before the colour bar ("mean") and from its left edge to the figure's.
+MARGIN, LARGEST, LEAST, DOT, AWAY, LINE, MEAN, BAR = 0.12, 5.4, 1.6, 0.2, 0.4, 0.2, 0.7, 0.95
 
 
 @styled
@@ -52,6 +60,8 @@ def choice_graph(fleet: Fleet, utilisation: Any, *, title: str = "") -> Figure:
     capacity = np.ones(fleet.size) if fleet.capacity is None else np.asarray(fleet.capacity)
     names = np.asarray(fleet.names, dtype=object)
     low, high, mean = values.min(), values.max(), float(values @ capacity / capacity.sum())
+    if high - low <= 1e-6 * abs(high):  # all equally full: a middle shade
+        low, high = low - 0.1 * (abs(low) or 1.0), high + 0.1 * (abs(high) or 1.0)
     kept = np.arange(fleet.size)
     if fleet.size > DRAWN_AT_MOST:
         kept = _nearest_to(int(values.argmax()), fleet.size, pairs)
@@ -60,36 +70,56 @@ def choice_graph(fleet: Fleet, utilisation: Any, *, title: str = "") -> Figure:
         inside = (place_of[pairs] >= 0).all(axis=1)
         pairs, demand = place_of[pairs[inside]], demand[inside]
         values, capacity, names = values[kept], capacity[kept], names[kept]
-    figure = Figure(figsize=(8.4, 6.4), layout="constrained")
-    axes = figure.subplots()
     places = positions(len(kept), pairs)
-    _choices(axes, places, pairs, demand)
-    area = min(260.0, 4_000 / len(kept)) * capacity / capacity.mean()
+    words = "area: capacity · line width: demand"
+    if len(kept) < fleet.size:
+        words += f" · the {len(kept)} servers nearest to the fullest of {fleet.size:,}"
+    if len(kept) > CIRCLE_AT_MOST and is_ring_in_order(len(kept), pairs):
+        words += " · the ring is drawn as a wave to make room"
+    sheet = _sheet(places, values, names, max(_width(title, TITLE, "bold"), _width(words)))
+    figure = Figure(figsize=sheet.size)
+    width, height = sheet.size
+    low_x, high_x, low_y, high_y = sheet.panel
+    foot = MARGIN + 0.35
+    axes = figure.add_axes(
+        (MARGIN / width, foot / height, (high_x - low_x) / width, (high_y - low_y) / height),
+        xlim=(low_x, high_x),
+        ylim=(low_y, high_y),
+    )
+    axes.set_axis_off()
+    diameter = _diameter(sheet.places)
+    _choices(axes, sheet.places, pairs, demand, diameter)
     dots = axes.scatter(
-        places[:, 0],
-        places[:, 1],
-        s=area,
+        sheet.places[:, 0],
+        sheet.places[:, 1],
+        s=diameter**2 * capacity / capacity.mean(),
         c=values,
         cmap=FILL,
         vmin=low,
-        vmax=max(high, low + 1e-12),
+        vmax=high,
         edgecolors=INK,
-        linewidths=0.6,
+        linewidths=min(0.6, diameter / 10),
         zorder=3,
     )
-    _names(axes, places, values, names)
-    bar = figure.colorbar(dots, ax=axes, shrink=0.7, pad=0.02)
+    for label in sheet.labels:
+        label.draw(axes, sheet.places)
+    tall = min(high_y - low_y, 3.4)
+    middle = foot + (high_y - low_y) / 2
+    bar = figure.colorbar(
+        dots,
+        cax=figure.add_axes(
+            ((width - BAR) / width, (middle - tall / 2) / height, 0.16 / width, tall / height)
+        ),
+    )
+    bar.ax.yaxis.set_major_formatter(plain)
     bar.set_label("utilisation (load ÷ capacity)")
     bar.ax.axhline(mean, color="white", linewidth=3)
     bar.ax.axhline(mean, color=INK, linewidth=1.2)
     bar.ax.annotate("mean ", (0, mean), xycoords=("axes fraction", "data"), ha="right", va="center")
-    axes.set_aspect("equal")
-    axes.set_axis_off()
-    axes.set_title(title)
-    words = "area: capacity · line width: demand"
-    if len(kept) < fleet.size:
-        words += f" · the {len(kept)} servers nearest to the fullest of {fleet.size:,}"
-    figure.supxlabel(words, fontsize=9)
+    figure.suptitle(
+        title, x=MARGIN / width, y=1 - MARGIN / height, ha="left", va="top", fontsize=TITLE, fontweight="bold"
+    )
+    figure.supxlabel(words, x=MARGIN / width, y=MARGIN / height, ha="left", va="bottom", fontsize=WORDS)
     return figure
 
 
@@ -137,47 +167,99 @@ def _nearest_to(centre: int, size: int, pairs: np.ndarray) -> np.ndarray:
     return np.sort(np.array(queue))
 
 
-def _choices(axes: Axes, places: np.ndarray, pairs: np.ndarray, demand: np.ndarray) -> None:
+def _choices(axes: Axes, places: np.ndarray, pairs: np.ndarray, demand: np.ndarray, diameter: float) -> None:
     if not len(pairs):
         return
-    widest = min(6.0, 450 / len(places)) if np.ptp(demand) > 0 else min(1.5, 300 / len(places))
-    widths = np.maximum(0.4, widest * demand / max(demand.max(), 1e-300))
-    axes.add_collection(LineCollection(list(places[pairs]), linewidths=widths, colors="#A6A6A6", zorder=1))
+    widest = min(6.0, 0.85 * diameter) if np.ptp(demand) > 0 else min(1.5, 0.3 * diameter)
+    widths = np.maximum(0.3, widest * demand / max(demand.max(), 1e-300))
+    axes.add_collection(
+        LineCollection(list(places[pairs]), linewidths=widths, colors="#A6A6A6", zorder=1, capstyle="butt"),
+        autolim=False,
+    )
 
 
-def _names(axes: Axes, places: np.ndarray, values: np.ndarray, names: np.ndarray) -> None:
-    """Name the fullest servers beside the picture, each with a thin line to its dot, and make room."""
+def _diameter(places: np.ndarray) -> float:
+    """Return the diameter in points of a dot of mean capacity, so that most dots leave room between them."""
+    if len(places) < 2:
+        return 16.0
+    nearest, _ = KDTree(places).query(places, k=2)
+    return float(np.clip(0.52 * 72 * np.median(nearest[:, 1]), 2.2, 16.0))
+
+
+@dataclass(frozen=True)
+class _Label:
+    at: int
+    words: str
+    x: float
+    y: float
+    side: int
+
+    def draw(self, axes: Axes, places: np.ndarray) -> None:
+        axes.annotate(
+            self.words,
+            places[self.at],
+            xytext=(self.x, self.y),
+            ha="left" if self.side > 0 else "right",
+            va="center",
+            fontsize=WORDS,
+            arrowprops={
+                "arrowstyle": "-",
+                "color": INK,
+                "linewidth": 0.7,
+                "shrinkB": 4,
+                "relpos": (0.0 if self.side > 0 else 1.0, 0.5),
+            },
+            zorder=4,
+        )
+
+
+@dataclass(frozen=True)
+class _Sheet:
+    """Where everything goes, in inches: places of the servers, labels, the panel around both, the figure."""
+
+    places: np.ndarray
+    labels: list[_Label]
+    panel: tuple[float, float, float, float]
+    size: tuple[float, float]
+
+
+def _sheet(places: np.ndarray, values: np.ndarray, names: np.ndarray, words: float) -> _Sheet:
+    """Scale the drawing to its number of servers and make room for the names of the fullest beside it."""
+    places = places - places.min(axis=0)
+    extent = places.max(axis=0)
+    longest = min(LARGEST, 1.4 + 0.45 * len(places) ** 0.5)
+    places = places * (longest / max(extent.max(), 1e-12))
+    low, high = np.zeros(2), places.max(axis=0)
     fullest = np.argsort(-values, kind="stable")[:NAMED]
-    words = {int(at): f"{_short(str(names[at]))}: {values[at]:.4g}" for at in fullest}
-    low, high = places.min(axis=0), places.max(axis=0)
-    reach = max(*(high - low), 1e-12)
-    right = places[fullest, 0] >= (low[0] + high[0]) / 2
-    limits = [low[0] - 0.04 * reach, high[0] + 0.04 * reach]
-    for side, sign in ((right, 1), (~right, -1)):
-        edge = (high if sign > 0 else low)[0] + sign * 0.07 * reach
-        for at, y in zip(fullest[side], spread(places[fullest[side], 1], 0.045 * reach), strict=True):
-            axes.annotate(
-                words[int(at)],
-                places[at],
-                xytext=(edge, y),
-                ha="left" if sign > 0 else "right",
-                va="center",
-                arrowprops={
-                    "arrowstyle": "-",
-                    "color": INK,
-                    "linewidth": 0.7,
-                    "shrinkB": 4,
-                    "relpos": (0.0 if sign > 0 else 1.0, 0.5),
-                },
-                zorder=4,
+    write = writer(values.max())
+    labels = []
+    right = places[fullest, 0] >= high[0] / 2
+    for side in (1, -1):
+        mine = fullest[right == (side > 0)]
+        x = high[0] + AWAY if side > 0 else -AWAY
+        for at, y in zip(mine, spread(places[mine, 1], LINE), strict=True):
+            labels.append(
+                _Label(int(at), f"{_short(str(names[at]))}: {write(values[at])}", x, float(y), side)
             )
-            # inches of the text over inches of the panel, had it a label on either side
-            share = min(LETTER * len(words[int(at)]) / PANEL, 0.4)
-            room = reach * (share + 0.07) / (1 - 2 * share)
-            end = edge + sign * (room - 0.07 * reach)
-            limits[sign > 0] = max(limits[1], end) if sign > 0 else min(limits[0], end)
-    axes.set_xlim(*limits)
-    axes.set_ylim(low[1] - 0.05 * reach, high[1] + 0.05 * reach)
+    labels.sort(key=lambda label: fullest.tolist().index(label.at))
+    ends = [label.x + label.side * _width(label.words) for label in labels]
+    heights = [label.y for label in labels]
+    low_x, high_x = min(low[0] - DOT, *ends), max(high[0] + DOT, *ends)
+    low_y = min(low[1] - DOT, min(heights) - LINE / 2)
+    high_y = max(high[1] + DOT, max(heights) + LINE / 2)
+    missing = max(0.0, LEAST - (high_y - low_y)) / 2
+    low_y, high_y = low_y - missing, high_y + missing
+    width = max(MARGIN + high_x - low_x + MEAN + BAR, words + 2 * MARGIN)
+    height = 2 * MARGIN + 0.75 + high_y - low_y
+    return _Sheet(places, labels, (low_x, high_x, low_y, high_y), (width, height))
+
+
+def _width(words: str, size: float = WORDS, weight: str = "normal") -> float:
+    """Return the width of a line of text in inches."""
+    if not words:
+        return 0.0
+    font = FontProperties(family="DejaVu Sans", size=size, weight=weight)
+    return float(TextPath((0, 0), words, prop=font).get_extents().x1) / 72 * 1.04
 
 
 def _short(name: str) -> str:

@@ -9,7 +9,7 @@ from matplotlib.lines import Line2D
 from labkit.analysis.wording import reports, utilisation
 from labkit.checks import nearest
 from labkit.errors import InputError
-from labkit.figures.style import FAINT, INK, looks, styled
+from labkit.figures.style import FAINT, INK, looks, plain, styled
 
 
 @styled
@@ -61,6 +61,7 @@ def headroom_per_policy(table: pd.DataFrame, *, baseline: str = "") -> Figure:
     axes.tick_params(axis="y", length=0)
     axes.set_ylim(-0.6, len(order) - 0.4)
     axes.set_xlim(0, rows["upper"].max() * 1.04)
+    axes.xaxis.set_major_formatter(plain)
     axes.grid(True, axis="x")
     first = rows.iloc[0]
     axes.set_xlabel(
@@ -103,7 +104,7 @@ def _values(axes: Axes, y: float, row: pd.Series, base: pd.DataFrame, baseline: 
 
 def _network(axes: Axes, rows: pd.DataFrame) -> None:
     part = rows.get("network", pd.Series(dtype=float))
-    if not len(part) or not np.isfinite(part).all() or part.mean() <= 1e-9:
+    if not len(part) or not np.isfinite(part).all() or part.mean() <= 1e-6 * rows["upper"].max():
         return
     axes.axvline(part.mean(), color=FAINT, linewidth=1.2, linestyle=(0, (4, 2)), zorder=1)
     axes.annotate(

@@ -5,6 +5,10 @@ import numpy as np
 
 # Stress minimisation compares all pairs; beyond this many servers springs take over.
 STRESS_AT_MOST = 150
+# A ring of more servers than this is drawn as a wave around a circle, lest its servers cover its choices.
+CIRCLE_AT_MOST = 150
+# Of the wave: its height in radii, and the distance of neighbouring servers in radii that it makes room for.
+HEIGHT, STEP = 0.16, 0.036
 
 
 def positions(size: int, pairs: np.ndarray) -> np.ndarray:
@@ -20,11 +24,11 @@ def positions(size: int, pairs: np.ndarray) -> np.ndarray:
     Returns
     -------
     numpy.ndarray, shape (size, 2)
-        A circle when the servers form a ring in table order; else each component on its own (stress
-        minimisation, or springs when it is large), side by side, lone servers in rows below.
+        A circle, or a wave around one, when the servers form a ring in table order; else each component on
+        its own (stress minimisation, or springs when it is large), side by side, lone servers in rows below.
     """
     if is_ring_in_order(size, pairs):
-        return _circle(size)
+        return _circle(size) if size <= CIRCLE_AT_MOST else _wave(size)
     graph = nx.Graph()
     graph.add_nodes_from(range(size))
     graph.add_edges_from(map(tuple, pairs.tolist()))
@@ -61,10 +65,31 @@ def _circle(size: int) -> np.ndarray:
     return np.column_stack([np.cos(angle), np.sin(angle)])
 
 
+def _wave(size: int) -> np.ndarray:
+    """Return places at equal steps along a closed wave, whose length grows with their number."""
+    waves = max(8, round(size * STEP / (4 * HEIGHT)))
+    turn = np.linspace(0, 2 * np.pi, 200 * waves + 1)
+    radius = 1 + HEIGHT * np.cos(waves * turn)
+    line = np.column_stack([radius * np.sin(turn), radius * np.cos(turn)])
+    along = np.concatenate([[0.0], np.cumsum(np.hypot(*np.diff(line, axis=0).T))])
+    wanted = along[-1] * np.arange(size) / size
+    return np.column_stack([np.interp(wanted, along, line[:, 0]), np.interp(wanted, along, line[:, 1])])
+
+
 def _component(graph: nx.Graph, part: list[int]) -> np.ndarray:
     start = dict(zip(part, _circle(len(part)), strict=True))
     if len(part) <= STRESS_AT_MOST:
         found = nx.kamada_kawai_layout(graph, pos=start)
     else:
         found = nx.spring_layout(graph, pos=start, iterations=100, seed=0)
-    return np.array([found[server] for server in part])
+    return _upright(np.array([found[server] for server in part]))
+
+
+def _upright(places: np.ndarray) -> np.ndarray:
+    """Turn a drawing that is much longer than wide so that it stands: names find room beside it."""
+    centred = places - places.mean(axis=0)
+    _, lengths, axes = np.linalg.svd(centred, full_matrices=False)
+    if len(places) < 2 or lengths[0] < 2 * lengths[-1]:
+        return centred
+    longest = axes[0] * (1 if (centred @ axes[0])[0] >= 0 else -1)
+    return np.column_stack([centred @ np.array([longest[1], -longest[0]]), centred @ longest])

@@ -8,7 +8,7 @@ from matplotlib.ticker import FuncFormatter, LogLocator, MaxNLocator, NullLocato
 
 from labkit.analysis.headroom import headroom
 from labkit.analysis.wording import reports
-from labkit.figures.style import label_ends, looks, styled
+from labkit.figures.style import label_ends, looks, plain, styled
 
 BAND = (0.05, 0.95)
 
@@ -94,11 +94,11 @@ def _axes(axes: Axes, tasks: pd.Index, wide: bool) -> None:
     if wide:
         axes.set_yscale("log")
         axes.yaxis.set_major_locator(LogLocator(subs=(1, 2, 5)))
-        axes.yaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g}"))
         axes.yaxis.set_minor_locator(NullLocator())
     else:
         axes.set_ylim(bottom=0)
         axes.yaxis.set_major_locator(MaxNLocator(6))
+    axes.yaxis.set_major_formatter(plain)
     axes.set_xlim(float(tasks.min()) * 0.95, float(tasks.max()) * 1.12)
     axes.xaxis.set_major_locator(LogLocator(subs=(1, 2, 5)))
     axes.xaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:,.0f}"))

@@ -80,6 +80,11 @@ def styled(draw: Callable[P, Figure]) -> Callable[P, Figure]:
     return run
 
 
+def plain(value: float, _: float) -> str:
+    """Return the words at a tick; a power of ten at the end of an axis would get in the way of others."""
+    return f"{value:g}"
+
+
 def looks(names: Iterable[str]) -> dict[str, dict]:
     """Return colour, marker and dashes for each name; the same names get the same looks in every figure."""
     return {

@@ -16,7 +16,7 @@ Columns = dict[str, Any]
 
 
 def read_fleet(folder: str | Path) -> Fleet:
-    """Read a fleet from servers.csv or servers.parquet and choices.csv or choices.parquet in a folder.
+    r"""Read a fleet from servers.csv or servers.parquet and choices.csv or choices.parquet in a folder.
 
     Parameters
     ----------
@@ -40,6 +40,18 @@ def read_fleet(folder: str | Path) -> Fleet:
     Names in CSV are text, so that "007" stays "007"; they become whole numbers only when every server is
     written as one in its plain form (no leading zeros, no plus sign, within 64 bits). Parquet keeps its
     types.
+
+    Examples
+    --------
+    >>> import tempfile
+    >>> from pathlib import Path
+    >>> import labkit as lk
+    >>> with tempfile.TemporaryDirectory() as folder:
+    ...     _ = Path(folder, "servers.csv").write_text("server,capacity\nnorth,120\neast,80\nsouth,100\n")
+    ...     _ = Path(folder, "choices.csv").write_text("option_1,option_2\nnorth,east\neast,south\n")
+    ...     fleet = lk.read_fleet(folder)
+    >>> len(fleet), fleet.total_capacity
+    (3, 300.0)
     """
     if not isinstance(folder, str | Path):
         raise InputError(f"folder is {folder!r}; give the path of a folder.")

@@ -1,20 +1,28 @@
 """The answer table as arithmetic, the verdict, the guard, and the words."""
 
+import re
+
 import numpy as np
 import pandas as pd
 import pytest
 
 from labkit.analysis.answer import answer_table, check_max_headroom, judge
+from labkit.analysis.comparison import compare
 from labkit.analysis.headroom import headroom
 from labkit.analysis.wording import (
     answer_text,
     decision,
+    guard,
     horizon,
     notes,
     page_table,
+    paired_table,
+    percent,
     quantity,
     reports,
     text_table,
+    utilisation,
+    writer,
 )
 from labkit.errors import HeadroomExceeded, InputError, TooFewReplicates
 from tests.analysis.synthetic import measures
@@ -154,7 +162,7 @@ def test_text_is_aligned_and_narrow(several):
     assert "at most 2 %" in about
     assert "800 tasks placed on 100 servers of 1,000 work units in total, 400 replicates" in about
     page = page_table(table, CAPACITY)
-    assert page.index.names == ["policy", "load reports"]
+    assert page.index.names == ["rule", "load reports"]
     assert len(page) == len(table)
 
 
@@ -176,6 +184,72 @@ def test_the_horizon_tells_growth_and_fall(draws):
     assert horizon(draws[draws["tasks"] == 800].assign(information="fresh"), "one-choice") == ""
 
 
+@pytest.mark.parametrize("size", [3e-9, 2e-6, 4e-4, 0.03, 0.4, 7.0, 90.0, 4e4])
+def test_a_headroom_of_any_size_is_written_with_three_digits_and_its_limits_alike(size):
+    write = writer(size)
+    assert float(write(size).replace(",", "")) == pytest.approx(size, rel=0.5e-2)
+    limits = [write(0.83 * size), write(1.21 * size)]
+    assert [float(text.replace(",", "")) / size for text in limits] == pytest.approx([0.83, 1.21], rel=1e-2)
+    decimals = {len(text.split("e")[0].partition(".")[2]) for text in (write(size), *limits)}
+    assert len(decimals) == 1
+    assert write(0.0) == write(-1e-20 * size)
+
+
+def test_a_small_utilisation_gives_the_same_answer_on_a_smaller_scale(draws):
+    columns = ["max_utilisation", "gap", "excess"]
+    small = draws.assign(**{name: draws[name] * 1e-6 for name in columns})
+    words = []
+    for measured, capacity in ((draws, 1e4), (small, 1e10)):
+        table = answer(measured, total_capacity=capacity)
+        row = judge(table).worst
+        text = decision(table, judge(table), baseline="one-choice", total_capacity=capacity)
+        found = [float(number) for number in re.findall(r"(?:of|limits|to) ([0-9.]+(?:e-[0-9]+)?)", text)[:4]]
+        wanted = [row["headroom"], row["mean_utilisation"], row["lower"], row["upper"]]
+        assert found == pytest.approx(wanted, rel=5e-3)
+        assert " 0.0000" not in text_table(table)
+        words.append(re.search(r"saves ([0-9,]+) work units", text)[1])
+    assert words[0] == words[1]
+
+
+@pytest.mark.parametrize(
+    ("capacity", "words"),
+    [(6.0, "times the fleet's 6"), (1000.0, "% of the fleet's 1,000")],
+)
+def test_a_saving_is_a_share_or_a_multiple_of_the_fleet(draws, capacity, words):
+    table = answer(draws, total_capacity=capacity)
+    table[["saved", "saved_at_least"]] = table[["saved", "saved_at_least"]] * (1000 / capacity)
+    text = decision(table, judge(table), baseline="one-choice", total_capacity=capacity)
+    share = judge(table).worst["saved"] / capacity
+    stated = float(re.search(rf"\(([0-9.,]+) {re.escape(words)}\)", text)[1].replace(",", ""))
+    assert stated == pytest.approx(share if share > 1 else 100 * share, rel=1e-2)
+
+
+def test_equal_rules_save_nothing(draws):
+    twin = draws[draws["policy"] == "one-choice"].assign(policy="a twin")
+    table = answer(pd.concat([draws[draws["policy"] == "one-choice"], twin]))
+    text = decision(table, judge(table, "a twin"), baseline="one-choice", total_capacity=CAPACITY)
+    assert "Against one-choice that saves nothing: both need the same." in text
+
+
+def test_the_paired_table_speaks_of_replicates_and_reports(several):
+    ends = several.loc[several["tasks"] == 800, ["policy", "information", "replicate", "tasks", "gap"]]
+    paired = compare(ends, baseline="one-choice", rng=1)
+    table = paired_table(paired)
+    assert table.index.names == ["rule", "load reports"]
+    assert table.columns.tolist() == ["gap less that of one-choice", "95 % band", "ended lower in"]
+    assert "every 200 tasks" in table.index.get_level_values("load reports")
+    counts = table["ended lower in"].str.extract(r"^(\d+) of 400 replicates$")[0].astype(int)
+    np.testing.assert_allclose(counts / 400, paired["share_lower"])
+    assert paired_table(paired[:0]).empty
+
+
+def test_a_guard_that_holds_says_what_it_compared(several):
+    verdict = judge(answer(several))
+    assert "upper limit" in guard(verdict, 5.0)
+    assert "not above the `max_headroom` of 5" in guard(verdict, 5.0)
+    assert guard(verdict, None) == "No `max_headroom` was set for this answer."
+
+
 def test_numbers_are_written_for_reading():
     assert reports("fresh") == "always fresh"
     assert reports("snapshot(every=2000)") == "every 2,000 tasks"
@@ -183,6 +257,11 @@ def test_numbers_are_written_for_reading():
     assert quantity(12000.4) == "12,000"
     assert quantity(3.25) == "3.25"
     assert quantity(np.nan) == "–"
+    assert quantity(0.00234) == "0.00234"
+    assert utilisation(0.18333) == "0.1833"
+    assert utilisation(2e-6) == "2.00e-06"
+    assert utilisation(np.nan) == percent(np.nan) == "–"
+    assert [percent(value) for value in (47.92, 0.0, 0.0123)] == ["47.9", "0.0", "0.0123"]
 
 
 @pytest.mark.parametrize(

@@ -1,6 +1,7 @@
 """Figures draw what the table says, leave no traces, and keep their words apart."""
 
 import itertools
+import re
 
 import matplotlib as mpl
 import matplotlib.pyplot as plt
@@ -8,6 +9,7 @@ import networkx as nx
 import numpy as np
 import pandas as pd
 import pytest
+from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.colors import to_rgb
 
 import labkit as lk
@@ -71,7 +73,7 @@ def boxes(figure):
 @pytest.mark.parametrize("name", ["load", "headroom", "graph"])
 def test_words_stay_inside_and_apart(records, table, name):
     figure = everything(records, table)[name]
-    mpl.backends.backend_agg.FigureCanvasAgg(figure)
+    FigureCanvasAgg(figure)
     figure.canvas.draw()
     inside = figure.bbox
     drawn = boxes(figure)
@@ -156,6 +158,47 @@ def test_colours_in_the_graph_follow_utilisation_and_areas_capacity():
     named = [text.get_text() for text in figure.axes[0].texts]
     assert named[0].split(":")[0] in {f"site {k}" for k in range(19, 24)}
     assert len(named) == 5
+
+
+@pytest.mark.parametrize("fleet", [lk.ring(3), lk.ring(12), lk.ring(500), lk.torus(6, 6)], ids=len)
+def test_the_graph_fills_its_sheet(fleet):
+    figure = choice_graph(fleet, np.linspace(0, 1, len(fleet)), title="least-loaded: utilisation")
+    canvas = FigureCanvasAgg(figure)
+    canvas.draw()
+    inked = np.asarray(canvas.buffer_rgba())[:, :, :3].min(axis=2) < 250
+    for axis in (0, 1):
+        used = np.flatnonzero(inked.any(axis=axis))
+        gaps = np.diff(np.concatenate([[-1], used, [inked.shape[1 - axis]]]))
+        assert gaps.max() < 0.85 * figure.dpi  # inches of nothing
+
+
+def test_servers_of_a_long_ring_leave_room_for_the_widths_of_its_choices():
+    demand = np.random.default_rng(1).integers(1, 12, 500)
+    ring = lk.ring(500)
+    fleet = lk.Fleet(ring.servers, ring.choices.assign(demand=demand))
+    axes = choice_graph(fleet, np.linspace(0, 1, 500)).axes[0]
+    lines = next(item for item in axes.collections if hasattr(item, "get_segments"))
+    dots = next(item for item in axes.collections if hasattr(item, "get_sizes"))
+    lengths = [72 * np.hypot(*np.diff(segment, axis=0)[0]) for segment in lines.get_segments()]
+    assert np.median(lengths) > 1.5 * np.sqrt(dots.get_sizes().mean())
+    widths = np.sort(lines.get_linewidths())
+    assert widths[-25] > 2 * widths[25]
+    assert widths[-1] < np.sqrt(dots.get_sizes().max())
+
+
+def test_a_path_stands_so_that_names_find_room():
+    places = positions(4, np.array([[0, 1], [1, 2], [2, 3]]))
+    assert np.ptp(places[:, 1]) > 20 * np.ptp(places[:, 0])
+
+
+def test_small_utilisations_keep_their_digits_in_the_figures(table):
+    small = table.assign(**{name: table[name] * 1e-6 for name in ("headroom", "lower", "upper", "network")})
+    words = [text.get_text() for text in headroom_per_policy(small).findobj(mpl.text.Text)]
+    read = [float(text) for text in words if re.fullmatch(r"[0-9.]+e-[0-9]+", text)]
+    np.testing.assert_allclose(sorted(read)[-len(small) :], sorted(small["headroom"]), rtol=5e-3)
+    assert any(text.startswith("owed to the network whatever the rule: 3.20e-08") for text in words)
+    names = [text.get_text() for text in choice_graph(lk.ring(5), np.full(5, 2e-6)).axes[0].texts]
+    assert all(text.endswith(": 2.00e-06") for text in names)
 
 
 def test_a_large_fleet_is_drawn_around_its_fullest_server():

@@ -25,10 +25,12 @@ def asked(store, output, **values):
     return {"study": STUDY["study"], "store": str(store), "output": str(output), "risk": 0.05, **values}
 
 
-def test_a_broken_guard_fails_after_the_same_answer_is_written(store, tmp_path, monkeypatch):
+def test_a_broken_guard_fails_after_the_same_answer_is_written(store, tmp_path, monkeypatch, caplog):
     monkeypatch.chdir(tmp_path)
     parameters = asked(store, tmp_path / "kept", max_headroom=5.0)
-    papermill.execute_notebook(ANSWER, tmp_path / "kept.ipynb", parameters=parameters, progress_bar=False)
+    with caplog.at_level("WARNING", logger="papermill"):
+        papermill.execute_notebook(ANSWER, tmp_path / "kept.ipynb", parameters=parameters, progress_bar=False)
+    assert [line for line in caplog.messages if "parameter" in line or "parse" in line] == []
     done = execute(ANSWER, asked(store, tmp_path / "broken", max_headroom=0.001), tmp_path / "broken.ipynb")
     assert not done.refused
     assert re.search(r"policy 'least-loaded' .* above max_headroom 0.001", done.error)

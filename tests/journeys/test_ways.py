@@ -1,11 +1,14 @@
 """A run notebook gives the same record by `labkit run`, papermill and `jupyter execute`, from anywhere."""
 
+import ast
 import sys
 
 import pytest
+from papermill.inspection import inspect_notebook
 
 from labkit.cli import main
-from labkit.records.project import ROOT
+from labkit.records.declared import read_notebook
+from labkit.records.project import NOTEBOOKS, ROOT
 from labkit.records.store import Store
 from tests.journeys.ways import (
     JUPYTER,
@@ -53,7 +56,20 @@ def test_papermill_and_jupyter_execute_give_the_same_record(by_study, tmp_path):
     done = {store: finish(process) for store, process in ways.items()}
     for store, (status, _, err) in done.items():
         assert status == 0, err
+        assert "unknown parameter" not in err
+        assert "Unable to parse" not in err
         assert_same(the_record(tmp_path / store), the_record(by_study / "runs"))
+
+
+@pytest.mark.parametrize("notebook", sorted(NOTEBOOKS.glob("*.ipynb")), ids=lambda path: path.stem)
+def test_papermill_knows_every_declared_parameter(notebook):
+    declared = read_notebook(notebook).parameters
+    known = inspect_notebook(notebook)
+    assert list(known) == list(declared)
+    for name, parameter in declared.items():
+        assert known[name]["inferred_type_name"] == parameter.kind
+        assert ast.literal_eval(known[name]["default"]) == parameter.default
+        assert known[name]["help"]
 
 
 def test_plain_papermill_refuses_what_the_study_would(tmp_path):
