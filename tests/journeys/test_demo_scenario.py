@@ -13,7 +13,7 @@ import labkit as lk
 from labkit.analysis.headroom import replicates_needed
 
 EXPERIMENTS = Path(__file__).parents[2] / "experiments"
-SCENARIO = (EXPERIMENTS / "demo" / "SCENARIO.md").read_text(encoding="utf-8")
+SCENARIO = (EXPERIMENTS / "demo" / "README.md").read_text(encoding="utf-8")
 
 
 @pytest.fixture(scope="module")
