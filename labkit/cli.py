@@ -1,6 +1,7 @@
 """The command line: thin. What is heavy is imported by the command that needs it."""
 
 import argparse
+import contextlib
 import json
 import os
 import signal
@@ -9,7 +10,7 @@ import threading
 from collections.abc import Sequence
 from pathlib import Path
 from types import FrameType
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, NoReturn
 
 from labkit import __version__
 from labkit.errors import InputError
@@ -17,6 +18,7 @@ from labkit.errors import InputError
 if TYPE_CHECKING:
     from labkit.records.store import Store
     from labkit.studies.model import Study
+    from labkit.studies.running import Report
 
 
 def main(words: Sequence[str] | None = None) -> int:
@@ -25,18 +27,18 @@ def main(words: Sequence[str] | None = None) -> int:
     0: done. 1: something failed or differs. 2: input was refused, in one sentence on the standard error
     stream. 130: interrupted.
     """
-    arguments = _parser().parse_args(words)
     if threading.current_thread() is threading.main_thread():
         signal.signal(signal.SIGTERM, _terminate)
     try:
+        arguments = _parser().parse_args(words)
         status = int(arguments.command(arguments))
         sys.stdout.flush()
         return status
     except InputError as error:
-        print(f"labkit: {error}", file=sys.stderr)
+        _say(str(error))
         return 2
     except KeyboardInterrupt:
-        print("labkit: interrupted; runs already recorded are kept", file=sys.stderr)
+        _say("interrupted; runs already recorded are kept")
         return 130
     except BrokenPipeError:
         # the reader has seen enough; python would complain once more at exit
@@ -48,8 +50,36 @@ def _terminate(number: int, frame: FrameType | None) -> None:
     sys.exit(128 + number)
 
 
+def _say(sentence: str) -> None:
+    print(f"labkit: {sentence}", file=sys.stderr)
+
+
+class _Parser(argparse.ArgumentParser):
+    """A parser that refuses like everything else: one sentence, no usage."""
+
+    def error(self, message: str) -> NoReturn:
+        about, _, rule = message.removeprefix("argument ").partition(": ")
+        if rule.startswith("is "):
+            raise InputError(f"{about} {rule}.")
+        raise InputError(f"{message}; see {self.prog} --help.")
+
+
+def _whole(text: str) -> int:
+    try:
+        return int(text)
+    except ValueError:
+        raise argparse.ArgumentTypeError(f"is {text!r}; give a whole number") from None
+
+
+def _number(text: str) -> float:
+    try:
+        return float(text)
+    except ValueError:
+        raise argparse.ArgumentTypeError(f"is {text!r}; give a number") from None
+
+
 def _parser() -> argparse.ArgumentParser:
-    parser = argparse.ArgumentParser(
+    parser = _Parser(
         prog="labkit",
         description="How much headroom a fleet needs when its work can go only to a few places each.",
     )
@@ -64,7 +94,7 @@ def _parser() -> argparse.ArgumentParser:
         return added
 
     def executing(added: argparse.ArgumentParser) -> None:
-        added.add_argument("--jobs", metavar="N", type=int, help="kernels at the same time (one a core)")
+        added.add_argument("--jobs", metavar="N", type=_whole, help="kernels at the same time (one a core)")
         added.add_argument(
             "--output", metavar="DIR", type=Path, help="folder of the answers (results/answers)"
         )
@@ -79,16 +109,21 @@ def _parser() -> argparse.ArgumentParser:
     answer.add_argument(
         "folder", metavar="FOLDER", type=Path, help="holds servers.csv and choices.csv (or .parquet)"
     )
-    answer.add_argument("--tasks", metavar="N", type=int, help="work placed (the total demand)")
-    answer.add_argument("--risk", metavar="R", type=float, help="accepted overload risk")
     answer.add_argument(
-        "--replicates", metavar="N", type=int, help="independent repetitions (as the risk needs)"
+        "--tasks",
+        metavar="N",
+        type=_whole,
+        help="tasks placed (as many as fill 80 %% of the total capacity; 100 a server without capacities)",
+    )
+    answer.add_argument("--risk", metavar="R", type=_number, help="accepted overload risk")
+    answer.add_argument(
+        "--replicates", metavar="N", type=_whole, help="independent repetitions (as the risk needs)"
     )
     answer.add_argument("--policies", metavar="RULE", nargs="+", help="placement rules, such as least-loaded")
     answer.add_argument(
-        "--report-every", metavar="K", type=int, nargs="+", help="loads reported every K tasks; 0: fresh"
+        "--report-every", metavar="K", type=_whole, nargs="+", help="loads reported every K tasks; 0: fresh"
     )
-    answer.add_argument("--entropy", metavar="E", type=int, help="number that all randomness starts from")
+    answer.add_argument("--entropy", metavar="E", type=_whole, help="number that all randomness starts from")
     answer.add_argument("--name", metavar="NAME", help="name of the study (the name of the folder)")
     executing(answer)
 
@@ -122,7 +157,7 @@ def _run(arguments: argparse.Namespace) -> int:
 def _answer(arguments: argparse.Namespace) -> int:
     from labkit.studies.own_fleet import study_of_fleet
 
-    study = study_of_fleet(
+    study, note = study_of_fleet(
         arguments.folder,
         name=arguments.name,
         risk=arguments.risk,
@@ -132,29 +167,27 @@ def _answer(arguments: argparse.Namespace) -> int:
         policies=arguments.policies,
         entropy=arguments.entropy,
     )
-    return _run_and_answer(study, arguments)
+    return _run_and_answer(study, arguments, note)
 
 
-def _run_and_answer(study: "Study", arguments: argparse.Namespace) -> int:
-    from tqdm import tqdm
-
+def _run_and_answer(study: "Study", arguments: argparse.Namespace, note: str = "") -> int:
     from labkit.records.project import ANSWERS
     from labkit.records.store import check_writable
     from labkit.studies.answering import write_answer
-    from labkit.studies.running import check_study, run_points
+    from labkit.studies.grouping import groups_of, in_words
 
-    check_study(study)
     store = _store(arguments)
     output = (arguments.output.absolute() if arguments.output else ANSWERS) / study.name
-    if study.answer_notebook is not None:
-        check_writable("output", output)
-    with tqdm(total=len(study.points), desc=study.name, unit="run", file=sys.stderr) as bar:
-        report = run_points(study, store, jobs=arguments.jobs, tick=lambda done: bar.update(done - bar.n))
+    groups = groups_of(study) if study.answer_notebook is not None else []
+    for group in groups:
+        check_writable("output", output / group.folder)
+    report = _run_points(study, store, arguments.jobs, note)
     for trouble in report.troubles:
         where = f" (see {trouble.evidence})" if trouble.evidence else ""
         first = (trouble.error.splitlines() or ["no message"])[0]
         kind = "refused" if trouble.refused else "failed"
-        print(f"labkit: run {trouble.run_id} {kind}: {first}{where}", file=sys.stderr)
+        point = f" ({in_words(trouble.values)})" if trouble.values else ""
+        _say(f"run {trouble.run_id}{point} {kind}: {first}{where}")
     result: dict[str, Any] = {
         "study": study.name,
         "store": store.folder,
@@ -162,26 +195,60 @@ def _run_and_answer(study: "Study", arguments: argparse.Namespace) -> int:
         "skipped": report.skipped,
         "failed": [vars(trouble) for trouble in report.troubles],
         "answer": None,
+        "answers": [],
     }
-    status, text = report.status, ""
-    if study.answer_notebook is not None and not report.troubles:
-        answer = write_answer(study, store, output)
-        text = answer.text
-        result["answer"] = {"page": answer.page, "error": answer.error}
+    statuses = [report.status]
+    without = {trouble.run_id for trouble in report.troubles}
+    for group in groups:
+        if without.intersection(point.run_id for point in group.points):
+            continue
+        answer = write_answer(study, group, store, output / group.folder)
         if answer.error:
-            print(f"labkit: {answer.error.splitlines()[0]}", file=sys.stderr)
-            status = 2 if answer.refused else 1
+            heading = f"{group.heading}: " if group.heading else ""
+            _say(f"{heading}{answer.error.splitlines()[0]}")
+            statuses.append(2 if answer.refused else 1)
+        result["answers"].append({"group": group.values, "page": answer.page, "error": answer.error})
+        if len(groups) == 1:
+            result["answer"] = {"page": answer.page, "error": answer.error}
+        if not arguments.json:
+            if group.heading:
+                print(f"=== {group.heading} ===")
+            if answer.text:
+                print(answer.text)
+            if answer.page:
+                print(f"page:    {answer.page}")
+            if group.heading:
+                print(flush=True)
+    status = 1 if 1 in statuses else max(statuses)
     if arguments.json:
         _print_json(result)
         return status
-    if text:
-        print(text)
     counts = f"{len(report.recorded)} recorded now, {len(report.skipped)} before"
     counts += f", {len(report.troubles)} without a record" if report.troubles else ""
-    if result["answer"] and result["answer"]["page"]:
-        print(f"page:    {result['answer']['page']}")
     print(f"records: {store.folder / study.name} ({counts})")
     return status
+
+
+def _run_points(study: "Study", store: "Store", jobs: int | None, note: str) -> "Report":
+    """Run the points behind a progress bar, which appears when nothing has been refused."""
+    from labkit.studies.running import run_points
+
+    with contextlib.ExitStack() as shown:
+        bar: Any = None
+
+        def tick(done: int) -> None:
+            nonlocal bar
+            if bar is None:
+                from tqdm import tqdm
+
+                if note:
+                    _say(note)
+                bar = shown.enter_context(
+                    tqdm(total=len(study.points), desc=study.name, unit="run", file=sys.stderr)
+                )
+            bar.update(done - bar.n)
+
+        return run_points(study, store, jobs=jobs, tick=tick, say=_say)
 
 
 def _list(arguments: argparse.Namespace) -> int:
@@ -192,11 +259,11 @@ def _list(arguments: argparse.Namespace) -> int:
     store = _store(arguments)
     rows, status = [], 0
     for study in [arguments.study] if arguments.study else store.studies():
-        for path in store.files(study):
+        for path in store.files(study, warn=_say):
             try:
                 table = store.read(path)
             except StoreError as error:
-                print(f"labkit: {error}", file=sys.stderr)
+                _say(str(error))
                 status = 2
                 continue
             rows.append({**row_of_origin(table), "rows": table.num_rows, "file": str(path)})
@@ -223,7 +290,7 @@ def _show(arguments: argparse.Namespace) -> int:
     from labkit.records.schema import measured_part, row_of_origin
 
     store = _store(arguments)
-    path = store.locate(arguments.run)
+    path = store.locate(arguments.run, warn=_say)
     table = store.read(path)
     origin = row_of_origin(table)
     measured = measured_part(table)
@@ -251,7 +318,7 @@ def _rerun(arguments: argparse.Namespace) -> int:
     from labkit.studies.rerun import rerun
 
     store = _store(arguments)
-    result = rerun(store, store.locate(arguments.run))
+    result = rerun(store, store.locate(arguments.run, warn=_say), say=_say)
     if arguments.json:
         _print_json({**vars(result), "identical": not result.difference})
         return 1 if result.difference else 0

@@ -1,8 +1,9 @@
 """What a notebook declares: its code cells and the parameters it takes.
 
 The parameters cell (tagged ``parameters``) holds one ``name: type = literal  # help`` a line, nothing else.
-Types are int, float, str, bool and list, each also as ``type | None``. A parameter named ``fleet``, or whose
-name ends in ``_path`` or ``_folder``, is a path.
+Types are int, float, str, bool and list, each also as ``type | None``; a default of None says the same, in
+words that papermill can parse, which wants one equals sign a line. A parameter named ``fleet``, or whose name
+ends in ``_path`` or ``_folder``, is a path.
 """
 
 import ast
@@ -163,7 +164,7 @@ def _declarations(path: Path, source: str) -> dict[str, Parameter]:
                 f"no declaration; write name: type = literal with a type among {', '.join(_KINDS)}."
             ) from None
         name = statement.target.id
-        found[name] = Parameter(name, kinds[0], "None" in words, default)
+        found[name] = Parameter(name, kinds[0], "None" in words or default is None, default)
     return found
 
 

@@ -12,7 +12,6 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from labkit import __version__
-from labkit.checks import check_whole
 from labkit.errors import InputError
 from labkit.records.declared import EXECUTION_ONLY, Notebook, is_path
 from labkit.records.project import PACKAGE, from_root
@@ -67,7 +66,7 @@ def identify(notebook: Notebook, values: dict[str, Any]) -> Identity:
         raise InputError(
             f"notebook {notebook.name} declares no parameter entropy; add entropy: int = 1 to it."
         )
-    entropy = check_whole("entropy", values["entropy"], least=0)
+    entropy = check_entropy(values["entropy"])
     parameters = {name: value for name, value in values.items() if name not in EXECUTION_ONLY}
     inputs = {
         name: content_digest(from_root(value))
@@ -81,6 +80,13 @@ def identify(notebook: Notebook, values: dict[str, Any]) -> Identity:
         {"notebook": notebook.digest, "parameters": meant, "entropy": entropy, "library": library}
     )
     return Identity(run_id[:16], entropy, int(_digest(arrivals)[:8], 16), parameters, inputs, library)
+
+
+def check_entropy(value: Any) -> int:
+    """Return the entropy when it is a whole number of at least 0; it may have any number of digits."""
+    if not isinstance(value, int) or isinstance(value, bool) or value < 0:
+        raise InputError(f"entropy is {value!r}; give a whole number of at least 0.")
+    return value
 
 
 def canonical(value: Any) -> str:

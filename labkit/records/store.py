@@ -12,7 +12,7 @@ import re
 import secrets
 import tempfile
 import time
-from collections.abc import Iterable, Iterator
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -85,35 +85,61 @@ class Store:
             place.name for place in self.folder.iterdir() if place.is_dir() and place.name[0] != "."
         )
 
-    def files(self, study: str) -> Iterator[Path]:
-        """Yield the record files of a study, one a run; refuse a parquet file that is no record."""
+    def files(self, study: str, warn: Callable[[str], None] | None = None) -> Iterator[Path]:
+        """Yield the record files of a study, one a run.
+
+        A parquet file that is no record is refused, or left out when there is someone to `warn` of it.
+        """
         seen = set()
         for path in sorted((self.folder / study).glob("[!.]*.parquet")):
-            run_id = _run_id(path)
+            try:
+                run_id = _run_id(path)
+            except StoreError as error:
+                if warn is None:
+                    raise
+                warn(str(error))
+                continue
             if run_id not in seen:
                 seen.add(run_id)
                 yield path
 
-    def locate(self, prefix: str, study: str | None = None) -> Path:
-        """Return the record file of the one run whose id begins with `prefix`."""
-        studies = [study] if study else self.studies()
-        files = [path for name in studies for path in self.files(name)]
-        found = [path for path in files if prefix and path.name.startswith(prefix.lower())]
+    def locate(self, prefix: str, warn: Callable[[str], None] = lambda sentence: None) -> Path:
+        """Return the record file of the one run whose id begins with `prefix`.
+
+        Files with other names are not looked at. A run that stands in several studies has several files;
+        `warn` is called for those that are damaged, and a whole one is returned if there is one.
+        """
+        prefix = prefix.lower()
+        files = [
+            path for study in self.studies() for path in sorted((self.folder / study).glob("[!.]*.parquet"))
+        ]
+        named = [path for path in files if prefix and path.name.startswith(prefix)]
+        found = [path for path in named if _is_record(path)]
+        for path in named:
+            if path not in found:
+                warn(_foreign(path))
         runs = sorted({path.name[:16] for path in found})
         if len(runs) == 1:
-            return found[0]
+            return self._whole(found, warn)
         if not runs:
+            count = sum(map(_is_record, files))
             raise InputError(
-                f"run is {prefix!r}; none of the {len(files)} records in {self.folder} begins so: "
-                "see labkit list for their ids."
+                f"run is {prefix!r}; none of the {count} records in {self.folder} begins so: see labkit list "
+                "for their ids."
             )
         raise InputError(f"run is {prefix!r}; {', '.join(runs)} begin so: give more digits.")
 
+    def _whole(self, paths: list[Path], warn: Callable[[str], None]) -> Path:
+        for path in paths[:-1]:
+            try:
+                self.read(path)
+                return path
+            except StoreError as error:
+                warn(str(error))
+        return paths[-1]
+
     def read(self, path: Path) -> "pa.Table":
         """Return a record; refuse a torn, altered or foreign file by name."""
-        import pyarrow as pa
-        import pyarrow.parquet as pq
-
         from labkit.records.schema import ORIGIN
 
         run_id = _run_id(path)
@@ -128,8 +154,13 @@ class Store:
                 f"record {path} is torn or altered: its content does not have the digest in its name; "
                 "remove it and run its study again."
             )
-        table = pq.read_table(pa.BufferReader(content))
+        table = _decode(content)
         missing = [name for name in ORIGIN.names if name not in table.column_names]
+        if missing and "run_id" in table.column_names:
+            raise StoreError(
+                f"record {path} is of another version of labkit (it has no {missing[0]}); move it out of the "
+                "store and run its study again."
+            )
         if missing or set(table["run_id"].to_pylist()) != {run_id}:
             raise StoreError(f"record {path} is not the record of run {run_id}; move it out of the store.")
         return table
@@ -158,14 +189,38 @@ def unwritable(what: str, folder: Path, error: OSError) -> StoreError:
 
 def open_store(store: str | Path | None = None) -> Store:
     """Return the store at a folder (relative ones count from the project root), or the project's own."""
-    return Store(from_root(store) if store else STORE)
+    folder = from_root(store) if store else STORE
+    if folder.exists() and not folder.is_dir():
+        raise StoreError(f"store {folder} is a file; name a folder.")
+    return Store(folder)
 
 
 def _run_id(path: Path) -> str:
     name = _NAME.fullmatch(path.name)
     if name is None:
-        raise StoreError(f"file {path} is not a record of this store; move it elsewhere.")
+        raise StoreError(_foreign(path))
     return name[1]
+
+
+def _is_record(path: Path) -> bool:
+    return _NAME.fullmatch(path.name) is not None
+
+
+def _foreign(path: Path) -> str:
+    return f"file {path} is not a record of this store; move it elsewhere."
+
+
+def _decode(content: bytes) -> "pa.Table":
+    """Return the table in the content of a file, read by this thread alone.
+
+    A worker thread of Arrow's may let go of the content, a Python object, only when Python is ending already,
+    and the process is then aborted: so no threads, and not ``read_table``, which uses them for reading.
+    """
+    import pyarrow as pa
+    import pyarrow.parquet as pq
+
+    with pq.ParquetFile(pa.BufferReader(content), pre_buffer=False) as file:
+        return file.read(use_threads=False)
 
 
 def _digest(content: bytes | memoryview) -> str:
@@ -193,7 +248,7 @@ def _write_whole(folder: Path, run_id: str, table: "pa.Table") -> Path:
             stream.flush()
             os.fsync(stream.fileno())
         written = beside.read_bytes()
-        if _digest(written) != digest or first_difference(pq.read_table(pa.BufferReader(written)), table):
+        if _digest(written) != digest or first_difference(_decode(written), table):
             raise StoreError(f"record {beside} did not read back as written; check the disk.")
         final = folder / f"{run_id}-{digest}.parquet"
         os.replace(beside, final)

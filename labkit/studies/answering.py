@@ -13,6 +13,7 @@ from typing import Any
 
 from labkit.records.store import Store, unwritable
 from labkit.studies.execution import execute
+from labkit.studies.grouping import Group
 from labkit.studies.model import Study
 from labkit.studies.page import write_page
 from labkit.studies.warmth import sources_digest
@@ -31,8 +32,8 @@ class Answer:
     refused: bool = False
 
 
-def write_answer(study: Study, store: Store, output: Path) -> Answer:
-    """Execute the answer notebook of a study on the runs of its points, unless its answer is there already.
+def write_answer(study: Study, group: Group, store: Store, output: Path) -> Answer:
+    """Execute the answer notebook of a study on the runs of a group, unless its answer is there already.
 
     Everything is made in a folder aside and moved into `output` when complete. When the notebook refuses a
     value nothing is kept; when it fails otherwise, a guard on the headroom included, what it made is kept.
@@ -40,7 +41,9 @@ def write_answer(study: Study, store: Store, output: Path) -> Answer:
     Parameters
     ----------
     study : Study
-        A study with an answer notebook whose points are all recorded.
+        A study with an answer notebook.
+    group : Group
+        Points of it that are all recorded.
     store : Store
         Where the records are.
     output : Path
@@ -52,7 +55,7 @@ def write_answer(study: Study, store: Store, output: Path) -> Answer:
         When `output` cannot be written.
     """
     page = output / f"{study.name}.html"
-    origin = _origin(study, store)
+    origin = _origin(study, group, store)
     if _is_made(output, origin):
         return Answer(_answer_text(output), page)
     try:
@@ -61,10 +64,10 @@ def write_answer(study: Study, store: Store, output: Path) -> Answer:
     except OSError as error:
         raise unwritable("output", output, error) from None
     try:
-        executed, result = _execute(study, store, aside)
+        executed, result = _execute(study, group, store, aside)
         if result.refused or not executed.exists():
             return Answer("", None, result.error, result.refused)
-        write_page(executed, executed.with_suffix(".html"), study.title)
+        write_page(executed, executed.with_suffix(".html"), origin["title"], study.question)
         if not result.error:
             files = {made.name: _digest(made) for made in sorted(aside.iterdir())}
             (aside / MADE_FROM).write_text(json.dumps({**origin, "files": files}, indent=1), encoding="utf-8")
@@ -80,14 +83,14 @@ def write_answer(study: Study, store: Store, output: Path) -> Answer:
         shutil.rmtree(aside, ignore_errors=True)
 
 
-def _execute(study: Study, store: Store, aside: Path) -> tuple[Path, Any]:
+def _execute(study: Study, group: Group, store: Store, aside: Path) -> tuple[Path, Any]:
     assert study.answer_notebook is not None
     executed = aside / f"{study.name}.ipynb"
     handed = {
         "study": study.name,
         "store": str(store.folder),
         "output": str(aside),
-        "runs": [point.run_id for point in study.points],
+        "runs": [point.run_id for point in group.points],
     }
     converter = Thread(target=_load_converter, daemon=True)
     converter.start()
@@ -103,12 +106,13 @@ def _load_converter() -> None:
     import nbconvert.exporters  # noqa: F401  (a second of imports, taken while the kernel works)
 
 
-def _origin(study: Study, store: Store) -> dict[str, Any]:
+def _origin(study: Study, group: Group, store: Store) -> dict[str, Any]:
     assert study.answer_notebook is not None
-    records = [store.find(study.name, point.run_id) for point in study.points]
+    records = [store.find(study.name, point.run_id) for point in group.points]
     return {
         "study": study.name,
-        "title": study.title,
+        "title": f"{study.title}: {group.heading}" if group.heading else study.title,
+        "question": study.question,
         "notebook": study.answer_notebook.name,
         "notebook_file": _digest(study.answer_notebook.path),
         "parameters": study.answer_parameters,

@@ -2,6 +2,7 @@
 
 import json
 import logging
+import re
 import traceback
 from dataclasses import dataclass
 from pathlib import Path
@@ -13,6 +14,9 @@ from labkit.studies.light import import_jsonschema
 # Errors that say all in one sentence; the refusals among them mean a value, as opposed to code that broke.
 SENTENCES = {name: each for name, each in vars(labkit.errors).items() if isinstance(each, type)}
 REFUSALS = {name for name, each in SENTENCES.items() if issubclass(each, labkit.errors.InputError)}
+
+# IPython colours its tracebacks for a terminal; they go into files.
+_COLOUR = re.compile(r"\x1b\[[0-9;]*[A-Za-z]")
 
 
 @dataclass(frozen=True)
@@ -72,10 +76,14 @@ def _execute(notebook: Path, parameters: dict[str, Any], output: Path, kernel: t
     except PapermillExecutionError as error:
         refused = error.ename in REFUSALS
         sentence = error.evalue if error.ename in SENTENCES else f"{error.ename}: {error.evalue}"
-        return Execution(sentence.strip(), refused, "\n".join(error.traceback))
+        return Execution(_plain(sentence.strip()), refused, _plain("\n".join(error.traceback)))
     except Exception as error:
         return Execution(f"{type(error).__name__}: {error}".strip(), False, traceback.format_exc())
     return _look_through(output)
+
+
+def _plain(text: str) -> str:
+    return _COLOUR.sub("", text)
 
 
 def _look_through(output: Path) -> Execution:
@@ -87,7 +95,7 @@ def _look_through(output: Path) -> Execution:
         exits = [each for each in cell["outputs"] if each["output_type"] == "error"]
         if exits:
             error = f"cell {at} ended the notebook with {exits[0]['ename']}; let every cell run to its end."
-            return Execution(error, False, "\n".join(exits[0]["traceback"]))
+            return Execution(error, False, _plain("\n".join(exits[0]["traceback"])))
         if cell["execution_count"] is None:
             return Execution(f"cell {at} was not executed; let every cell run to its end.")
     return Execution()

@@ -12,8 +12,9 @@ from typing import Any
 from labkit.checks import check_fraction, check_whole, nearest
 from labkit.errors import InputError, TooFewReplicates
 from labkit.records.declared import EXECUTION_ONLY, Notebook, Parameter, is_path, read_notebook
-from labkit.records.identity import Identity, identify
+from labkit.records.identity import Identity, check_entropy, identify
 from labkit.records.project import EXPERIMENTS, ROOT, check_study_name, find_notebook, path_text
+from labkit.studies.door import check_risk, check_values
 
 KEYS = ("title", "question", "notebook", "replicates", "entropy", "parameters", "grid", "answer")
 # Handed to an answer notebook by the runner.
@@ -35,7 +36,7 @@ class Point:
 
 @dataclass(frozen=True)
 class Study:
-    """A checked study; the fields are the keys of its file."""
+    """A checked study; the fields are the keys of its file, `answer_mixes` the key mixes of its answer."""
 
     name: str
     title: str
@@ -45,6 +46,7 @@ class Study:
     grid: dict[str, list[Any]]
     answer_notebook: Notebook | None = None
     answer_parameters: dict[str, Any] | None = None
+    answer_mixes: tuple[str, ...] = ()
 
     @cached_property
     def points(self) -> list[Point]:
@@ -118,31 +120,47 @@ def make_study(name: str, content: dict[str, Any], *, folder: Path) -> Study:
         if key in ("replicates", "entropy") or (key in fixed and key in grid):
             raise InputError(f"{key} is given twice; give it once, replicates and entropy at the top.")
     fixed["replicates"] = check_whole("replicates", content["replicates"])
-    fixed["entropy"] = check_whole("entropy", content["entropy"], least=0)
+    fixed["entropy"] = check_entropy(content["entropy"])
     fixed = _typed(notebook, fixed, folder)
     grid = {
         key: [_typed(notebook, {key: value}, folder)[key] for value in values] for key, values in grid.items()
     }
+    check_values(notebook, fixed)
+    for key, values in grid.items():
+        for value in values:
+            check_values(notebook, {key: value})
     answer = dict(_table(content, "answer"))
     if not answer:
         return Study(name, title, question, notebook, fixed, grid)
     answer_notebook = _notebook(_text(answer, "notebook"), folder)
     del answer["notebook"]
+    mixes = _mixes(answer.pop("mixes", []), grid)
     for key in HANDED:
         if key in answer:
             raise InputError(f"answer: {key} is set by labkit itself; remove it from the study.")
         if key not in answer_notebook.parameters:
             raise InputError(f"answer: notebook {answer_notebook.name} declares no parameter {key}; add it.")
     answer = _typed(answer_notebook, answer, folder)
+    check_values(answer_notebook, answer)
     _check_answerable(answer_notebook.checked(answer), fixed["replicates"])
-    return Study(name, title, question, notebook, fixed, grid, answer_notebook, answer)
+    return Study(name, title, question, notebook, fixed, grid, answer_notebook, answer, mixes)
+
+
+def _mixes(names: Any, grid: dict[str, Any]) -> tuple[str, ...]:
+    """Return the grid parameters in which the runs of one answer may differ, besides the usual ones."""
+    if not isinstance(names, list):
+        raise InputError(f"answer: mixes is {names!r}; give a list of parameters of the grid.")
+    for name in names:
+        if name not in grid:
+            raise InputError(f"answer: mixes names {name!r}, which the grid does not; {nearest(name, grid)}.")
+    return tuple(names)
 
 
 def _check_answerable(answer: dict[str, Any], replicates: int) -> None:
     """Refuse before any run a risk that these replicates could not answer after it."""
     if "risk" not in answer:
         return
-    risk = check_fraction("risk", answer["risk"])
+    risk = check_risk(answer["risk"])
     confidence = check_fraction("confidence", answer.get("confidence", 0.95))
     if replicates > math.log(2 / (1 - confidence)) / min(risk, 1 - risk) + 1:
         return  # more than any rank needs, and a second of imports saved

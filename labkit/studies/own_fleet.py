@@ -6,12 +6,16 @@ from typing import Any
 
 from labkit.analysis.headroom import replicates_needed
 from labkit.errors import InputError
+from labkit.fleet.model import Fleet
 from labkit.fleet.readers import read_fleet
 from labkit.records.declared import read_notebook
 from labkit.records.project import find_notebook
+from labkit.studies.door import ANSWER, RUN, check_risk, policy_names
 from labkit.studies.model import Study, make_study
 
-RUN, ANSWER = "headroom", "headroom_answer"
+# How full the servers are on average, and how many tasks a server has, when nobody says how many tasks.
+FILLED, TASKS_A_SERVER = 0.8, 100
+MOST_BY_DEFAULT = 10**8
 
 
 def study_of_fleet(
@@ -23,8 +27,8 @@ def study_of_fleet(
     entropy: int | None = None,
     report_every: list[int] | None = None,
     **parameters: Any,
-) -> Study:
-    """Return the headroom study of a fleet folder; what is not given comes from the fleet or the notebooks.
+) -> tuple[Study, str]:
+    """Make the headroom study of a fleet folder; what is not given comes from the fleet or the notebooks.
 
     Parameters
     ----------
@@ -41,8 +45,13 @@ def study_of_fleet(
     report_every : list of int, optional
         Kinds of information to compare; default as in the run notebook.
     **parameters
-        Further parameters of the run notebook; None counts as not given. `tasks` is by default the total
-        demand in whole tasks, or ten a server where the total demand is below one a server.
+        Further parameters of the run notebook; None counts as not given. For `tasks` see `default_tasks`.
+
+    Returns
+    -------
+    study : Study
+    note : str
+        What was chosen for the user, and why; empty when nothing was.
 
     Raises
     ------
@@ -53,9 +62,12 @@ def study_of_fleet(
     defaults = read_notebook(find_notebook(RUN)).parameters
     answers = read_notebook(find_notebook(ANSWER)).parameters
     given = {key: value for key, value in parameters.items() if value is not None}
+    note = ""
     if "tasks" not in given:
-        demand = float(fleet.choices["demand"].sum())
-        given["tasks"] = round(demand) if demand >= len(fleet) else 10 * len(fleet)
+        given["tasks"], why = default_tasks(fleet)
+        note = f"tasks is {given['tasks']:,}: {why} (--tasks N for another number)"
+    if "policies" in given:
+        given["policies"] = policy_names(given["policies"])
     answer: dict[str, Any] = {"notebook": ANSWER}
     if risk is not None:
         answer["risk"] = risk
@@ -64,7 +76,7 @@ def study_of_fleet(
     if baseline and policies and baseline.default not in policies:
         answer["baseline"] = policies[0]
     if replicates is None:
-        needed = replicates_needed(answers["risk"].default if risk is None else risk)
+        needed = replicates_needed(check_risk(answers["risk"].default if risk is None else risk))
         replicates = max(defaults["replicates"].default, needed)
     place = folder.resolve()
     content: dict[str, Any] = {
@@ -81,4 +93,30 @@ def study_of_fleet(
         name = re.sub(r"[^A-Za-z0-9_.-]+", "-", place.name).strip("-._") or "fleet"
         if len(name) > 64:
             raise InputError(f"folder {place.name!r} is too long a name for a study; give --name NAME.")
-    return make_study(name, content, folder=place.parent)
+    return make_study(name, content, folder=place.parent), note
+
+
+def default_tasks(fleet: Fleet) -> tuple[int, str]:
+    """Return how many tasks to place on a fleet when the user does not say, and why so many.
+
+    A capacity counts tasks, so tasks that fill 80 % of the total capacity are what a fleet in use holds.
+    Capacities that are all 1, or in total hold less than a task a server, are no amounts of work: then it is
+    100 tasks a server. Demands are relative and say nothing about the number.
+    """
+    a_server = TASKS_A_SERVER * len(fleet)
+    total = fleet.total_capacity
+    if fleet.capacity is None:
+        return a_server, f"{TASKS_A_SERVER} a server, as the servers have no capacities"
+    if FILLED * total < len(fleet):
+        return (
+            a_server,
+            f"{TASKS_A_SERVER} a server, as the total capacity of {total:,.6g} is no amount of work",
+        )
+    if FILLED * total > MOST_BY_DEFAULT:
+        raise InputError(
+            f"servers have a total capacity of {total:,.6g} tasks, too many to place by default; state "
+            "capacities in larger work units, or give --tasks N."
+        )
+    return round(FILLED * total), f"{FILLED:.0%} of the total capacity of {total:,.6g} work units".replace(
+        "%", " %"
+    )

@@ -1,6 +1,7 @@
 """Executing a recorded run again and comparing every measure bit for bit."""
 
 import tempfile
+from collections.abc import Callable
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -11,6 +12,7 @@ from labkit.records.project import find_notebook, from_root
 from labkit.records.schema import first_difference, measured_part, row_of_origin
 from labkit.records.store import Store
 from labkit.studies.execution import execute
+from labkit.studies.warmth import COLD, is_warm, set_warm
 
 
 @dataclass
@@ -24,7 +26,7 @@ class Comparison:
     notes: list[str] = field(default_factory=list)
 
 
-def rerun(store: Store, path: Path) -> Comparison:
+def rerun(store: Store, path: Path, say: Callable[[str], None] = lambda sentence: None) -> Comparison:
     """Execute the run of a record again, in a temporary store, and compare.
 
     Parameters
@@ -33,6 +35,8 @@ def rerun(store: Store, path: Path) -> Comparison:
         The store of the record; it is not changed.
     path : Path
         The file of the record.
+    say : callable
+        Called with a sentence for the user before anything is executed.
 
     Raises
     ------
@@ -55,6 +59,8 @@ def rerun(store: Store, path: Path) -> Comparison:
     identity = identify(notebook, notebook.checked(origin["parameters"]))
     if identity.library != origin["versions"]["labkit"]:
         result.notes.append(f"labkit was {origin['versions']['labkit']} and is {identity.library}")
+    if not is_warm():
+        say(COLD)
     with tempfile.TemporaryDirectory(prefix="labkit-") as scratch:
         again = Store(Path(scratch) / "store")
         handed = {"study": origin["study"], "store": str(again.folder)}
@@ -65,6 +71,7 @@ def rerun(store: Store, path: Path) -> Comparison:
         if done.error or found is None:
             result.difference = f"the execution failed: {done.error or 'the notebook left no record'}"
             return result
+        set_warm()
         ours, theirs = measured_part(table), measured_part(again.read(found))
     result.rows, result.columns = ours.num_rows, ours.column_names
     result.difference = first_difference(ours, theirs)

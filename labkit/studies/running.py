@@ -8,21 +8,25 @@ from concurrent.futures import FIRST_COMPLETED, ThreadPoolExecutor, wait
 from dataclasses import dataclass, field
 from pathlib import Path
 from threading import Event
+from typing import Any
 
 from labkit.checks import check_whole
 from labkit.errors import InputError
 from labkit.records.declared import EXECUTION_ONLY
 from labkit.records.identity import library_version
 from labkit.records.store import Store
+from labkit.studies.door import check_answer, check_points
+from labkit.studies.grouping import groups_of
 from labkit.studies.model import Point, Study
-from labkit.studies.warmth import is_warm, set_warm
+from labkit.studies.warmth import COLD, is_warm, set_warm
 
 
 @dataclass(frozen=True)
 class Trouble:
-    """A run that left no record; `evidence` is where its partial notebook is, if kept."""
+    """A run that left no record: its own values in the grid, and where its partial notebook is, if kept."""
 
     run_id: str
+    values: dict[str, Any]
     error: str
     refused: bool
     evidence: Path | None = None
@@ -55,8 +59,11 @@ def run_points(
     *,
     jobs: int | None = None,
     tick: Callable[[int], None] = lambda done: None,
+    say: Callable[[str], None] = lambda sentence: None,
 ) -> Report:
     """Execute the points of a study that have no record yet.
+
+    All that can be refused without a kernel is refused first, before `tick` is called or anything written.
 
     Parameters
     ----------
@@ -67,14 +74,18 @@ def run_points(
     jobs : int, optional
         Kernels at the same time; default one a core. Results do not depend on it.
     tick : callable
-        Called with the number of points that are done, after each.
+        Called with the number of points that are done, at the start and after each.
+    say : callable
+        Called with a sentence for the user, before the first `tick`.
 
     Raises
     ------
     InputError
-        When the store cannot be written or holds a damaged record of one of the points.
+        When a value is refused, or the store cannot be written or holds a damaged record of one of the
+        points.
     """
     jobs = cores() if jobs is None else check_whole("jobs", jobs)
+    _check_notebook(study)
     store.check_writable(study.name)
     report = Report()
     pending = []
@@ -85,6 +96,13 @@ def run_points(
         else:
             store.read(present)
             report.skipped.append(point.run_id)
+    if study.answer_notebook is not None:
+        for group in groups_of(study):
+            check_answer(study, group.points)
+    if pending:
+        check_points(study, pending)
+        if not is_warm():
+            say(COLD)
     tick(len(report.skipped))
     if pending:
         jobs = min(jobs, len(pending))
@@ -109,6 +127,7 @@ class _Work:
         executed = self.scratch / f"{point.run_id}.ipynb"
         handed = {"study": self.study.name, "store": str(self.store.folder), "workers": self.threads}
         known = {name: value for name, value in handed.items() if name in self.study.notebook.parameters}
+        values = {name: point.parameters[name] for name in self.study.grid}
         result = execute(self.study.notebook.path, point.parameters | known, executed)
         kept = self.store.folder / self.study.name / "failed" / point.run_id
         if not result.error:
@@ -118,15 +137,15 @@ class _Work:
                 return None
             result = Execution(_why_no_record(point))
         if result.refused or self.interrupted.is_set():
-            return Trouble(point.run_id, result.error, result.refused)
+            return Trouble(point.run_id, values, result.error, result.refused)
         try:
             kept.parent.mkdir(parents=True, exist_ok=True)
             if executed.exists():
                 shutil.copyfile(executed, kept.with_suffix(".ipynb"))
             kept.with_suffix(".txt").write_text(f"{result.error}\n\n{result.details}\n", encoding="utf-8")
         except OSError as error:
-            return Trouble(point.run_id, f"{result.error} (no evidence kept: {error})", False)
-        return Trouble(point.run_id, result.error, False, kept.with_suffix(".ipynb"))
+            return Trouble(point.run_id, values, f"{result.error} (no evidence kept: {error})", False)
+        return Trouble(point.run_id, values, result.error, False, kept.with_suffix(".ipynb"))
 
 
 def _run_pending(
@@ -174,8 +193,7 @@ def _why_no_record(point: Point) -> str:
     return "the notebook ended without a record of its run; let it call begin_run and run.record(...)."
 
 
-def check_study(study: Study) -> None:
-    """Refuse before any run what a study's notebook could not take."""
+def _check_notebook(study: Study) -> None:
     missing = sorted({"study", "store"} - set(study.notebook.parameters))
     if missing:
         raise InputError(

@@ -10,6 +10,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from labkit.analysis.wording import quantity, reports
 from labkit.engine.information import Fresh, Snapshot
 from labkit.engine.placement import place
 from labkit.errors import InputError
@@ -37,8 +38,8 @@ class Subject:
     tasks, replicates : int
         What each run placed and how often.
     runs : pandas.DataFrame
-        One row a run: run_id, information, entropy, spawn_key, git_hash, dirty, diff_digest, started,
-        elapsed.
+        One row a run: run_id, information, entropy, spawn_key, git_hash, dirty, diff_digest, versions,
+        started, elapsed.
     """
 
     fleet: Fleet
@@ -84,15 +85,15 @@ def subject_of(records: pd.DataFrame) -> Subject:
     InputError
         When the runs differ in fleet, tasks or replicates, or lack one of them.
     """
-    origin = ["run_id", "entropy", "spawn_key", "git_hash", "dirty", "diff_digest", "started", "elapsed"]
+    origin = ["entropy", "spawn_key", "git_hash", "dirty", "diff_digest", "versions", "started", "elapsed"]
     runs = records.drop_duplicates("run_id", ignore_index=True)
     parameters = [json.loads(text) for text in runs["parameters"]]
     for name in SHARED:
         found = list(dict.fromkeys(str(each.get(name)) for each in parameters))
         if len(found) > 1 or found == ["None"]:
             raise InputError(
-                f"the runs have {name} {' and '.join(found)}; one answer needs one {name}, "
-                "so name runs that share it."
+                f"the runs have {name} {' and '.join(found)}; all runs of one answer need the same {name}: "
+                "name such runs."
             )
     if runs["inputs"].nunique() > 1:
         raise InputError(
@@ -105,8 +106,71 @@ def subject_of(records: pd.DataFrame) -> Subject:
         str(parameters[0]["fleet"]),
         int(parameters[0]["tasks"]),
         int(parameters[0]["replicates"]),
-        runs[["run_id", "information", *origin[1:]]],
+        runs[["run_id", "information", *origin]],
     )
+
+
+def facts(subject: Subject, table: pd.DataFrame, *, study: str, baseline: str) -> str:
+    """Return what an answer is about as a list in Markdown: the fleet, the runs, what is compared.
+
+    Parameters
+    ----------
+    subject : Subject
+    table : pandas.DataFrame
+        The answer table.
+    study, baseline : str
+        As in the answer notebook.
+    """
+    fleet, row = subject.fleet, table.iloc[0]
+    name = Path(subject.place).name or subject.place
+    rules = ", ".join(f"`{policy}`" for policy in sorted(table["policy"].unique()))
+    kinds = ", ".join(reports(kind) for kind in sorted(table["information"].unique()))
+    lines = {
+        "Study": f"`{study}`",
+        "Fleet": f"`{name}`: {len(fleet):,} servers of {quantity(fleet.total_capacity)} work units in total, "
+        f"{len(fleet.options):,} choices",
+        "Work": f"{subject.tasks:,} tasks placed on the empty fleet, {subject.replicates:,} replicates",
+        "Placement rules": f"{rules}; savings are counted from `{baseline}`",
+        "Load reports": kinds,
+        "Accepted risk": f"{100 * row['risk']:g} %, limits at {100 * row['confidence']:g} % confidence",
+    }
+    return "\n".join(f"- **{what}**: {value}" for what, value in lines.items())
+
+
+def sources(subject: Subject) -> pd.DataFrame:
+    """Return where each run comes from as text, one row a run."""
+    rows = [
+        {
+            "run": run["run_id"],
+            "load reports": reports(run["information"]),
+            "commit": _commit(run),
+            "started (UTC)": str(run["started"])[:19].replace("T", " "),
+            "seconds": f"{run['elapsed']:,.1f}",
+            "entropy": run["entropy"],
+            "spawn key": run["spawn_key"],
+        }
+        for _, run in subject.runs.iterrows()
+    ]
+    return pd.DataFrame(rows).set_index("run")
+
+
+def _commit(run: pd.Series) -> str:
+    commit = run["git_hash"][:12] or "no commit"
+    changes = run["diff_digest"][:12] or "unknown"
+    return f"{commit} + changes {changes}" if run["dirty"] else commit
+
+
+def versions(subject: Subject) -> str:
+    """Return what the runs were computed with, as one sentence for each set of versions."""
+    sentences = []
+    for text, runs in subject.runs.groupby("versions", sort=False)["run_id"]:
+        used = json.loads(str(text))
+        machine = " ".join(filter(None, (used.pop("platform", ""), used.pop("machine", ""))))
+        first = [name for name in ("labkit", "python") if name in used]
+        named = [f"{name} {used[name]}" for name in (*first, *sorted(set(used) - set(first)))]
+        whose = "" if len(runs) == len(subject.runs) else f" of {', '.join(runs)}"
+        sentences.append(f"Versions{whose}: {', '.join(named)}{f'; on {machine}' if machine else ''}.")
+    return " ".join(sentences)
 
 
 def drawable(policies: Iterable[str]) -> str | None:
@@ -139,7 +203,9 @@ def final_utilisation(subject: Subject, records: pd.DataFrame, policy: str, info
     InputError
         When the new placement is not the recorded one to the bit: the fleet's tables were changed since.
     """
-    run = subject.runs[subject.runs["information"] == information].iloc[0]
+    mine = records[(records["policy"] == policy) & (records["replicate"] == 0)]
+    mine = mine[mine.get("information", pd.Series("fresh", mine.index)) == information]
+    run = subject.runs.set_index("run_id", drop=False).loc[mine["run_id"].iloc[0]]
     every = information.removeprefix("snapshot(every=").removesuffix(")")
     seed = np.random.SeedSequence(int(run["entropy"]), spawn_key=tuple(json.loads(run["spawn_key"])))
     outcome = place(
@@ -149,12 +215,7 @@ def final_utilisation(subject: Subject, records: pd.DataFrame, policy: str, info
         rng=seed,
         information=Snapshot(every=int(every)) if every.isdigit() else Fresh(),
     )
-    row = records[
-        (records["run_id"] == run["run_id"])
-        & (records["policy"] == policy)
-        & (records["replicate"] == 0)
-        & (records["tasks"] == subject.tasks)
-    ]
+    row = mine[(mine["run_id"] == run["run_id"]) & (mine["tasks"] == subject.tasks)]
     if row["max_utilisation"].tolist() != outcome.measures["max_utilisation"].tolist():
         raise InputError(
             f"run {run['run_id']} cannot be repeated from {subject.place}: its tables or the rules have "

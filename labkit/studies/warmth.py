@@ -9,6 +9,9 @@ from platformdirs import user_cache_path
 
 from labkit.records.project import PACKAGE
 
+# Said before code is compiled.
+COLD = "compiling for the first time, about 15 s"
+
 
 @cache
 def sources_digest() -> str:

@@ -10,7 +10,6 @@ import time
 import pytest
 
 from labkit.cli import main
-from labkit.records.project import ROOT
 from tests.journeys.ways import environment, finish, start
 from tests.records.tiny import snapshot, write_tiny
 
@@ -106,7 +105,8 @@ class TestOwnFleet:
         assert "least-loaded" in page.read_text()
         record = next((fleet.parent / "runs" / "my-sites").glob("*.parquet"))
         shown = finish(start(*LABKIT, "show", record.name[:8], "--store", "runs", "--json", cwd=fleet.parent))
-        assert json.loads(shown[1])["parameters"]["tasks"] == 12  # the total demand
+        assert json.loads(shown[1])["parameters"]["tasks"] == 31
+        assert "labkit: tasks is 31: 80 % of the total capacity of 39 work units (--tasks N for " in err
 
     @pytest.mark.parametrize(
         ("words", "sentence"),
@@ -118,6 +118,25 @@ class TestOwnFleet:
             ),
             (["--replicates", "0"], "replicates is 0; give a whole number of at least 1"),
             (["--name", "a/b"], "study is 'a/b'; a study's name"),
+            (["--tasks", "0"], "tasks is 0; give a whole number of at least 1"),
+            (["--tasks", "1" + "0" * 22], "tasks is 1e+22; give a whole number of at most"),
+            (["--tasks", "1.5"], "--tasks is '1.5'; give a whole number."),
+            (["--risk", "x"], "--risk is 'x'; give a number."),
+            (["--risk"], "argument --risk: expected one argument; see labkit answer --help."),
+            (["--risk", "1e-320"], "risk is 1e-320; give a number of at least 1e-15"),
+            (["--risk", "1e-12"], "GB of memory and this machine has"),
+            (["--report-every", "0", "-5"], "report_every is -5; give a whole number of at least 0"),
+            (
+                ["--policies", "leest-loaded"],
+                "policies: policy is 'leest-loaded'; did you mean 'least-loaded'",
+            ),
+            (["--policies", "mixed"], "policies: policy is 'mixed'; it needs beta"),
+            (
+                ["--policies", "mixed(beta=0.5)", "mixed(beta=.50)"],
+                "policies names 'mixed(beta=0.5)' twice; give each policy once",
+            ),
+            (["--jobs", "0"], "jobs is 0; give a whole number of at least 1"),
+            (["--taks", "3"], "unrecognized arguments: --taks 3; see labkit --help."),
         ],
     )
     def test_a_refused_value_is_one_sentence(self, fleet, words, sentence, capsys):
@@ -125,6 +144,7 @@ class TestOwnFleet:
         assert main(["answer", str(fleet), "--store", str(fleet.parent / "runs"), *words]) == 2
         err = capsys.readouterr().err
         assert sentence in err
+        assert err.startswith("labkit: ")
         assert err.count("\n") == 1
         assert snapshot(fleet.parent) == before
 
@@ -135,15 +155,3 @@ class TestOwnFleet:
         assert "elsewhere" in err
         assert err.count("\n") == 1
         assert not (fleet.parent / "runs").exists()
-
-
-def test_an_unknown_policy_is_refused_by_the_run(tmp_path, capsys):
-    study = tmp_path / "s.toml"
-    fleet = ROOT / "experiments" / "demo"
-    study.write_text(
-        'notebook = "headroom"\nreplicates = 1\nentropy = 1\n'
-        f'parameters = {{fleet = "{fleet}", policies = ["one-choice", "leest-loaded"], tasks = 5}}\n'
-    )
-    assert main(["run", str(study), "--store", str(tmp_path / "runs")]) == 2
-    assert "refused: policy is 'leest-loaded'; did you mean 'least-loaded'" in capsys.readouterr().err
-    assert not (tmp_path / "runs").exists()

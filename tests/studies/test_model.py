@@ -55,6 +55,11 @@ def test_a_default_written_out_is_the_same_point(folder):
         ({"replicates": None}, "replicates is missing; give replicates ="),
         ({"entropy": None}, "entropy is missing"),
         ({"replicates": 0}, "replicates is 0; give a whole number of at least 1"),
+        (
+            {"answer": {"notebook": "answer.ipynb", "mixes": ["share"]}},
+            "mixes names 'share', which the grid does",
+        ),
+        ({"answer": {"notebook": "answer.ipynb", "mixes": 3}}, "mixes is 3; give a list"),
         ({"entropy": -1}, "entropy is -1; give a whole number of at least 0"),
         ({"title": 3}, "title is 3; give a text"),
         ({"notebook": None}, "notebook is None; give a text"),

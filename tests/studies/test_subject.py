@@ -2,14 +2,25 @@
 
 import json
 
+import nbformat
 import numpy as np
 import pandas as pd
 import pytest
 
 import labkit as lk
+from labkit.analysis.answer import answer_table
 from labkit.errors import InputError
 from labkit.records.project import ANSWERS
-from labkit.studies.subject import begin_answer, drawable, final_utilisation, subject_of
+from labkit.studies.page import write_page
+from labkit.studies.subject import (
+    begin_answer,
+    drawable,
+    facts,
+    final_utilisation,
+    sources,
+    subject_of,
+    versions,
+)
 
 SEED = np.random.SeedSequence(7, spawn_key=(11,))
 
@@ -45,8 +56,11 @@ def records(folder):
                     git_hash="a" * 40,
                     dirty=False,
                     diff_digest="",
-                    started="2030-01-01T00:00:00",
-                    elapsed=1.0,
+                    versions=json.dumps(
+                        {"labkit": "0.1.0+ab", "python": "3.11.7", "numpy": "2.4", "machine": "x"}
+                    ),
+                    started="2030-01-01T01:02:03.456+00:00",
+                    elapsed=1.23,
                 )
             )
     return pd.concat(tables, ignore_index=True)
@@ -81,7 +95,7 @@ def test_a_fleet_changed_since_is_noticed(records, folder):
 @pytest.mark.parametrize(
     ("change", "message"),
     [
-        ({"tasks": 70}, r"the runs have tasks 60 and 70; one answer needs one tasks"),
+        ({"tasks": 70}, r"the runs have tasks 60 and 70; all runs of one answer need the same tasks"),
         ({"fleet": "elsewhere"}, r"the runs have fleet .* and elsewhere"),
         ({"replicates": 4}, r"the runs have replicates 3 and 4"),
     ],
@@ -91,6 +105,76 @@ def test_runs_on_different_subjects_are_refused(records, change, message):
     records.loc[later, "parameters"] = json.dumps(json.loads(records["parameters"].iloc[-1]) | change)
     with pytest.raises(InputError, match=message):
         subject_of(records)
+
+
+def test_rules_spread_over_runs_are_repeated_from_their_own_run(records):
+    other = records["policy"] == "least-loaded"
+    records.loc[other, "run_id"] = records.loc[other, "run_id"] + " again"
+    full = final_utilisation(subject_of(records), records, "least-loaded", "fresh")
+    assert full.max() > 0
+
+
+def test_the_facts_name_fleet_work_rules_and_reports(records, folder):
+    subject = subject_of(records)
+    table = answer_table(
+        records, risk=0.5, confidence=0.5, baseline="one-choice", total_capacity=subject.fleet.total_capacity
+    )
+    text = facts(subject, table, study="mine", baseline="one-choice")
+    for words in (
+        "`mine`",
+        f"`{folder.name}`: 12 servers of 156 work units in total, 15 choices",
+        "60 tasks placed on the empty fleet, 3 replicates",
+        "`least-loaded`, `one-choice`; savings are counted from `one-choice`",
+        "always fresh, every 9 tasks",
+        "50 %, limits at 50 % confidence",
+    ):
+        assert words in text
+    assert str(folder.parent) not in text
+
+
+def test_sources_are_rows_for_reading(records):
+    later = records["run_id"] == "run 9"
+    records["dirty"] = later
+    records.loc[later, "diff_digest"] = "b" * 64
+    table = sources(subject_of(records))
+    assert table.index.tolist() == ["run 0", "run 9"]
+    assert table["commit"].tolist() == ["a" * 12, f"{'a' * 12} + changes {'b' * 12}"]
+    assert table.loc["run 9", "load reports"] == "every 9 tasks"
+    assert table.loc["run 0", ["started (UTC)", "seconds"]].tolist() == ["2030-01-01 01:02:03", "1.2"]
+    assert table.loc["run 0", ["entropy", "spawn key"]].tolist() == ["7", "[11]"]
+
+
+def test_versions_are_told_once_or_run_by_run(records):
+    once = "labkit 0.1.0+ab, python 3.11.7, numpy 2.4; on x."
+    assert versions(subject_of(records)) == f"Versions: {once}"
+    later = records["run_id"] == "run 9"
+    records.loc[later, "versions"] = json.dumps({"labkit": "0.2.0"})
+    assert versions(subject_of(records)) == f"Versions of run 0: {once} Versions of run 9: labkit 0.2.0."
+
+
+def test_a_page_is_headed_by_its_study_and_a_failed_cell_is_a_sentence(tmp_path):
+    failed = nbformat.v4.new_output(
+        "error", ename="HeadroomExceeded", evalue="needs <more>", traceback=["secret code"]
+    )
+    note = nbformat.v4.new_markdown_cell("An Exception", metadata={"tags": ["papermill-error-cell-tag"]})
+    cells = [
+        note,
+        nbformat.v4.new_markdown_cell("# Its own heading"),
+        nbformat.v4.new_code_cell("1", outputs=[failed]),
+    ]
+    nbformat.write(nbformat.v4.new_notebook(cells=cells), tmp_path / "n.ipynb")
+    write_page(
+        tmp_path / "n.ipynb", tmp_path / "n.html", "Where *vaults* <go>", "One\nquestion?\n\nTwo & more"
+    )
+    page = (tmp_path / "n.html").read_text()
+    assert "<title>Where *vaults* &lt;go&gt;</title>" in page
+    assert "<h1>Where *vaults* &lt;go&gt;</h1>" in page
+    assert "<p>One question?</p>" in page
+    assert "<p>Two &amp; more</p>" in page
+    assert page.count("<h1") == 1
+    assert page.count("HeadroomExceeded: needs &lt;more&gt;") == 2
+    assert "An Exception" not in page
+    assert "secret code" not in page
 
 
 def test_runs_without_a_fleet_are_refused(records):

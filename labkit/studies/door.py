@@ -1,0 +1,134 @@
+"""Values that the project's own notebooks would refuse, refused before any kernel starts.
+
+What is known here about the parameters of the headroom notebooks is known nowhere else outside them.
+"""
+
+import contextlib
+import os
+from collections.abc import Iterable
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from labkit.checks import check_fraction, check_number, check_whole, nearest
+from labkit.errors import InputError
+from labkit.records.declared import Notebook
+from labkit.records.project import from_root
+
+if TYPE_CHECKING:
+    from labkit.studies.model import Point, Study
+
+RUN, ANSWER = "headroom", "headroom_answer"
+
+# The least whole number that each of these parameters can be.
+LEAST = {"tasks": 1, "checkpoints": 1, "replicates": 1, "report_every": 0}
+
+LEAST_RISK = 1e-15
+
+# Numbers kept for each replicate and checkpoint, more or less: the measures, and copies of them in tables.
+_MEASURES = 10
+
+
+def check_values(notebook: Notebook, values: dict[str, Any]) -> None:
+    """Refuse numbers that the notebook could not take, from what they are alone."""
+    if notebook.name == RUN:
+        for name in LEAST.keys() & values.keys():
+            check_whole(name, values[name], least=LEAST[name])
+    if notebook.name == ANSWER and values.get("max_headroom") is not None:
+        allowed = check_number("max_headroom", values["max_headroom"])
+        if allowed < 0:
+            raise InputError(f"max_headroom is {allowed!r}; give a number of at least 0.")
+
+
+def check_risk(value: Any) -> float:
+    """Return the risk; refuse one so small that no number of replicates could answer it."""
+    risk = check_fraction("risk", value)
+    if risk < LEAST_RISK:
+        raise InputError(f"risk is {value!r}; give a number of at least {LEAST_RISK:g}.")
+    return risk
+
+
+def check_points(study: "Study", points: Iterable["Point"]) -> None:
+    """Refuse grid points with unknown or repeated policies, faulty tables, or more data than memory.
+
+    Parameters
+    ----------
+    study : Study
+        The study; one whose notebook is not the headroom notebook passes.
+    points : iterable of Point
+        Those that are going to be run.
+
+    Raises
+    ------
+    InputError
+        For the first point that is refused.
+    """
+    if study.notebook.name != RUN:
+        return
+    from labkit.fleet.readers import read_fleet
+
+    sizes: dict[str, int] = {}
+    for point in points:
+        values = point.identity.parameters
+        policies = policy_names(values["policies"])
+        place = values["fleet"]
+        if place not in sizes:
+            sizes[place] = len(read_fleet(from_root(place)))
+        _check_memory(values["replicates"], sizes[place], values["checkpoints"], len(policies))
+
+
+def policy_names(policies: list[Any]) -> list[str]:
+    """Return the full names of policies; refuse one that is unknown, ill-formed or repeated."""
+    from labkit.policies.naming import parse_policy
+
+    names: list[str] = []
+    for policy in policies:
+        try:
+            name = parse_policy(policy).name
+        except InputError as error:
+            raise InputError(f"policies: {error}") from None
+        if name in names:
+            raise InputError(f"policies names {name!r} twice; give each policy once.")
+        names.append(name)
+    return names
+
+
+def check_answer(study: "Study", points: Iterable["Point"]) -> None:
+    """Refuse an answer about a policy that these points, which it is made from, do not run."""
+    if study.notebook.name != RUN or study.answer_notebook is None or study.answer_notebook.name != ANSWER:
+        return
+    asked = study.answer_notebook.checked(study.answer_parameters or {})
+    given = [policy for point in points for policy in point.identity.parameters["policies"]]
+    for name in ("baseline", "policy"):
+        value = asked[name]
+        if name == "policy" and not value:
+            continue
+        if value in given and "(" not in value:
+            continue  # a plain name, as in the records, and half a second of imports saved
+        known = policy_names(list(dict.fromkeys(given)))
+        if value not in known:
+            default = "" if name in (study.answer_parameters or {}) else " by default"
+            raise InputError(
+                f"answer: {name} is {value!r}{default}, which is not run; {nearest(value, known)}."
+            )
+
+
+def _check_memory(replicates: int, servers: int, checkpoints: int, policies: int) -> None:
+    needed = 8 * policies * replicates * (servers + _MEASURES * checkpoints)
+    present = memory()
+    if present is not None and needed > present:
+        raise InputError(
+            f"replicates is {replicates:,}; with {servers:,} servers, {checkpoints:,} checkpoints and "
+            f"{policies} policies one run would take about {needed / 1e9:,.0f} GB of memory and this machine "
+            f"has {present / 1e9:,.0f} GB: give fewer replicates (a larger risk needs fewer) or checkpoints."
+        )
+
+
+def memory() -> int | None:
+    """Return the bytes of memory that this machine, or its container, has; None when it cannot be told."""
+    found = []
+    with contextlib.suppress(AttributeError, OSError, ValueError):
+        found.append(os.sysconf("SC_PAGE_SIZE") * os.sysconf("SC_PHYS_PAGES"))
+    for limit in ("memory.max", "memory/memory.limit_in_bytes"):
+        with contextlib.suppress(OSError, ValueError):  # no container, or the word "max"
+            found.append(int(Path("/sys/fs/cgroup", limit).read_text()))
+    return min(found, default=None)
