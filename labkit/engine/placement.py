@@ -15,7 +15,7 @@ from labkit.engine.arrivals import Arrivals, arrivals_of, read_only
 from labkit.engine.information import Fresh, Information
 from labkit.engine.loop import place_drawn, place_near, place_tasks
 from labkit.engine.measures import MEASURED
-from labkit.engine.sizes import LARGEST_SIZE, Sizes, as_numbers, sizes_of
+from labkit.engine.sizes import LARGEST_SIZE, Sizes, numbers_for, sizes_of
 from labkit.engine.weights import comparison_weights
 from labkit.errors import InputError
 from labkit.fleet.model import ABSENT, Fleet
@@ -302,13 +302,7 @@ def _starting_loads(start: Any, servers: int, replicates: int, work: Sizes | Non
     loads = np.zeros((replicates, servers + 16), kind)[:, :servers]
     if start is None:
         return loads
-    given = as_numbers(start)
-    if given is None or given.shape not in ((servers,), (replicates, servers)):
-        found = type(start).__name__ if given is None else f"numbers of shape {given.shape}"
-        raise InputError(
-            f"start is {found}; give one number for each of the {servers} servers (or one row of them for "
-            "each replicate)."
-        )
+    given = numbers_for("start", start, servers, replicates, "servers")
     most = LARGEST_WHOLE / servers if work is None else LARGEST_SIZE
     beyond = ~(np.abs(given) <= most)
     if beyond.any():

@@ -57,15 +57,23 @@ def sizes_of(sizes: Any, tasks: int, replicates: int) -> Sizes | None:
         return None
     if callable(sizes):
         return Sizes(sizes, tasks)
-    given = as_numbers(sizes)
-    if given is None or given.shape not in ((tasks,), (replicates, tasks)):
-        found = type(sizes).__name__ if given is None else f"numbers of shape {given.shape}"
-        raise InputError(
-            f"sizes is {found}; give {tasks} numbers, one for each task (or one row of them for each "
-            "replicate), or a function sizes(generator, count)."
-        )
+    given = numbers_for("sizes", sizes, tasks, replicates, "tasks", ", or a function sizes(generator, count)")
     _refuse_bad(given)
     return Sizes(np.array(given, np.float64), tasks)
+
+
+def numbers_for(
+    name: str, given: Any, count: int, replicates: int, items: str, otherwise: str = ""
+) -> np.ndarray:
+    """Return `given` as an array of one number an item, or one row of them a replicate; else refuse it."""
+    array = as_numbers(given)
+    if array is None or array.shape not in ((count,), (replicates, count)):
+        found = type(given).__name__ if array is None else f"numbers of shape {array.shape}"
+        raise InputError(
+            f"{name} is {found}; give one number for each of the {count} {items} (or one row of them "
+            f"for each replicate){otherwise}."
+        )
+    return array
 
 
 def as_numbers(given: Any) -> np.ndarray | None:
