@@ -64,7 +64,7 @@ def choice_graph(fleet: Fleet, utilisation: Any, *, title: str = "") -> Figure:
         low, high = low - 0.1 * (abs(low) or 1.0), high + 0.1 * (abs(high) or 1.0)
     kept = np.arange(fleet.size)
     if fleet.size > DRAWN_AT_MOST:
-        kept = _nearest_to(int(values.argmax()), fleet.size, pairs)
+        kept = _nearest_to(int(np.argmax(values)), fleet.size, pairs)
         place_of = np.full(fleet.size, -1)
         place_of[kept] = np.arange(len(kept))
         inside = (place_of[pairs] >= 0).all(axis=1)

@@ -43,7 +43,7 @@ def positions(size: int, pairs: np.ndarray) -> np.ndarray:
         radius = np.sqrt(len(part))
         drawn *= radius / max(np.abs(drawn).max(), 1e-12)
         places[part] = drawn + np.array([left + radius - drawn[:, 0].min() - radius, -drawn[:, 1].min()])
-        left = places[part][:, 0].max() + 1.5
+        left = np.max(places[part][:, 0]) + 1.5
     alone = [part[0] for part in parts if len(part) == 1]
     columns = max(int(np.ceil(np.sqrt(len(alone)))), int(left))
     for at, server in enumerate(alone):

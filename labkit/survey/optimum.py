@@ -39,7 +39,7 @@ def evenly_balanced(fleet: Fleet) -> bool:
     capacity, demand = (np.empty(0) if given is None else given for given in (fleet.capacity, fleet.demand))
     received = np.zeros(fleet.size)
     kept(split_evenly)(fleet.options, demand, capacity, received)
-    return bool(received.max() - received.min() <= 1e-12 * received.max())
+    return bool(np.ptp(received) <= 1e-12 * np.max(received))
 
 
 def split_evenly(options, demand, capacity, received):
@@ -100,7 +100,7 @@ def solve(fleet: Fleet) -> float:
     # The dual price of a full server is high inside the bottleneck: every cut by price is a candidate, and so
     # is the whole fleet. The ratio of a set is exact to rounding, the program's value only to its tolerance.
     prices = np.maximum(-answer.ineqlin.marginals, 0.0)
-    best = 1.0 / capacity.sum()
+    best = 1.0 / float(capacity.sum())
     for price in np.unique(np.round(prices[prices > 0.0] / max(prices.max(), 1e-300), 9)):
         inside = prices >= prices.max() * (price - 1e-9)
         best = max(best, confined_ratio(options, demand, capacity, inside))
