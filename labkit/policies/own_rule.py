@@ -169,11 +169,15 @@ def policy(function: Callable) -> OwnRule:
 
 def source_of(function: Callable) -> str:
     """Return the text of a rule as it is recorded: its source, and the values it takes from outside."""
+    code = function.__code__
     try:
         text = textwrap.dedent(inspect.getsource(function))
     except (OSError, TypeError):
-        code = function.__code__
-        digest = hashlib.sha256(code.co_code + repr(code.co_consts).encode()).hexdigest()
+        text = ""
+    # For code made from a string some Python versions return the lines of another file.
+    if f"def {code.co_name}(" not in text:
+        constants = [value for value in code.co_consts if not inspect.iscode(value)]
+        digest = hashlib.sha256(code.co_code + repr(constants).encode()).hexdigest()
         text = f"# no source text; digest of the compiled function: {digest}\n"
     outside = inspect.getclosurevars(function)
     for name, value in sorted({**outside.globals, **outside.nonlocals}.items()):
