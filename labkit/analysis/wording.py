@@ -292,6 +292,8 @@ def quantity(value: float) -> str:
     size = abs(value)
     if size >= 1e15 or 0 < size < 1e-4:
         return f"{value:.3g}"
+    if 100 <= size < 1000 and value != round(value):
+        return f"{value:.1f}"
     if size >= 100 or value == round(value):
         return f"{value:,.0f}"
     return f"{value:.{max(2, 2 - math.floor(math.log10(size)))}f}"

@@ -256,6 +256,8 @@ def test_numbers_are_written_for_reading():
     assert reports("gossip") == "gossip"
     assert quantity(12000.4) == "12,000"
     assert quantity(3.25) == "3.25"
+    assert quantity(300.5) == "300.5"
+    assert quantity(300.0) == "300"
     assert quantity(np.nan) == "–"
     assert quantity(0.00234) == "0.00234"
     assert utilisation(0.18333) == "0.1833"
