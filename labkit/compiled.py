@@ -8,7 +8,6 @@ Numba keys a cached function by its own file only, so an edited helper elsewhere
 in use. Cache folder and cached names here carry a digest of all sources of the package.
 """
 
-import hashlib
 import types
 from collections.abc import Callable
 from functools import lru_cache
@@ -22,6 +21,8 @@ from numba.core import cgutils
 from numba.extending import intrinsic
 from platformdirs import user_cache_path
 
+from labkit.sources import source_digest
+
 CONFIG: Any = numba.config
 OPTIONS: dict[str, Any] = {"nogil": True, "error_model": "numpy"}
 
@@ -29,15 +30,6 @@ compiled = numba.njit(**OPTIONS)
 # Inlined before compiling proper: inside a hot loop even an uncalled-for reference count would cost more than
 # the rest of the loop. Such helpers have no array in only one branch, for the same reason.
 inlined = numba.njit(inline="always", **OPTIONS)
-
-
-def source_digest(folder: Path) -> str:
-    """Return a short digest of every Python source below `folder`."""
-    total = hashlib.sha256()
-    for path in sorted(folder.rglob("*.py")):
-        total.update(path.relative_to(folder).as_posix().encode())
-        total.update(path.read_bytes())
-    return total.hexdigest()[:16]
 
 
 @lru_cache(maxsize=1)

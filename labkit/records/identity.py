@@ -15,6 +15,7 @@ from labkit import __version__
 from labkit.errors import InputError
 from labkit.records.declared import EXECUTION_ONLY, Notebook, is_path
 from labkit.records.project import PACKAGE, from_root
+from labkit.sources import source_digest
 
 if TYPE_CHECKING:
     import numpy as np
@@ -127,10 +128,4 @@ def _file_digest(path: Path, size: int, changed: int) -> str:
 @cache
 def library_version() -> str:
     """Return the version of labkit with a short digest of the sources that compute."""
-    total = hashlib.sha256()
-    for room in COMPUTING:
-        place = PACKAGE / room
-        for file in sorted(place.rglob("*.py")) if place.is_dir() else [place]:
-            total.update(file.relative_to(PACKAGE).as_posix().encode() + b"\0")
-            total.update(file.read_bytes().replace(b"\r\n", b"\n") + b"\0")
-    return f"{__version__}+{total.hexdigest()[:16]}"
+    return f"{__version__}+{source_digest(PACKAGE, COMPUTING)}"

@@ -12,7 +12,7 @@ import re
 import secrets
 import tempfile
 import time
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -164,12 +164,6 @@ class Store:
         if missing or set(table["run_id"].to_pylist()) != {run_id}:
             raise StoreError(f"record {path} is not the record of run {run_id}; move it out of the store.")
         return table
-
-    def read_all(self, paths: Iterable[Path]) -> "pa.Table":
-        """Return several records as one table, columns absent from some filled with nulls."""
-        import pyarrow as pa
-
-        return pa.concat_tables([self.read(path) for path in paths], promote_options="default")
 
 
 def check_writable(what: str, folder: Path) -> None:

@@ -1,13 +1,13 @@
 """Whether compiled code is likely to be on disk already: several processes on an empty cache all compile."""
 
 import contextlib
-import hashlib
 from functools import cache
 from pathlib import Path
 
 from platformdirs import user_cache_path
 
 from labkit.records.project import PACKAGE
+from labkit.sources import source_digest
 
 # Said before code is compiled.
 COLD = "compiling for the first time, about 15 s"
@@ -16,10 +16,7 @@ COLD = "compiling for the first time, about 15 s"
 @cache
 def sources_digest() -> str:
     """Return a short digest of every source of labkit, those that only show results included."""
-    total = hashlib.sha256()
-    for path in sorted(PACKAGE.rglob("*.py")):
-        total.update(path.relative_to(PACKAGE).as_posix().encode() + path.read_bytes())
-    return total.hexdigest()[:16]
+    return source_digest(PACKAGE)
 
 
 def _mark() -> Path:

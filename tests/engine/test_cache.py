@@ -38,7 +38,7 @@ def test_a_cache_folder_that_cannot_be_made_is_no_obstacle(tmp_path):
 
 
 def test_the_cache_folder_follows_every_source(tmp_path):
-    from labkit.compiled import source_digest
+    from labkit.sources import source_digest
 
     (tmp_path / "room").mkdir()
     helper = tmp_path / "room" / "helper.py"

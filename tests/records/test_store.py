@@ -6,7 +6,6 @@ import sys
 
 import numpy as np
 import pandas as pd
-import pyarrow as pa
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
@@ -219,9 +218,3 @@ def test_the_schema_orders_types_and_takes_further_columns():
 def test_a_table_that_does_not_fit_is_refused(frame, match):
     with pytest.raises(lk.InputError, match=match):
         measured_table(frame)
-
-
-def test_records_with_different_columns_are_read_together(store):
-    wide = record(run="f" * 16).append_column("own", pa.array([1.0, 2.0]))
-    paths = [store.write("s", RUN, record())[0], store.write("s", "f" * 16, wide)[0]]
-    assert store.read_all(paths)["own"].to_pylist() == [None, None, 1.0, 2.0]
