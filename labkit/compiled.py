@@ -71,7 +71,7 @@ def specialise(loop: Callable, name: str, *, cache: bool, **pieces: Any) -> Call
     return numba.njit(**OPTIONS)(bind(loop, name, **pieces))
 
 
-@lru_cache(maxsize=16)
+@lru_cache(maxsize=256)
 def kept(function: Callable) -> Callable:
     """Return a plain function compiled, its machine code kept on disk; for calls from Python."""
     return specialise(function, "kept", cache=True)

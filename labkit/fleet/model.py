@@ -10,13 +10,13 @@ import pandas as pd
 from labkit.errors import InputError
 from labkit.fleet.choices import checked_options
 from labkit.fleet.digest import fleet_digest
-from labkit.fleet.names import ABSENT, NameMap, checked_names
+from labkit.fleet.names import ABSENT, UNKNOWN, NameMap, checked_names
 from labkit.fleet.tables import Source, amounts, check_columns, option_count, table_source
 
 if TYPE_CHECKING:
     import networkx
 
-__all__ = ["ABSENT", "CompleteLaw", "Fleet"]
+__all__ = ["ABSENT", "CompleteLaw", "Fleet", "check_fleet", "positions_of"]
 
 
 @dataclass(frozen=True)
@@ -256,6 +256,25 @@ class Fleet:
         from labkit.fleet.graphs import graph_of
 
         return graph_of(self)
+
+
+def check_fleet(fleet: Any) -> Fleet:
+    """Return `fleet` when it is one."""
+    if not isinstance(fleet, Fleet):
+        raise InputError(
+            f"fleet is {type(fleet).__name__}; give a labkit Fleet, such as lk.read_fleet(folder)."
+        )
+    return fleet
+
+
+def positions_of(fleet: Fleet, names: list[Any], argument: str) -> np.ndarray:
+    """Return the positions of servers by name, int64 of shape (names,); refuse a name that is no server's."""
+    known = NameMap(fleet.names, table_source("servers"))
+    found = known.positions(pd.Series(names, dtype=object))
+    for place in np.flatnonzero(found >= UNKNOWN):
+        words = known.unknown(names[place])
+        raise InputError(f"{argument} holds {words}{'' if words[-1] == '?' else '.'}")
+    return found.astype(np.int64)
 
 
 def _demands(column: pd.Series, source: Source) -> tuple[np.ndarray | None, float]:

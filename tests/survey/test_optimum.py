@@ -1,17 +1,15 @@
-"""The optimum against published values, brute force over server sets, and laws."""
-
-import itertools
+"""The optimum for any amount of work, as the engine uses it, and the built-in graphs of a library."""
 
 import networkx as nx
 import numpy as np
 import pandas as pd
 import pytest
-from hypothesis import given, settings
-from hypothesis import strategies as st
 
 import labkit as lk
-from labkit.survey.optimum import confined_ratio, evenly_balanced, optimum_if_practical, solve
-from tests.published.counties import county_graph
+from labkit.survey.demand import evenly_balanced, total_demand
+from labkit.survey.fair import fair_profile, top_of_profile
+from labkit.survey.optimum import optimum_of_unit_work
+from tests.survey.oracles import fleet_of, linear_program
 
 
 def unweighted(graph):
@@ -38,81 +36,52 @@ def unweighted(graph):
 def test_library_graphs(graph, value):
     # Unit demand and capacity; densest-subgraph densities of networkx's built-in graphs (recomputed).
     fleet = lk.fleet_from_graph(unweighted(graph))
-    assert optimum_if_practical(fleet) * len(fleet.options) == pytest.approx(value, rel=1e-9)
-
-
-def test_county_contiguity():
-    # Densest part of the contiguity graph of US counties; counties from the bokeh-sampledata package.
-    fleet = lk.fleet_from_graph(county_graph())
-    assert optimum_if_practical(fleet) * len(fleet.options) == pytest.approx(2.900744, abs=5e-7)
-
-
-@settings(max_examples=60)
-@given(st.data())
-def test_brute_force_over_all_server_sets(data):
-    size = data.draw(st.integers(2, 6))
-    rows = data.draw(
-        st.lists(
-            st.lists(st.integers(0, size - 1), min_size=2, max_size=min(3, size), unique=True),
-            min_size=1,
-            max_size=8,
-        )
-    )
-    choices = pd.DataFrame([row + [None] * (3 - len(row)) for row in rows], dtype="Int64")
-    choices.columns = ["option_1", "option_2", "option_3"]
-    choices["demand"] = data.draw(
-        st.lists(st.sampled_from([0.0, 1.0, 2.5]), min_size=len(rows), max_size=len(rows)).filter(any)
-    )
-    servers = pd.DataFrame({"server": range(size)})
-    servers["capacity"] = data.draw(st.lists(st.sampled_from([0.5, 1.0, 3.0]), min_size=size, max_size=size))
-    fleet = lk.Fleet(servers, choices)
-    demand, capacity = choices["demand"].to_numpy(float), servers["capacity"].to_numpy(float)
-    best = max(
-        confined_ratio(fleet.options, demand, capacity, np.isin(np.arange(size), chosen))
-        for count in range(1, size + 1)
-        for chosen in itertools.combinations(range(size), count)
-    )
-    assert optimum_if_practical(fleet) * demand.sum() == pytest.approx(best, rel=1e-9)
-    assert solve(fleet) * demand.sum() == pytest.approx(best, rel=1e-9)
-
-
-@settings(max_examples=40)
-@given(st.data())
-def test_the_optimum_knows_no_unit(data):
-    # Capacities in bytes as well as in tonnes, and spread over some orders of magnitude.
-    size = 6
-    rows = data.draw(
-        st.lists(
-            st.lists(st.integers(0, size - 1), min_size=2, max_size=2, unique=True), min_size=2, max_size=9
-        )
-    )
-    choices = pd.DataFrame(rows, columns=["option_1", "option_2"])
-    choices["demand"] = data.draw(st.lists(st.floats(0.1, 100), min_size=len(rows), max_size=len(rows)))
-    base = np.array(data.draw(st.lists(st.floats(0.1, 100), min_size=size, max_size=size)))
-    demand = choices["demand"].to_numpy() / choices["demand"].sum()
-    unit = 10.0 ** data.draw(st.integers(-12, 15))
-    fleet = lk.Fleet(pd.DataFrame({"server": range(size), "capacity": base * unit}), choices)
-    best = max(
-        confined_ratio(fleet.options, demand, base, np.isin(np.arange(size), chosen))
-        for count in range(1, size + 1)
-        for chosen in itertools.combinations(range(size), count)
-    )
-    assert optimum_if_practical(fleet) * unit == pytest.approx(best, rel=1e-9)
+    assert optimum_of_unit_work(fleet) * len(fleet.options) == pytest.approx(value, rel=1e-12)
+    assert lk.survey(fleet).optimum == pytest.approx(value, rel=1e-12)
 
 
 @pytest.mark.parametrize(
     "fleet", [lk.ring(7), lk.torus(3, 4), lk.hypercube(3), lk.complete(9), lk.random_regular(10, 3, rng=1)]
 )
 def test_regular_families_are_balanced(fleet):
-    assert optimum_if_practical(fleet) == 1 / len(fleet)
+    assert optimum_of_unit_work(fleet) == pytest.approx(1 / len(fleet), rel=1e-15)
+    assert evenly_balanced(fleet)
     if fleet.implicit is None:
-        assert evenly_balanced(fleet)
-        assert solve(fleet) == pytest.approx(1 / len(fleet), rel=1e-9)
+        assert linear_program(fleet) == pytest.approx(total_demand(fleet) / len(fleet), rel=1e-9)
 
 
-def test_a_large_irregular_fleet_has_no_excess_rather_than_a_wrong_one(monkeypatch):
-    monkeypatch.setattr("labkit.survey.optimum.PRACTICAL_CHOICES", 10)
-    fleet = lk.ring_with_chords(20, 3, rng=1)
-    table = lk.place(fleet, "least-loaded", tasks=100, rng=1).measures
-    assert table["excess"].isna().all()
-    assert table["gap"].notna().all()
+def test_the_top_alone_is_the_top_of_the_whole():
+    rng = np.random.default_rng(6)
+    for _ in range(20):
+        rows = [rng.choice(50, rng.integers(2, 4), replace=False).tolist() for _ in range(70)]
+        given = rows, rng.exponential(1, 70), rng.uniform(1, 3, 50)
+        top, whole = top_of_profile(fleet_of(*given)), fair_profile(fleet_of(*given))
+        assert top.optimum == pytest.approx(whole.optimum, rel=1e-12)
+        assert top.bottleneck.tolist() == whole.bottleneck.tolist()
+
+
+def test_excess_is_measured_on_large_irregular_fleets():
+    size = 60_000
+    fleet = lk.ring_with_chords(size, 20_000, rng=1)
+    assert len(fleet.options) > 50_000
+    row = lk.place(fleet, "least-loaded", tasks=size, rng=1).measures.iloc[0]
+    best = lk.survey(fleet)
+    work = size * best.optimum / total_demand(fleet)
+    assert row["excess"] == pytest.approx(row["max_load"] - work, abs=1e-9)
+    assert row["excess"] < row["gap"]
+
+
+def test_a_fleet_is_surveyed_once(monkeypatch):
+    fleet = lk.ring_with_chords(30, 5, rng=2)
+    assert fair_profile(fleet) is fair_profile(fleet)
+    # Once the whole profile is there, its top is not worked out again.
+    assert top_of_profile(fleet) is fair_profile(fleet)
+
+
+def test_too_many_options_are_refused(monkeypatch):
+    monkeypatch.setattr("labkit.survey.split._MOST_ENTRIES", 100)
+    choices = pd.DataFrame({"option_1": [0] * 40, "option_2": [1] * 39 + [2]})
+    with pytest.raises(
+        lk.InputError, match=r"40 choices of up to 2 options; an exact survey takes at most 100"
+    ):
+        lk.survey(lk.Fleet(pd.DataFrame({"server": range(3)}), choices))
