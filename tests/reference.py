@@ -19,7 +19,7 @@ def words(entropy: int, replicate: int, stream: int, key: tuple[int, ...] = ()):
 
 
 def arrival(fleet, stream, table):
-    """Return the options (server positions) and the coin of the next arrival."""
+    """Return the options (server positions), the choice's row and the coin of the next arrival."""
     if fleet.implicit is not None:
         law, taken, coin = fleet.implicit, [], 0
         for _ in range(law.options):
@@ -27,7 +27,7 @@ def arrival(fleet, stream, table):
             product = next(stream) * len(pool)
             taken.append(pool[product // WORD])
             coin = product % WORD
-        return taken, coin
+        return taken, None, coin
     product = next(stream) * len(fleet.options)
     row, coin = product // WORD, product % WORD
     if table is not None:
@@ -38,16 +38,21 @@ def arrival(fleet, stream, table):
         else:
             coin = (coin - (bound << 32)) // ((1 << 32) - bound) << 32
             row = int(alias[row])
-    return [int(s) for s in fleet.options[row] if s != 0xFFFFFFFF], coin
+    return [int(s) for s in fleet.options[row] if s != 0xFFFFFFFF], row, coin
 
 
-def pick(rule, fleet, options, seen, coin, own):
+def pick(rule, fleet, options, row, seen, coin, own):
     """Return the position that a built-in rule picks."""
     capacity = [1.0] * fleet.size if fleet.capacity is None else fleet.capacity
     share = Fraction(coin >> 11, 1 << 53)
     if rule[0] == "mixed":
         looks = (next(own) >> 11) * 2.0**-53 < rule[1]
         rule = ("least-loaded", "random") if looks else ("one-choice",)
+    if rule[0] == "static-split":
+        if len(rule[1]):
+            passed = list(itertools.accumulate(rule[1][row]))
+            return sum(passed[position] <= float(share) * passed[-1] for position in range(len(options) - 1))
+        rule = ("one-choice",)
     if rule[0] == "one-choice":
         if fleet.capacity is None:
             return coin * len(options) // WORD
@@ -68,8 +73,9 @@ def place(fleet, rule, *, tasks, replicate, entropy, table=None, sizes=None, eve
     for task in range(tasks):
         if every == 0 or task % every == 0:
             seen = loads.copy()
-        options, coin = arrival(fleet, arrivals, table)
-        loads[options[pick(rule, fleet, options, seen, coin, own)]] += 1 if sizes is None else sizes[task]
+        options, row, coin = arrival(fleet, arrivals, table)
+        picked = pick(rule, fleet, options, row, seen, coin, own)
+        loads[options[picked]] += 1 if sizes is None else sizes[task]
         history.append(loads.copy())
     return history
 

@@ -29,7 +29,8 @@ def headroom(
     ----------
     measures : pandas.DataFrame
         One row a replicate and checkpoint, as in ``outcome.measures``. Groups are formed by `tasks` and by
-        the labels: `policy`, `information`, any other column of text and any named index level.
+        the labels: `policy`, `information`, `server` (in ``outcome.by_server``: what each server needs for
+        itself), any other column of text and any named index level.
     risk : float
         The accepted probability, in (0, 1), that the fullest server goes beyond the headroom.
     confidence : float
@@ -40,9 +41,9 @@ def headroom(
     Returns
     -------
     pandas.DataFrame
-        One row a group, sorted by labels and tasks: the labels, tasks, replicates, mean_load and
-        mean_utilisation (means over replicates, where the table has them), headroom, lower, upper (in units
-        of `of`), risk, confidence.
+        One row a group, sorted by labels and tasks: the labels, tasks, replicates, mean_load,
+        mean_utilisation and fair_utilisation (means over replicates, where the table has them), headroom,
+        lower, upper (in units of `of`), risk, confidence.
 
     Raises
     ------
@@ -82,6 +83,8 @@ def headroom(
             row["mean_load"] = group["mean_load"].mean()
         if {"max_utilisation", "gap"} <= set(group.columns):
             row["mean_utilisation"] = (group["max_utilisation"] - group["gap"]).mean()
+        if "fair_utilisation" in group:
+            row["fair_utilisation"] = group["fair_utilisation"].mean()
         row["headroom"] = values[_quantile_rank(len(values), risk) - 1]
         row["lower"], row["upper"] = values[lower - 1], values[upper - 1]
         row["risk"], row["confidence"] = risk, confidence

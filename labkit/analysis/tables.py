@@ -6,7 +6,7 @@ import pandas as pd
 from labkit.checks import nearest
 from labkit.errors import InputError
 
-FIRST_LABELS = ("policy", "information")
+FIRST_LABELS = ("policy", "information", "server")
 KEYS = ("replicate", "tasks")
 
 # Text columns of a record that tell where a row came from; they never separate groups.
@@ -25,7 +25,7 @@ def prepare(measures: pd.DataFrame, of: str) -> tuple[pd.DataFrame, list[str]]:
     ----------
     measures : pandas.DataFrame
         One row a replicate and checkpoint: `replicate`, `tasks`, the column `of`, and any labels. Labels are
-        `policy`, `information`, every other column of text, and every named index level
+        `policy`, `information`, `server`, every other column of text, and every named index level
         (``pd.concat(..., names=["policy"])``); an index level replaces a column of the same name.
     of : str
         The column that is going to be analysed.
@@ -35,7 +35,7 @@ def prepare(measures: pd.DataFrame, of: str) -> tuple[pd.DataFrame, list[str]]:
     pandas.DataFrame
         A copy with a plain index, sorted by labels, tasks and replicate.
     list of str
-        The label columns, policy and information first.
+        The label columns, policy, information and server first.
 
     Raises
     ------

@@ -8,9 +8,14 @@ from labkit.engine.measures import measure
 
 
 @inlined
-def choose(state, seen, weights, options, row, count, coin, own):
+def choose(state, seen, weights, options, row, count, choice, coin, own):
     """Stand for the policy's chooser until `labkit.compiled.specialise` puts it in place."""
     return np.uint64(0)
+
+
+@inlined
+def renew(state, seen):
+    """Stand for what the policy works out now and then, until `labkit.compiled.specialise` puts it there."""
 
 
 def place_near(
@@ -39,7 +44,7 @@ def place_near(
         word, a, b, c, counter = advance(a, b, c, counter)
         row, coin = multiply_wide(word, choices)
         count = 2 if several is None else options_in(options, row)
-        position = choose(state, seen, weights, options, row, count, coin, own)
+        position = choose(state, seen, weights, options, row, count, row, coin, own)
         if position >= np.uint64(count):
             failed = task + 1
             break
@@ -49,12 +54,12 @@ def place_near(
     return failed
 
 
-def place_drawn(picked, coins, batch, several, own, state, weights, sizes, loads, seen, first, start):
+def place_drawn(picked, coins, rows, batch, several, own, state, weights, sizes, loads, seen, first, start):
     """Place the `batch` tasks after `start` that were drawn ahead; see `place_tasks`."""
     for index in range(batch):
         row = np.uint64(index)
         count = 2 if several is None else options_in(picked, row)
-        position = choose(state, seen, weights, picked, row, count, coins[row], own)
+        position = choose(state, seen, weights, picked, row, count, rows[row], coins[row], own)
         if position >= np.uint64(count):
             return start + index + 1
         server = np.uint64(picked[row, position])
@@ -63,8 +68,8 @@ def place_drawn(picked, coins, batch, several, own, state, weights, sizes, loads
 
 
 def place_tasks(
-    arrivals, several, arrival_state, own, state, capacity, weights, sizes, loads, seen, report, every, ahead,
-    first, last, checkpoints, demand, pairs_of, out,
+    arrivals, several, arrival_state, own, state, capacity, weights, sizes, loads, seen, report, every,
+    renewal, ahead, first, last, checkpoints, demand, pairs_of, out,
 ):  # fmt: skip
     """Place the tasks ``first + 1 .. last`` of one replicate and measure at the checkpoints among them.
 
@@ -88,6 +93,8 @@ def place_tasks(
         The last snapshot, changed in place; `loads` itself when information is fresh.
     every : int
         A snapshot is taken just before the tasks 1, every + 1, 2 every + 1, ...; 0 when information is fresh.
+    renewal : int
+        The policy's `renew` is called just before the tasks 1, renewal + 1, ...; 0 for never.
     ahead : bool
         Draw arrivals ahead of their placement: for fleets larger than cache, without a table of choices, or
         with unequal demands.
@@ -105,7 +112,7 @@ def place_tasks(
     """
     picked = np.empty((AHEAD, arrivals.options.shape[1]), np.uint32)
     coins = np.empty(AHEAD, np.uint64)
-    rows = np.empty(AHEAD, np.uint64)
+    rows = np.zeros(AHEAD, np.uint64)
     mark = np.searchsorted(checkpoints, first + 1)
     done = first
     while done < last:
@@ -116,6 +123,10 @@ def place_tasks(
             if done % every == 0:
                 report[:] = loads
             stop = min(stop, done - done % every + every)
+        if renewal > 0:
+            if done % renewal == 0:
+                renew(state, seen)
+            stop = min(stop, done - done % renewal + renewal)
         failed = 0
         if ahead:
             while done < stop and failed == 0:
@@ -130,7 +141,7 @@ def place_tasks(
                         arrivals.servers, arrivals.distinct, arrival_state, seen, picked, coins, batch
                     )
                 failed = place_drawn(
-                    picked, coins, batch, several, own, state, weights, sizes, loads, seen, first, done
+                    picked, coins, rows, batch, several, own, state, weights, sizes, loads, seen, first, done
                 )
                 done += batch
         else:

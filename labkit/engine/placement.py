@@ -10,7 +10,7 @@ import numpy as np
 import pandas as pd
 
 from labkit.checks import LARGEST_WHOLE, check_whole
-from labkit.compiled import CONFIG, inlined, specialise
+from labkit.compiled import CONFIG, compiled, inlined, specialise
 from labkit.engine.arrivals import Arrivals, arrivals_of, read_only
 from labkit.engine.information import Fresh, Information
 from labkit.engine.loop import place_drawn, place_near, place_tasks
@@ -18,11 +18,12 @@ from labkit.engine.measures import MEASURED
 from labkit.engine.sizes import LARGEST_SIZE, Sizes, numbers_for, sizes_of
 from labkit.engine.weights import comparison_weights
 from labkit.errors import InputError
-from labkit.fleet.model import ABSENT, Fleet
+from labkit.fleet.model import ABSENT, Fleet, check_fleet
 from labkit.policies.base import Policy
 from labkit.policies.naming import parse_policy
 from labkit.randomness import ARRIVALS, COINS, kernel_state, seed_sequence
-from labkit.survey.optimum import optimum_if_practical
+from labkit.survey.fair import fair_profile
+from labkit.survey.optimum import optimum_of_unit_work
 
 # A fleet whose loads and choices fill more than this is larger than the caches next to a core.
 NEAR_BYTES = 1 << 20
@@ -37,13 +38,17 @@ class Outcome:
     measures : pandas.DataFrame
         One row a replicate and checkpoint: policy, replicate, tasks, mean_load, max_load, min_load,
         max_utilisation, gap, excess, load_variance, edge_difference. Loads in work units; gap and excess in
-        utilisation (equal to loads where capacities are one). `excess` is NaN on irregular fleets of more
-        than 50,000 choices, whose exact optimum would take minutes; `edge_difference` is NaN where there is
-        no two-server choice.
+        utilisation (equal to loads where capacities are one). `excess` is NaN when demands and capacities
+        are so far apart that the optimum cannot be proved; `edge_difference` is NaN where there is no
+        two-server choice.
     loads : numpy.ndarray, shape (replicates, servers)
         Loads after the last task, int64 for unit tasks, float64 for tasks with sizes.
     policy, information : str
         The rule and what it could see, in words.
+    tasks : int
+        How many tasks were placed in each replicate.
+    by_server : pandas.DataFrame
+        The loads after the last task beside each server's fair utilisation, one row a replicate and server.
     """
 
     fleet: Fleet
@@ -52,6 +57,7 @@ class Outcome:
     loads: np.ndarray
     checkpoints: np.ndarray
     measured: np.ndarray
+    tasks: int
 
     @cached_property
     def measures(self) -> pd.DataFrame:
@@ -61,7 +67,7 @@ class Outcome:
             zip(MEASURED, np.moveaxis(self.measured, -1, 0).reshape(len(MEASURED), -1), strict=True)
         )
         work = columns["mean_load"] * self.fleet.size
-        optimum = optimum_if_practical(self.fleet)
+        optimum = optimum_of_unit_work(self.fleet)
         table = pd.DataFrame(
             {
                 "policy": self.policy,
@@ -74,6 +80,32 @@ class Outcome:
             }
         )
         return table
+
+    @cached_property
+    def by_server(self) -> pd.DataFrame:
+        """The loads after the last task, one row a replicate and server.
+
+        Columns: policy, replicate, tasks, server, load, utilisation, fair_utilisation and excess. The fair
+        utilisation is the server's own level in the max-min fair split of this much work (`labkit.survey`),
+        excess is utilisation − fair_utilisation. With ``labkit.headroom(outcome.by_server, risk=...,
+        of="excess")`` fair_utilisation + headroom is what a server needs for itself.
+        """
+        replicates, servers = self.loads.shape
+        capacity = 1.0 if self.fleet.capacity is None else self.fleet.capacity
+        utilisation = self.loads / capacity
+        fair = self.loads.sum(axis=1, keepdims=True) * fair_profile(self.fleet).of_unit_work
+        return pd.DataFrame(
+            {
+                "policy": self.policy,
+                "replicate": np.repeat(np.arange(replicates), servers),
+                "tasks": self.tasks,
+                "server": pd.concat([self.fleet.names.to_series()] * replicates, ignore_index=True),
+                "load": self.loads.ravel(),
+                "utilisation": utilisation.ravel(),
+                "fair_utilisation": fair.ravel(),
+                "excess": (utilisation - fair).ravel(),
+            }
+        )
 
     def __repr__(self) -> str:
         replicates, servers = self.loads.shape
@@ -143,10 +175,7 @@ def place(
     >>> outcome.measures[["replicate", "tasks", "mean_load"]].values.tolist()
     [[0.0, 1600.0, 100.0], [1.0, 1600.0, 100.0], [2.0, 1600.0, 100.0]]
     """
-    if not isinstance(fleet, Fleet):
-        raise InputError(
-            f"fleet is {type(fleet).__name__}; give a labkit Fleet, such as lk.read_fleet(folder)."
-        )
+    check_fleet(fleet)
     rule = parse_policy(policy)
     tasks = check_whole("tasks", tasks)
     replicates = check_whole("replicates", replicates)
@@ -170,7 +199,7 @@ def place(
     else:
         with ThreadPoolExecutor(workers) as pool:
             list(pool.map(run, range(replicates)))
-    return Outcome(fleet, rule.name, information.name, loads, moments, measured)
+    return Outcome(fleet, rule.name, information.name, loads, moments, measured, tasks)
 
 
 class _Job:
@@ -191,7 +220,7 @@ class _Job:
         self.arrivals = arrivals_of(fleet)
         self.capacity, self.weights = fleet.capacity, comparison_weights(fleet.capacity)
         self.demand = read_only(np.empty(0)) if fleet.demand is None else fleet.demand
-        self.state = rule.prepare(fleet)
+        self.state, self.renewal = rule.prepare(fleet), rule.renewal(fleet)
         self._no_sizes = None if work is None else np.empty(0)
         self.pairs_of = _pairs_of(fleet)
         self.several = None if only_pairs(self.arrivals) else True
@@ -203,19 +232,21 @@ class _Job:
     def compile(self, loads: np.ndarray, out: np.ndarray) -> None:
         """Place no task at all, so that the loop is compiled before threads share it."""
         words = np.zeros(4, np.uint64)
-        self._place(words, words.copy(), loads, loads, 0, 0, self._no_sizes, out)
+        self._place(self.state, words, words.copy(), loads, loads, 0, 0, self._no_sizes, out)
 
     def run(self, replicate: int, loads: np.ndarray, out: np.ndarray) -> None:
         """Place all tasks of one replicate: loads and measures are written into the two arrays."""
         arriving = kernel_state(self.seed, replicate, ARRIVALS)
         own = kernel_state(self.seed, replicate, COINS)
         report = loads if self.every == 0 else loads.copy()
+        state = self.rule.own_state(self.state)
         blocks = [(0, self.tasks, None)] if self.work is None else self.work.blocks(self.seed, replicate)
         for first, last, sizes in blocks:
-            self._place(arriving, own, loads, report, first, last, sizes, out)
+            self._place(state, arriving, own, loads, report, first, last, sizes, out)
 
     def _place(
         self,
+        state: tuple[Any, ...],
         arriving: np.ndarray,
         own: np.ndarray,
         loads: np.ndarray,
@@ -229,9 +260,9 @@ class _Job:
             # Without the compiler unsigned words are NumPy scalars, which warn when they wrap around.
             with np.errstate(over="ignore" if CONFIG.DISABLE_JIT else "warn"):
                 failed = self.loop(
-                    self.arrivals, self.several, arriving, own, self.state, self.capacity, self.weights,
-                    sizes, loads, read_only(report.view()), report, self.every, self.ahead, first, last,
-                    self.checkpoints, self.demand, self.pairs_of, out,
+                    self.arrivals, self.several, arriving, own, state, self.capacity, self.weights,
+                    sizes, loads, read_only(report.view()), report, self.every,
+                    self.renewal, self.ahead, first, last, self.checkpoints, self.demand, self.pairs_of, out,
                 )  # fmt: skip
         except Exception as error:
             refusal = self.rule.explain(error)
@@ -246,16 +277,18 @@ class _Job:
 
 
 @lru_cache(maxsize=64)
-def _loop(kernel_name: str, choose: Callable, cache: bool) -> Callable:
+def _loop(kernel_name: str, choose: Callable, renew: Callable, cache: bool) -> Callable:
     chosen = inlined(choose)
     near = specialise(place_near, kernel_name, cache=False, choose=chosen)
     drawn = specialise(place_drawn, kernel_name, cache=False, choose=chosen)
-    return specialise(place_tasks, kernel_name, cache=cache, place_near=near, place_drawn=drawn)
+    return specialise(
+        place_tasks, kernel_name, cache=cache, place_near=near, place_drawn=drawn, renew=compiled(renew)
+    )
 
 
 def loop_of(rule: Policy) -> Callable:
     """Return the placement loop compiled for a policy's chooser (one copy a chooser)."""
-    return _loop(rule.kernel_name, rule.choose, rule.cached)
+    return _loop(rule.kernel_name, rule.choose, rule.renew, rule.cached)
 
 
 def only_pairs(arrivals: Arrivals) -> bool:

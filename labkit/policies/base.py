@@ -6,12 +6,16 @@ from labkit.errors import InputError
 from labkit.fleet.model import Fleet
 
 
+def keep(state, seen):
+    """Leave the state as it is."""
+
+
 class Policy:
     """A rule that picks a server from a choice.
 
     A policy file defines one chooser, a plain function that numba can compile::
 
-        choose(state, seen, weights, options, row, count, coin, own) -> position
+        choose(state, seen, weights, options, row, count, choice, coin, own) -> position
 
     state : tuple
         What `prepare` returned for the fleet.
@@ -22,6 +26,8 @@ class Policy:
         test for None costs nothing once compiled.
     options : uint32 array of two dimensions, row : uint64, count : int
         The task may go to the servers ``options[row, 0 .. count - 1]``.
+    choice : uint64
+        Number of the choice in the fleet's table (`row` need not be it); 0 when choices are not listed.
     coin : uint64
         A uniform word that belongs to the arrival, the same for every policy.
     own : uint64 array, shape (4,)
@@ -29,6 +35,8 @@ class Policy:
     """
 
     choose: Any
+    # A plain function ``renew(state, seen)`` that numba can compile: it works out anew what depends on loads.
+    renew: Any = staticmethod(keep)
     cached: ClassVar[bool] = True
 
     @property
@@ -44,6 +52,14 @@ class Policy:
     def prepare(self, fleet: Fleet) -> tuple[Any, ...]:
         """Return what the chooser needs to know about the fleet, a tuple of arrays and numbers."""
         return ()
+
+    def renewal(self, fleet: Fleet) -> int:
+        """Return how often, in tasks, `renew` is called, just before the task; 0 for never."""
+        return 0
+
+    def own_state(self, state: tuple[Any, ...]) -> tuple[Any, ...]:
+        """Return the state for one replicate: with copies of the arrays that `renew` changes."""
+        return state
 
     def check(self, load: type) -> None:
         """Refuse a rule that cannot be compiled for loads of this type."""

@@ -49,11 +49,11 @@ def least_fair(seen, weights, options, row, count, coin):
     return picked
 
 
-def choose_fair(state, seen, weights, options, row, count, coin, own):  # noqa: D103
+def choose_fair(state, seen, weights, options, row, count, choice, coin, own):  # noqa: D103
     return least_fair(seen, weights, options, row, count, coin)
 
 
-def choose_first(state, seen, weights, options, row, count, coin, own):  # noqa: D103
+def choose_first(state, seen, weights, options, row, count, choice, coin, own):  # noqa: D103
     picked = np.uint64(0)
     best = np.uint64(options[row, picked])
     for position in range(1, count):

@@ -12,7 +12,7 @@ from labkit.policies.least_loaded import least_fair
 from labkit.policies.one_choice import toss
 
 
-def choose(state, seen, weights, options, row, count, coin, own):  # noqa: D103
+def choose(state, seen, weights, options, row, count, choice, coin, own):  # noqa: D103
     # Both answers, then one of them: cheaper than a branch that cannot be predicted.
     looked = least_fair(seen, weights, options, row, count, coin)
     tossed = toss(weights, options, row, count, coin)

@@ -10,8 +10,16 @@ from labkit.policies.base import Policy
 from labkit.policies.least_loaded import LeastLoaded
 from labkit.policies.mixed import Mixed
 from labkit.policies.one_choice import OneChoice
+from labkit.policies.smooth_feedback import SmoothFeedback
+from labkit.policies.static_split import StaticSplit
 
-BUILT_IN: dict[str, type[Policy]] = {"one-choice": OneChoice, "least-loaded": LeastLoaded, "mixed": Mixed}
+BUILT_IN: dict[str, type[Policy]] = {
+    "one-choice": OneChoice,
+    "least-loaded": LeastLoaded,
+    "mixed": Mixed,
+    "static-split": StaticSplit,
+    "smooth-feedback": SmoothFeedback,
+}
 _FORM = re.compile(r"\s*([\w-]+)\s*(?:\((.*)\))?\s*")
 
 

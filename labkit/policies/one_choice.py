@@ -23,7 +23,7 @@ def toss(weights, options, row, count, coin):
     return picked
 
 
-def choose(state, seen, weights, options, row, count, coin, own):  # noqa: D103
+def choose(state, seen, weights, options, row, count, choice, coin, own):  # noqa: D103
     return toss(weights, options, row, count, coin)
 
 

@@ -33,7 +33,7 @@ def rule(options, loads, capacity, coin):
     return 0
 
 
-def choose(state, seen, weights, options, row, count, coin, own):  # noqa: D103
+def choose(state, seen, weights, options, row, count, choice, coin, own):  # noqa: D103
     among = borrowed(options)[row, :count]
     return np.uint64(rule(among, borrowed(seen), borrowed(state[0]), unit_interval(coin)))
 

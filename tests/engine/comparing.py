@@ -5,6 +5,8 @@ import pytest
 import labkit as lk
 from labkit.engine import placement
 from labkit.engine.arrivals import arrivals_of
+from labkit.survey.demand import evenly_balanced
+from labkit.survey.fair import fair_profile
 from tests import reference
 
 RULES = {
@@ -12,6 +14,7 @@ RULES = {
     "least-loaded": ("least-loaded", "random"),
     "least-loaded(ties=first)": ("least-loaded", "first"),
     "mixed(beta=0.3)": ("mixed", 0.3),
+    "static-split": ("static-split",),
 }
 
 
@@ -28,10 +31,13 @@ def assert_same_path(fleet, rule, *, ahead, entropy, every=0, sizes=None, start=
     finally:
         placement.NEAR_BYTES = near
     law = arrivals_of(fleet)
+    told = RULES[rule]
+    if rule == "static-split":
+        told = (*told, [] if evenly_balanced(fleet) else fair_profile(fleet).split.by_option().tolist())
     table = None if law.threshold is None else (law.threshold, law.alias)
     for replicate in range(2):
         history = reference.place(
-            fleet, RULES[rule], tasks=tasks, replicate=replicate, entropy=entropy,
+            fleet, told, tasks=tasks, replicate=replicate, entropy=entropy,
             table=table, sizes=sizes, every=every, start=start,
         )  # fmt: skip
         assert outcome.loads[replicate].tolist() == history[-1].tolist()

@@ -10,7 +10,8 @@ from labkit.policies.naming import BUILT_IN, parse_policy
 
 @given(st.floats(0, 1))
 def test_names_read_back(beta):
-    for policy in (lk.OneChoice(), lk.LeastLoaded(), lk.LeastLoaded(ties="first"), lk.Mixed(beta)):
+    plain = (lk.OneChoice(), lk.LeastLoaded(), lk.LeastLoaded(ties="first"), lk.StaticSplit())
+    for policy in (*plain, lk.Mixed(beta)):
         assert parse_policy(policy.name) == policy
         assert parse_policy(policy.name).name == policy.name
 
