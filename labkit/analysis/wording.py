@@ -134,7 +134,7 @@ def answer_text(sentences: str, table: pd.DataFrame, about: str, runs: Sequence[
     Parameters
     ----------
     sentences, about : str
-        From `decision` and `notes`.
+        From `decision` and `notes`; a blank line in the first parts paragraphs.
     table : pandas.DataFrame
         The table of `answer_table`.
     runs : sequence of str
@@ -142,7 +142,8 @@ def answer_text(sentences: str, table: pd.DataFrame, about: str, runs: Sequence[
     """
     named = ", ".join(runs) if len(runs) <= 4 else f"{', '.join(runs[:3])} and {len(runs) - 3} more"
     sources = f"runs: {named} (labkit rerun RUN repeats one to the bit)"
-    return "\n".join([textwrap.fill(sentences, 110), "", text_table(table), "", about, sources])
+    filled = "\n\n".join(textwrap.fill(part, 110) for part in sentences.split("\n\n"))
+    return "\n".join([filled, "", text_table(table), "", about, sources])
 
 
 def page_table(table: pd.DataFrame, total_capacity: float) -> pd.DataFrame:
@@ -199,18 +200,20 @@ def guard(verdict: Verdict, max_headroom: float | None) -> str:
     )
 
 
-def horizon(measures: pd.DataFrame, policy: str) -> str:
-    """Return how the median gap of a policy moved towards the end, and what that means for the headroom.
+def horizon(measures: pd.DataFrame, policy: str, of: str = "gap") -> str:
+    """Return how the median gap, or excess, of a policy moved towards the end.
 
     Parameters
     ----------
     measures : pandas.DataFrame
-        policy, information, tasks, gap at several checkpoints.
+        policy, information, tasks, and gap or excess, at several checkpoints.
     policy : str
         The policy that is described.
+    of : str
+        "gap" or "excess".
     """
     rows = measures[measures["policy"] == policy]
-    medians = rows.groupby(["information", "tasks"])["gap"].median()
+    medians = rows.groupby(["information", "tasks"])[of].median()
     sentences = []
     for information in medians.index.unique("information"):
         path = medians[information]
@@ -224,7 +227,7 @@ def horizon(measures: pd.DataFrame, policy: str) -> str:
         change = 100 * (high / low - 1)
         moved = f"grew by {change:.0f} %" if change >= 0 else f"fell by {-change:.0f} %"
         sentences.append(
-            f"With load reports {reports(information)} the median gap of {policy} {moved} "
+            f"With load reports {reports(information)} the median {of} of {policy} {moved} "
             f"between {start:,} and {end:,} tasks."
         )
     return " ".join(sentences)

@@ -1,5 +1,6 @@
 """The fleet as a picture: which servers end fullest, and who shares work with whom."""
 
+from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import Any
 
@@ -15,12 +16,13 @@ from scipy.spatial import KDTree
 from labkit.analysis.wording import writer
 from labkit.errors import InputError
 from labkit.figures.layout import CIRCLE_AT_MOST, is_ring_in_order, positions
-from labkit.figures.style import FILL, INK, plain, spread, styled
-from labkit.fleet.model import ABSENT, Fleet
+from labkit.figures.style import COLOURS, FILL, INK, plain, spread, styled
+from labkit.fleet.model import ABSENT, Fleet, positions_of
 
 DRAWN_AT_MOST = 2_000
 NEIGHBOURHOOD = 300
 NAMED = 5
+MARK = COLOURS[1]
 # Sizes of type in points.
 TITLE, WORDS = 11, 9
 # Inches: the margin, the largest drawing, the least height, room for a dot at the edge, from the drawing to
@@ -29,7 +31,15 @@ MARGIN, LARGEST, LEAST, DOT, AWAY, LINE, MEAN, BAR = 0.12, 5.4, 1.6, 0.2, 0.4, 0
 
 
 @styled
-def choice_graph(fleet: Fleet, utilisation: Any, *, title: str = "") -> Figure:
+def choice_graph(
+    fleet: Fleet,
+    utilisation: Any,
+    *,
+    title: str = "",
+    measure: str = "utilisation (load ÷ capacity)",
+    ringed: Iterable[Any] = (),
+    links: Iterable[tuple[Any, Any]] = (),
+) -> Figure:
     """Draw the choice graph, servers coloured by utilisation.
 
     Areas of the dots are proportional to capacity, widths of the lines to demand; the fullest servers are
@@ -43,6 +53,12 @@ def choice_graph(fleet: Fleet, utilisation: Any, *, title: str = "") -> Figure:
         Load ÷ capacity in table order; a Series with server names as its index may be in any order.
     title : str
         Written above the picture.
+    measure : str
+        What the colours mean, written at their bar.
+    ringed : iterable of server names
+        Servers drawn with a ring, such as the bottleneck.
+    links : iterable of pairs of server names
+        Drawn as dashed lines, such as advised links.
 
     Returns
     -------
@@ -51,7 +67,7 @@ def choice_graph(fleet: Fleet, utilisation: Any, *, title: str = "") -> Figure:
     Raises
     ------
     InputError
-        When the choices are not listed, or utilisation does not fit the fleet.
+        When the choices are not listed, utilisation does not fit the fleet, or a name is not a server's.
     """
     if not isinstance(fleet, Fleet) or fleet.implicit is not None:
         raise InputError(f"fleet is {fleet!r}; give a fleet whose choices are listed, to draw them.")
@@ -59,6 +75,8 @@ def choice_graph(fleet: Fleet, utilisation: Any, *, title: str = "") -> Figure:
     pairs, demand = _pairs(fleet)
     capacity = np.ones(fleet.size) if fleet.capacity is None else np.asarray(fleet.capacity)
     names = np.asarray(fleet.names, dtype=object)
+    around = positions_of(fleet, list(ringed), "ringed")
+    dashed = positions_of(fleet, [end for link in links for end in link], "links").reshape(-1, 2)
     low, high, mean = values.min(), values.max(), float(values @ capacity / capacity.sum())
     if high - low <= 1e-6 * abs(high):  # all equally full: a middle shade
         low, high = low - 0.1 * (abs(low) or 1.0), high + 0.1 * (abs(high) or 1.0)
@@ -69,9 +87,12 @@ def choice_graph(fleet: Fleet, utilisation: Any, *, title: str = "") -> Figure:
         place_of[kept] = np.arange(len(kept))
         inside = (place_of[pairs] >= 0).all(axis=1)
         pairs, demand = place_of[pairs[inside]], demand[inside]
+        around = place_of[around][place_of[around] >= 0]
+        dashed = place_of[dashed][(place_of[dashed] >= 0).all(axis=1)]
         values, capacity, names = values[kept], capacity[kept], names[kept]
     places = positions(len(kept), pairs)
     words = "area: capacity · line width: demand"
+    words += " · ringed: bottleneck" * bool(len(around)) + " · dashed: advised links" * bool(len(dashed))
     if len(kept) < fleet.size:
         words += f" · the {len(kept)} servers nearest to the fullest of {fleet.size:,}"
     if len(kept) > CIRCLE_AT_MOST and is_ring_in_order(len(kept), pairs):
@@ -101,6 +122,13 @@ def choice_graph(fleet: Fleet, utilisation: Any, *, title: str = "") -> Figure:
         linewidths=min(0.6, diameter / 10),
         zorder=3,
     )
+    _rings(axes, sheet.places[around], diameter**2 * (capacity / capacity.mean())[around])
+    axes.add_collection(
+        LineCollection(
+            list(sheet.places[dashed]), linewidths=1.8, colors=MARK, linestyles=(0, (4, 2)), zorder=2
+        ),
+        autolim=False,
+    )
     for label in sheet.labels:
         label.draw(axes, sheet.places)
     tall = min(high_y - low_y, 3.4)
@@ -112,7 +140,7 @@ def choice_graph(fleet: Fleet, utilisation: Any, *, title: str = "") -> Figure:
         ),
     )
     bar.ax.yaxis.set_major_formatter(plain)
-    bar.set_label("utilisation (load ÷ capacity)")
+    bar.set_label(measure)
     bar.ax.axhline(mean, color="white", linewidth=3)
     bar.ax.axhline(mean, color=INK, linewidth=1.2)
     bar.ax.annotate("mean ", (0, mean), xycoords=("axes fraction", "data"), ha="right", va="center")
@@ -138,6 +166,14 @@ def _checked(fleet: Fleet, utilisation: Any) -> np.ndarray:
             "give a finite number for each server."
         )
     return values
+
+
+def _rings(axes: Axes, places: np.ndarray, areas: np.ndarray) -> None:
+    if len(places):
+        axes.scatter(
+            places[:, 0], places[:, 1], s=(np.sqrt(areas) + 5) ** 2, facecolors="none", edgecolors=MARK,
+            linewidths=1.6, zorder=3.5,
+        )  # fmt: skip
 
 
 def _pairs(fleet: Fleet) -> tuple[np.ndarray, np.ndarray]:

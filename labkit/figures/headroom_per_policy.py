@@ -7,13 +7,13 @@ from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 
 from labkit.analysis.wording import reports, utilisation
-from labkit.checks import nearest
+from labkit.checks import check_member, nearest
 from labkit.errors import InputError
 from labkit.figures.style import FAINT, INK, looks, plain, styled
 
 
 @styled
-def headroom_per_policy(table: pd.DataFrame, *, baseline: str = "") -> Figure:
+def headroom_per_policy(table: pd.DataFrame, *, baseline: str = "", above: str = "mean") -> Figure:
     """Draw the headroom of each policy as a dot with its limits, least first.
 
     Parameters
@@ -23,6 +23,9 @@ def headroom_per_policy(table: pd.DataFrame, *, baseline: str = "") -> Figure:
         risk, confidence and, if there, information and network.
     baseline : str
         The policy that differences are written against; empty writes none.
+    above : str
+        "mean" draws all of the headroom; "optimum" the excess, the part of it that is owed to the rule (needs
+        the column network).
 
     Returns
     -------
@@ -33,10 +36,16 @@ def headroom_per_policy(table: pd.DataFrame, *, baseline: str = "") -> Figure:
     InputError
         When a column is missing, the baseline is not in the table, or a policy has several rows.
     """
-    for column in ("policy", "headroom", "lower", "upper", "risk", "confidence"):
+    excess = check_member("above", above, ("mean", "optimum")) == "optimum"
+    needed = ("policy", "headroom", "lower", "upper", "risk", "confidence", *(("network",) if excess else ()))
+    for column in needed:
         if column not in table.columns:
             raise InputError(f"table has no column {column!r}; give the table of labkit.headroom.")
     rows = table.assign(information=table.get("information", "fresh"))
+    if excess:
+        rows[["headroom", "lower", "upper"]] = rows[["headroom", "lower", "upper"]].sub(
+            rows["network"], axis=0
+        )
     if rows.duplicated(["policy", "information"]).any():
         raise InputError("table has several rows for one policy and information; keep one checkpoint.")
     if baseline and baseline not in set(rows["policy"]):
@@ -65,10 +74,14 @@ def headroom_per_policy(table: pd.DataFrame, *, baseline: str = "") -> Figure:
     axes.grid(True, axis="x")
     first = rows.iloc[0]
     axes.set_xlabel(
-        f"headroom at {100 * first['risk']:g} % risk, utilisation (load ÷ capacity) above the mean; "
+        f"{'excess' if excess else 'headroom'} at {100 * first['risk']:g} % risk, "
+        f"utilisation (load ÷ capacity) above the {above}; "
         f"bars: {100 * first['confidence']:g} % limits"
     )
-    _network(axes, rows)
+    if excess:
+        _optimum(axes, rows)
+    else:
+        _network(axes, rows)
     if len(kinds) > 1:
         marks = [
             Line2D([], [], color=INK, marker="o", linestyle="", markerfacecolor=INK if at == 0 else "white")
@@ -112,6 +125,18 @@ def _network(axes: Axes, rows: pd.DataFrame) -> None:
         (part.mean(), 1.0),
         xycoords=("data", "axes fraction"),
         xytext=(3, 2),
+        textcoords="offset points",
+        color="#555555",
+        annotation_clip=False,
+    )
+
+
+def _optimum(axes: Axes, rows: pd.DataFrame) -> None:
+    axes.annotate(
+        f"0 is the optimum, {utilisation(rows['network'].mean())} above the mean; no rule can win that back",
+        (0.0, 1.0),
+        xycoords=("data", "axes fraction"),
+        xytext=(0, 2),
         textcoords="offset points",
         color="#555555",
         annotation_clip=False,

@@ -1,4 +1,4 @@
-"""How far the fullest server lies above the mean while tasks arrive."""
+"""How far the fullest server lies above the mean, or above the optimum, while tasks arrive."""
 
 import numpy as np
 import pandas as pd
@@ -8,13 +8,17 @@ from matplotlib.ticker import FuncFormatter, LogLocator, MaxNLocator, NullLocato
 
 from labkit.analysis.headroom import headroom
 from labkit.analysis.wording import reports
+from labkit.checks import check_member
 from labkit.figures.style import label_ends, looks, plain, styled
 
 BAND = (0.05, 0.95)
+MEASURE_ABOVE = {"mean": "gap", "optimum": "excess"}
 
 
 @styled
-def load_against_tasks(measures: pd.DataFrame, *, risk: float, confidence: float = 0.95) -> Figure:
+def load_against_tasks(
+    measures: pd.DataFrame, *, risk: float, confidence: float = 0.95, above: str = "mean"
+) -> Figure:
     """Draw the gap against the number of tasks, one line a policy and one panel a kind of information.
 
     The line is the median over replicates, the band holds the middle 90 % of them, and the marker above is
@@ -23,9 +27,12 @@ def load_against_tasks(measures: pd.DataFrame, *, risk: float, confidence: float
     Parameters
     ----------
     measures : pandas.DataFrame
-        Rows of ``outcome.measures`` or of records: policy, replicate, tasks, gap and, if there, information.
+        Rows of ``outcome.measures`` or of records: policy, replicate, tasks, gap or excess and, if
+        there, information.
     risk, confidence : float
         As in `labkit.headroom`.
+    above : str
+        "mean" draws the gap; "optimum" the excess, for fleets on which no rule can keep the gap from growing.
 
     Returns
     -------
@@ -36,17 +43,16 @@ def load_against_tasks(measures: pd.DataFrame, *, risk: float, confidence: float
     InputError
         When the table, the risk or the confidence is refused.
     """
-    columns = ["policy", "replicate", "tasks", "gap"]
+    of = MEASURE_ABOVE[check_member("above", above, MEASURE_ABOVE)]
+    columns = ["policy", "replicate", "tasks", of]
     table = measures.reindex(columns=columns).assign(information=measures.get("information", "fresh"))
     last = table[table["tasks"] == table["tasks"].max()]
-    needed = headroom(last, risk=risk, confidence=confidence).set_index(["policy", "information"])
+    needed = headroom(last, risk=risk, confidence=confidence, of=of).set_index(["policy", "information"])
     kinds = sorted(table["information"].unique())
     style = looks(table["policy"])
     figure = Figure(figsize=(4.2 * len(kinds) + 2.6, 4.6), layout="constrained")
     panels = figure.subplots(1, len(kinds), sharey=True, squeeze=False)[0]
-    bands = (
-        table.groupby(["information", "policy", "tasks"])["gap"].quantile(np.array([*BAND, 0.5])).unstack()
-    )
+    bands = table.groupby(["information", "policy", "tasks"])[of].quantile(np.array([*BAND, 0.5])).unstack()
     wide = bands.to_numpy().max() > 5 * bands[0.5].to_numpy().min() and bands.to_numpy().min() > 0
     for axes, kind in zip(panels, kinds, strict=True):
         ends = {}
@@ -57,10 +63,10 @@ def load_against_tasks(measures: pd.DataFrame, *, risk: float, confidence: float
         _axes(axes, bands.loc[kind].index.get_level_values("tasks"), wide)
         axes.set_title(f"load reports {reports(kind)}" if len(kinds) > 1 else "")
         axes.ends = ends
-    panels[0].set_ylabel("gap: highest − mean utilisation (load ÷ capacity)")
+    panels[0].set_ylabel(f"{of}: highest utilisation (load ÷ capacity) − {above}")
     percent = f"{100 * risk:g} %"
     figure.suptitle(
-        f"line: median · band: middle 90 % of replicates · end marker: headroom at {percent} risk, "
+        f"line: median · band: middle 90 % of replicates · end marker: {of} at {percent} risk, "
         f"{100 * confidence:g} % limits",
         fontsize=9,
         x=0.01,

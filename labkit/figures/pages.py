@@ -1,15 +1,20 @@
 """Figures in a notebook, and the files of an answer."""
 
+import json
+import math
 from collections.abc import Mapping
 from io import BytesIO
 from pathlib import Path
+from typing import Any
 
+import numpy as np
 import pandas as pd
 from IPython.display import Image
 from matplotlib.figure import Figure
 
 from labkit.errors import InputError
 from labkit.figures.style import save_figure
+from labkit.survey.facts import Survey
 
 DOTS_PER_INCH = 144
 
@@ -49,13 +54,74 @@ def write_answer_files(
     InputError
         When the folder cannot be written.
     """
+    return _write(folder, {"answer": table}, {"answer.txt": text}, figures)
+
+
+def write_survey_files(
+    folder: Path,
+    best: Survey,
+    lost: pd.DataFrame | None,
+    links: pd.DataFrame | None,
+    text: str,
+    figures: Mapping[str, Figure],
+) -> list[Path]:
+    """Write a survey: its tables as CSV, all of it as survey.json, the text as answer.txt, and the figures.
+
+    Parameters
+    ----------
+    folder : pathlib.Path
+        Made when it is not there.
+    best : Survey
+    lost, links : pandas.DataFrame or None
+        Tables of `labkit.outages` and `labkit.advise_links`; None writes no such table.
+    text : str
+        What the command line prints.
+    figures : dict of str to Figure
+        File name without extension → figure.
+
+    Raises
+    ------
+    InputError
+        When the folder cannot be written.
+    """
+    facts = best.table()
+    tables = {"facts": facts, "profile": best.profile, "split": best.split}
+    tables |= {name: table for name, table in (("outages", lost), ("links", links)) if table is not None}
+    data = {
+        "facts": dict(zip(facts["fact"], facts["value"], strict=True)),
+        "profile": best.profile.to_dict("records"),
+        "outages": None if lost is None else lost.to_dict("records"),
+        "links": None if links is None else links.to_dict("records"),
+    }
+    return _write(folder, tables, {"answer.txt": text, "survey.json": json.dumps(_plain(data))}, figures)
+
+
+def _plain(value: Any) -> Any:
+    """Return a value as JSON knows it: a number that is not finite is null."""
+    if isinstance(value, Mapping):
+        return {str(key): _plain(each) for key, each in value.items()}
+    if isinstance(value, tuple | list):
+        return [_plain(each) for each in value]
+    if isinstance(value, np.generic):
+        value = value.item()
+    return None if isinstance(value, float) and not math.isfinite(value) else value
+
+
+def _write(
+    folder: Path, tables: Mapping[str, pd.DataFrame], texts: Mapping[str, str], figures: Mapping[str, Figure]
+) -> list[Path]:
     try:
         folder.mkdir(parents=True, exist_ok=True)
-        table.to_csv(folder / "answer.csv", index=False, lineterminator="\n")
-        (folder / "answer.txt").write_text(text + "\n", encoding="utf-8", newline="\n")
-        drawn = [path for name, figure in figures.items() for path in save_figure(figure, folder, name)]
+        written = [folder / f"{name}.csv" for name in tables]
+        for path, table in zip(written, tables.values(), strict=True):
+            table.to_csv(path, index=False, lineterminator="\n")
+        for name, text in texts.items():
+            (folder / name).write_text(text + "\n", encoding="utf-8", newline="\n")
+            written.append(folder / name)
+        for name, figure in figures.items():
+            written += save_figure(figure, folder, name)
     except OSError as error:
         raise InputError(
             f"output {folder} cannot be written ({error.strerror}); name another folder."
         ) from None
-    return [folder / "answer.csv", folder / "answer.txt", *drawn]
+    return written

@@ -16,6 +16,7 @@ import labkit as lk
 from labkit.analysis.answer import answer_table
 from labkit.errors import InputError
 from labkit.figures.choice_graph import choice_graph
+from labkit.figures.fair_levels import fair_levels
 from labkit.figures.headroom_per_policy import headroom_per_policy
 from labkit.figures.layout import is_ring_in_order, positions
 from labkit.figures.load_against_tasks import load_against_tasks
@@ -54,6 +55,17 @@ def everything(records, table):
         "load": load_against_tasks(records, risk=0.02),
         "headroom": headroom_per_policy(table, baseline="one-choice"),
         "graph": choice_graph(fleet, np.linspace(0.5, 0.9, len(fleet)), title="a ring"),
+        "load above the optimum": load_against_tasks(records, risk=0.02, above="optimum"),
+        "excess": headroom_per_policy(table, baseline="one-choice", above="optimum"),
+        "levels": fair_levels(lk.survey(fleet).profile),
+        "marked graph": choice_graph(
+            fleet,
+            lk.survey(fleet).profile["fair_utilisation"].to_numpy(),
+            title="bottleneck and links",
+            measure="fair utilisation (load ÷ capacity)",
+            ringed=lk.survey(fleet).bottleneck,
+            links=[("site 2", "site 9")],
+        ),
     }
 
 
