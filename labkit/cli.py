@@ -127,6 +127,25 @@ def _parser() -> argparse.ArgumentParser:
     answer.add_argument("--name", metavar="NAME", help="name of the study (the name of the folder)")
     executing(answer)
 
+    survey = command(
+        "survey", _survey, "Survey a fleet: the best any rule could do, outages, links that would help."
+    )
+    survey.add_argument(
+        "folder", metavar="FOLDER", type=Path, help="holds servers.csv and choices.csv (or .parquet)"
+    )
+    survey.add_argument("--links", metavar="N", type=_whole, help="links to advise; 0: none (3)")
+    survey.add_argument(
+        "--distance", metavar="D", type=_whole, help="links between servers at most D choices apart (2)"
+    )
+    survey.add_argument(
+        "--outages",
+        metavar="N",
+        type=_whole,
+        help="losses to work out, fullest servers first; 0: none (1000)",
+    )
+    survey.add_argument("--name", metavar="NAME", help="name of the fleet (the name of the folder)")
+    survey.add_argument("--output", metavar="DIR", type=Path, help="folder of the answers (results/answers)")
+
     listing = command("list", _list, "List the recorded runs.")
     listing.add_argument("study", metavar="STUDY", nargs="?", help="only the runs of this study")
 
@@ -170,6 +189,23 @@ def _answer(arguments: argparse.Namespace) -> int:
     return _run_and_answer(study, arguments, note)
 
 
+def _survey(arguments: argparse.Namespace) -> int:
+    from labkit.records.project import ANSWERS
+    from labkit.studies.surveying import survey_folder
+
+    output = arguments.output.absolute() if arguments.output else ANSWERS
+    asked = {name: getattr(arguments, name) for name in ("name", "links", "distance", "outages")}
+    done = survey_folder(arguments.folder, _store(arguments), output, say=_say, **asked)
+    if done.answer.error:
+        _say(done.answer.error.splitlines()[0])
+        return 2 if done.answer.refused else 1
+    if arguments.json:
+        _print_json({"run": done.run_id, "record": done.record, "page": done.answer.page, **done.data})
+    else:
+        print(f"{done.text}\npage: {done.answer.page}\nrecord: {done.record}")
+    return 0
+
+
 def _run_and_answer(study: "Study", arguments: argparse.Namespace, note: str = "") -> int:
     from labkit.records.project import ANSWERS
     from labkit.records.store import check_writable
@@ -181,7 +217,7 @@ def _run_and_answer(study: "Study", arguments: argparse.Namespace, note: str = "
     groups = groups_of(study) if study.answer_notebook is not None else []
     for group in groups:
         check_writable("output", output / group.folder)
-    report = _run_points(study, store, arguments.jobs, note)
+    report = _run_points(study, store, arguments.jobs, output, note)
     for trouble in report.troubles:
         where = f" (see {trouble.evidence})" if trouble.evidence else ""
         first = (trouble.error.splitlines() or ["no message"])[0]
@@ -229,7 +265,7 @@ def _run_and_answer(study: "Study", arguments: argparse.Namespace, note: str = "
     return status
 
 
-def _run_points(study: "Study", store: "Store", jobs: int | None, note: str) -> "Report":
+def _run_points(study: "Study", store: "Store", jobs: int | None, output: Path, note: str) -> "Report":
     """Run the points behind a progress bar, which appears when nothing has been refused."""
     from labkit.studies.running import run_points
 
@@ -248,7 +284,7 @@ def _run_points(study: "Study", store: "Store", jobs: int | None, note: str) -> 
                 )
             bar.update(done - bar.n)
 
-        return run_points(study, store, jobs=jobs, tick=tick, say=_say)
+        return run_points(study, store, jobs=jobs, output=output, tick=tick, say=_say)
 
 
 def _list(arguments: argparse.Namespace) -> int:

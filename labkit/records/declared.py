@@ -19,7 +19,7 @@ from labkit.errors import InputError
 from labkit.records.project import from_root, notebook_text
 
 # What a run does with its time and place, but not with its results.
-EXECUTION_ONLY = frozenset({"study", "store", "workers"})
+EXECUTION_ONLY = frozenset({"study", "store", "workers", "output"})
 
 _KINDS = {
     "int": ("a whole number", (int,)),

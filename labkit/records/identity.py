@@ -53,7 +53,7 @@ def identify(notebook: Notebook, values: dict[str, Any]) -> Identity:
     Parameters
     ----------
     notebook : Notebook
-        The saved notebook; it must declare ``entropy``.
+        The saved notebook; one that declares no ``entropy`` has nothing random in it.
     values : dict
         A checked value for each declared parameter.
 
@@ -63,11 +63,7 @@ def identify(notebook: Notebook, values: dict[str, Any]) -> Identity:
         `run_id` has 16 hex digits. `key` is 32 bits wide, one word of a spawn key: NumPy mixes a spawn key
         word by word, so a wider number would pass as two and could meet a spawn key of another depth.
     """
-    if "entropy" not in notebook.parameters:
-        raise InputError(
-            f"notebook {notebook.name} declares no parameter entropy; add entropy: int = 1 to it."
-        )
-    entropy = check_entropy(values["entropy"])
+    entropy = check_entropy(values["entropy"]) if "entropy" in notebook.parameters else 0
     parameters = {name: value for name, value in values.items() if name not in EXECUTION_ONLY}
     inputs = {
         name: content_digest(from_root(value))

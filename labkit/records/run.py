@@ -15,7 +15,7 @@ from labkit.checks import nearest
 from labkit.errors import InputError
 from labkit.records.declared import Notebook, is_path, read_notebook
 from labkit.records.identity import Identity, canonical, identify
-from labkit.records.project import check_study_name, find_notebook, from_root, path_text
+from labkit.records.project import ANSWERS, check_study_name, find_notebook, from_root, path_text
 from labkit.records.session import check_session, executed_cells, injected_names
 from labkit.records.store import Store, open_store
 
@@ -64,6 +64,12 @@ class Run:
             paths = [each for each in self.parameters if is_path(each)]
             raise InputError(f"path {name!r} is no path parameter of this notebook; {nearest(name, paths)}.")
         return from_root(self.parameters[name])
+
+    @property
+    def output(self) -> Path:
+        """Folder for what the notebook writes besides its record, from its parameter `output`."""
+        given = self.parameters.get("output", "")
+        return from_root(given) if given else ANSWERS / self.study
 
     def record(self, measures: Any) -> Path:
         """Write the measures as the record of this run and return its file.

@@ -6,13 +6,14 @@ import json
 import os
 import shutil
 import tempfile
+from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 from threading import Thread
 from typing import Any
 
 from labkit.records.store import Store, unwritable
-from labkit.studies.execution import execute
+from labkit.studies.execution import Execution, execute
 from labkit.studies.grouping import Group
 from labkit.studies.model import Study
 from labkit.studies.page import write_page
@@ -54,22 +55,54 @@ def write_answer(study: Study, group: Group, store: Store, output: Path) -> Answ
     StoreError
         When `output` cannot be written.
     """
-    page = output / f"{study.name}.html"
     origin = _origin(study, group, store)
-    if _is_made(output, origin):
+    page = output / f"{study.name}.html"
+    if is_made(output, origin):
         return Answer(_answer_text(output), page)
+    return publish(
+        study.name, origin, study.question, output, lambda aside: _execute(study, group, store, aside)
+    )
+
+
+def publish(
+    name: str,
+    origin: dict[str, Any],
+    question: str,
+    output: Path,
+    make: Callable[[Path], tuple[Path, Execution]],
+) -> Answer:
+    """Make a page from an executed notebook in a folder aside; move all of it into `output` when complete.
+
+    Parameters
+    ----------
+    name : str
+        File name of the page without extension.
+    origin : dict
+        From what it is made, with the `title`; written beside the page.
+    question : str
+        Stands under the title.
+    output : Path
+    make : callable
+        Executes the notebook in the given folder; returns the executed notebook and how it went.
+
+    Raises
+    ------
+    StoreError
+        When `output` cannot be written.
+    """
+    page = output / f"{name}.html"
     try:
         output.parent.mkdir(parents=True, exist_ok=True)
-        aside = Path(tempfile.mkdtemp(prefix=f".{study.name}-", dir=output.parent))
+        aside = Path(tempfile.mkdtemp(prefix=f".{name}-", dir=output.parent))
     except OSError as error:
         raise unwritable("output", output, error) from None
     try:
-        executed, result = _execute(study, group, store, aside)
+        executed, result = make(aside)
         if result.refused or not executed.exists():
             return Answer("", None, result.error, result.refused)
-        write_page(executed, executed.with_suffix(".html"), origin["title"], study.question)
+        write_page(executed, executed.with_suffix(".html"), origin["title"], question)
         if not result.error:
-            files = {made.name: _digest(made) for made in sorted(aside.iterdir())}
+            files = {made.name: file_digest(made) for made in sorted(aside.iterdir())}
             (aside / MADE_FROM).write_text(json.dumps({**origin, "files": files}, indent=1), encoding="utf-8")
         text = _answer_text(aside)
         output.mkdir(exist_ok=True)
@@ -83,7 +116,7 @@ def write_answer(study: Study, group: Group, store: Store, output: Path) -> Answ
         shutil.rmtree(aside, ignore_errors=True)
 
 
-def _execute(study: Study, group: Group, store: Store, aside: Path) -> tuple[Path, Any]:
+def _execute(study: Study, group: Group, store: Store, aside: Path) -> tuple[Path, Execution]:
     assert study.answer_notebook is not None
     executed = aside / f"{study.name}.ipynb"
     handed = {
@@ -92,11 +125,17 @@ def _execute(study: Study, group: Group, store: Store, aside: Path) -> tuple[Pat
         "output": str(aside),
         "runs": [point.run_id for point in group.points],
     }
+    result = execute_for_page(study.answer_notebook.path, (study.answer_parameters or {}) | handed, executed)
+    return executed, result
+
+
+def execute_for_page(notebook: Path, parameters: dict[str, Any], executed: Path) -> Execution:
+    """Execute a notebook, and load meanwhile what is needed to make a page of it."""
     converter = Thread(target=_load_converter, daemon=True)
     converter.start()
-    result = execute(study.answer_notebook.path, (study.answer_parameters or {}) | handed, executed)
+    result = execute(notebook, parameters, executed)
     converter.join()
-    return executed, result
+    return result
 
 
 def _load_converter() -> None:
@@ -114,23 +153,25 @@ def _origin(study: Study, group: Group, store: Store) -> dict[str, Any]:
         "title": f"{study.title}: {group.heading}" if group.heading else study.title,
         "question": study.question,
         "notebook": study.answer_notebook.name,
-        "notebook_file": _digest(study.answer_notebook.path),
+        "notebook_file": file_digest(study.answer_notebook.path),
         "parameters": study.answer_parameters,
         "records": [record.name for record in records if record is not None],
         "labkit_sources": sources_digest(),
     }
 
 
-def _is_made(output: Path, origin: dict[str, Any]) -> bool:
+def is_made(output: Path, origin: dict[str, Any]) -> bool:
+    """Tell whether `output` holds a page made from just this."""
     try:
         made = json.loads((output / MADE_FROM).read_bytes())
         files = made.pop("files")
-        return made == origin and all(_digest(output / name) == digest for name, digest in files.items())
+        return made == origin and all(file_digest(output / name) == digest for name, digest in files.items())
     except (OSError, ValueError, KeyError, AttributeError):
         return False
 
 
-def _digest(path: Path) -> str:
+def file_digest(path: Path) -> str:
+    """Return the SHA-256 of a file."""
     with path.open("rb") as stream:
         return hashlib.file_digest(stream, "sha256").hexdigest()
 

@@ -17,10 +17,13 @@ from labkit.records.project import from_root
 if TYPE_CHECKING:
     from labkit.studies.model import Point, Study
 
-RUN, ANSWER = "headroom", "headroom_answer"
+RUN, ANSWER, SURVEY = "headroom", "headroom_answer", "survey"
 
 # The least whole number that each of these parameters can be.
-LEAST = {"tasks": 1, "checkpoints": 1, "replicates": 1, "report_every": 0}
+LEAST = {
+    RUN: {"tasks": 1, "checkpoints": 1, "replicates": 1, "report_every": 0},
+    SURVEY: {"outages": 0, "links": 0, "distance": 2},
+}
 
 LEAST_RISK = 1e-15
 
@@ -30,9 +33,9 @@ _MEASURES = 10
 
 def check_values(notebook: Notebook, values: dict[str, Any]) -> None:
     """Refuse numbers that the notebook could not take, from what they are alone."""
-    if notebook.name == RUN:
-        for name in LEAST.keys() & values.keys():
-            check_whole(name, values[name], least=LEAST[name])
+    least = LEAST.get(notebook.name, {})
+    for name in least.keys() & values.keys():
+        check_whole(name, values[name], least=least[name])
     if notebook.name == ANSWER and values.get("max_headroom") is not None:
         allowed = check_number("max_headroom", values["max_headroom"])
         if allowed < 0:

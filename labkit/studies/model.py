@@ -110,7 +110,7 @@ def make_study(name: str, content: dict[str, Any], *, folder: Path) -> Study:
     question = _text(content, "question", default="")
     notebook = _notebook(_text(content, "notebook"), folder)
     for key in ("replicates", "entropy"):
-        if key not in content:
+        if key not in content and key in notebook.parameters:
             raise InputError(f"{key} is missing; give {key} = a whole number at the top of the file.")
     fixed = dict(_table(content, "parameters"))
     grid = {key: _grid_values(key, values) for key, values in _table(content, "grid").items()}
@@ -119,8 +119,10 @@ def make_study(name: str, content: dict[str, Any], *, folder: Path) -> Study:
             raise InputError(f"parameter {key} is set by labkit itself; remove it from the study.")
         if key in ("replicates", "entropy") or (key in fixed and key in grid):
             raise InputError(f"{key} is given twice; give it once, replicates and entropy at the top.")
-    fixed["replicates"] = check_whole("replicates", content["replicates"])
-    fixed["entropy"] = check_entropy(content["entropy"])
+    if "replicates" in content:
+        fixed["replicates"] = check_whole("replicates", content["replicates"])
+    if "entropy" in content:
+        fixed["entropy"] = check_entropy(content["entropy"])
     fixed = _typed(notebook, fixed, folder)
     grid = {
         key: [_typed(notebook, {key: value}, folder)[key] for value in values] for key, values in grid.items()
@@ -142,7 +144,7 @@ def make_study(name: str, content: dict[str, Any], *, folder: Path) -> Study:
             raise InputError(f"answer: notebook {answer_notebook.name} declares no parameter {key}; add it.")
     answer = _typed(answer_notebook, answer, folder)
     check_values(answer_notebook, answer)
-    _check_answerable(answer_notebook.checked(answer), fixed["replicates"])
+    _check_answerable(answer_notebook.checked(answer), fixed.get("replicates"))
     return Study(name, title, question, notebook, fixed, grid, answer_notebook, answer, mixes)
 
 
@@ -156,9 +158,9 @@ def _mixes(names: Any, grid: dict[str, Any]) -> tuple[str, ...]:
     return tuple(names)
 
 
-def _check_answerable(answer: dict[str, Any], replicates: int) -> None:
+def _check_answerable(answer: dict[str, Any], replicates: int | None) -> None:
     """Refuse before any run a risk that these replicates could not answer after it."""
-    if "risk" not in answer:
+    if "risk" not in answer or replicates is None:
         return
     risk = check_risk(answer["risk"])
     confidence = check_fraction("confidence", answer.get("confidence", 0.95))

@@ -89,11 +89,16 @@ def study_of_fleet(
     }
     if report_every is not None:
         content["grid"] = {"report_every": report_every}
-    if name is None:
-        name = re.sub(r"[^A-Za-z0-9_.-]+", "-", place.name).strip("-._") or "fleet"
-        if len(name) > 64:
-            raise InputError(f"folder {place.name!r} is too long a name for a study; give --name NAME.")
-    return make_study(name, content, folder=place.parent), note
+    return make_study(name_of_folder(folder) if name is None else name, content, folder=place.parent), note
+
+
+def name_of_folder(folder: Path) -> str:
+    """Return the name of a folder as the name of a study."""
+    own = folder.resolve().name
+    name = re.sub(r"[^A-Za-z0-9_.-]+", "-", own).strip("-._") or "fleet"
+    if len(name) > 64:
+        raise InputError(f"folder {own!r} is too long a name for a study; give --name NAME.")
+    return name
 
 
 def default_tasks(fleet: Fleet) -> tuple[int, str]:

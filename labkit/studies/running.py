@@ -14,6 +14,7 @@ from labkit.checks import check_whole
 from labkit.errors import InputError
 from labkit.records.declared import EXECUTION_ONLY
 from labkit.records.identity import library_version
+from labkit.records.project import ANSWERS
 from labkit.records.store import Store
 from labkit.studies.door import check_answer, check_points
 from labkit.studies.grouping import groups_of
@@ -58,6 +59,7 @@ def run_points(
     store: Store,
     *,
     jobs: int | None = None,
+    output: Path | None = None,
     tick: Callable[[int], None] = lambda done: None,
     say: Callable[[str], None] = lambda sentence: None,
 ) -> Report:
@@ -73,6 +75,9 @@ def run_points(
         Where its records are and go.
     jobs : int, optional
         Kernels at the same time; default one a core. Results do not depend on it.
+    output : Path, optional
+        Folder for what run notebooks write besides their records, each in a folder of its run's id; default
+        results/answers/<study>.
     tick : callable
         Called with the number of points that are done, at the start and after each.
     say : callable
@@ -107,7 +112,8 @@ def run_points(
     if pending:
         jobs = min(jobs, len(pending))
         with tempfile.TemporaryDirectory(prefix="labkit-") as scratch:
-            work = _Work(study, store, Path(scratch), threads=max(1, cores() // jobs))
+            threads = max(1, cores() // jobs)
+            work = _Work(study, store, Path(scratch), threads, output or ANSWERS / study.name)
             _run_pending(work, pending, jobs, report, tick)
     return report
 
@@ -118,6 +124,7 @@ class _Work:
     store: Store
     scratch: Path
     threads: int
+    output: Path
     interrupted: Event = field(default_factory=Event)
 
     def run(self, point: Point) -> Trouble | None:
@@ -125,7 +132,12 @@ class _Work:
         from labkit.studies.execution import Execution, execute
 
         executed = self.scratch / f"{point.run_id}.ipynb"
-        handed = {"study": self.study.name, "store": str(self.store.folder), "workers": self.threads}
+        handed = {
+            "study": self.study.name,
+            "store": str(self.store.folder),
+            "workers": self.threads,
+            "output": str(self.output / point.run_id),
+        }
         known = {name: value for name, value in handed.items() if name in self.study.notebook.parameters}
         values = {name: point.parameters[name] for name in self.study.grid}
         result = execute(self.study.notebook.path, point.parameters | known, executed)
