@@ -143,12 +143,12 @@ def stationary_gap(fleet, rule, rounds, start=None, replicates=4, rng=11):
 @pytest.mark.parametrize(("size", "least", "share"), [(1024, 26.9, 0.52), (4096, 54, 0.37)])
 def test_the_gap_on_long_rings(size, least, share):
     # Mean stationary gaps of least-loaded on these rings, 26.9 and about 54, from an independent program.
-    # Ours are 12.2 and 16.9 (0.45 and 0.31 of those), standard error 0.3 in such a run.
+    # Ours are 12.2 and 16.9 (0.45 and 0.31 of those), standard error about 0.5 in such a run.
     fleet = lk.ring(size)
-    flat, _ = stationary_gap(fleet, "smooth-feedback", 20_000)
+    flat, _ = stationary_gap(fleet, "smooth-feedback", 16_000, replicates=2)
     # Shown stationary: a start with a slow wave brackets the gap from above, and ends nearly at the same.
     wave = np.round(4 * (1 + np.cos(2 * np.pi * np.arange(size) / size)))
-    tall, _ = stationary_gap(fleet, "smooth-feedback", 20_000, start=wave)
+    tall, _ = stationary_gap(fleet, "smooth-feedback", 16_000, start=wave, replicates=2)
     assert abs(flat - tall) < 0.12 * flat
     assert max(flat, tall) < share * least
 
