@@ -10,6 +10,8 @@ from matplotlib.axes import Axes
 from matplotlib.collections import LineCollection
 from matplotlib.figure import Figure
 from matplotlib.font_manager import FontProperties
+from matplotlib.patches import PathPatch
+from matplotlib.path import Path as MplPath
 from matplotlib.textpath import TextPath
 from scipy.spatial import KDTree
 
@@ -42,8 +44,9 @@ def choice_graph(
 ) -> Figure:
     """Draw the choice graph, servers coloured by utilisation.
 
-    Areas of the dots are proportional to capacity, widths of the lines to demand; the fullest servers are
-    named. Of a fleet with more than 2,000 servers the 300 nearest to the fullest one are drawn.
+    Areas of the dots are proportional to capacity, widths of the lines to demand; the fullest servers, or
+    the ends of the first links, are named. Of a fleet with more than 2,000 servers the 300 nearest to the
+    fullest one are drawn.
 
     Parameters
     ----------
@@ -97,7 +100,8 @@ def choice_graph(
         words += f" · the {len(kept)} servers nearest to the fullest of {fleet.size:,}"
     if len(kept) > CIRCLE_AT_MOST and is_ring_in_order(len(kept), pairs):
         words += " · the ring is drawn as a wave to make room"
-    sheet = _sheet(places, values, names, max(_width(title, TITLE, "bold"), _width(words)))
+    named = np.argsort(-values, kind="stable")[:NAMED] if not len(dashed) else _first(dashed.ravel())
+    sheet = _sheet(places, values, names, named, max(_width(title, TITLE, "bold"), _width(words)))
     figure = Figure(figsize=sheet.size)
     width, height = sheet.size
     low_x, high_x, low_y, high_y = sheet.panel
@@ -123,12 +127,7 @@ def choice_graph(
         zorder=3,
     )
     _rings(axes, sheet.places[around], diameter**2 * (capacity / capacity.mean())[around])
-    axes.add_collection(
-        LineCollection(
-            list(sheet.places[dashed]), linewidths=1.8, colors=MARK, linestyles=(0, (4, 2)), zorder=2
-        ),
-        autolim=False,
-    )
+    _links(axes, sheet.places, dashed, diameter)
     for label in sheet.labels:
         label.draw(axes, sheet.places)
     tall = min(high_y - low_y, 3.4)
@@ -166,6 +165,20 @@ def _checked(fleet: Fleet, utilisation: Any) -> np.ndarray:
             "give a finite number for each server."
         )
     return values
+
+
+def _links(axes: Axes, places: np.ndarray, links: np.ndarray, diameter: float) -> None:
+    """Draw links as dashed arcs that bulge away from the middle, clear of the choices beside them."""
+    middle = places.mean(axis=0)
+    for one, other in places[links]:
+        half = (one + other) / 2
+        outward = half - middle
+        outward = outward / np.hypot(*outward) if np.hypot(*outward) > 1e-9 else np.array([0.0, 1.0])
+        bulge = max(0.3 * np.hypot(*(other - one)), 2.5 * diameter / 72)
+        curve = [MplPath.MOVETO, MplPath.CURVE3, MplPath.CURVE3]
+        arc = PathPatch(MplPath([one, half + 2 * bulge * outward, other], curve), clip_on=False, zorder=2)
+        arc.set(facecolor="none", edgecolor=MARK, linewidth=2.0, linestyle=(0, (4, 2)))
+        axes.add_patch(arc)
 
 
 def _rings(axes: Axes, places: np.ndarray, areas: np.ndarray) -> None:
@@ -259,25 +272,31 @@ class _Sheet:
     size: tuple[float, float]
 
 
-def _sheet(places: np.ndarray, values: np.ndarray, names: np.ndarray, words: float) -> _Sheet:
-    """Scale the drawing to its number of servers and make room for the names of the fullest beside it."""
+def _first(servers: np.ndarray) -> np.ndarray:
+    """Return the first few different servers, in order."""
+    return np.array(list(dict.fromkeys(servers.tolist()))[: NAMED + 1], np.int64)
+
+
+def _sheet(
+    places: np.ndarray, values: np.ndarray, names: np.ndarray, named: np.ndarray, words: float
+) -> _Sheet:
+    """Scale the drawing to its number of servers and make room for some of their names beside it."""
     places = places - places.min(axis=0)
     extent = places.max(axis=0)
     longest = min(LARGEST, 1.4 + 0.45 * len(places) ** 0.5)
     places = places * (longest / max(extent.max(), 1e-12))
     low, high = np.zeros(2), places.max(axis=0)
-    fullest = np.argsort(-values, kind="stable")[:NAMED]
     write = writer(values.max())
     labels = []
-    right = places[fullest, 0] >= high[0] / 2
+    right = places[named, 0] >= high[0] / 2
     for side in (1, -1):
-        mine = fullest[right == (side > 0)]
+        mine = named[right == (side > 0)]
         x = high[0] + AWAY if side > 0 else -AWAY
         for at, y in zip(mine, spread(places[mine, 1], LINE), strict=True):
             labels.append(
                 _Label(int(at), f"{_short(str(names[at]))}: {write(values[at])}", x, float(y), side)
             )
-    labels.sort(key=lambda label: fullest.tolist().index(label.at))
+    labels.sort(key=lambda label: named.tolist().index(label.at))
     ends = [label.x + label.side * _width(label.words) for label in labels]
     heights = [label.y for label in labels]
     low_x, high_x = min(low[0] - DOT, *ends), max(high[0] + DOT, *ends)
