@@ -102,7 +102,8 @@ def test_unequal_fleets_cost_little_more(columns, words, report):
     servers, choices = fleet.servers, fleet.choices
     (servers if columns == "capacity" else choices)[columns] = uneven
     other = lk.Fleet(servers, choices)
-    for policy, fewer in (("least-loaded", fleet), ("one-choice", other), ("mixed(beta=0.5)", other)):
+    rules = ("one-choice", "mixed(beta=0.5)", "static-split")
+    for policy, fewer in (("least-loaded", fleet), *((rule, other) for rule in rules)):
         found = ratio(
             lambda policy=policy: lk.place(other, policy, tasks=tasks, rng=1),
             lambda fewer=fewer: lk.place(fewer, "least-loaded", tasks=tasks, rng=1),
@@ -110,6 +111,16 @@ def test_unequal_fleets_cost_little_more(columns, words, report):
         than = "equal ones" if fewer is fleet else "the same"
         report(f"{policy}, ring of 1024 with {words}: {found:.2f} x least-loaded on {than}")
         assert found <= 3
+
+
+def test_smooth_feedback_costs_at_most_four_times_least_loaded(report):
+    fleet, tasks = lk.ring(1_024), 20_000_000
+    found = ratio(
+        lambda: lk.place(fleet, "smooth-feedback", tasks=tasks, rng=1),
+        lambda: lk.place(fleet, "least-loaded", tasks=tasks, rng=1),
+    )
+    report(f"smooth-feedback, ring of 1024: {found:.2f} x the time of least-loaded, renewals included")
+    assert found <= 4
 
 
 def test_two_threads_share_replicates(report):
