@@ -1,5 +1,6 @@
 """What the survey means for an answer, in words."""
 
+import re
 from collections.abc import Sequence
 from typing import Any
 
@@ -32,6 +33,11 @@ def balance_in_words(best: Survey, work: float) -> str:
         f"least {write(optimum)} full, {write(optimum - mean)} above the mean of {write(mean)}, since that "
         "much demand can go nowhere else. A rule controls only the excess over this optimum."
     )
+
+
+def as_markdown(words: str) -> str:
+    """Return words so that Markdown shows every sign in them as it is."""
+    return re.sub(r"([\\`*_{}\[\]<>()#+.!|~$&-])", r"\\\1", words)
 
 
 def in_words(servers: Sequence[Any]) -> str:

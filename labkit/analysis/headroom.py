@@ -32,7 +32,8 @@ def headroom(
         the labels: `policy`, `information`, `server` (in ``outcome.by_server``: what each server needs for
         itself), any other column of text and any named index level.
     risk : float
-        The accepted probability, in (0, 1), that the fullest server goes beyond the headroom.
+        The accepted probability, in (0, 1), that the fullest server goes beyond the headroom; with rows of
+        ``outcome.by_server``, that this one server does: that some server does is far more likely then.
     confidence : float
         Least coverage of the limits, in (0, 1).
     of : str

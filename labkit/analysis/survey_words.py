@@ -9,6 +9,7 @@ import pandas as pd
 
 from labkit.analysis.balance import in_words
 from labkit.analysis.wording import percent, quantity, utilisation, writer
+from labkit.fleet.model import Fleet
 from labkit.survey.facts import Survey
 
 # Facts that come out of linear algebra, whose last digits differ between processors; a record keeps these.
@@ -48,12 +49,23 @@ def outages_in_words(lost: pd.DataFrame, best: Survey) -> str:
     write = writer(abs(worst["extra_headroom"]), worst["optimum"])
     what = "pair" if "second" in lost else "server"
     who = f"{worst['server']} and {worst['second']}" if what == "pair" else str(worst["server"])
+    equal = int((lost["optimum"] >= worst["optimum"] * (1 - 1e-9)).sum())
+    costs = f"{equal:,} losses cost most, that of {who} among them"
+    if equal == 1:
+        costs = f"The {what} whose loss costs most is {who}"
     sentences = [
-        f"The {what} whose loss costs most is {who}: the optimum rises from {write(best.optimum)} to "
+        f"{costs}: the optimum rises from {write(best.optimum)} to "
         f"{write(worst['optimum'])}, {_times(worst['optimum'] / best.optimum)} what it was."
     ]
     harmless = int((lost["extra_headroom"] <= 1e-9 * best.optimum).sum())
-    sentences.append(f"{harmless:,} of the {len(lost):,} losses do not raise the optimum.")
+    verb = "does" if harmless == 1 else "do"
+    kept = (
+        f"{harmless:,} of the {len(lost):,} losses {verb} not raise it"
+        if harmless
+        else "every loss raises it"
+    )
+    shown = f"; the table shows the worst {SHOWN}, outages.csv all" if len(lost) > SHOWN else ""
+    sentences.append(f"{kept[0].upper()}{kept[1:]}{shown}.")
     stranded = lost[lost["unplaced"] > 0]
     if len(stranded):
         most = stranded["unplaced"].max()
@@ -63,10 +75,11 @@ def outages_in_words(lost: pd.DataFrame, best: Survey) -> str:
     return " ".join(sentences)
 
 
-def links_in_words(links: pd.DataFrame, best: Survey) -> str:
-    """Return what the advised links achieve (the table of `labkit.advise_links`)."""
+def links_in_words(links: pd.DataFrame, best: Survey, distance: int) -> str:
+    """Return what the advised links achieve (the table of `labkit.advise_links` at this distance)."""
     if not len(links):
-        return "No link among those considered lowers the optimum."
+        apart = f"No link between servers at most {distance} choices apart lowers the optimum"
+        return f"{apart}; other pairs can be given to lk.advise_links as candidates."
     last = links.iloc[-1]
     count = f"{len(links)} links" if len(links) > 1 else "link"
     if last["optimum"] < best.optimum * (1 - 1e-9):
@@ -110,6 +123,69 @@ def outage_rows(lost: pd.DataFrame, most: int = SHOWN) -> pd.DataFrame:
     return pd.DataFrame(rows).set_index("lost") if rows else pd.DataFrame()
 
 
+def fullest_rows(best: Survey, most: int = SHOWN) -> pd.DataFrame:
+    """Return the servers with the highest fair utilisation as text, for a page."""
+    rows = best.profile.sort_values("fair_utilisation", ascending=False, kind="stable").head(most)
+    write = writer(best.optimum)
+    found = {
+        "capacity": rows["capacity"].map(quantity),
+        "fair load": rows["fair_load"].map(quantity),
+        "fair utilisation": rows["fair_utilisation"].map(write),
+        "level": rows["level"].astype(str),
+        "bottleneck": rows["bottleneck"].map({True: "yes", False: "no"}),
+    }
+    named = pd.Index(rows["server"].astype(str), name="fullest servers")
+    return pd.DataFrame(found).set_index(named)
+
+
+def rerouted_table(fleet: Fleet, links: pd.DataFrame) -> pd.DataFrame:
+    """Return which choices the advised links take their demand from, one row a link and choice.
+
+    Parameters
+    ----------
+    fleet : Fleet
+        The fleet without the links.
+    links : pandas.DataFrame
+        The table of `labkit.advise_links`.
+
+    Returns
+    -------
+    pandas.DataFrame
+        step, link_1 and link_2 (the ends of the link), option_1, option_2, ... (the choice that the demand
+        comes from; it may be an earlier link), amount in work units.
+    """
+    choices = fleet.choices.drop(columns="demand")
+    rows = []
+    for row in links.to_dict("records"):
+        for place, amount in row["taken_from"]:
+            if place < len(choices):
+                options = choices.iloc[place].to_dict()
+            else:
+                earlier = links.iloc[place - len(choices)]
+                options = {name: earlier[name] for name in ("option_1", "option_2")}
+            ends = {"step": row["step"], "link_1": row["option_1"], "link_2": row["option_2"]}
+            rows.append({**ends, **options, "amount": amount})
+    order = ["step", "link_1", "link_2", *choices.columns, "amount"]
+    return pd.DataFrame(rows).reindex(columns=order)
+
+
+def rerouted_rows(fleet: Fleet, links: pd.DataFrame, most: int = 2 * SHOWN) -> pd.DataFrame:
+    """Return the largest amounts to re-route as text, for a page."""
+    table = rerouted_table(fleet, links)
+    table = table.sort_values(["step", "amount"], ascending=[True, False], kind="stable").head(most)
+    options = [name for name in table if str(name).startswith("option_")]
+    rows = [
+        {
+            "step": row["step"],
+            "move to": f"{row['link_1']} – {row['link_2']}",
+            "demand": quantity(row["amount"]),
+            "of choice": " – ".join(str(row[name]) for name in options if row[name] == row[name]),
+        }
+        for row in table.astype(object).to_dict("records")
+    ]
+    return pd.DataFrame(rows).set_index("step")
+
+
 def link_rows(links: pd.DataFrame) -> pd.DataFrame:
     """Return the advised links as text, for a page."""
     rows = []
@@ -138,6 +214,7 @@ def survey_text(
     links: pd.DataFrame | None,
     *,
     run: str,
+    distance: int,
     notes: Sequence[str] = (),
 ) -> str:
     """Return what the command line prints.
@@ -149,16 +226,19 @@ def survey_text(
         Tables of `labkit.outages` and `labkit.advise_links`; None leaves the part out.
     run : str
         Id of the run.
+    distance : int
+        What `links` were limited to.
     notes : sequence of str
         What was left out, and why.
     """
     parts = [textwrap.fill(best_in_words(best), 110), _aligned(fact_rows(best)[["value"]])]
+    parts.append(_aligned(fullest_rows(best)))
     if lost is not None and len(lost):
         parts += [textwrap.fill(outages_in_words(lost, best), 110), _aligned(outage_rows(lost))]
     if links is not None:
-        parts.append(textwrap.fill(links_in_words(links, best), 110))
+        parts.append(textwrap.fill(links_in_words(links, best, distance), 110))
         if len(links):
-            parts.append(_aligned(link_rows(links)))
+            parts += [_aligned(link_rows(links)), _aligned(rerouted_rows(best.fleet, links))]
     parts += [f"note: {note}" for note in notes]
     parts.append(f"run: {run} (labkit rerun RUN repeats it to the bit)")
     return "\n\n".join(parts)

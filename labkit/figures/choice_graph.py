@@ -45,8 +45,8 @@ def choice_graph(
     """Draw the choice graph, servers coloured by utilisation.
 
     Areas of the dots are proportional to capacity, widths of the lines to demand; the fullest servers, or
-    the ends of the first links, are named. Of a fleet with more than 2,000 servers the 300 nearest to the
-    fullest one are drawn.
+    the ends of the first links, are named. Of a fleet with more than 2,000 servers 300 are drawn: ends of
+    links, ringed ones, and the nearest to them and to the fullest.
 
     Parameters
     ----------
@@ -79,13 +79,16 @@ def choice_graph(
     capacity = np.ones(fleet.size) if fleet.capacity is None else np.asarray(fleet.capacity)
     names = np.asarray(fleet.names, dtype=object)
     around = positions_of(fleet, list(ringed), "ringed")
+    in_all = len(around)
     dashed = positions_of(fleet, [end for link in links for end in link], "links").reshape(-1, 2)
     low, high, mean = values.min(), values.max(), float(values @ capacity / capacity.sum())
     if high - low <= 1e-6 * abs(high):  # all equally full: a middle shade
         low, high = low - 0.1 * (abs(low) or 1.0), high + 0.1 * (abs(high) or 1.0)
     kept = np.arange(fleet.size)
     if fleet.size > DRAWN_AT_MOST:
-        kept = _nearest_to(int(np.argmax(values)), fleet.size, pairs)
+        third = NEIGHBOURHOOD // 3
+        first = [*dashed.ravel()[:third], *around[:third], np.argmax(values)]
+        kept = _nearest_to([int(each) for each in first], fleet.size, pairs)
         place_of = np.full(fleet.size, -1)
         place_of[kept] = np.arange(len(kept))
         inside = (place_of[pairs] >= 0).all(axis=1)
@@ -95,7 +98,9 @@ def choice_graph(
         values, capacity, names = values[kept], capacity[kept], names[kept]
     places = positions(len(kept), pairs)
     words = "area: capacity · line width: demand"
-    words += " · ringed: bottleneck" * bool(len(around)) + " · dashed: advised links" * bool(len(dashed))
+    some = f" ({len(around):,} of its {in_all:,} servers)" if len(around) < in_all else ""
+    words += f" · ringed: bottleneck{some}" if len(around) else ""
+    words += " · dashed: advised links" if len(dashed) else ""
     if len(kept) < fleet.size:
         words += f" · the {len(kept)} servers nearest to the fullest of {fleet.size:,}"
     if len(kept) > CIRCLE_AT_MOST and is_ring_in_order(len(kept), pairs):
@@ -203,11 +208,12 @@ def _pairs(fleet: Fleet) -> tuple[np.ndarray, np.ndarray]:
     return pairs, np.bincount(at.ravel(), weights=np.concatenate(weights), minlength=len(pairs))
 
 
-def _nearest_to(centre: int, size: int, pairs: np.ndarray) -> np.ndarray:
+def _nearest_to(centres: list[int], size: int, pairs: np.ndarray) -> np.ndarray:
     ends = np.vstack([pairs, pairs[:, ::-1]])
     ends = ends[np.argsort(ends[:, 0], kind="stable")]
     first = np.searchsorted(ends[:, 0], np.arange(size + 1))
-    reached, queue = {centre}, [centre]
+    queue = list(dict.fromkeys(centres))
+    reached = set(queue)
     for server in queue:
         for neighbour in ends[first[server] : first[server + 1], 1].tolist():
             if neighbour not in reached and len(reached) < NEIGHBOURHOOD:

@@ -133,7 +133,7 @@ def _network(axes: Axes, rows: pd.DataFrame) -> None:
 
 def _optimum(axes: Axes, rows: pd.DataFrame) -> None:
     axes.annotate(
-        f"0 is the optimum, {utilisation(rows['network'].mean())} above the mean; no rule can win that back",
+        f"0 is the optimum, {utilisation(rows['network'].mean())} above the mean, the least on average",
         (0.0, 1.0),
         xycoords=("data", "axes fraction"),
         xytext=(0, 2),

@@ -60,7 +60,8 @@ def load_against_tasks(
             rows = bands.loc[(kind, policy)]
             _line(axes, rows, needed.loc[(policy, kind)], style[policy])
             ends[policy] = needed.loc[(policy, kind), "headroom"]
-        _axes(axes, bands.loc[kind].index.get_level_values("tasks"), wide)
+        moments = bands.loc[kind].index.get_level_values("tasks")
+        _axes(axes, moments, wide, float(bands.to_numpy().min()))
         axes.set_title(f"load reports {reports(kind)}" if len(kinds) > 1 else "")
         axes.ends = ends
     panels[0].set_ylabel(f"{of}: highest utilisation (load ÷ capacity) − {above}")
@@ -95,14 +96,14 @@ def _line(axes: Axes, rows: pd.DataFrame, needed: pd.Series, look: dict) -> None
     )
 
 
-def _axes(axes: Axes, tasks: pd.Index, wide: bool) -> None:
+def _axes(axes: Axes, tasks: pd.Index, wide: bool, lowest: float) -> None:
     axes.set_xscale("log")
     if wide:
         axes.set_yscale("log")
         axes.yaxis.set_major_locator(LogLocator(subs=(1, 2, 5)))
         axes.yaxis.set_minor_locator(NullLocator())
     else:
-        axes.set_ylim(bottom=0)
+        axes.set_ylim(bottom=min(0.0, lowest * 1.05))
         axes.yaxis.set_major_locator(MaxNLocator(6))
     axes.yaxis.set_major_formatter(plain)
     axes.set_xlim(float(tasks.min()) * 0.95, float(tasks.max()) * 1.12)

@@ -12,6 +12,7 @@ import pandas as pd
 from IPython.display import Image
 from matplotlib.figure import Figure
 
+from labkit.analysis.survey_words import rerouted_table
 from labkit.errors import InputError
 from labkit.figures.style import save_figure
 from labkit.survey.facts import Survey
@@ -87,6 +88,10 @@ def write_survey_files(
     facts = best.table()
     tables = {"facts": facts, "profile": best.profile, "split": best.split}
     tables |= {name: table for name, table in (("outages", lost), ("links", links)) if table is not None}
+    if links is not None and len(links):
+        tables["rerouted"] = rerouted_table(best.fleet, links)
+        tables["links"] = links.drop(columns="taken_from")
+    tables = {name: _joined(table) for name, table in tables.items()}
     data = {
         "facts": dict(zip(facts["fact"], facts["value"], strict=True)),
         "profile": best.profile.to_dict("records"),
@@ -94,6 +99,11 @@ def write_survey_files(
         "links": None if links is None else links.to_dict("records"),
     }
     return _write(folder, tables, {"answer.txt": text, "survey.json": json.dumps(_plain(data))}, figures)
+
+
+def _joined(table: pd.DataFrame) -> pd.DataFrame:
+    """Return a table for a CSV file: names of a set are parted by semicolons."""
+    return table.map(lambda value: "; ".join(map(str, value)) if isinstance(value, tuple) else value)
 
 
 def _plain(value: Any) -> Any:

@@ -57,6 +57,7 @@ SETTINGS: dict[str, Any] = {
     "xtick.labelsize": 9,
     "ytick.labelsize": 9,
     "text.color": INK,
+    "text.parse_math": False,  # names of servers are drawn as they are, dollar signs too
     "font.family": "DejaVu Sans",
     "font.size": 9,
     "lines.linewidth": 1.8,

@@ -12,11 +12,12 @@ from labkit.policies.base import Policy
 from labkit.survey.fair import fair_profile
 from labkit.survey.modes import slow_modes
 
-GAIN = 0.2
+GAIN, MOST_GAIN = 0.2, 100.0
 # Default refresh: this many tasks a server. Slow patterns take far longer to form.
 ROUNDS = 8
 # A mode for so many servers, and the most there are: faster ones are the local rule's business.
 SERVERS_A_MODE, MOST_MODES = 8, 256
+MOST_NUMBERS = 10**8  # in the table of patterns, which is kept twice
 
 
 @inlined
@@ -78,7 +79,8 @@ class SmoothFeedback(Policy):
     every : int, optional
         Tilts are worked out anew just before the tasks 1, every + 1, ...; default 8 tasks a server.
     modes : int, optional
-        How many of the slowest patterns are steered; default one for 8 servers, at most 256.
+        How many of the slowest patterns are steered, or all where there are fewer; default one for 8
+        servers, at most 256.
 
     Notes
     -----
@@ -93,6 +95,8 @@ class SmoothFeedback(Policy):
 
     def __init__(self, gain: float = GAIN, every: int | None = None, modes: int | None = None) -> None:
         self.gain = check_positive("gain", gain)
+        if self.gain > MOST_GAIN:
+            raise InputError(f"gain is {gain!r}; give a number of at most {MOST_GAIN:g}.")
         self.every = None if every is None else check_whole("every", _whole(every))
         self.modes = None if modes is None else check_whole("modes", _whole(modes))
 
@@ -115,6 +119,9 @@ class SmoothFeedback(Policy):
                 "apart to steer, so use least-loaded."
             )
         count = max(1, min(fleet.size // SERVERS_A_MODE, MOST_MODES)) if self.modes is None else self.modes
+        if count * fleet.size > MOST_NUMBERS:
+            most = MOST_NUMBERS // fleet.size
+            raise InputError(f"modes is {count:,}; with {fleet.size:,} servers give at most {most:,}.")
         modes = slow_modes(fleet, count)
         capacity = np.ones(fleet.size) if fleet.capacity is None else fleet.capacity
         mean = fleet.total_capacity / fleet.size

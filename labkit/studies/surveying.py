@@ -9,7 +9,7 @@ from typing import Any
 from labkit.fleet.readers import read_fleet
 from labkit.records.declared import read_notebook
 from labkit.records.identity import identify
-from labkit.records.project import find_notebook
+from labkit.records.project import check_study_name, find_notebook
 from labkit.records.store import Store, check_writable
 from labkit.studies.answering import Answer, execute_for_page, file_digest, is_made, publish
 from labkit.studies.door import SURVEY, check_values
@@ -72,7 +72,7 @@ def survey_folder(
     check_values(notebook, given)
     read_fleet(folder)
     fleet = name_of_folder(folder) if name is None else name
-    study = f"{fleet}-survey"
+    study = f"{check_study_name(fleet)}-survey"
     store.check_writable(study)
     place = output / study
     check_writable("output", place)

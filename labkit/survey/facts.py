@@ -56,7 +56,7 @@ class Survey:
         Mean utilisation when the demand is placed once: what the optimum would be without limits on who can
         take what.
     balanceable : bool
-        Whether the optimum is the mean, to 1e-9.
+        Whether all servers have one fair level, so that the optimum is the mean.
     proof : float
         Highest utilisation of the split that was found ÷ optimum − 1. The split shows that the optimum is not
         higher, the bottleneck that it is not lower; so this is the most that the number can be wrong by.
@@ -73,11 +73,11 @@ class Survey:
     """
 
     def __init__(self, fleet: Fleet) -> None:
-        self.fleet = fleet
+        self.fleet = check_fleet(fleet)
         self._fair: FairProfile = fair_profile(fleet)
         self.optimum = self._fair.optimum
         self.mean = total_demand(fleet) / fleet.total_capacity
-        self.balanceable = bool(self.optimum <= self.mean * (1.0 + AGREEMENT))
+        self.balanceable = len(self._fair.level) == 1
         self.proof = self._fair.agreement()
         if not abs(self.proof) <= AGREEMENT:
             raise InputError(
@@ -251,7 +251,6 @@ def survey(fleet: Fleet) -> Survey:
     >>> best.profile["fair_utilisation"].tolist()
     [0.9, 0.9, 0.3]
     """
-    check_fleet(fleet)
     return Survey(fleet)
 
 

@@ -91,6 +91,13 @@ def add_table(fleet: Fleet, links: Any) -> Fleet:
     for row, (one, other, demand, taken_from) in enumerate(
         zip(first.tolist(), second.tolist(), wanted.tolist(), links["taken_from"], strict=True)
     ):
+        pair = np.sort(fleet.options[:, :2].astype(np.int64), axis=1) == sorted((one, other))
+        same = np.flatnonzero(pair.all(axis=1) & (fleet.options[:, 2:] == ABSENT).all(axis=1))
+        if len(same):
+            raise InputError(
+                f"links row {row + 1}: {named(fleet, one, other)} is a choice already, choices row "
+                f"{same[0] + 1}; add each link once."
+            )
         rows, taken = _taken(fleet, row, one, other, taken_from)
         if abs(math.fsum(taken) - demand) > _SLACK * demand:
             raise InputError(

@@ -3,6 +3,7 @@
 import math
 import weakref
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
@@ -61,9 +62,8 @@ def slow_modes(fleet: Fleet, count: int) -> Modes:
 
 
 def _slow_modes(fleet: Fleet, count: int) -> Modes:
-    import scipy.linalg
     import scipy.sparse
-    import scipy.sparse.linalg
+    import scipy.sparse.csgraph
 
     size = fleet.size
     row, column, weight = _pairs(fleet)
@@ -79,22 +79,49 @@ def _slow_modes(fleet: Fleet, count: int) -> Modes:
     np.add.at(own, row, weight * scale[row] / scale[column])
     np.add.at(own, column, weight * scale[column] / scale[row])
     laplacian = scipy.sparse.diags_array(own).tocsr() - joined
-    still, _ = scipy.sparse.csgraph.connected_components(joined, directed=False)
-    wanted = min(count, size - still)
-    if wanted < 1:
+    parts, label = scipy.sparse.csgraph.connected_components(joined, directed=False)
+    rates, patterns, homes = [], [], []
+    for members in np.split(
+        np.argsort(label, kind="stable"), np.cumsum(np.bincount(label, minlength=parts))[:-1]
+    ):
+        if len(members) > 1:
+            rate, pattern = _of_component(laplacian[members][:, members], count)
+            rates.append(rate)
+            patterns.append(pattern)
+            homes.append(members)
+    if not rates:
         return Modes(np.empty(0), np.empty((size, 0)))
+    rate = np.concatenate(rates)
+    first = np.argsort(rate, kind="stable")[:count]
+    column = np.full(rate.size, -1)
+    column[first] = np.arange(first.size)
+    found = np.zeros((size, first.size))
+    start = 0
+    for members, pattern in zip(homes, patterns, strict=True):
+        place = column[start : start + pattern.shape[1]]
+        found[np.ix_(members, place[place >= 0])] = pattern[:, place >= 0]
+        start += pattern.shape[1]
+    return Modes(rate[first], found)
+
+
+def _of_component(laplacian: Any, count: int) -> tuple[np.ndarray, np.ndarray]:
+    """Return the slowest rates and patterns of a connected part, without the constant one."""
+    import scipy.linalg
+    import scipy.sparse.linalg
+
+    size = laplacian.shape[0]
     if size <= DENSE:
-        rate, pattern = scipy.linalg.eigh(laplacian.toarray(), subset_by_index=(still, still + wanted - 1))
+        rate, pattern = scipy.linalg.eigh(laplacian.toarray(), subset_by_index=(1, min(count, size - 1)))
     else:
         start = np.cos(np.arange(size) * math.sqrt(2.0))
-        top = float(own.max())
+        top = float(laplacian.diagonal().max())
         rate, pattern = scipy.sparse.linalg.eigsh(
-            laplacian.tocsc(), still + wanted, sigma=-1e-6 * top, which="LM", v0=start
+            laplacian.tocsc(), min(count, size - 2) + 1, sigma=-1e-6 * top, which="LM", v0=start
         )
-        order = np.argsort(rate)[still:]
+        order = np.argsort(rate, kind="stable")[1:]
         rate, pattern = rate[order], pattern[:, order]
-    kept = rate > STILL * own.max()
-    return Modes(rate[kept], np.ascontiguousarray(pattern[:, kept]))
+    kept = rate > STILL * laplacian.diagonal().max()
+    return rate[kept], pattern[:, kept]
 
 
 def _pairs(fleet: Fleet) -> tuple[np.ndarray, np.ndarray, np.ndarray]:

@@ -86,6 +86,8 @@ def outages(
         if not isinstance(value, bool | np.bool_):
             raise InputError(f"{name} is {value!r}; give True or False.")
     lost = np.arange(fleet.size) if servers is None else _positions(fleet, servers)
+    if pairs and lost.size < 2:
+        raise InputError(f"pairs is True and servers holds {lost.size}; name at least two servers to lose.")
     count = math.comb(lost.size, 2)
     if pairs and count > MOST_PAIRS:
         raise InputError(
@@ -108,7 +110,11 @@ def outages(
 
 def _positions(fleet: Fleet, servers: Iterable[Any]) -> np.ndarray:
     """Return the positions of the servers named, in table order."""
-    names = [servers] if isinstance(servers, str) or not isinstance(servers, Iterable) else list(servers)
+    if isinstance(servers, pd.DataFrame):
+        raise InputError("servers is a table; give names, such as fleet.servers['server'].")
+    names = (
+        [servers] if isinstance(servers, str | bytes) or not isinstance(servers, Iterable) else list(servers)
+    )
     if not names:
         raise InputError("servers is empty; name at least one server, or leave it out for all.")
     found = positions_of(fleet, names, "servers")

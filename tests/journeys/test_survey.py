@@ -62,7 +62,7 @@ def test_a_folder_is_surveyed_recorded_and_repeated(barn, tmp_path, capsys):
     assert answer["links"][0]["optimum"] < 0.9
 
     place = tmp_path / "out" / "barn-survey"
-    tables = {f"{name}.csv" for name in ("facts", "profile", "split", "outages", "links")}
+    tables = {f"{name}.csv" for name in ("facts", "profile", "split", "outages", "links", "rerouted")}
     drawn = {f"{name}.{kind}" for name in ("choice_graph", "fair_levels", "links") for kind in ("png", "svg")}
     own = {"barn-survey.html", "barn-survey.ipynb", "answer.txt", "survey.json", "made_from.json"}
     assert {path.name for path in place.iterdir()} == tables | drawn | own
@@ -104,7 +104,7 @@ def test_parts_can_be_left_out(barn, tmp_path, capsys):
         (["--links", "-1"], r"links is -1; give a whole number of at least 0"),
         (["--distance", "1"], r"distance is 1; give a whole number of at least 2"),
         (["--outages", "some"], r"--outages is 'some'; give a whole number"),
-        (["--name", "a/b"], r"study is 'a/b-survey'"),
+        (["--name", "a/b"], r"study is 'a/b'; a study's name"),
     ],
 )
 def test_wrong_values_are_refused_before_anything_is_written(barn, tmp_path, capsys, words, refusal):

@@ -74,6 +74,23 @@ def test_sparse_and_dense_modes_agree(monkeypatch):
     assert both[0] @ both[0].T == pytest.approx(both[1] @ both[1].T, abs=1e-8)
 
 
+def test_many_parts_are_solved_one_by_one():
+    # 201 separate rings of 10: each has its slowest rate twice.
+    server = np.arange(2010)
+    choices = pd.DataFrame(
+        {"option_1": server, "option_2": np.where(server % 10 == 9, server - 9, server + 1)}
+    )
+    modes = slow_modes(lk.Fleet(pd.DataFrame({"server": server}), choices), 402)
+    assert modes.rate == pytest.approx(2 - 2 * np.cos(2 * np.pi / 10))
+    assert modes.pattern.T @ modes.pattern == pytest.approx(np.eye(402), abs=1e-9)
+
+
+def test_a_table_of_patterns_beyond_memory_is_refused(monkeypatch):
+    monkeypatch.setattr("labkit.policies.smooth_feedback.MOST_NUMBERS", 100)
+    with pytest.raises(lk.InputError, match=r"modes is 50; with 20 servers give at most 5"):
+        lk.place(lk.ring(20), lk.SmoothFeedback(modes=50), tasks=5, rng=1)
+
+
 def test_only_free_choices_join():
     # Two cliques of different level: the choice between them always goes down, so nothing is steered across.
     graph = nx.disjoint_union(nx.complete_graph(6), nx.path_graph(4))
@@ -175,6 +192,7 @@ def test_names_read_back():
     [
         ({"gain": 0}, "gain is 0; give a number above 0"),
         ({"gain": float("inf")}, "gain is inf; give a finite number"),
+        ({"gain": 1e308}, "gain is 1e.308; give a number of at most 100"),
         ({"every": 0}, "every is 0; give a whole number of at least 1"),
         ({"every": 2.5}, "every is 2.5; give a whole number"),
         ({"modes": 0}, "modes is 0; give a whole number of at least 1"),

@@ -1,7 +1,9 @@
 """Airline routes of the United States as a choice graph, from the open tables in bokeh-sampledata.
 
-Source: OpenFlights (Open Database License). Airports with a route between them, in any direction and by any
-airline, are one choice of unit demand.
+Source: airports from OurAirports, routes from the U.S. Bureau of Transportation Statistics (public domain),
+domestic ones of July 2026, as bokeh-sampledata 2026.1 has them. Two airports with a route between them, in
+any direction and by any number of airlines, are one choice of unit demand: 3,017 of them. Airports without a
+route stay in, as servers that are in no choice.
 """
 
 import networkx as nx

@@ -2,6 +2,8 @@
 
 import itertools
 import math
+import pickle
+import sys
 
 import networkx as nx
 import numpy as np
@@ -149,3 +151,17 @@ def test_numbers_too_far_apart_are_refused_not_guessed():
     table = lk.place(fleet, "least-loaded", tasks=100, rng=1).measures
     assert table["excess"].isna().all()
     assert table["gap"].notna().all()
+
+
+def test_the_function_can_be_sent_to_other_processes_whoever_imports_first():
+    import labkit.survey.outages  # noqa: F401  (binds the room to the name)
+
+    for kept in (lk.survey, sys.modules["labkit.survey"]):
+        assert pickle.loads(pickle.dumps(kept))(lk.ring(4)).optimum == 1.0
+
+
+def test_an_idle_server_makes_a_fleet_unbalanceable_however_small_it_is():
+    servers = pd.DataFrame({"server": ["a", "b", "c"], "capacity": [1e10, 1e10, 1.0]})
+    best = lk.survey(lk.Fleet(servers, pd.DataFrame({"option_1": ["a"], "option_2": ["b"], "demand": [1e9]})))
+    assert not best.balanceable
+    assert best.bottleneck == ("a", "b")

@@ -644,3 +644,10 @@ def test_one_link_for_the_counties():
     assert math.isnan(row["resistance"])
     less = fair_profile(re_routed(fleet, advice, 1 - 1e-6)).optimum
     assert less > row["optimum"] * (1 + 1e-12)
+
+
+def test_the_same_advice_is_not_added_twice():
+    fleet = lk.ring(6)
+    advice = lk.advise_links(fleet, count=2)
+    with pytest.raises(lk.InputError, match=r"links row 1: .* is a choice already, choices row 7; add"):
+        lk.add_links(lk.add_links(fleet, advice), advice)

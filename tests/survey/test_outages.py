@@ -381,3 +381,10 @@ def test_only_some_servers_or_pairs_of_them():
 def test_servers_that_are_not_there_are_refused(servers, refusal):
     with pytest.raises(lk.InputError, match=refusal):
         lk.outages(lk.ring(6), servers=servers)
+
+
+def test_pairs_need_two_servers_and_a_table_is_no_list_of_names():
+    with pytest.raises(lk.InputError, match="pairs is True and servers holds 1; name at least two"):
+        lk.outages(lk.ring(6), servers=[3], pairs=True)
+    with pytest.raises(lk.InputError, match="servers is a table; give names"):
+        lk.outages(lk.ring(6), servers=lk.ring(6).servers)
