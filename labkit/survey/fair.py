@@ -12,6 +12,8 @@ from labkit.survey.demand import evenly_balanced, total_demand
 from labkit.survey.flow import ROUNDING, add
 from labkit.survey.split import Split, split_of
 
+EVEN = 1e-9  # levels are checked to this share
+
 
 @dataclass
 class FairProfile:
@@ -72,6 +74,8 @@ class FairProfile:
         return float(np.max(self._split.load / self._split.capacity)) / self.optimum - 1.0
 
 
+# Rounding may have parted a block where it ought not to be; begun again from the split found, it seldom does.
+ATTEMPTS = 4
 _KNOWN: weakref.WeakKeyDictionary[Fleet, FairProfile] = weakref.WeakKeyDictionary()
 
 
@@ -97,11 +101,24 @@ def _decomposed(fleet: Fleet, *, only_top: bool) -> FairProfile:
         level = np.array([total_demand(fleet) / fleet.total_capacity])
         return FairProfile(fleet, np.zeros(fleet.size, np.int32), level, None)
     split = split_of(fleet)
-    found = split.make_fair(only_top=only_top)
+    for _ in range(ATTEMPTS):
+        found = split.make_fair(only_top=only_top)
+        if _in_order(split, found):
+            break
     level, group = _levels(split, found)
     known = split.block >= 0
     split.block[known] = group[split.block[known]]
     return FairProfile(fleet, split.block, level, split)
+
+
+def _in_order(split: Split, found: int) -> bool:
+    """Tell whether every block is filled evenly, and none above one before it."""
+    known = split.block >= 0
+    utilisation = split.load[known] / split.capacity[known]
+    block = split.block[known]
+    level = np.bincount(block, split.load[known], found) / np.bincount(block, split.capacity[known], found)
+    even = utilisation <= level[block] * (1.0 + EVEN)
+    return bool(even.all() and (np.diff(level) <= EVEN * level[:-1]).all())
 
 
 def _levels(split: Split, found: int) -> tuple[np.ndarray, np.ndarray]:
