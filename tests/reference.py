@@ -64,18 +64,38 @@ def pick(rule, fleet, options, row, seen, coin, own):
     return tied[0] if rule[1] == "first" else tied[coin * len(tied) // WORD]
 
 
-def place(fleet, rule, *, tasks, replicate, entropy, table=None, sizes=None, every=0, start=None):
+def level_out(fleet, loads, options):
+    """Share the work of some servers in the ratio of their capacities."""
+    capacity = [1.0 if fleet.capacity is None else fleet.capacity[server] for server in options]
+    shared = sum(loads[server] for server in options) / sum(capacity)
+    for server, room in zip(options, capacity, strict=True):
+        loads[server] = shared * room
+
+
+def place(
+    fleet, rule, *, tasks, replicate, entropy, table=None, sizes=None, every=0, start=None, dispatchers=0
+):
     """Return the loads after each task: list of arrays."""
     loads = np.zeros(fleet.size) if start is None else np.array(start, float)
     arrivals, own = words(entropy, replicate, 0), words(entropy, replicate, 1)
     history = []
-    seen = loads.copy()
+    # What each dispatcher sees; without several of them all see the same.
+    seen = [loads.copy() for _ in range(max(dispatchers, 1))]
+    turns = words(entropy, replicate, 3)
     for task in range(tasks):
         if every == 0 or task % every == 0:
-            seen = loads.copy()
+            seen = [loads.copy() for _ in seen]
         options, row, coin = arrival(fleet, arrivals, table)
-        picked = pick(rule, fleet, options, row, seen, coin, own)
-        loads[options[picked]] += 1 if sizes is None else sizes[task]
+        turn = next(turns) * dispatchers // WORD if dispatchers else 0
+        amount = 1 if sizes is None else sizes[task]
+        if rule[0] == "pairwise-averaging":
+            loads[options[0]] += amount
+            level_out(fleet, loads, options)
+        else:
+            picked = pick(rule, fleet, options, row, seen[turn], coin, own)
+            loads[options[picked]] += amount
+            if dispatchers:
+                seen[turn][options[picked]] += amount
         history.append(loads.copy())
     return history
 

@@ -1,23 +1,38 @@
 """What a policy can see of the loads when a task arrives."""
 
 from labkit.checks import check_whole
+from labkit.errors import InputError
+
+# Each keeps a picture of all loads of its own.
+MOST_DISPATCHERS = 4_096
 
 
 class Information:
-    """How fresh the loads are that a policy sees; `every` is 0 for loads as they are."""
+    """How fresh the loads are that a policy sees.
+
+    Attributes
+    ----------
+    every : int
+        Tasks from one report of the loads to the next; 0 for loads as they are.
+    dispatchers : int
+        How many dispatchers place tasks, each of which knows its own placements at once; 0 where none does.
+    """
 
     every: int = 0
+    dispatchers: int = 0
 
     @property
     def name(self) -> str:
         """The model in words, as written into tables."""
+        if self.dispatchers:
+            return f"dispatchers(count={self.dispatchers}, every={self.every})"
         return "fresh" if self.every == 0 else f"snapshot(every={self.every})"
 
     def __repr__(self) -> str:
         return f"<information {self.name}>"
 
     def __eq__(self, other: object) -> bool:
-        return isinstance(other, Information) and self.every == other.every
+        return isinstance(other, Information) and self.name == other.name
 
     def __hash__(self) -> int:
         return hash(self.name)
@@ -38,4 +53,25 @@ class Snapshot(Information):
     """
 
     def __init__(self, every: int) -> None:
+        self.every = check_whole("every", every)
+
+
+class Dispatchers(Information):
+    """Several dispatchers place tasks; each sees its own placements at once, the others' at the next report.
+
+    Each task comes to one of them by a fair draw. What a policy works out from the whole fleet (`renew`) is
+    worked out from the last report, and is the same for all.
+
+    Parameters
+    ----------
+    count : int
+        Number of dispatchers, from 1 to 4,096. With one alone it is as if loads were fresh.
+    every : int
+        A report of all loads is made before the first task and after every `every` tasks, at least 1.
+    """
+
+    def __init__(self, count: int, every: int) -> None:
+        self.dispatchers = check_whole("count", count)
+        if self.dispatchers > MOST_DISPATCHERS:
+            raise InputError(f"count is {count!r}; give at most {MOST_DISPATCHERS:,} dispatchers.")
         self.every = check_whole("every", every)

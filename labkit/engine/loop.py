@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from labkit.compiled import advance, inlined, multiply_wide
+from labkit.compiled import advance, inlined, multiply_wide, next_raw
 from labkit.engine.arrivals import AHEAD, draw_from_all, draw_from_table, options_in
 from labkit.engine.measures import measure
 
@@ -18,6 +18,11 @@ def renew(state, seen):
     """Stand for what the policy works out now and then, until `labkit.compiled.specialise` puts it there."""
 
 
+@inlined
+def after(state, loads, weights, options, row, count, server, amount, fresh):
+    """Stand for what the policy does after a placement, until `labkit.compiled.specialise` puts it there."""
+
+
 def place_near(
     options,
     several,
@@ -28,6 +33,7 @@ def place_near(
     sizes,
     loads,
     seen,
+    fresh,
     first,
     start,
     stop,
@@ -49,12 +55,16 @@ def place_near(
             failed = task + 1
             break
         server = np.uint64(options[row, position])
-        loads[server] += 1 if sizes is None else sizes[np.uint64(task - first)]
+        amount = 1 if sizes is None else sizes[np.uint64(task - first)]
+        loads[server] += amount
+        after(state, loads, weights, options, row, count, server, amount, fresh)
     arrival_state[0], arrival_state[1], arrival_state[2], arrival_state[3] = a, b, c, counter
     return failed
 
 
-def place_drawn(picked, coins, rows, batch, several, own, state, weights, sizes, loads, seen, first, start):
+def place_drawn(
+    picked, coins, rows, batch, several, own, state, weights, sizes, loads, seen, fresh, first, start
+):  # fmt: skip
     """Place the `batch` tasks after `start` that were drawn ahead; see `place_tasks`."""
     for index in range(batch):
         row = np.uint64(index)
@@ -63,13 +73,38 @@ def place_drawn(picked, coins, rows, batch, several, own, state, weights, sizes,
         if position >= np.uint64(count):
             return start + index + 1
         server = np.uint64(picked[row, position])
-        loads[server] += 1 if sizes is None else sizes[np.uint64(start + index - first)]
+        amount = 1 if sizes is None else sizes[np.uint64(start + index - first)]
+        loads[server] += amount
+        after(state, loads, weights, picked, row, count, server, amount, fresh)
+    return 0
+
+
+def place_shared(
+    picked, coins, rows, batch, several, own, state, weights, sizes, loads, pictures, turns, first, start
+):  # fmt: skip
+    """Place the `batch` tasks after `start` that were drawn ahead, each by one of several dispatchers.
+
+    Dispatcher d sees `pictures[d]`: the last report with its own placements added.
+    """
+    dispatchers = np.uint64(pictures.shape[0])
+    for index in range(batch):
+        row = np.uint64(index)
+        count = 2 if several is None else options_in(picked, row)
+        picture = pictures[multiply_wide(next_raw(turns), dispatchers)[0]]
+        position = choose(state, picture, weights, picked, row, count, rows[row], coins[row], own)
+        if position >= np.uint64(count):
+            return start + index + 1
+        server = np.uint64(picked[row, position])
+        amount = 1 if sizes is None else sizes[np.uint64(start + index - first)]
+        loads[server] += amount
+        picture[server] += amount
+        after(state, loads, weights, picked, row, count, server, amount, False)
     return 0
 
 
 def place_tasks(
     arrivals, several, arrival_state, own, state, capacity, weights, sizes, loads, seen, report, every,
-    renewal, ahead, first, last, checkpoints, demand, pairs_of, out,
+    pictures, turns, renewal, ahead, first, last, checkpoints, demand, pairs_of, out,
 ):  # fmt: skip
     """Place the tasks ``first + 1 .. last`` of one replicate and measure at the checkpoints among them.
 
@@ -93,8 +128,13 @@ def place_tasks(
         The last snapshot, changed in place; `loads` itself when information is fresh.
     every : int
         A snapshot is taken just before the tasks 1, every + 1, 2 every + 1, ...; 0 when information is fresh.
+    pictures : array, shape (dispatchers, servers), or None when all loads are seen alike
+        What each dispatcher sees, changed in place.
+    turns : uint64 array, shape (4,)
+        The stream that says which dispatcher gets a task, changed in place.
     renewal : int
-        The policy's `renew` is called just before the tasks 1, renewal + 1, ...; 0 for never.
+        The policy's `renew` is called just before the tasks 1, renewal + 1, ...; 0 for never; below 0 for
+        just before the first task and with each report.
     ahead : bool
         Draw arrivals ahead of their placement: for fleets larger than cache, without a table of choices, or
         with unequal demands.
@@ -122,7 +162,14 @@ def place_tasks(
         if every > 0:
             if done % every == 0:
                 report[:] = loads
+                if pictures is not None:
+                    for dispatcher in range(pictures.shape[0]):
+                        pictures[dispatcher] = loads
+                if renewal < 0:
+                    renew(state, seen)
             stop = min(stop, done - done % every + every)
+        elif renewal < 0 and done == 0:
+            renew(state, seen)
         if renewal > 0:
             if done % renewal == 0:
                 renew(state, seen)
@@ -140,14 +187,21 @@ def place_tasks(
                     draw_from_all(
                         arrivals.servers, arrivals.distinct, arrival_state, seen, picked, coins, batch
                     )
-                failed = place_drawn(
-                    picked, coins, rows, batch, several, own, state, weights, sizes, loads, seen, first, done
-                )
+                if pictures is None:
+                    failed = place_drawn(
+                        picked, coins, rows, batch, several, own, state, weights, sizes, loads, seen,
+                        every == 0, first, done,
+                    )  # fmt: skip
+                else:
+                    failed = place_shared(
+                        picked, coins, rows, batch, several, own, state, weights, sizes, loads, pictures,
+                        turns, first, done,
+                    )  # fmt: skip
                 done += batch
         else:
             failed = place_near(
                 arrivals.options, several, arrival_state, own, state, weights, sizes, loads, seen,
-                first, done, stop,
+                every == 0, first, done, stop,
             )  # fmt: skip
             done = stop
         if failed:

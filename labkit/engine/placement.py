@@ -1,6 +1,6 @@
 """Work that arrives and stays: the public function, its checks, and its table of measures."""
 
-from collections.abc import Callable, Iterable
+from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from functools import cached_property, lru_cache
@@ -9,19 +9,17 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
-from labkit.checks import LARGEST_WHOLE, check_whole
 from labkit.compiled import CONFIG, compiled, inlined, specialise
 from labkit.engine.arrivals import Arrivals, arrivals_of, read_only
 from labkit.engine.information import Fresh, Information
-from labkit.engine.loop import place_drawn, place_near, place_tasks
+from labkit.engine.loop import place_drawn, place_near, place_shared, place_tasks
 from labkit.engine.measures import MEASURED
-from labkit.engine.sizes import LARGEST_SIZE, Sizes, numbers_for, sizes_of
+from labkit.engine.sizes import Sizes
 from labkit.engine.weights import comparison_weights
 from labkit.errors import InputError
-from labkit.fleet.model import ABSENT, Fleet, check_fleet
+from labkit.fleet.model import ABSENT, Fleet
 from labkit.policies.base import Policy
-from labkit.policies.naming import parse_policy
-from labkit.randomness import ARRIVALS, COINS, kernel_state, seed_sequence
+from labkit.randomness import ARRIVALS, COINS, TURNS, kernel_state
 from labkit.survey.fair import fair_profile
 from labkit.survey.optimum import optimum_of_unit_work
 
@@ -115,79 +113,43 @@ class Outcome:
         )
 
 
-def place(
+def place_loads(
     fleet: Fleet,
-    policy: Policy | str,
+    rule: Policy,
     *,
     tasks: int,
-    replicates: int = 1,
-    rng: Any,
-    checkpoints: Iterable[int] | None = None,
-    sizes: Any | Callable | None = None,
+    seed: np.random.SeedSequence,
+    checkpoints: np.ndarray,
+    loads: np.ndarray,
     information: Information | None = None,
-    start: Any | None = None,
+    work: Sizes | None = None,
     workers: int = 1,
 ) -> Outcome:
-    """Place tasks that arrive one by one on choices drawn by demand, and stay.
+    """Place tasks on loads that are there already; what is given has been checked.
 
     Parameters
     ----------
     fleet : Fleet
-    policy : Policy or str
-        The rule, or its name such as ``"least-loaded"`` or ``"mixed(beta=0.5)"``.
+    rule : Policy
     tasks : int
-        Number of tasks placed in each replicate, at least 1.
-    replicates : int
-        Independent repetitions.
-    rng : int, numpy.random.SeedSequence or numpy.random.Generator
-        The same int or SeedSequence gives every policy the same arrivals (common random numbers).
-    checkpoints : sequence of int, optional
-        Increasing numbers of tasks, from 1 to `tasks`; measured just after that task. Default: the end only.
-    sizes : array or callable, optional
-        Sizes of the tasks in work units, finite and at least 0: shape (tasks,), the same for every replicate;
-        or (replicates, tasks); or ``sizes(generator, count)``, which returns that many sizes and is called
-        for blocks of tasks in order. Default: every task has size 1.
-    information : Fresh or Snapshot, optional
-        What the policy sees. Default: ``Fresh()``.
-    start : array, shape (servers,) or (replicates, servers), optional
-        Loads before the first task, in work units (whole numbers when tasks have no sizes). Default: empty.
+    seed : numpy.random.SeedSequence
+    checkpoints : int64 array, shape (moments,)
+    loads : array, shape (replicates, servers), changed in place
+        int64 for unit tasks, else float64.
+    information : Information, optional
+        Default: fresh.
+    work : Sizes, optional
+        Default: unit tasks.
     workers : int
-        Threads that share the replicates. The result does not depend on it.
 
     Returns
     -------
     Outcome
-
-    Raises
-    ------
-    InputError
-        For any argument that is refused; nothing is computed then.
-
-    Notes
-    -----
-    Replicate ``r`` uses ``SeedSequence(entropy, spawn_key=(*key, r, stream))``, stream 0 for arrivals, 1 for
-    the policy's own coins, 2 for sizes. See `labkit.randomness.DRAWS` for how a raw word becomes an arrival.
-
-    Examples
-    --------
-    >>> import labkit as lk
-    >>> outcome = lk.place(lk.ring(16), "least-loaded", tasks=1600, replicates=3, rng=7)
-    >>> outcome.measures[["replicate", "tasks", "mean_load"]].values.tolist()
-    [[0.0, 1600.0, 100.0], [1.0, 1600.0, 100.0], [2.0, 1600.0, 100.0]]
     """
-    check_fleet(fleet)
-    rule = parse_policy(policy)
-    tasks = check_whole("tasks", tasks)
-    replicates = check_whole("replicates", replicates)
-    workers = check_whole("workers", workers)
-    seed = seed_sequence(rng)
-    moments = _checked_checkpoints(checkpoints, tasks)
-    information = _checked_information(information)
-    work = sizes_of(sizes, tasks, replicates)
-    loads = _starting_loads(start, fleet.size, replicates, work)
-    measured = np.empty((replicates, moments.size, len(MEASURED)))
-
-    job = _Job(fleet, rule, seed, information.every, moments, tasks, work)
+    information = Fresh() if information is None else information
+    replicates = len(loads)
+    measured = np.empty((replicates, checkpoints.size, len(MEASURED)))
+    job = _Job(fleet, rule, seed, information, checkpoints, tasks, work)
 
     def run(replicate: int) -> None:
         job.run(replicate, loads[replicate], measured[replicate])
@@ -199,7 +161,15 @@ def place(
     else:
         with ThreadPoolExecutor(workers) as pool:
             list(pool.map(run, range(replicates)))
-    return Outcome(fleet, rule.name, information.name, loads, moments, measured, tasks)
+    return Outcome(fleet, rule.name, information.name, loads, checkpoints, measured, tasks)
+
+
+def zero_loads(servers: int, replicates: int, whole: bool) -> np.ndarray:
+    """Return loads of zero, shape (replicates, servers), int64 or float64.
+
+    Rows are two cache lines apart: threads that write at the ends of neighbouring rows slow each other.
+    """
+    return np.zeros((replicates, servers + 16), np.int64 if whole else np.float64)[:, :servers]
 
 
 class _Job:
@@ -210,12 +180,13 @@ class _Job:
         fleet: Fleet,
         rule: Policy,
         seed: np.random.SeedSequence,
-        every: int,
+        information: Information,
         checkpoints: np.ndarray,
         tasks: int,
         work: Sizes | None,
     ) -> None:
-        self.rule, self.seed, self.every, self.checkpoints = rule, seed, every, checkpoints
+        self.rule, self.seed, self.checkpoints = rule, seed, checkpoints
+        self.every, self.dispatchers = information.every, information.dispatchers
         self.tasks, self.work = tasks, work
         self.arrivals = arrivals_of(fleet)
         self.capacity, self.weights = fleet.capacity, comparison_weights(fleet.capacity)
@@ -226,29 +197,36 @@ class _Job:
         self.several = None if only_pairs(self.arrivals) else True
         touched = 8 * fleet.size * (1 if self.capacity is None else 2) + self.arrivals.options.nbytes
         self.ahead = fleet.implicit is not None or fleet.demand is not None or touched > NEAR_BYTES
-        rule.check(np.int64 if work is None else np.float64)
+        self.ahead |= self.dispatchers > 0
+        rule.check(np.int64 if work is None and not rule.moves_work else np.float64)
         self.loop = loop_of(rule)
 
     def compile(self, loads: np.ndarray, out: np.ndarray) -> None:
         """Place no task at all, so that the loop is compiled before threads share it."""
         words = np.zeros(4, np.uint64)
-        self._place(self.state, words, words.copy(), loads, loads, 0, 0, self._no_sizes, out)
+        self._place(self.state, words, words.copy(), words.copy(), loads, loads, 0, 0, self._no_sizes, out)
 
     def run(self, replicate: int, loads: np.ndarray, out: np.ndarray) -> None:
         """Place all tasks of one replicate: loads and measures are written into the two arrays."""
         arriving = kernel_state(self.seed, replicate, ARRIVALS)
         own = kernel_state(self.seed, replicate, COINS)
+        turns = kernel_state(self.seed, replicate, TURNS)
         report = loads if self.every == 0 else loads.copy()
         state = self.rule.own_state(self.state)
         blocks = [(0, self.tasks, None)] if self.work is None else self.work.blocks(self.seed, replicate)
         for first, last, sizes in blocks:
-            self._place(state, arriving, own, loads, report, first, last, sizes, out)
+            self._place(state, arriving, own, turns, loads, report, first, last, sizes, out)
+
+    def _pictures(self, loads: np.ndarray) -> np.ndarray | None:
+        """Return room for what each dispatcher sees, or None; a report fills it before the first task."""
+        return np.zeros((self.dispatchers, loads.size), loads.dtype) if self.dispatchers else None
 
     def _place(
         self,
         state: tuple[Any, ...],
         arriving: np.ndarray,
         own: np.ndarray,
+        turns: np.ndarray,
         loads: np.ndarray,
         report: np.ndarray,
         first: int,
@@ -261,7 +239,7 @@ class _Job:
             with np.errstate(over="ignore" if CONFIG.DISABLE_JIT else "warn"):
                 failed = self.loop(
                     self.arrivals, self.several, arriving, own, state, self.capacity, self.weights,
-                    sizes, loads, read_only(report.view()), report, self.every,
+                    sizes, loads, read_only(report.view()), report, self.every, self._pictures(loads), turns,
                     self.renewal, self.ahead, first, last, self.checkpoints, self.demand, self.pairs_of, out,
                 )  # fmt: skip
         except Exception as error:
@@ -277,18 +255,18 @@ class _Job:
 
 
 @lru_cache(maxsize=64)
-def _loop(kernel_name: str, choose: Callable, renew: Callable, cache: bool) -> Callable:
-    chosen = inlined(choose)
-    near = specialise(place_near, kernel_name, cache=False, choose=chosen)
-    drawn = specialise(place_drawn, kernel_name, cache=False, choose=chosen)
-    return specialise(
-        place_tasks, kernel_name, cache=cache, place_near=near, place_drawn=drawn, renew=compiled(renew)
-    )
+def _loop(kernel_name: str, choose: Callable, renew: Callable, after: Callable, cache: bool) -> Callable:
+    pieces = {"choose": inlined(choose), "after": inlined(after)}
+    loops = {
+        loop.__name__: specialise(loop, kernel_name, cache=False, **pieces)
+        for loop in (place_near, place_drawn, place_shared)
+    }
+    return specialise(place_tasks, kernel_name, cache=cache, renew=compiled(renew), **loops)
 
 
 def loop_of(rule: Policy) -> Callable:
     """Return the placement loop compiled for a policy's chooser (one copy a chooser)."""
-    return _loop(rule.kernel_name, rule.choose, rule.renew, rule.cached)
+    return _loop(rule.kernel_name, rule.choose, rule.renew, rule.after, rule.cached)
 
 
 def only_pairs(arrivals: Arrivals) -> bool:
@@ -303,46 +281,3 @@ def _pairs_of(fleet: Fleet) -> int:
     if fleet.implicit.options != 2:
         return 3
     return 1 if fleet.implicit.distinct else 2
-
-
-def _checked_checkpoints(checkpoints: Iterable[int] | None, tasks: int) -> np.ndarray:
-    if checkpoints is None:
-        return np.array([tasks], np.int64)
-    try:
-        moments = np.asarray(checkpoints if isinstance(checkpoints, np.ndarray) else list(checkpoints))
-    except (TypeError, ValueError):
-        moments = np.empty(0)
-    whole = moments.ndim == 1 and moments.size > 0 and moments.dtype.kind in "iu"
-    if not whole or moments[0] < 1 or moments[-1] > tasks or np.any(np.diff(moments.astype(np.int64)) <= 0):
-        raise InputError(
-            f"checkpoints is {checkpoints!r}; give increasing whole numbers from 1 to the number of tasks, "
-            f"{tasks}."
-        )
-    return moments.astype(np.int64)
-
-
-def _checked_information(information: Information | None) -> Information:
-    if information is None:
-        return Fresh()
-    if isinstance(information, Information):
-        return information
-    raise InputError(f"information is {information!r}; give lk.Fresh() or lk.Snapshot(every=k).")
-
-
-def _starting_loads(start: Any, servers: int, replicates: int, work: Sizes | None) -> np.ndarray:
-    kind = np.int64 if work is None else np.float64
-    # Rows two cache lines apart: threads that write at the ends of neighbouring rows slow each other.
-    loads = np.zeros((replicates, servers + 16), kind)[:, :servers]
-    if start is None:
-        return loads
-    given = numbers_for("start", start, servers, replicates, "servers")
-    most = LARGEST_WHOLE / servers if work is None else LARGEST_SIZE
-    beyond = ~(np.abs(given) <= most)
-    if beyond.any():
-        raise InputError(f"start holds the load {given[beyond][0]}; give finite loads of at most {most:.4g}.")
-    if work is None and np.any(given != np.floor(given)):
-        raise InputError("start holds loads that are not whole; give whole numbers, or give the tasks sizes.")
-    if np.any(given < 0):
-        raise InputError(f"start holds the load {given.min()}; give loads of at least 0.")
-    loads[:] = given
-    return loads

@@ -5,9 +5,16 @@ from typing import Any, ClassVar
 from labkit.errors import InputError
 from labkit.fleet.model import Fleet
 
+# For `Policy.renewal`: work the state out before the first task and whenever loads are reported.
+WITH_REPORTS = -1
+
 
 def keep(state, seen):
     """Leave the state as it is."""
+
+
+def rest(state, loads, weights, options, row, count, server, amount, fresh):
+    """Do nothing after a placement."""
 
 
 class Policy:
@@ -37,6 +44,12 @@ class Policy:
     choose: Any
     # A plain function ``renew(state, seen)`` that numba can compile: it works out anew what depends on loads.
     renew: Any = staticmethod(keep)
+    # A plain function ``after(state, loads, weights, options, row, count, server, amount, fresh)`` that numba
+    # can compile, called right after each placement with its server and task size; `fresh` tells whether the
+    # policy sees loads as they are. Unlike the chooser it may change `state` and `loads`.
+    after: Any = staticmethod(rest)
+    # Whether it moves work already placed, so that loads are no longer whole numbers.
+    moves_work: ClassVar[bool] = False
     cached: ClassVar[bool] = True
 
     @property
@@ -54,11 +67,14 @@ class Policy:
         return ()
 
     def renewal(self, fleet: Fleet) -> int:
-        """Return how often, in tasks, `renew` is called, just before the task; 0 for never."""
+        """Return how often, in tasks, `renew` is called, just before the task; 0 for never.
+
+        `WITH_REPORTS` stands for before the first task and whenever loads are reported.
+        """
         return 0
 
     def own_state(self, state: tuple[Any, ...]) -> tuple[Any, ...]:
-        """Return the state for one replicate: with copies of the arrays that `renew` changes."""
+        """Return the state for one replicate: with copies of the arrays that `renew` and `after` change."""
         return state
 
     def check(self, load: type) -> None:

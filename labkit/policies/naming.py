@@ -10,6 +10,7 @@ from labkit.policies.base import Policy
 from labkit.policies.least_loaded import LeastLoaded
 from labkit.policies.mixed import Mixed
 from labkit.policies.one_choice import OneChoice
+from labkit.policies.pairwise_averaging import PairwiseAveraging
 from labkit.policies.smooth_feedback import SmoothFeedback
 from labkit.policies.static_split import StaticSplit
 
@@ -19,6 +20,7 @@ BUILT_IN: dict[str, type[Policy]] = {
     "mixed": Mixed,
     "static-split": StaticSplit,
     "smooth-feedback": SmoothFeedback,
+    "pairwise-averaging": PairwiseAveraging,
 }
 _FORM = re.compile(r"\s*([\w-]+)\s*(?:\((.*)\))?\s*")
 

@@ -12,10 +12,10 @@ import pandas as pd
 
 from labkit.analysis.wording import quantity, reports
 from labkit.engine.information import Fresh, Snapshot
-from labkit.engine.placement import place
 from labkit.errors import InputError
 from labkit.fleet.model import Fleet
 from labkit.fleet.readers import read_fleet
+from labkit.placing import place
 from labkit.policies.naming import parse_policy
 from labkit.records.declared import read_notebook
 from labkit.records.project import ANSWERS, check_study_name, find_notebook, from_root

@@ -44,10 +44,23 @@ def fleets(draw):
     fleet=fleets(),
     entropy=st.integers(0, 2**40),
     every=st.sampled_from([0, 1, 3, 7]),
+    dispatchers=st.sampled_from([0, 0, 3]),
     sized=st.booleans(),
     started=st.booleans(),
 )
-def test_every_task_goes_where_the_slow_loop_puts_it(rule, ahead, fleet, entropy, every, sized, started):
+def test_every_task_goes_where_the_slow_loop_puts_it(
+    rule, ahead, fleet, entropy, every, dispatchers, sized, started
+):
+    dispatchers = dispatchers if every else 0
     sizes = np.arange(60) % 5 / 4 if sized else None
     start = np.arange(fleet.size) % 3 if started else None
-    assert_same_path(fleet, rule, ahead=ahead, entropy=entropy, every=every, sizes=sizes, start=start)
+    assert_same_path(
+        fleet,
+        rule,
+        ahead=ahead,
+        entropy=entropy,
+        every=every,
+        sizes=sizes,
+        start=start,
+        dispatchers=dispatchers,
+    )

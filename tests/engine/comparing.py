@@ -15,18 +15,22 @@ RULES = {
     "least-loaded(ties=first)": ("least-loaded", "first"),
     "mixed(beta=0.3)": ("mixed", 0.3),
     "static-split": ("static-split",),
+    "pairwise-averaging": ("pairwise-averaging",),
 }
 
 
-def assert_same_path(fleet, rule, *, ahead, entropy, every=0, sizes=None, start=None):
+def assert_same_path(fleet, rule, *, ahead, entropy, every=0, sizes=None, start=None, dispatchers=0):
     """Place 60 tasks both ways, two replicates, and compare."""
     tasks, moments = 60, [1, 2, 17, 60]
     near = placement.NEAR_BYTES
+    information = lk.Snapshot(every) if every else lk.Fresh()
+    if dispatchers:
+        information = lk.Dispatchers(dispatchers, every=every)
     try:
         placement.NEAR_BYTES = 0 if ahead else near
         outcome = lk.place(
             fleet, rule, tasks=tasks, replicates=2, rng=entropy, checkpoints=moments, sizes=sizes,
-            start=start, information=lk.Snapshot(every) if every else lk.Fresh(),
+            start=start, information=information,
         )  # fmt: skip
     finally:
         placement.NEAR_BYTES = near
@@ -38,9 +42,12 @@ def assert_same_path(fleet, rule, *, ahead, entropy, every=0, sizes=None, start=
     for replicate in range(2):
         history = reference.place(
             fleet, told, tasks=tasks, replicate=replicate, entropy=entropy,
-            table=table, sizes=sizes, every=every, start=start,
+            table=table, sizes=sizes, every=every, start=start, dispatchers=dispatchers,
         )  # fmt: skip
-        assert outcome.loads[replicate].tolist() == history[-1].tolist()
+        if rule == "pairwise-averaging":
+            assert outcome.loads[replicate] == pytest.approx(history[-1], rel=1e-12)
+        else:
+            assert outcome.loads[replicate].tolist() == history[-1].tolist()
         rows = outcome.measures.query("replicate == @replicate").set_index("tasks")
         for moment in moments:
             for name, value in reference.measures(fleet, history[moment - 1]).items():
