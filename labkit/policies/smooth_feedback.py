@@ -5,63 +5,103 @@ from typing import Any
 import numpy as np
 
 from labkit.checks import check_positive, check_whole
-from labkit.compiled import borrowed, inlined
+from labkit.compiled import borrowed, inlined, multiply_wide
 from labkit.errors import InputError
 from labkit.fleet.model import Fleet
 from labkit.policies.base import Policy
+from labkit.policies.least_loaded import level
 from labkit.survey.fair import fair_profile
-from labkit.survey.modes import slow_modes
+from labkit.survey.smoothing import smooth, smoothing
 
 GAIN, MOST_GAIN = 0.2, 100.0
 # Default refresh: this many tasks a server. Slow patterns take far longer to form.
 ROUNDS = 8
-# A mode for so many servers, and the most there are: faster ones are the local rule's business.
-SERVERS_A_MODE, MOST_MODES = 8, 256
-MOST_NUMBERS = 10**8  # in the table of patterns, which is kept twice
+# A pattern of rate r forgets itself under the local rule after about 3/r tasks a server.
+MEMORY = 3.0
+# Of a task: tilts that differ by half of it decide between equal loads, smaller differences move the odds.
+WIDTH = 0.1
+# A linear congruential step (D. E. Knuth's MMIX), for more numbers from one coin.
+FACTOR, TERM = np.uint64(6364136223846793005), np.uint64(1442695040888963407)
 
 
 @inlined
-def tilted(seen, inverse, tilt, server):
-    """Return the utilisation of a server plus its tilt."""
-    return seen[server] * inverse[server] + tilt[server]
+def lower(seen, tilt, weights, one, other, more):
+    """Tell whether server `one` has less tilted utilisation than `other` with `more` load (cross-multiplied).
+
+    With equal ones the answer is 1, with less 2, else 0.
+    """
+    if weights is None:
+        left, right = seen[one] + tilt[one], seen[other] + tilt[other] + more
+    else:
+        left = (seen[one] + tilt[one]) * weights[other]
+        right = (seen[other] + tilt[other] + more) * weights[one]
+    return np.uint64(left < right) * np.uint64(2) + np.uint64(left == right)
+
+
+@inlined
+def noise(word, width):
+    """Return a number between −width / 2 and width / 2, uniform as the word is."""
+    return (np.float64(np.int64(word >> np.uint64(11))) * 2.0**-53 - 0.5) * width
 
 
 def choose(state, seen, weights, options, row, count, choice, coin, own):  # noqa: D103
     tilt = borrowed(state[0])
-    inverse = borrowed(state[1])
-    lowest = tilted(seen, inverse, tilt, np.uint64(options[row, np.uint64(0)]))
+    width = state[1]
+    best = np.uint64(options[row, np.uint64(0)])
     if count == 2:
-        level = tilted(seen, inverse, tilt, np.uint64(options[row, np.uint64(1)]))
-        return np.uint64(level < lowest) | (np.uint64(level == lowest) & (coin >> np.uint64(63)))
-    picked = np.uint64(0)
+        other = np.uint64(options[row, np.uint64(1)])
+        more = noise(coin, width * level(seen, weights, other, best))
+        # Without tilts, and so without noise, this is least-loaded.
+        return (lower(seen, tilt, weights, other, best, more) + (coin >> np.uint64(63))) >> np.uint64(1)
+    ties = np.uint64(1)
     for position in range(1, count):
-        level = tilted(seen, inverse, tilt, np.uint64(options[row, np.uint64(position)]))
-        # Equal sums are rare, but for an empty fleet; each later one has a bit of the coin for itself.
-        bit = (coin >> np.uint64(64 - position)) & np.uint64(1)
-        below = np.uint64(level < lowest) | (np.uint64(level == lowest) & bit)
-        picked = np.uint64(position) if below else picked
-        lowest = min(level, lowest)
+        other = np.uint64(options[row, np.uint64(position)])
+        answer = lower(seen, tilt, weights, other, best, 0.0)
+        ties = np.uint64(1) if answer == 2 else ties + answer
+        best = other if answer == 2 else best
+    rank = multiply_wide(coin, ties)[0]
+    passed = np.uint64(0)
+    picked = np.uint64(0)
+    least = np.inf
+    word = coin
+    for position in range(count):
+        other = np.uint64(options[row, np.uint64(position)])
+        # Among those as loaded as the best, the lowest tilt with noise of its own; without tilts, the rank.
+        same = level(seen, weights, other, best)
+        tied = lower(seen, tilt, weights, other, best, 0.0) == 1
+        word = word * FACTOR + TERM
+        bid = (
+            tilt[other] + noise(word, width)
+            if weights is None
+            else tilt[other] / weights[other] + noise(word, width) / weights[best]
+        )
+        better = bid < least if width > 0.0 else tied and passed == rank
+        wins = better and (same or other == best)
+        least = bid if wins else least
+        picked = np.uint64(position) if wins else picked
+        passed += np.uint64(tied)
     return picked
 
 
 def renew(state, seen):
-    """Work out the tilt of every server from the loads seen."""
-    tilt, inverse, fair, root, pattern, turned, strength, amount = state
+    """Work out the tilt of every server, in units of load, from the loads seen."""
+    tilt, _, field, due, scale, fixed, memory = state
     work = 0.0
     for server in range(seen.size):
         work += seen[server]
-    amount[:] = 0.0
     for server in range(seen.size):
-        beyond = (seen[server] * inverse[server] - fair[server] * work) * root[server]
-        for mode in range(amount.size):
-            amount[mode] += pattern[server, mode] * beyond
-    tilt[:] = 0.0
-    for mode in range(amount.size):
-        pull = amount[mode] * strength[mode]
-        for server in range(tilt.size):
-            tilt[server] += turned[mode, server] * pull
-    for server in range(tilt.size):
-        tilt[server] /= root[server]
+        field[server] = seen[server] - due[server] * work
+    (
+        strength, shift, taken, order, start, far, pivot, share, steps, room, part, slow,
+        indptr, neighbour, weight,
+    ) = fixed  # fmt: skip
+    known, space, gradients, sums = memory
+    smooth(
+        strength, shift, taken, order, start, far, pivot, share, steps, room, part, slow,
+        indptr, neighbour, weight, known, space, gradients, sums, field,
+    )  # fmt: skip
+    for server in range(seen.size):
+        tilt[server] = field[server] * scale[server]
 
 
 class SmoothFeedback(Policy):
@@ -75,12 +115,10 @@ class SmoothFeedback(Policy):
     Parameters
     ----------
     gain : float
-        Strength of the tilt, above 0. The gap hardly depends on it between 0.1 and 0.4.
+        Strength of the tilt, above 0. Patterns whose rate is below gain² are levelled out faster than by the
+        local rule, those above are left to it.
     every : int, optional
         Tilts are worked out anew just before the tasks 1, every + 1, ...; default 8 tasks a server.
-    modes : int, optional
-        How many of the slowest patterns are steered, or all where there are fewer; default one for 8
-        servers, at most 256.
 
     Notes
     -----
@@ -88,22 +126,28 @@ class SmoothFeedback(Policy):
     half-way between the local rule (gradient of the loads) and full rebalancing (gradient of L^(-1) applied
     to them); it solves the linear-quadratic control problem dx = B'Qb dt + noise, minimising E[x'x + r b'Qb].
     The control enters as an offset of the comparison, so that none of the local rule's authority is lost.
+
+    The gain was measured: stationary gaps with 0.2 are within 5 % of the least over all gains on rings of 64
+    to 4,096 servers, a ladder, a torus and random regular fleets; the best falls slowly with the size.
+
+    Most tilts are far below one task, and decide between equal loads. A coin is part of it there: with late
+    reports, tasks that all follow the same tilt would crowd. Where no pattern lasts until the tilts are
+    renewed, as on complete graphs, there are none, and servers are picked as by least-loaded.
     """
 
     choose = staticmethod(choose)
     renew = staticmethod(renew)
 
-    def __init__(self, gain: float = GAIN, every: int | None = None, modes: int | None = None) -> None:
+    def __init__(self, gain: float = GAIN, every: int | None = None) -> None:
         self.gain = check_positive("gain", gain)
         if self.gain > MOST_GAIN:
             raise InputError(f"gain is {gain!r}; give a number of at most {MOST_GAIN:g}.")
         self.every = None if every is None else check_whole("every", _whole(every))
-        self.modes = None if modes is None else check_whole("modes", _whole(modes))
 
     @property
     def name(self) -> str:
         """The policy in words, with the parameters that are not at their defaults."""
-        given = {"gain": self.gain if self.gain != GAIN else None, "every": self.every, "modes": self.modes}
+        given = {"gain": self.gain if self.gain != GAIN else None, "every": self.every}
         inside = ", ".join(f"{name}={value!r}" for name, value in given.items() if value is not None)
         return f"smooth-feedback({inside})" if inside else "smooth-feedback"
 
@@ -112,33 +156,32 @@ class SmoothFeedback(Policy):
         return ROUNDS * fleet.size if self.every is None else self.every
 
     def prepare(self, fleet: Fleet) -> tuple[Any, ...]:
-        """Return tilts, 1 ÷ capacity, fair shares, and the modes in both memory orders."""
+        """Return tilts, noise, room for a field, fair loads, scales, and what smoothing needs and changes."""
         if fleet.implicit is not None:
             raise InputError(
                 "policy smooth-feedback needs a table of choices; on a complete fleet there is nothing far "
                 "apart to steer, so use least-loaded."
             )
-        count = max(1, min(fleet.size // SERVERS_A_MODE, MOST_MODES)) if self.modes is None else self.modes
-        if count * fleet.size > MOST_NUMBERS:
-            most = MOST_NUMBERS // fleet.size
-            raise InputError(f"modes is {count:,}; with {fleet.size:,} servers give at most {most:,}.")
-        modes = slow_modes(fleet, count)
+        # Steered is what the tilt levels out faster than the local rule, and what lasts until it is renewed.
+        lasting = MEMORY * fleet.size / self.renewal(fleet)
+        # Tilts are half a period old on average: where nothing lasts so long they are left out.
+        smoothed = smoothing(fleet, min(self.gain**2, lasting), quick=2.0 * lasting)
         capacity = np.ones(fleet.size) if fleet.capacity is None else fleet.capacity
         mean = fleet.total_capacity / fleet.size
         return (
             np.zeros(fleet.size),
-            1.0 / capacity,
-            fair_profile(fleet).of_unit_work,
-            np.sqrt(capacity / mean),
-            modes.pattern,
-            np.ascontiguousarray(modes.pattern.T),
-            self.gain / np.sqrt(modes.rate),
-            np.empty(modes.rate.size),
+            WIDTH if smoothed.shift.size else 0.0,
+            np.empty(fleet.size),
+            fair_profile(fleet).of_unit_work * capacity,
+            self.gain * capacity / mean,
+            smoothed.kernel_part(),
+            smoothed.memory(),
         )
 
     def own_state(self, state: tuple[Any, ...]) -> tuple[Any, ...]:
         """Return the state with arrays of its own where `renew` writes."""
-        return (state[0].copy(), *state[1:-1], state[-1].copy())
+        tilt, width, field, due, scale, fixed, memory = state
+        return (tilt.copy(), width, field.copy(), due, scale, fixed, tuple(array.copy() for array in memory))
 
 
 def _whole(value: Any) -> Any:
