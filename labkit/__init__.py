@@ -9,6 +9,7 @@ __version__ = "0.1.0"
 _HOMES = {
     "InputError": "labkit.errors",
     "StoreError": "labkit.errors",
+    "NotStationary": "labkit.errors",
     "HeadroomExceeded": "labkit.errors",
     "TooFewReplicates": "labkit.errors",
     "Fleet": "labkit.fleet.model",
@@ -37,6 +38,9 @@ _HOMES = {
     "Snapshot": "labkit.engine.information",
     "Dispatchers": "labkit.engine.information",
     "place": "labkit.placing",
+    "forecast": "labkit.stationary.forecast",
+    "stationary_gap": "labkit.stationary.chains",
+    "Forecast": "labkit.stationary.forecast",
     "Outcome": "labkit.engine.placement",
     "headroom": "labkit.analysis.headroom",
     "replicates_needed": "labkit.analysis.headroom",

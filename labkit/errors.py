@@ -13,5 +13,9 @@ class StoreError(InputError):
     """The results store cannot be written, or holds a torn or altered file."""
 
 
+class NotStationary(InputError):
+    """A gap that cannot be called stationary, because chains from different starts disagree."""
+
+
 class HeadroomExceeded(ValueError):
     """The headroom that a rule needs lies above the highest that the user allows."""

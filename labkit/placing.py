@@ -14,6 +14,7 @@ from labkit.fleet.model import Fleet, check_fleet
 from labkit.policies.base import Policy
 from labkit.policies.naming import parse_policy
 from labkit.randomness import seed_sequence
+from labkit.stationary.start import forecast_start
 
 
 def place(
@@ -50,8 +51,10 @@ def place(
         for blocks of tasks in order. Default: every task has size 1.
     information : Fresh, Snapshot or Dispatchers, optional
         What the policy sees. Default: ``Fresh()``.
-    start : array, shape (servers,) or (replicates, servers), optional
-        Loads before the first task, in work units (whole numbers when tasks have no sizes). Default: empty.
+    start : array, shape (servers,) or (replicates, servers), or "forecast", optional
+        Loads before the first task, in work units (whole numbers when tasks have no sizes). "forecast": drawn
+        for each replicate from the stationary law that `labkit.forecast` finds, so that a burn-in of some
+        tens of tasks a server does; for least-loaded and mixed, tasks of size 1. Default: empty.
     workers : int
         Threads that share the replicates. The result does not depend on it.
 
@@ -67,7 +70,8 @@ def place(
     Notes
     -----
     Replicate ``r`` uses ``SeedSequence(entropy, spawn_key=(*key, r, stream))``, stream 0 for arrivals, 1 for
-    the policy's own coins, 2 for sizes. See `labkit.randomness.DRAWS` for how a raw word becomes an arrival.
+    the policy's own coins, 2 for sizes, 3 for which dispatcher gets a task, 4 for a start. See
+    `labkit.randomness.DRAWS` for how a raw word becomes an arrival.
 
     Examples
     --------
@@ -86,7 +90,14 @@ def place(
     information = _checked_information(information)
     work = sizes_of(sizes, tasks, replicates)
     whole = work is None and not rule.moves_work
-    loads = _starting_loads(start, fleet.size, replicates, whole)
+    if isinstance(start, str):
+        if start != "forecast":
+            raise InputError(f'start is {start!r}; give loads, or "forecast".')
+        if work is not None:
+            raise InputError('start is "forecast", which knows tasks of size 1 only; leave sizes out.')
+        loads = forecast_start(fleet, rule, replicates, seed, whole)
+    else:
+        loads = _starting_loads(start, fleet.size, replicates, whole)
     return place_loads(
         fleet, rule, tasks=tasks, seed=seed, checkpoints=moments, loads=loads, information=information,
         work=work, workers=workers,

@@ -1,8 +1,8 @@
 """Random streams: one seed sequence in, one independent stream for every replicate and purpose out.
 
 Replicate ``r`` of a run draws from ``SeedSequence(entropy, spawn_key=(*key, r, stream))``. Arrivals, the
-coins of a policy, task sizes, and which dispatcher gets a task are separate streams, so that every policy
-meets the same arrivals.
+coins of a policy, task sizes, which dispatcher gets a task, and starts are separate streams, so that every
+policy meets the same arrivals.
 """
 
 from typing import Any
@@ -11,7 +11,7 @@ import numpy as np
 
 from labkit.errors import InputError
 
-ARRIVALS, COINS, SIZES, TURNS = 0, 1, 2, 3
+ARRIVALS, COINS, SIZES, TURNS, STARTS = 0, 1, 2, 3, 4
 BIT_GENERATOR = "SFC64"
 DRAWS = (
     "one raw 64-bit word an arrival, multiplied by the number of choices to 128 bits: the high half is the "
