@@ -1,6 +1,7 @@
 """The answer in words: the decision, the aligned table and the notes under it."""
 
 import math
+import re
 import textwrap
 from collections.abc import Callable, Sequence
 
@@ -8,7 +9,9 @@ import numpy as np
 import pandas as pd
 
 from labkit.analysis.answer import Verdict
+from labkit.errors import InputError
 
+_INFORMATION = re.compile(r"(?:snapshot\(|dispatchers\(count=(?P<count>\d+), )every=(?P<every>\d+)\)")
 # A utilisation that needs more decimals than this is written with a power of ten.
 _DECIMALS = 6
 # Differences below this share of what was subtracted are rounding.
@@ -235,10 +238,35 @@ def horizon(measures: pd.DataFrame, policy: str, of: str = "gap") -> str:
 
 def reports(information: str) -> str:
     """Return what a kind of information means in field words."""
-    if information == "fresh":
+    try:
+        every, dispatchers = report_age(information)
+    except InputError:
+        return information
+    if every == 0:
         return "always fresh"
-    every = information.removeprefix("snapshot(every=").removesuffix(")")
-    return f"every {int(every):,} tasks" if every.isdigit() else information
+    shared = f", {dispatchers:,} dispatchers" if dispatchers else ""
+    return f"every {every:,} tasks{shared}"
+
+
+def report_age(information: str) -> tuple[int, int]:
+    """Return the tasks from one report to the next, 0 for fresh loads, and the number of dispatchers or 0.
+
+    Parameters
+    ----------
+    information : str
+        The name of an information model, as tables have it.
+
+    Raises
+    ------
+    InputError
+        When it is none.
+    """
+    if information == "fresh":
+        return 0, 0
+    found = _INFORMATION.fullmatch(information)
+    if found is None:
+        raise InputError(f"information is {information!r}; give the name of an information model.")
+    return int(found["every"]), int(found["count"] or 0)
 
 
 def writer(*sizes: float) -> Callable[[float], str]:

@@ -48,6 +48,9 @@ class Policy:
     # can compile, called right after each placement with its server and task size; `fresh` tells whether the
     # policy sees loads as they are. Unlike the chooser it may change `state` and `loads`.
     after: Any = staticmethod(rest)
+    # What it must know at dispatch time, and the share of tasks for which it looks at their options.
+    knows: str = "the loads of the options"
+    compares: float = 1.0
     # Whether it moves work already placed, so that loads are no longer whole numbers.
     moves_work: ClassVar[bool] = False
     cached: ClassVar[bool] = True

@@ -36,6 +36,7 @@ class Mixed(Policy):
 
     def __init__(self, beta: float) -> None:
         self.beta = check_fraction("beta", beta, closed=True)
+        self.knows, self.compares = "the loads of the options, for a share of the tasks", float(self.beta)
 
     @property
     def name(self) -> str:

@@ -40,6 +40,7 @@ class PairwiseAveraging(Policy):
     choose = staticmethod(choose)
     after = staticmethod(level_out)
     moves_work: ClassVar[bool] = True
+    knows = "the loads of the options, and it moves work already placed"
 
     @property
     def name(self) -> str:

@@ -137,6 +137,7 @@ class SmoothFeedback(Policy):
 
     choose = staticmethod(choose)
     renew = staticmethod(renew)
+    knows = "the loads of the options, and now and then a picture of all loads"
 
     def __init__(self, gain: float = GAIN, every: int | None = None) -> None:
         self.gain = check_positive("gain", gain)

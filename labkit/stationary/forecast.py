@@ -32,6 +32,8 @@ from labkit.survey.fair import fair_profile
 MOST_REPLICATES, LEAST_REPLICATES, NUMBERS = 256, 32, 1_000_000
 MOST_ROUNDS, LEAST_ROUNDS, TASKS = 1_000, 64, 60_000_000
 MOST_DRAWS, DRAWN = 1_024, 16_000_000
+# Further draws are made where they tell so much of the variance between replicates.
+WORTH = 0.1
 MOMENTS = 9
 # Relative error that is never gone below: what the method leaves out.
 MODEL = 0.03
@@ -308,12 +310,14 @@ def _from_law(fleet: Fleet, rule: Policy, law: Law) -> Forecast:
     table = outcome.measures
     each = table.groupby("replicate")["gap"].mean().to_numpy()
     # How far the gap goes with that of the draw it began from tells the chance of the few draws simulated.
-    more = int(np.clip(DRAWN // size, 0, MOST_DRAWS))
     generator = np.random.Generator(np.random.SFC64(law.more))
     began = unit * _highest(field, law.scale, law.settled.draws)
+    slope = float(np.cov(each, began)[0, 1] / max(began.var(ddof=1), 1e-30))
+    told = slope**2 * began.var(ddof=1) > WORTH * each.var(ddof=1)
+    slope = slope if told else 0.0
+    more = int(np.clip(DRAWN // size, 0, MOST_DRAWS)) if told else 0
     others = [unit * _highest(field, law.scale, field.draw(generator, count)) for count in _blocks(more)]
     drawn = np.concatenate([began, *others])
-    slope = float(np.cov(each, began)[0, 1] / max(began.var(ddof=1), 1e-30))
     rest = each - slope * began
     mean_gap = float(rest.mean() + slope * drawn.mean())
     chance = np.hypot(rest.std(ddof=1) / np.sqrt(replicates), slope * drawn.std(ddof=1) / np.sqrt(drawn.size))

@@ -22,7 +22,7 @@ from labkit.stationary.solver import DENSE, Solver
 
 ROUNDS = 40
 NEWTON = 60
-SETTLED = 3e-3
+SETTLED, NEARLY = 3e-3, 1e-2
 # For more than `DENSE` servers spreads are estimated from so many draws of the field.
 DRAWS = 24
 LOCAL_STEPS = 25
@@ -100,7 +100,7 @@ def linearise(network: Network, authority: float, scale: float, generator: np.ra
         new = np.sqrt(spread * np.sqrt(square))
         change = float(np.mean(np.abs(new / spread - 1.0)))
         spread = new
-        if change < SETTLED:
+        if change < (SETTLED if noise is None else NEARLY):
             break
     height = _carry(network, authority, spread * wider, height)
     part = network.slope(height) / (spread * wider)

@@ -17,11 +17,12 @@ from labkit.records.project import from_root
 if TYPE_CHECKING:
     from labkit.studies.model import Point, Study
 
-RUN, ANSWER, SURVEY = "headroom", "headroom_answer", "survey"
+RUN, ANSWER, SURVEY, RULES = "headroom", "headroom_answer", "survey", "rules"
 
 # The least whole number that each of these parameters can be.
 LEAST = {
     RUN: {"tasks": 1, "checkpoints": 1, "replicates": 1, "report_every": 0},
+    RULES: {"tasks": 1, "replicates": 1, "dispatchers": 0, "forecast_rounds": 100},
     SURVEY: {"outages": 0, "links": 0, "distance": 2},
 }
 
@@ -56,7 +57,7 @@ def check_points(study: "Study", points: Iterable["Point"]) -> None:
     Parameters
     ----------
     study : Study
-        The study; one whose notebook is not the headroom notebook passes.
+        The study; one whose notebook places no tasks passes.
     points : iterable of Point
         Those that are going to be run.
 
@@ -65,7 +66,7 @@ def check_points(study: "Study", points: Iterable["Point"]) -> None:
     InputError
         For the first point that is refused.
     """
-    if study.notebook.name != RUN:
+    if study.notebook.name not in (RUN, RULES):
         return
     from labkit.fleet.readers import read_fleet
 
@@ -76,7 +77,7 @@ def check_points(study: "Study", points: Iterable["Point"]) -> None:
         place = values["fleet"]
         if place not in sizes:
             sizes[place] = len(read_fleet(from_root(place)))
-        _check_memory(values["replicates"], sizes[place], values["checkpoints"], len(policies))
+        _check_memory(values["replicates"], sizes[place], values.get("checkpoints", 1), len(policies))
 
 
 def policy_names(policies: list[Any]) -> list[str]:

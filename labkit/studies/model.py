@@ -14,7 +14,7 @@ from labkit.errors import InputError, TooFewReplicates
 from labkit.records.declared import EXECUTION_ONLY, Notebook, Parameter, is_path, read_notebook
 from labkit.records.identity import Identity, check_entropy, identify
 from labkit.records.project import EXPERIMENTS, ROOT, check_study_name, find_notebook, path_text
-from labkit.studies.door import ANSWER, RUN, SURVEY, check_risk, check_values
+from labkit.studies.door import ANSWER, RULES, RUN, SURVEY, check_risk, check_values
 
 KEYS = ("title", "question", "notebook", "replicates", "entropy", "parameters", "grid", "answer")
 # Handed to an answer notebook by the runner.
@@ -142,10 +142,10 @@ def make_study(name: str, content: dict[str, Any], *, folder: Path) -> Study:
             raise InputError(f"answer: {key} is set by labkit itself; remove it from the study.")
         if key not in answer_notebook.parameters:
             raise InputError(f"answer: notebook {answer_notebook.name} declares no parameter {key}; add it.")
-    if answer_notebook.name == ANSWER and notebook.name == SURVEY:
+    if answer_notebook.name == ANSWER and notebook.name in (SURVEY, RULES):
         raise InputError(
-            f"answer: notebook {ANSWER} reads runs of the notebook {RUN}, not of {SURVEY}; remove [answer], "
-            "since a survey is its own answer."
+            f"answer: notebook {ANSWER} reads runs of the notebook {RUN}, not of {notebook.name}; remove "
+            "[answer], since that notebook is its own answer."
         )
     answer = _typed(answer_notebook, answer, folder)
     check_values(answer_notebook, answer)

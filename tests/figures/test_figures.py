@@ -17,6 +17,8 @@ from labkit.analysis.answer import answer_table
 from labkit.errors import InputError
 from labkit.figures.choice_graph import choice_graph
 from labkit.figures.fair_levels import fair_levels
+from labkit.figures.forecast_against_simulation import forecast_against_simulation
+from labkit.figures.headroom_against_age import headroom_against_age
 from labkit.figures.headroom_per_policy import headroom_per_policy
 from labkit.figures.layout import is_ring_in_order, positions
 from labkit.figures.load_against_tasks import load_against_tasks
@@ -66,7 +68,32 @@ def everything(records, table):
             ringed=lk.survey(fleet).bottleneck,
             links=[("site 2", "site 9")],
         ),
+        "age": headroom_against_age(by_age(), servers=20),
+        "forecast": forecast_against_simulation(forecasts()),
     }
+
+
+def by_age():
+    kinds = ["fresh", "snapshot(every=5)", "snapshot(every=80)", "dispatchers(count=3, every=5)"]
+    rows = [
+        {"policy": policy, "information": kind, "headroom": scale * (1 + at)}
+        for policy, scale in RULES.items()
+        for at, kind in enumerate([*kinds, "dispatchers(count=3, every=80)"])
+    ]
+    table = pd.DataFrame(rows).assign(risk=0.01, confidence=0.95)
+    return table.assign(lower=0.9 * table["headroom"], upper=1.2 * table["headroom"])
+
+
+def forecasts():
+    return pd.DataFrame(
+        {
+            "fleet": ["ring of 40", "torus"],
+            "forecast": [4.5, 2.6],
+            "forecast_error": [0.2, 0.1],
+            "simulated": [4.4, 2.7],
+            "simulated_error": [0.05, 0.01],
+        }
+    )
 
 
 def boxes(figure):
@@ -82,7 +109,7 @@ def boxes(figure):
     return {text: mpl.text.Text.get_window_extent(text, renderer) for text in texts if text not in beyond}
 
 
-@pytest.mark.parametrize("name", ["load", "headroom", "graph"])
+@pytest.mark.parametrize("name", ["load", "headroom", "graph", "age", "forecast"])
 def test_words_stay_inside_and_apart(records, table, name):
     figure = everything(records, table)[name]
     FigureCanvasAgg(figure)
@@ -316,3 +343,38 @@ def test_looks_differ_in_more_than_colour_and_fills_darken_in_grey():
     shades = [grey(FILL(level)) for level in np.linspace(0, 1, 40)]
     assert (np.diff(shades) < 0).all()
     assert shades[0] - shades[-1] > 0.7
+
+
+def test_ages_are_in_tasks_a_server_with_fresh_loads_on_the_left():
+    figure = headroom_against_age(by_age(), servers=20)
+    assert [axes.get_title(loc="left") for axes in figure.axes] == [
+        "all see the last report",
+        "3 dispatchers, each knows its own",
+    ]
+    for axes in figure.axes:
+        assert [label.get_text() for label in axes.get_xticklabels()] == ["fresh", "0.25", "4"]
+        drawn = sorted(
+            tuple(np.round(line[0].get_ydata(), 9)) for line in axes.containers if len(line[0].get_ydata())
+        )
+        late = (1, 2) if axes is figure.axes[0] else (3, 4)
+        assert drawn == sorted(
+            tuple(np.round([scale, *(scale * (1 + at) for at in late)], 9)) for scale in RULES.values()
+        )
+
+
+@pytest.mark.parametrize(
+    ("draw", "refusal"),
+    [
+        (lambda: headroom_against_age(by_age().drop(columns="lower"), servers=20), "no column 'lower'"),
+        (lambda: headroom_against_age(pd.concat([by_age()] * 2), servers=20), "several rows"),
+        (lambda: headroom_against_age(by_age(), servers=0), "servers is 0"),
+        (
+            lambda: headroom_against_age(by_age().head(1).assign(information="old"), servers=2),
+            "information is 'old'",
+        ),
+        (lambda: forecast_against_simulation(forecasts().drop(columns="forecast")), "no column 'forecast'"),
+    ],
+)
+def test_tables_that_cannot_be_drawn_are_refused(draw, refusal):
+    with pytest.raises(InputError, match=refusal):
+        draw()
