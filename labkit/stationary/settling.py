@@ -17,7 +17,9 @@ from labkit.randomness import STARTS
 from labkit.stationary.linearised import Field
 
 # What the factor usually is, and the values that are believed.
-USUAL, LEAST, MOST = 1.25, 1.0, 2.0
+USUAL, LEAST, MOST = 1.25, 1.0, 1.8
+# Relative error of a factor that is not believed as it was measured.
+DOUBT = 0.2
 # Waves that count take between these times to relax, in rounds, and at most a share of the run.
 LONGEST, SHORTEST, SHARE = 40.0, 3.0, 0.25
 # Pairs that turn more than this share of their demand on average answer otherwise.
@@ -106,7 +108,8 @@ def settle(
         reference.std(ddof=1) / reference.mean(),
     )
     ratio, error = float(ratio), float(error) / counted**0.5
-    return Settled(outcome, draws, min(max(ratio, LEAST), MOST), error)
+    believed = min(max(ratio, LEAST), MOST)
+    return Settled(outcome, draws, believed, error if believed == ratio else max(error, DOUBT * believed))
 
 
 def spread_moments(first: int, last: int, period: int, count: int) -> np.ndarray:

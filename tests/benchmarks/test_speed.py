@@ -3,6 +3,7 @@
 import ctypes
 import random
 import subprocess
+import time
 from pathlib import Path
 
 import numpy as np
@@ -10,6 +11,7 @@ import pandas as pd
 import pytest
 
 import labkit as lk
+from labkit.compiled import kept
 from labkit.randomness import ARRIVALS, kernel_state, seed_sequence
 from tests.benchmarks.side_by_side import ratio, seconds
 
@@ -131,3 +133,50 @@ def test_two_threads_share_replicates(report):
     )
     report(f"two threads: {found:.2f} x as fast as one")
     assert found >= 1.8
+
+
+def test_tree_flow_costs_at_most_twelve_times_least_loaded(report):
+    fleet, tasks = lk.ring(1_024), 10_000_000
+    # Preparing the sets is left out: a call with one task takes it.
+    short = seconds(lambda: lk.place(fleet, "tree-flow", tasks=1, rng=1))
+    whole = seconds(lambda: lk.place(fleet, "tree-flow", tasks=tasks, rng=1)) - short
+    found = whole / seconds(lambda: lk.place(fleet, "least-loaded", tasks=tasks, rng=1))
+    report(f"tree-flow, ring of 1024: {found:.2f} x the time of least-loaded, prepared in {short:.1f} s")
+    assert found <= 12
+
+
+@pytest.mark.parametrize(
+    ("fleet", "words"),
+    [
+        (lk.ring(100_000), "ring"),
+        (lk.torus(316, 316), "torus"),
+        (lk.random_regular(100_000, 3, rng=1), "random, 3 choices a server"),
+    ],
+    ids=["ring", "torus", "random"],
+)
+def test_smooth_feedback_renews_a_picture_of_100_000_servers_within_a_second(fleet, words, report):
+    rule = lk.SmoothFeedback()
+    prepared = seconds(lambda: rule.prepare(fleet))
+    state = rule.own_state(rule.prepare(fleet))
+    loads = np.random.default_rng(1).poisson(20, fleet.size)
+    renew = kept(rule.renew)
+    renew(state, loads)
+    each = seconds(lambda: renew(state, loads + np.random.default_rng(2).poisson(1, fleet.size)))
+    report(
+        f"smooth-feedback, {words} of {fleet.size:,}: renewed in {each:.2f} s, prepared in {prepared:.1f} s"
+    )
+    assert each <= 1
+
+
+@pytest.mark.parametrize(
+    ("fleet", "words"),
+    [(lk.torus(316, 316), "torus"), (lk.random_regular(100_000, 3, rng=1), "random, 3 choices a server")],
+    ids=["torus", "random"],
+)
+def test_a_forecast_for_100_000_servers_takes_half_a_minute(fleet, words, report):
+    lk.forecast(lk.ring(10))
+    start = time.perf_counter()
+    ahead = lk.forecast(fleet)
+    took = time.perf_counter() - start
+    report(f"forecast, {words} of {fleet.size:,}: {took:.1f} s, mean gap {ahead.mean_gap:.2f}")
+    assert took <= 30

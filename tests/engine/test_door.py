@@ -80,3 +80,17 @@ def test_a_generator_is_advanced_and_an_int_is_not():
     assert (first != second).any()
     again = lk.place(RING, "one-choice", tasks=400, rng=np.random.default_rng(1)).loads
     assert (first == again).all()
+
+
+@pytest.mark.parametrize(
+    ("count", "every", "refusal"),
+    [
+        (0, 5, "count is 0; give a whole number of at least 1"),
+        (2, 0, "every is 0; give a whole number of at least 1"),
+        (2.5, 5, "count is 2.5; give a whole number"),
+        (5_000, 5, "count is 5000; give at most 4,096 dispatchers"),
+    ],
+)
+def test_dispatchers_that_cannot_be(count, every, refusal):
+    with pytest.raises(lk.InputError, match=refusal):
+        lk.Dispatchers(count=count, every=every)

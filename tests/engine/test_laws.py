@@ -199,3 +199,23 @@ def test_relabelling_and_splitting_change_no_law():
     for other in gaps[1:]:
         error = np.sqrt((gaps[0].var() + other.var()) / 4_000)
         assert abs(gaps[0].mean() - other.mean()) < 4 * error
+
+
+def test_one_dispatcher_sees_everything_as_it_is():
+    fleet = lk.ring(12)
+    alone = lk.place(fleet, "least-loaded", tasks=500, replicates=3, rng=4, information=lk.Dispatchers(1, 50))
+    assert (alone.loads == lk.place(fleet, "least-loaded", tasks=500, replicates=3, rng=4).loads).all()
+    assert alone.information == "dispatchers(count=1, every=50)"
+
+
+def test_the_more_dispatchers_the_less_their_own_placements_help():
+    # Paired on common arrivals, 60 replicates; the differences are many standard errors.
+    views = [lk.Fresh(), lk.Dispatchers(2, 200), lk.Dispatchers(16, 200), lk.Snapshot(200)]
+    gaps = [
+        lk.place(lk.ring(50), "least-loaded", tasks=20_000, replicates=60, rng=4, information=view)
+        .measures["gap"]
+        .mean()
+        for view in views
+    ]
+    assert gaps == sorted(gaps)
+    assert gaps[-1] > 1.2 * gaps[0]
