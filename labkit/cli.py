@@ -4,6 +4,7 @@ import argparse
 import contextlib
 import json
 import os
+import re
 import signal
 import sys
 import threading
@@ -146,6 +147,21 @@ def _parser() -> argparse.ArgumentParser:
     survey.add_argument("--name", metavar="NAME", help="name of the fleet (the name of the folder)")
     survey.add_argument("--output", metavar="DIR", type=Path, help="folder of the answers (results/answers)")
 
+    plan = command("plan", _plan, "Write the tables with which a dispatcher of your own can follow a rule.")
+    plan.add_argument(
+        "folder", metavar="FOLDER", type=Path, help="holds servers.csv and choices.csv (or .parquet)"
+    )
+    plan.add_argument("--policy", metavar="RULE", help="the placement rule (smooth-feedback)")
+    plan.add_argument(
+        "--output", metavar="DIR", type=Path, help="new folder for the plan (results/plans/FOLDER-RULE)"
+    )
+    plan.add_argument(
+        "--decisions", metavar="N", type=_whole, help="decisions that the test vectors hold (320)"
+    )
+    plan.add_argument(
+        "--check", metavar="PLAN", type=Path, help="only check that the plan in this folder is whole and fits"
+    )
+
     listing = command("list", _list, "List the recorded runs.")
     listing.add_argument("study", metavar="STUDY", nargs="?", help="only the runs of this study")
 
@@ -203,6 +219,43 @@ def _survey(arguments: argparse.Namespace) -> int:
         _print_json({"run": done.run_id, "record": done.record, "page": done.answer.page, **done.data})
     else:
         print(f"{done.text}\npage: {done.answer.page}\nrecord: {done.record}")
+    return 0
+
+
+def _plan(arguments: argparse.Namespace) -> int:
+    from labkit.fleet.readers import read_fleet
+
+    if arguments.check is not None:
+        from labkit.plans.reading import read_plan
+
+        given = ("policy", "output", "decisions")
+        beside = next((name for name in given if getattr(arguments, name) is not None), None)
+        if beside is not None:
+            raise InputError(f"--check only reads a plan; leave out --{beside}.")
+        found = read_plan(arguments.check, read_fleet(arguments.folder))
+        if arguments.json:
+            _print_json({"plan": arguments.check, "header": found.header})
+        else:
+            print(f"{repr(found)[1:-1]}: whole, and made for this fleet")
+        return 0
+    from labkit.plans.export import DECISIONS, write_plan
+    from labkit.policies.naming import parse_policy
+    from labkit.records.project import PLANS
+    from labkit.studies.own_fleet import name_of_folder
+
+    policy = "smooth-feedback" if arguments.policy is None else arguments.policy
+    output = arguments.output
+    if output is None:
+        rule = "-".join(re.findall(r"[A-Za-z0-9.]+", parse_policy(policy).name))
+        output = PLANS / f"{name_of_folder(arguments.folder)}-{rule}"
+    lines: list[str] = []
+    decisions = DECISIONS if arguments.decisions is None else arguments.decisions
+    written = write_plan(arguments.folder, policy, output, decisions=decisions, say=lines.append)
+    if arguments.json:
+        header = json.loads((written / "plan.json").read_text(encoding="utf-8"))
+        _print_json({"plan": written, "header": header})
+    else:
+        print("\n".join(lines))
     return 0
 
 

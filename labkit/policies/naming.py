@@ -13,6 +13,7 @@ from labkit.policies.one_choice import OneChoice
 from labkit.policies.pairwise_averaging import PairwiseAveraging
 from labkit.policies.smooth_feedback import SmoothFeedback
 from labkit.policies.static_split import StaticSplit
+from labkit.policies.tree_flow import TreeFlow
 
 BUILT_IN: dict[str, type[Policy]] = {
     "one-choice": OneChoice,
@@ -20,6 +21,7 @@ BUILT_IN: dict[str, type[Policy]] = {
     "mixed": Mixed,
     "static-split": StaticSplit,
     "smooth-feedback": SmoothFeedback,
+    "tree-flow": TreeFlow,
     "pairwise-averaging": PairwiseAveraging,
 }
 _FORM = re.compile(r"\s*([\w-]+)\s*(?:\((.*)\))?\s*")

@@ -15,7 +15,7 @@ from labkit.survey.smoothing import smooth, smoothing
 
 GAIN, MOST_GAIN = 0.2, 100.0
 # Default refresh: this many tasks a server. Slow patterns take far longer to form.
-ROUNDS = 8
+ROUNDS = 10
 # A pattern of rate r forgets itself under the local rule after about 3/r tasks a server.
 MEMORY = 3.0
 # Of a task: tilts that differ by half of it decide between equal loads, smaller differences move the odds.
@@ -118,7 +118,7 @@ class SmoothFeedback(Policy):
         Strength of the tilt, above 0. Patterns whose rate is below gain² are levelled out faster than by the
         local rule, those above are left to it.
     every : int, optional
-        Tilts are worked out anew just before the tasks 1, every + 1, ...; default 8 tasks a server.
+        Tilts are worked out anew just before the tasks 1, every + 1, ...; default 10 tasks a server.
 
     Notes
     -----

@@ -12,6 +12,7 @@ NOTEBOOKS = ROOT / "notebooks"
 EXPERIMENTS = ROOT / "experiments"
 STORE = ROOT / "results" / "runs"
 ANSWERS = ROOT / "results" / "answers"
+PLANS = ROOT / "results" / "plans"
 
 _STUDY_NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9_.-]{0,63}")
 
