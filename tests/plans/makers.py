@@ -17,7 +17,6 @@ RULES = (
     "tree-flow(strengths=equal)",
     "tree-flow(strengths=equal, leftover=coin, every=7)",
     "tree-flow(strengths=equal, response=linear)",
-    "tree-flow(strengths=equal, leftover=coin, response=linear)",
 )
 
 
