@@ -12,7 +12,8 @@ from labkit.randomness import BIT_GENERATOR, DRAWS
 from labkit.records.identity import library_version
 from labkit.records.project import ROOT
 
-PACKAGES = ("numpy", "numba", "scipy", "pandas", "pyarrow")
+# Some platforms lack pymetis; tree flow with and without it differs.
+PACKAGES = ("numpy", "numba", "scipy", "pandas", "pyarrow", "pymetis")
 
 
 def provenance(root: Path = ROOT) -> dict[str, str | bool]:
