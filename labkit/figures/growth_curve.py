@@ -1,0 +1,123 @@
+"""How a measure grows with size, as far as the laws can say."""
+
+import numpy as np
+from matplotlib.axes import Axes
+from matplotlib.figure import Figure
+from matplotlib.ticker import FuncFormatter, LogLocator, MaxNLocator, NullLocator
+
+from labkit.analysis.growth import GrowthFit
+from labkit.checks import check_number
+from labkit.errors import InputError
+from labkit.figures.style import COLOURS, DASHES, FAINT, INK, label_ends, plain, styled
+
+# Laws below this weight are not drawn.
+LEAST_WEIGHT = 0.05
+_POINTS = 80
+_LAW_COLOURS = COLOURS[1:4]
+
+
+@styled
+def growth_curve(fit: GrowthFit, *, reach: float = 4.0, measure: str | None = None) -> Figure:
+    """Draw the means at each size, the weighted average of the laws, and its bands.
+
+    The dark band holds at each size by itself, the pale one at all drawn sizes at once. Right of the largest
+    size the line is dashed and the ground is grey: nothing was measured there. Thin lines are the laws with
+    a weight of at least 5 %, three at most.
+
+    Parameters
+    ----------
+    fit : GrowthFit
+        From `labkit.fit_growth`.
+    reach : float
+        How many times beyond the largest size is drawn, from 1 to 16.
+    measure : str, optional
+        Words at the vertical axis, with the unit. Default: the name of the column.
+
+    Returns
+    -------
+    matplotlib.figure.Figure
+
+    Raises
+    ------
+    InputError
+        When `fit` is something else, or `reach` lies outside.
+    """
+    if not isinstance(fit, GrowthFit):
+        raise InputError(f"fit is {type(fit).__name__}; give what labkit.fit_growth returns.")
+    if not 1 <= check_number("reach", reach) <= 16:
+        raise InputError(f"reach is {reach!r}; give a number from 1 to 16.")
+    sizes = fit.sizes
+    smallest, largest = float(sizes["x"].iloc[0]), float(sizes["x"].iloc[-1])
+    # Rounding must not carry the last point beyond what may be asked.
+    points = np.clip(np.geomspace(smallest, largest * reach, _POINTS), smallest, largest * reach)
+    points = np.unique(np.append(points, largest))
+    alone, at_once = fit.predict(points), fit.predict(points, simultaneous=True)
+    figure = Figure(figsize=(8.2, 4.8), layout="constrained")
+    axes = figure.subplots()
+    main = COLOURS[0]
+    axes.fill_between(points, at_once["lower"], at_once["upper"], color=main, alpha=0.13, linewidth=0)
+    axes.fill_between(points, alone["lower"], alone["upper"], color=main, alpha=0.25, linewidth=0)
+    measured = points <= largest
+    axes.plot(points[measured], alone["estimate"][measured], color=main)
+    axes.plot(points[~measured], alone["estimate"][~measured], color=main, linestyle=DASHES[1])
+    looks = {"average": {"color": main}}
+    ends = {"average": float(alone["estimate"].iloc[-1])}
+    for (law, formula, weight), curve in _heavy(fit, points).items():
+        name = f"{law}: {formula} ({100 * weight:.0f} %)"
+        colour = _LAW_COLOURS[(len(ends) - 1) % len(_LAW_COLOURS)]
+        looks[name] = {"color": colour}
+        ends[name] = float(curve[-1])
+        axes.plot(points, curve, color=colour, linewidth=0.9, linestyle=DASHES[len(ends)])
+    axes.errorbar(
+        sizes["x"], sizes["mean"], yerr=1.96 * sizes["standard_error"], color=INK, marker="o", markersize=4,
+        linestyle="none", capsize=2, linewidth=1.1, zorder=5,
+    )  # fmt: skip
+    _axes(axes, fit.x, (float(alone["lower"].min()), float(alone["upper"].max())), smallest, largest, reach)
+    axes.set_ylabel(measure or f"mean {fit.y}")
+    percent = f"{100 * fit.confidence:g} %"
+    figure.suptitle(
+        f"points: means, ±1.96 standard errors · band: {percent}, choice of law included; "
+        "pale: at all sizes at once",
+        fontsize=9, x=0.01, ha="left",
+    )  # fmt: skip
+    figure.draw_without_rendering()
+    label_ends(axes, largest * reach, ends, looks)
+    return figure
+
+
+def _heavy(fit: GrowthFit, points: np.ndarray) -> dict[tuple[str, str, float], np.ndarray]:
+    rows = fit.by_law(points)
+    rows = rows[rows["weight"] >= LEAST_WEIGHT]
+    curves = {
+        (str(law), str(formula), float(group["weight"].iloc[0])): group["estimate"].to_numpy()
+        for (law, formula), group in rows.groupby(["law", "formula"], sort=False)
+    }
+    return dict(list(curves.items())[: len(_LAW_COLOURS)])
+
+
+def _axes(
+    axes: Axes, name: str, heights: tuple[float, float], smallest: float, largest: float, reach: float
+) -> None:
+    axes.set_xscale("log")
+    axes.set_xlim(smallest / 1.1, largest * reach)
+    axes.xaxis.set_major_locator(LogLocator(subs=(1, 2, 5)))
+    axes.xaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:,.0f}"))
+    axes.xaxis.set_minor_locator(NullLocator())
+    low, high = heights
+    if low > 0:
+        axes.set_yscale("log")
+        # The pale band may reach far down, even below zero.
+        axes.set_ylim(low / 1.5, high * 1.5)
+        axes.yaxis.set_major_locator(LogLocator(subs=(1, 2, 5) if high > 20 * low else (1, 2, 3, 5, 7)))
+        axes.yaxis.set_minor_locator(NullLocator())
+    else:
+        axes.yaxis.set_major_locator(MaxNLocator(6))
+    axes.yaxis.set_major_formatter(plain)
+    if reach > 1:
+        axes.axvspan(largest, largest * reach, color="#F0F0F0", linewidth=0, zorder=0)
+        axes.annotate(
+            "extrapolated", (largest, 0.02), xycoords=("data", "axes fraction"), xytext=(4, 0),
+            textcoords="offset points", color=FAINT, va="bottom",
+        )  # fmt: skip
+    axes.set_xlabel(name)
+    axes.grid(True)
