@@ -18,14 +18,19 @@ def check_whole(name: str, value: Any, *, least: int = 1) -> int:
     if not whole or int(value) < least:
         raise InputError(f"{name} is {value!r}; give a whole number of at least {least}.")
     if int(value) > LARGEST_WHOLE:
-        raise InputError(f"{name} is {float(value):.4g}; give a whole number of at most {LARGEST_WHOLE}.")
+        size = f"{float(value):.4g}" if int(value) < 10**300 else "far larger"
+        raise InputError(f"{name} is {size}; give a whole number of at most {LARGEST_WHOLE}.")
     return int(value)
 
 
 def check_number(name: str, value: Any) -> float:
     """Return `value` as a float when it is a finite real number."""
     real = isinstance(value, numbers.Real) and not isinstance(value, bool)
-    if not real or not math.isfinite(float(value)):
+    try:
+        real = real and math.isfinite(float(value))
+    except OverflowError:
+        real, value = False, "far larger than any float"
+    if not real:
         raise InputError(f"{name} is {value!r}; give a finite number.")
     return float(value)
 
@@ -51,8 +56,8 @@ def check_fraction(name: str, value: Any, *, closed: bool = False) -> float:
 def check_member(name: str, value: Any, allowed: Iterable[str]) -> str:
     """Return `value` when it is one of the `allowed` words; the refusal names the nearest."""
     words = list(allowed)
-    if value in words:
-        return str(value)
+    if isinstance(value, str) and value in words:
+        return value
     raise InputError(f"{name} is {value!r}; {nearest(value, words)}.")
 
 

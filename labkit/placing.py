@@ -6,7 +6,7 @@ from typing import Any
 import numpy as np
 
 from labkit.checks import LARGEST_WHOLE, check_whole
-from labkit.engine.information import Fresh, Information
+from labkit.engine.information import Information, checked_information
 from labkit.engine.placement import Outcome, place_loads, zero_loads
 from labkit.engine.sizes import LARGEST_SIZE, numbers_for, sizes_of
 from labkit.errors import InputError
@@ -87,7 +87,7 @@ def place(
     workers = check_whole("workers", workers)
     seed = seed_sequence(rng)
     moments = _checked_checkpoints(checkpoints, tasks)
-    information = _checked_information(information)
+    information = checked_information(information)
     work = sizes_of(sizes, tasks, replicates)
     whole = work is None and not rule.moves_work
     if isinstance(start, str):
@@ -118,17 +118,6 @@ def _checked_checkpoints(checkpoints: Iterable[int] | None, tasks: int) -> np.nd
             f"{tasks}."
         )
     return moments.astype(np.int64)
-
-
-def _checked_information(information: Information | None) -> Information:
-    if information is None:
-        return Fresh()
-    if isinstance(information, Information):
-        return information
-    raise InputError(
-        f"information is {information!r}; give lk.Fresh(), lk.Snapshot(every=k) or "
-        "lk.Dispatchers(count=m, every=k)."
-    )
 
 
 def _starting_loads(start: Any, servers: int, replicates: int, whole: bool) -> np.ndarray:

@@ -8,6 +8,7 @@ import pandas as pd
 from labkit.analysis.headroom import headroom
 from labkit.checks import check_number, check_positive, nearest
 from labkit.errors import HeadroomExceeded, InputError
+from labkit.policies.naming import moves_placed_work
 
 
 def answer_table(
@@ -142,6 +143,8 @@ class Verdict:
 def judge(table: pd.DataFrame, policy: str = "") -> Verdict:
     """Find the rule that needs least headroom in the worst of the kinds of information.
 
+    A reference that moves work already placed is none.
+
     Parameters
     ----------
     table : pandas.DataFrame
@@ -152,9 +155,15 @@ def judge(table: pd.DataFrame, policy: str = "") -> Verdict:
     Raises
     ------
     InputError
-        When `policy` is not in the table.
+        When `policy` is not in the table, or moves work already placed, or there are no other policies.
     """
-    policies = list(table["policy"].unique())
+    policies = [name for name in table["policy"].unique() if not moves_placed_work(name)]
+    if not policies or (policy and moves_placed_work(policy)):
+        raise InputError(
+            f"policy is {policy or table['policy'].iloc[0]!r}, which moves work already placed, as no "
+            "dispatcher can; name a placement rule."
+        )
+    table = table[table["policy"].isin(policies)]
     if policy and policy not in policies:
         raise InputError(f"policy is {policy!r}, which was not run; {nearest(policy, policies)}.")
     worst = table.groupby("policy", sort=False)["headroom"].max()

@@ -10,6 +10,7 @@ import pandas as pd
 
 from labkit.analysis.answer import Verdict
 from labkit.errors import InputError
+from labkit.policies.naming import shown_name
 
 _INFORMATION = re.compile(r"(?:snapshot\(|dispatchers\(count=(?P<count>\d+), )every=(?P<every>\d+)\)")
 # A utilisation that needs more decimals than this is written with a power of ten.
@@ -98,7 +99,7 @@ def text_table(table: pd.DataFrame) -> str:
     heads += ["network", "rule", "capacity", "saved", "at least"]
     lines = []
     for _, row in table.iterrows():
-        cells = [row["policy"], *([reports(row["information"])] if several else [])]
+        cells = [shown_name(row["policy"]), *([reports(row["information"])] if several else [])]
         write = _row_writer(row)
         cells += [write(row["headroom"]), f"{write(row['lower'])} – {write(row['upper'])}"]
         cells += [percent(100 * row["of_mean"]), write(row["network"]), write(row["rule"])]
@@ -157,7 +158,7 @@ def page_table(table: pd.DataFrame, total_capacity: float) -> pd.DataFrame:
         write = _row_writer(row)
         rows.append(
             {
-                "rule": row["policy"],
+                "rule": shown_name(row["policy"]),
                 "load reports": reports(row["information"]),
                 "headroom": write(row["headroom"]),
                 confidence: f"{write(row['lower'])} – {write(row['upper'])}",
@@ -182,7 +183,7 @@ def paired_table(paired: pd.DataFrame) -> pd.DataFrame:
         lower = round(row["share_lower"] * row["replicates"])
         rows.append(
             {
-                "rule": row["policy"],
+                "rule": shown_name(row["policy"]),
                 "load reports": reports(row["information"]),
                 f"gap less that of {row['baseline']}": write(row["difference"]),
                 band: f"{write(row['lower'])} to {write(row['upper'])}",

@@ -75,3 +75,15 @@ class Dispatchers(Information):
         if self.dispatchers > MOST_DISPATCHERS:
             raise InputError(f"count is {count!r}; give at most {MOST_DISPATCHERS:,} dispatchers.")
         self.every = check_whole("every", every)
+
+
+def checked_information(information: Information | None) -> Information:
+    """Return the information model, fresh by default."""
+    if information is None:
+        return Fresh()
+    if isinstance(information, Information):
+        return information
+    raise InputError(
+        f"information is {information!r}; give lk.Fresh(), lk.Snapshot(every=k) or "
+        "lk.Dispatchers(count=m, every=k)."
+    )

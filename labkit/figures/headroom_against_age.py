@@ -66,7 +66,12 @@ def headroom_against_age(table: pd.DataFrame, *, servers: int) -> Figure:
         axes.set_title(several if kind else "all see the last report")
     first = rows.iloc[0]
     panels[0].set_ylabel(f"headroom at {100 * first['risk']:g} % risk, utilisation (load ÷ capacity)")
-    figure.suptitle(f"bars: {100 * first['confidence']:g} % limits", fontsize=9, x=0.01, ha="left")
+    figure.suptitle(
+        f"bars: {100 * first['confidence']:g} % limits; marks are moved sideways to show all",
+        fontsize=9,
+        x=0.01,
+        ha="left",
+    )
     figure.draw_without_rendering()
     for axes in panels:
         label_ends(axes, (late[-1] if late.size else fresh) * 1.25, axes.ends, style)
@@ -86,7 +91,7 @@ def _axes(axes: Axes, fresh: float, late: np.ndarray, wide: bool) -> None:
     ticks = [fresh, *late]
     axes.xaxis.set_major_locator(FixedLocator(ticks))
     axes.xaxis.set_minor_locator(NullLocator())
-    axes.set_xticks(ticks, ["fresh", *(f"{age:g}" for age in late)])
+    axes.set_xticks(ticks, ["fresh", *(f"{age:.3g}" for age in late)])
     axes.set_xlim(fresh * 0.7, (late[-1] if late.size else fresh) * 1.3)
     if wide:
         axes.set_yscale("log")

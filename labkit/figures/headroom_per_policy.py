@@ -10,6 +10,7 @@ from labkit.analysis.wording import reports, utilisation
 from labkit.checks import check_member, nearest
 from labkit.errors import InputError
 from labkit.figures.style import FAINT, INK, looks, plain, styled
+from labkit.policies.naming import shown_name
 
 
 @styled
@@ -66,7 +67,7 @@ def headroom_per_policy(table: pd.DataFrame, *, baseline: str = "", above: str =
             base = rows[(rows["policy"] == baseline) & (rows["information"] == kind)]
             _dot(axes, y, mine.loc[kind], style[policy], filled=kind == kinds[0])
             _values(axes, y, mine.loc[kind], base, baseline if policy != baseline else "")
-    axes.set_yticks(range(len(order)), order)
+    axes.set_yticks(range(len(order)), [shown_name(name) for name in order])
     axes.tick_params(axis="y", length=0)
     axes.set_ylim(-0.6, len(order) - 0.4)
     axes.set_xlim(0, rows["upper"].max() * 1.04)

@@ -17,6 +17,8 @@ from matplotlib.axes import Axes
 from matplotlib.colors import LinearSegmentedColormap
 from matplotlib.figure import Figure
 
+from labkit.policies.naming import shown_name
+
 P = ParamSpec("P")
 
 COLOURS = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#56B4E9", "#E69F00", "#000000")
@@ -142,7 +144,7 @@ def label_ends(axes: Axes, x: float, ends: dict[str, float], looks_of: dict[str,
     pixels = spread(heights, 12 * axes.figure.dpi / 72)
     for (name, y), height, pixel in zip(ends.items(), heights, pixels, strict=True):
         axes.annotate(
-            name,
+            shown_name(name),
             (x, y),
             xytext=(10, (pixel - height) * 72 / axes.figure.dpi),
             textcoords="offset points",

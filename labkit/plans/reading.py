@@ -6,7 +6,8 @@ from typing import Any
 
 from labkit.errors import InputError
 from labkit.fleet.model import Fleet, check_fleet
-from labkit.plans.model import HEADER, Plan
+from labkit.plans.model import DISPATCHER, HEADER, Plan
+from labkit.plans.schema import FILE as SCHEMA
 from labkit.plans.schema import VERSION, fault_of, header_digest
 from labkit.plans.tables import read_csv_bytes, sha256
 
@@ -45,6 +46,8 @@ def read_plan(folder: str | Path, fleet: Fleet | None = None) -> Plan:
     """
     if fleet is not None:
         check_fleet(fleet)
+    if not isinstance(folder, str | Path):
+        raise InputError(f"folder is {folder!r}; give the path of a folder that labkit plan wrote.")
     place = Path(folder)
     if not (place / HEADER).is_file():
         raise InputError(f"folder {str(folder)!r} holds no {HEADER}; name a folder that labkit plan wrote.")
@@ -54,6 +57,12 @@ def read_plan(folder: str | Path, fleet: Fleet | None = None) -> Plan:
             f"plan {str(folder)!r} is for another fleet: its digest is {header['fleet']['digest'][:12]}..., "
             f"that of the given fleet {fleet.digest[:12]}...; make a plan for this fleet with labkit plan."
         )
+    for program in (DISPATCHER, SCHEMA):
+        beside = place / program.name
+        if beside.is_file() and _content(beside) != program.read_bytes():
+            raise InputError(
+                f"{beside} is not this labkit's: it was altered, or another version wrote it; {_AGAIN}."
+            )
     return Plan(header, {name: _table(place, name, about) for name, about in header["files"].items()})
 
 

@@ -70,3 +70,15 @@ def _number_or_word(text: str) -> float | str:
         return float(text)
     except ValueError:
         return text
+
+
+def moves_placed_work(name: str) -> bool:
+    """Tell whether the built-in policy of this name moves work already placed: a reference, not a rule."""
+    form = _FORM.fullmatch(name)
+    kind = BUILT_IN.get(form.group(1)) if form else None
+    return kind is not None and kind.moves_work
+
+
+def shown_name(name: str) -> str:
+    """Return a policy's name as tables and figures show it, marked where it moves work already placed."""
+    return f"{name} (moves placed work)" if moves_placed_work(name) else name

@@ -55,16 +55,18 @@ class TreeFlow(Policy):
 
     Notes
     -----
-    ``tree-flow(strengths=equal, leftover=coin)`` is the rule as published (balancing by orthogonal flows over
-    a hierarchical decomposition; from memory). A dispatcher needs D of the sets, and for each choice a table
-    of about as many entries as sets are nested (`memory`). Differences that are two tasks a server old do as
-    well as present ones: on a ring of 256 the mean gap is 8.85 with them and 8.80 without.
+    ``tree-flow(strengths=equal, leftover=coin)`` is balancing by orthogonal flows over a hierarchical
+    decomposition, a published rule; the other settings are this project's own. A dispatcher needs D of the
+    sets, and for each choice a table of about as many entries as sets are nested (`memory`). Differences
+    that are two tasks a server old do as well as present ones: on a ring of 256 the mean gap is 8.85 with
+    them and 8.80 without.
 
     The same fleet has the same tables in every run. The halves are those of the library `pymetis` where it is
     installed (always with the same seed and one cut), and otherwise our own: both serve, but they differ, so
     results to the bit need it on both sides or on neither.
     """
 
+    knows = "the loads of the options, and for each of its server sets which half is fuller"
     renew = staticmethod(renew)
     after = staticmethod(after)
 

@@ -1,5 +1,6 @@
 """The forecast: the stationary gap of a comparing rule, without simulating to the stationary state."""
 
+import warnings
 import weakref
 from dataclasses import dataclass
 from typing import Any
@@ -8,8 +9,10 @@ import numpy as np
 import pandas as pd
 import scipy.sparse
 import scipy.sparse.csgraph
+from scipy.linalg import LinAlgWarning
 
 from labkit.checks import check_fraction, check_whole
+from labkit.engine.placement import place_loads, zero_loads
 from labkit.errors import InputError
 from labkit.fleet.digest import fleet_digest
 from labkit.fleet.model import ABSENT, Fleet, check_fleet
@@ -23,7 +26,7 @@ from labkit.randomness import seed_sequence
 from labkit.stationary import fluid
 from labkit.stationary.linearised import Field, linearise
 from labkit.stationary.network import network_of
-from labkit.stationary.settling import USUAL, Settled, settle
+from labkit.stationary.settling import USUAL, Settled, settle, spread_moments
 from labkit.survey.connectivity import components
 from labkit.survey.demand import total_demand
 from labkit.survey.fair import fair_profile
@@ -39,6 +42,8 @@ MOMENTS = 36
 MODEL = 0.03
 TWO_SIDED_95 = 1.96
 LEAST_BETA = 0.1
+# Servers up to which a fleet without waves is simulated.
+SIMULATED = 500
 
 
 @dataclass(frozen=True)
@@ -57,7 +62,7 @@ class Forecast:
     spread : float
         Root mean square, over servers and time, of a server's utilisation less the mean.
     method : str
-        "free field" or "fluid limit".
+        "free field", "fluid limit" or "simulation".
     scale : float
         Measured factor on the linear field's variances; NaN for the fluid limit.
     gaps, weights : float64 arrays, shape (values,)
@@ -144,7 +149,8 @@ def forecast(
     takes of the order of servers² rounds of one task a server: long waves of load come from a Gaussian free
     field, by statistical linearisation of the rule, with mean heights that carry what the network must carry;
     a short simulation of a few hundred rounds, started from draws of it, settles what is local and measures
-    the field's scale. Without a table of choices (`labkit.complete`) the fluid limit is used.
+    the field's scale. Without a table of choices (`labkit.complete`) all settles within some tens of rounds:
+    up to 500 servers are simulated, for more the fluid limit is used.
 
     Parameters
     ----------
@@ -181,8 +187,11 @@ def forecast(
     """
     rule, authority = checked_rule(check_fleet(fleet), policy)
     workers = check_whole("workers", workers)
-    if fleet.implicit is not None:
+    if fleet.implicit is not None and fleet.size > SIMULATED:
         return _fluid(fleet, rule, authority)
+    if fleet.implicit is not None:
+        seed = seed_sequence(int(fleet_digest(fleet)[:16], 16) if rng is None else rng)
+        return _simulated(fleet, rule, authority, seed, workers)
     law = law_of(fleet, rule, rng=rng, workers=workers)
     return _from_law(fleet, rule, law)
 
@@ -225,7 +234,19 @@ def law_of(fleet: Fleet, rule: Policy, *, rng: Any = None, workers: int = 1) -> 
     )
 
     def field_at(scale: float) -> Field:
-        field = linearise(network, authority, scale, np.random.Generator(np.random.SFC64(noise)))
+        unsolved = False
+        with np.errstate(all="ignore"), warnings.catch_warnings():
+            warnings.simplefilter("error", LinAlgWarning)
+            try:
+                field = linearise(network, authority, scale, np.random.Generator(np.random.SFC64(noise)))
+                unsolved = not np.isfinite(field.height).all() or not (field.gain > 0).all()
+            except (np.linalg.LinAlgError, LinAlgWarning, ValueError, RuntimeError):
+                unsolved = True
+        if unsolved:
+            raise InputError(
+                "fleet is so nearly in parts, or so nearly full somewhere, that the equations have "
+                "no solution in floats; leave out negligible demands, or simulate with lk.place."
+            )
         if field.left > 1e-3:
             raise InputError(
                 f"policy {rule.name} cannot carry what the fleet must shift to be balanced, so there is no "
@@ -270,7 +291,8 @@ def check_stationary(fleet: Fleet) -> None:
         mean = total_demand(fleet) / fleet.total_capacity
         raise InputError(
             f"fleet is not balanceable (optimum {fair.optimum / mean:.4g} × mean utilisation), so its gap "
-            "grows for ever: there is no stationary state; use lk.place and the excess over the optimum."
+            "grows for ever: there is no stationary state; place from a start of your own, and look at the "
+            "excess over the optimum."
         )
     carried = fair.split.by_option()[:, : fleet.options.shape[1]]
     tight = _tight_servers(fleet, carried)
@@ -325,8 +347,8 @@ def _from_law(fleet: Fleet, rule: Policy, law: Law) -> Forecast:
     by_moment = table.groupby("tasks")["gap"].mean().to_numpy()
     half = len(by_moment) // 2
     drift = float(by_moment[half:].mean() - by_moment[:half].mean())
-    # The gap goes with the square root of the scale, as far as it goes with the field at all.
-    scaled = 0.5 * slope * float(drawn.mean()) * law.error / law.scale
+    # The gap goes at most with the square root of the scale.
+    scaled = 0.5 * mean_gap * law.error / law.scale
     by_chance = TWO_SIDED_95 * np.hypot(chance, scaled)
     error = np.sqrt(by_chance**2 + drift**2 + (MODEL * mean_gap) ** 2)
     within = table["gap"].to_numpy() - np.repeat(slope * began, len(by_moment))
@@ -353,9 +375,29 @@ def _fluid(fleet: Fleet, rule: Policy, authority: float) -> Forecast:
     gaps, weights = fluid.law_of_gap(shares, fleet.size)
     mean_gap = float(gaps @ weights)
     profile = pd.DataFrame({"server": fleet.names, "utilisation": np.zeros(fleet.size)})
-    # Servers are not quite independent: what one has more, the others have less.
-    error = np.hypot(MODEL * mean_gap, 4.0 / fleet.size)
+    error = MODEL * mean_gap
     return Forecast(
         rule.name, fleet.size, mean_gap, float(error), float(np.sqrt(fluid.variance_of_load(shares))),
         "fluid limit", float("nan"), gaps, weights, profile,
+    )  # fmt: skip
+
+
+def _simulated(
+    fleet: Fleet, rule: Policy, authority: float, seed: np.random.SeedSequence, workers: int
+) -> Forecast:
+    """Simulate from empty, since nothing settles slowly."""
+    size, rounds = fleet.size, int(60.0 / authority**2) + 40
+    outcome = place_loads(
+        fleet, rule, tasks=rounds * size, seed=seed, workers=workers,
+        checkpoints=spread_moments(rounds * size // 2, rounds * size, size, MOMENTS),
+        loads=zero_loads(size, LEAST_REPLICATES, True),
+    )  # fmt: skip
+    gaps = outcome.measures["gap"].to_numpy()
+    each = gaps.reshape(LEAST_REPLICATES, -1).mean(axis=1)
+    chance = TWO_SIDED_95 * each.std(ddof=1) / np.sqrt(LEAST_REPLICATES)
+    spread = float(np.sqrt(outcome.measures["load_variance"].mean()))
+    profile = pd.DataFrame({"server": fleet.names, "utilisation": np.zeros(size)})
+    return Forecast(
+        rule.name, size, float(gaps.mean()), float(np.hypot(chance, MODEL * gaps.mean())), spread,
+        "simulation", float("nan"), gaps, np.full(gaps.size, 1.0 / gaps.size), profile,
     )  # fmt: skip

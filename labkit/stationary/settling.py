@@ -19,7 +19,9 @@ from labkit.stationary.linearised import Field
 # What the factor usually is, and the values that are believed.
 USUAL, LEAST, MOST = 1.25, 1.0, 1.8
 # Relative error of a factor that is not believed as it was measured.
-DOUBT = 0.2
+DOUBT = 0.5
+# Share of the conductance that must be on level pairs for them to be enough.
+FEW = 0.05
 # Waves that count take between these times to relax, in rounds, and at most a share of the run.
 LONGEST, SHORTEST, SHARE = 40.0, 3.0, 0.25
 # Pairs that turn more than this share of their demand on average answer otherwise.
@@ -63,11 +65,11 @@ def loads_of(height: np.ndarray, room: np.ndarray, generator: np.random.Generato
     Returns
     -------
     int64 array, shape (replicates, servers)
-        At least 1 everywhere.
+        At least 0 everywhere.
     """
     loads = zero_loads(room.size, len(height), True)
     lowest = height.min(axis=1, keepdims=True)
-    loads[:] = np.floor(room * (height - lowest) + generator.random(height.shape)) + 1.0
+    loads[:] = np.floor(room * (height - lowest + 1.0) + generator.random(height.shape))
     return loads
 
 
@@ -101,7 +103,7 @@ def settle(
     found = band.energy(height - height.mean(axis=0)) * (counted / (counted - 1))
     reference = band.energy(draws[:counted])
     if not np.all(reference > 0):
-        return Settled(outcome, draws, scale, 0.0)
+        return Settled(outcome, draws, scale, DOUBT * scale)
     ratio = found.mean() / reference.mean()
     error = ratio * np.hypot(
         found.std(ddof=1) / found.mean() if found.mean() > 0 else 0.0,
@@ -109,7 +111,9 @@ def settle(
     )
     ratio, error = float(ratio), float(error) / counted**0.5
     believed = min(max(ratio, LEAST), MOST)
-    return Settled(outcome, draws, believed, error if believed == ratio else max(error, DOUBT * believed))
+    if believed != ratio or band.doubted:
+        error = max(error, DOUBT * believed)
+    return Settled(outcome, draws, believed, error)
 
 
 def spread_moments(first: int, last: int, period: int, count: int) -> np.ndarray:
@@ -127,7 +131,10 @@ class _Band:
         self.times = (SHORTEST, max(min(LONGEST, SHARE * rounds) - SHORTEST, SHORTEST))
         self.rate = scipy.sparse.diags_array(1.0 / network.room) @ field.solve.matrix
         self.step = 0.5 / float((field.solve.diagonal / network.room).max())
-        self.weight = conductance * (np.abs(field.turned) <= LEVEL * field.authority)
+        level = np.abs(field.turned) <= LEVEL * field.authority
+        # Where hardly any pair is level, all must serve, and are believed less.
+        self.doubted = (conductance * level).sum() < FEW * conductance.sum()
+        self.weight = conductance * (level | self.doubted)
         self.slope = network.slope
 
     def energy(self, height: np.ndarray) -> np.ndarray:

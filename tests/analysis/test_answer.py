@@ -301,3 +301,16 @@ def test_wrong_records_are_refused_in_one_sentence(several, change, options, err
 def test_an_unknown_rule_in_operation_is_refused(several):
     with pytest.raises(InputError, match=r"policy is 'least-load'.*did you mean 'least-loaded'"):
         judge(answer(several), "least-load")
+
+
+def test_a_reference_that_moves_placed_work_is_never_the_answer():
+    table = answer_table(
+        measures({"pairwise-averaging": 0.5, "least-loaded": 1.0, "one-choice": 3.0}),
+        risk=0.02,
+        baseline="one-choice",
+        total_capacity=1000,
+    )
+    assert judge(table).policy == "least-loaded"
+    assert "pairwise-averaging (moves placed work)" in text_table(table)
+    with pytest.raises(InputError, match="moves work already placed"):
+        judge(table, "pairwise-averaging")

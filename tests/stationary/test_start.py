@@ -1,5 +1,6 @@
 """Starts from the forecast law, and the check that a gap is stationary."""
 
+import networkx as nx
 import numpy as np
 import pytest
 
@@ -29,7 +30,7 @@ def test_starts_are_whole_loads_that_belong_to_their_replicate():
     rule = parse_policy("least-loaded")
     three, one = forecast_start(fleet, rule, 3, seed), forecast_start(fleet, rule, 1, seed)
     assert three.dtype == np.int64
-    assert three.min() >= 1
+    assert three.min() >= 0
     assert three[:1].tolist() == one.tolist()
     assert three[0].tolist() != three[1].tolist()
     placed = [
@@ -62,14 +63,14 @@ def test_a_stationary_gap_is_named_with_its_error():
     # Ring of 10: 1.6423(7), own simulation elsewhere. False alarm at 4 standard errors 6e-5.
     found = lk.stationary_gap(lk.ring(10), "least-loaded", rounds=20_000, rng=1)
     assert abs(found.mean_gap - 1.6423) < 4 * np.hypot(found.error, 0.0007)
-    assert found.rhat < 1.1
+    assert found.rhat < 1.05
     assert found.error < 0.02
     assert found.chains["start"].tolist() == ["flat"] * 4 + ["wide"] * 4
 
 
 @pytest.mark.parametrize("rule", ["least-loaded", "smooth-feedback", "pairwise-averaging", "mixed(beta=0.7)"])
 def test_too_short_a_run_is_not_called_stationary(rule):
-    with pytest.raises(lk.NotStationary, match=r"is not stationary after 100 rounds: .* from flat starts"):
+    with pytest.raises(lk.NotStationary, match=r"not shown stationary after 100 rounds: .* from flat starts"):
         lk.stationary_gap(lk.ring(400), rule, rounds=100, rng=1)
 
 
@@ -79,7 +80,7 @@ def test_too_short_a_run_is_not_called_stationary(rule):
         ({"rounds": 10}, "rounds is 10"),
         ({"chains": 1}, "chains is 1"),
         ({"policy": "one-choice"}, "no stationary gap"),
-        ({"fleet": lk.fleet_from_graph(__import__("networkx").lollipop_graph(4, 1))}, "not balanceable"),
+        ({"fleet": lk.fleet_from_graph(nx.lollipop_graph(4, 1))}, "not balanceable"),
     ],
 )
 def test_no_check_without_a_stationary_state(values, refusal):
@@ -93,3 +94,26 @@ def test_a_fleet_without_a_table_of_choices():
     found = lk.stationary_gap(lk.complete(64), "least-loaded", rounds=3_000, rng=1)
     # CHECKS: 1.6787(13).
     assert abs(found.mean_gap - 1.6787) < 4 * np.hypot(found.error, 0.0013)
+
+
+def test_late_reports_are_not_called_stationary_too_soon():
+    # From flat and from the law of fresh loads both, the gap would come from below: it ends at 39.
+    for seed in range(3):
+        with pytest.raises(lk.NotStationary):
+            lk.stationary_gap(
+                lk.ring(64), "least-loaded", rounds=400, rng=seed, information=lk.Snapshot(every=1_280)
+            )
+
+
+def test_a_gap_that_never_moves_is_named():
+    two = lk.fleet_from_graph(nx.path_graph(2))
+    found = lk.stationary_gap(two, "pairwise-averaging", rounds=200, rng=1)
+    assert (found.mean_gap, found.error, found.rhat) == (0.0, 0.0, 1.0)
+    with pytest.raises(lk.InputError, match="information is 'fresh'"):
+        lk.stationary_gap(two, "least-loaded", rounds=200, rng=1, information="fresh")
+
+
+def test_rules_that_never_settle_are_refused_everywhere():
+    for rule in ("mixed(beta=0)", "one-choice"):
+        with pytest.raises(lk.InputError, match="drift apart for ever"):
+            lk.stationary_gap(lk.complete(8), rule, rounds=100, rng=1)
