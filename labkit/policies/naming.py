@@ -67,7 +67,7 @@ def parse_policy(policy: Any) -> Policy:
 
 def _number_or_word(text: str) -> float | str:
     try:
-        return float(text)
+        return int(text) if re.fullmatch(r"[+-]?[0-9]+", text) else float(text)
     except ValueError:
         return text
 

@@ -143,7 +143,7 @@ class SmoothFeedback(Policy):
         self.gain = check_positive("gain", gain)
         if self.gain > MOST_GAIN:
             raise InputError(f"gain is {gain!r}; give a number of at most {MOST_GAIN:g}.")
-        self.every = None if every is None else check_whole("every", _whole(every))
+        self.every = None if every is None else check_whole("every", every)
 
     @property
     def name(self) -> str:
@@ -183,8 +183,3 @@ class SmoothFeedback(Policy):
         """Return the state with arrays of its own where `renew` writes."""
         tilt, width, field, due, scale, fixed, memory = state
         return (tilt.copy(), width, field.copy(), due, scale, fixed, tuple(array.copy() for array in memory))
-
-
-def _whole(value: Any) -> Any:
-    """Return a whole number that was written as text, and so read as a float, as an int."""
-    return int(value) if isinstance(value, float) and value.is_integer() else value

@@ -82,7 +82,7 @@ class TreeFlow(Policy):
         self.leftover = check_member("leftover", leftover, LEFTOVERS)
         self.response = check_member("response", response, RESPONSES)
         self.steering = check_member("steering", steering, STEERING)
-        self.every = None if every is None else check_whole("every", _whole(every), least=0)
+        self.every = None if every is None else check_whole("every", every, least=0)
         self.choose = CHOOSERS[self.steering, self.response, self.leftover]
 
     @property
@@ -230,8 +230,3 @@ class TreeFlow(Policy):
                 "to steer, so use least-loaded."
             )
         return frame_of(fleet)
-
-
-def _whole(value: Any) -> Any:
-    """Return a whole number that was written as text, and so read as a float, as an int."""
-    return int(value) if isinstance(value, float) and value.is_integer() else value
