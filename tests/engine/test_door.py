@@ -16,7 +16,7 @@ RING = lk.ring(4)
         ({"fleet": "ring"}, "fleet is str; give a labkit Fleet"),
         ({"policy": "least-loded"}, "policy is 'least-loded'; did you mean 'least-loaded'"),
         ({"policy": "mixed"}, "it needs beta"),
-        ({"policy": "mixed(beta=2)"}, "beta is 2.0; give a number from 0 to 1"),
+        ({"policy": "mixed(beta=2)"}, "beta is 2; give a number from 0 to 1"),
         ({"policy": "mixed(gamma=0.5)"}, "with 'gamma=0.5'"),
         ({"policy": "one-choice(beta=1)"}, "it takes no parameters"),
         ({"policy": "least-loaded(ties=last)"}, "ties is 'last'"),
