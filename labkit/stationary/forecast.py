@@ -7,15 +7,13 @@ from typing import Any
 
 import numpy as np
 import pandas as pd
-import scipy.sparse
-import scipy.sparse.csgraph
 from scipy.linalg import LinAlgWarning
 
 from labkit.checks import check_fraction, check_whole
 from labkit.engine.placement import place_loads, zero_loads
 from labkit.errors import InputError
 from labkit.fleet.digest import fleet_digest
-from labkit.fleet.model import ABSENT, Fleet, check_fleet
+from labkit.fleet.model import Fleet, check_fleet
 from labkit.policies.base import Policy
 from labkit.policies.least_loaded import LeastLoaded
 from labkit.policies.mixed import Mixed
@@ -24,12 +22,10 @@ from labkit.policies.one_choice import OneChoice
 from labkit.policies.static_split import StaticSplit
 from labkit.randomness import seed_sequence
 from labkit.stationary import fluid
+from labkit.stationary.existence import check_stationary
 from labkit.stationary.linearised import Field, linearise
 from labkit.stationary.network import network_of
 from labkit.stationary.settling import USUAL, Settled, settle, spread_moments
-from labkit.survey.connectivity import components
-from labkit.survey.demand import total_demand
-from labkit.survey.fair import fair_profile
 
 # Replicates of the short run, its rounds, and draws of the field, by what they cost.
 MOST_REPLICATES, LEAST_REPLICATES, NUMBERS = 256, 32, 1_000_000
@@ -274,56 +270,6 @@ def law_of(fleet: Fleet, rule: Policy, *, rng: Any = None, workers: int = 1) -> 
     if rng is None:
         known[rule.name] = law
     return law
-
-
-def check_stationary(fleet: Fleet) -> None:
-    """Refuse a fleet on which loads have no stationary state whatever the rule."""
-    parts = components(fleet)[0]
-    if parts > 1:
-        raise InputError(
-            f"fleet has {parts:,} parts between which no demand is shared, so that their loads drift apart: "
-            "there is no stationary state; forecast each part on its own."
-        )
-    if fleet.size < 2:
-        raise InputError("fleet has one server, whose gap is always 0; there is nothing to forecast.")
-    fair = fair_profile(fleet)
-    if len(fair.level) > 1:
-        mean = total_demand(fleet) / fleet.total_capacity
-        raise InputError(
-            f"fleet is not balanceable (optimum {fair.optimum / mean:.4g} × mean utilisation), so its gap "
-            "grows for ever: there is no stationary state; place from a start of your own, and look at the "
-            "excess over the optimum."
-        )
-    carried = fair.split.by_option()[:, : fleet.options.shape[1]]
-    tight = _tight_servers(fleet, carried)
-    if tight.size:
-        names = ", ".join(str(name) for name in fleet.names.take(tight[:5]).tolist())
-        more = ", ..." if tight.size > 5 else ""
-        raise InputError(
-            f"fleet is only just balanceable: {tight.size:,} of its servers ({names}{more}) can exchange no "
-            "work with the others, so that loads drift apart: there is no stationary state; add a choice or "
-            "capacity there."
-        )
-
-
-def _tight_servers(fleet: Fleet, carried: np.ndarray) -> np.ndarray:
-    """Return the smaller side of what a balanced split cannot exchange; none when all can."""
-    size = fleet.size
-    total = carried.sum(axis=1, keepdims=True)
-    rows, columns = [], []
-    for one in range(carried.shape[1]):
-        movable = (carried[:, one] > 1e-9 * total[:, 0]) & (fleet.options[:, one] != ABSENT)
-        for other in range(carried.shape[1]):
-            both = movable & (fleet.options[:, other] != ABSENT)
-            rows.append(fleet.options[both, one].astype(np.int64))
-            columns.append(fleet.options[both, other].astype(np.int64))
-    row, column = np.concatenate(rows), np.concatenate(columns)
-    graph = scipy.sparse.coo_array((np.ones(row.size, np.int8), (row, column)), shape=(size, size))
-    count, label = scipy.sparse.csgraph.connected_components(graph.tocsr(), connection="strong")
-    if count == 1:
-        return np.empty(0, np.int64)
-    largest = np.argmax(np.bincount(label))
-    return np.flatnonzero(label != largest)
 
 
 def _from_law(fleet: Fleet, rule: Policy, law: Law) -> Forecast:
