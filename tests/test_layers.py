@@ -28,6 +28,7 @@ FLOORS = [
     {"records"},
     {"figures"},
     {"studies"},
+    {"commands"},
     {"cli", "__main__"},
 ]
 FLOOR_OF = {room: floor for floor, rooms in enumerate(FLOORS) for room in rooms}

@@ -21,7 +21,16 @@ if TYPE_CHECKING:
     import numpy as np
 
 # Rooms whose code can change a measure; the others only carry it.
-COMPUTING = ("randomness.py", "compiled.py", "fleet", "survey", "policies", "engine")
+COMPUTING = (
+    "randomness.py",
+    "compiled.py",
+    "fleet",
+    "survey",
+    "policies",
+    "engine",
+    "stationary",
+    "placing.py",
+)
 
 # These do not shape the arriving work: the rule and what it knows, how often and when it is measured. Points
 # that differ only in them meet the same arrivals, and more replicates keep those already there.
