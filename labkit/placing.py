@@ -13,7 +13,7 @@ from labkit.errors import InputError
 from labkit.fleet.model import Fleet, check_fleet
 from labkit.policies.base import Policy
 from labkit.policies.naming import parse_policy
-from labkit.randomness import seed_sequence
+from labkit.randomness import MOST_REPLICATES, seed_sequence
 from labkit.stationary.start import forecast_start
 
 
@@ -29,6 +29,7 @@ def place(
     information: Information | None = None,
     start: Any | None = None,
     workers: int = 1,
+    first_replicate: int = 0,
 ) -> Outcome:
     """Place tasks that arrive one by one on choices drawn by demand, and stay.
 
@@ -57,6 +58,11 @@ def place(
         tens of tasks a server does; for least-loaded and mixed, tasks of size 1. Default: empty.
     workers : int
         Threads that share the replicates. The result does not depend on it.
+    first_replicate : int
+        The number of the first replicate, at least 0. Replicates first_replicate, first_replicate + 1, … are
+        the same, to the bit, in whichever call they are placed, so that a call can go on where another ended;
+        for that, `rng` must be the same int or SeedSequence. Rows of `sizes` and `start` are those of the
+        replicates of this call.
 
     Returns
     -------
@@ -84,6 +90,12 @@ def place(
     rule = parse_policy(policy)
     tasks = check_whole("tasks", tasks)
     replicates = check_whole("replicates", replicates)
+    first_replicate = check_whole("first_replicate", first_replicate, least=0)
+    if first_replicate + replicates > MOST_REPLICATES:
+        raise InputError(
+            f"first_replicate is {first_replicate} and replicates is {replicates}; replicates are numbered "
+            f"from 0 to {MOST_REPLICATES - 1}, so give smaller numbers."
+        )
     workers = check_whole("workers", workers)
     seed = seed_sequence(rng)
     moments = _checked_checkpoints(checkpoints, tasks)
@@ -95,12 +107,12 @@ def place(
             raise InputError(f'start is {start!r}; give loads, or "forecast".')
         if work is not None:
             raise InputError('start is "forecast", which knows tasks of size 1 only; leave sizes out.')
-        loads = forecast_start(fleet, rule, replicates, seed, whole)
+        loads = forecast_start(fleet, rule, replicates, seed, whole, first_replicate)
     else:
         loads = _starting_loads(start, fleet.size, replicates, whole)
     return place_loads(
         fleet, rule, tasks=tasks, seed=seed, checkpoints=moments, loads=loads, information=information,
-        work=work, workers=workers,
+        work=work, workers=workers, first_replicate=first_replicate,
     )  # fmt: skip
 
 

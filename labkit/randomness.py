@@ -12,6 +12,8 @@ import numpy as np
 from labkit.errors import InputError
 
 ARRIVALS, COINS, SIZES, TURNS, STARTS = 0, 1, 2, 3, 4
+# A larger number would take two words of a spawn key and could meet a key of another depth.
+MOST_REPLICATES = 2**32
 BIT_GENERATOR = "SFC64"
 DRAWS = (
     "one raw 64-bit word an arrival, multiplied by the number of choices to 128 bits: the high half is the "

@@ -9,11 +9,11 @@ from labkit.errors import InputError
 FIRST_LABELS = ("policy", "information", "server")
 KEYS = ("replicate", "tasks")
 
-# Text columns of a record that tell where a row came from; they never separate groups.
+# Text columns of a record that tell where a row came from, or why there are so many; none separates groups.
 PROVENANCE = frozenset(
     {
         *("run_id", "git_hash", "diff_digest", "versions", "bit_generator", "draws", "entropy", "spawn_key"),
-        *("notebook", "notebook_digest", "parameters", "inputs", "rules", "started"),
+        *("notebook", "notebook_digest", "parameters", "inputs", "rules", "started", "stopping"),
     }
 )
 

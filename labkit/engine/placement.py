@@ -45,6 +45,8 @@ class Outcome:
         The rule and what it could see, in words.
     tasks : int
         How many tasks were placed in each replicate.
+    first_replicate : int
+        The number of the first replicate; row i of `loads` is replicate first_replicate + i.
     by_server : pandas.DataFrame
         The loads after the last task beside each server's fair utilisation, one row a replicate and server.
     """
@@ -56,11 +58,17 @@ class Outcome:
     checkpoints: np.ndarray
     measured: np.ndarray
     tasks: int
+    first_replicate: int = 0
+
+    @property
+    def replicates(self) -> np.ndarray:
+        """The numbers of the replicates, one for each row of `loads`."""
+        return self.first_replicate + np.arange(len(self.loads))
 
     @cached_property
     def measures(self) -> pd.DataFrame:
         """The table of measures, one row a replicate and checkpoint."""
-        replicates, count, _ = self.measured.shape
+        count = self.checkpoints.size
         columns = dict(
             zip(MEASURED, np.moveaxis(self.measured, -1, 0).reshape(len(MEASURED), -1), strict=True)
         )
@@ -69,8 +77,8 @@ class Outcome:
         table = pd.DataFrame(
             {
                 "policy": self.policy,
-                "replicate": np.repeat(np.arange(replicates), count),
-                "tasks": np.tile(self.checkpoints, replicates),
+                "replicate": np.repeat(self.replicates, count),
+                "tasks": np.tile(self.checkpoints, len(self.loads)),
                 **{name: columns[name] for name in MEASURED[:4]},
                 "gap": columns["max_utilisation"] - work / self.fleet.total_capacity,
                 "excess": columns["max_utilisation"] - optimum * work,
@@ -95,7 +103,7 @@ class Outcome:
         return pd.DataFrame(
             {
                 "policy": self.policy,
-                "replicate": np.repeat(np.arange(replicates), servers),
+                "replicate": np.repeat(self.replicates, servers),
                 "tasks": self.tasks,
                 "server": pd.concat([self.fleet.names.to_series()] * replicates, ignore_index=True),
                 "load": self.loads.ravel(),
@@ -124,6 +132,7 @@ def place_loads(
     information: Information | None = None,
     work: Sizes | None = None,
     workers: int = 1,
+    first_replicate: int = 0,
 ) -> Outcome:
     """Place tasks on loads that are there already; what is given has been checked.
 
@@ -141,6 +150,8 @@ def place_loads(
     work : Sizes, optional
         Default: unit tasks.
     workers : int
+    first_replicate : int
+        Row i of `loads` is replicate first_replicate + i and draws from its streams.
 
     Returns
     -------
@@ -151,17 +162,17 @@ def place_loads(
     measured = np.empty((replicates, checkpoints.size, len(MEASURED)))
     job = _Job(fleet, rule, seed, information, checkpoints, tasks, work)
 
-    def run(replicate: int) -> None:
-        job.run(replicate, loads[replicate], measured[replicate])
+    def run(row: int) -> None:
+        job.run(first_replicate + row, row, loads[row], measured[row])
 
     job.compile(loads[0], measured[0])
     if workers == 1:
-        for replicate in range(replicates):
-            run(replicate)
+        for row in range(replicates):
+            run(row)
     else:
         with ThreadPoolExecutor(workers) as pool:
             list(pool.map(run, range(replicates)))
-    return Outcome(fleet, rule.name, information.name, loads, checkpoints, measured, tasks)
+    return Outcome(fleet, rule.name, information.name, loads, checkpoints, measured, tasks, first_replicate)
 
 
 def zero_loads(servers: int, replicates: int, whole: bool) -> np.ndarray:
@@ -206,14 +217,18 @@ class _Job:
         words = np.zeros(4, np.uint64)
         self._place(self.state, words, words.copy(), words.copy(), loads, loads, 0, 0, self._no_sizes, out)
 
-    def run(self, replicate: int, loads: np.ndarray, out: np.ndarray) -> None:
-        """Place all tasks of one replicate: loads and measures are written into the two arrays."""
+    def run(self, replicate: int, row: int, loads: np.ndarray, out: np.ndarray) -> None:
+        """Place all tasks of one replicate: loads and measures are written into the two arrays.
+
+        `replicate` numbers its streams; given sizes that differ between replicates have it in row `row`.
+        """
         arriving = kernel_state(self.seed, replicate, ARRIVALS)
         own = kernel_state(self.seed, replicate, COINS)
         turns = kernel_state(self.seed, replicate, TURNS)
         report = loads if self.every == 0 else loads.copy()
         state = self.rule.own_state(self.state)
-        blocks = [(0, self.tasks, None)] if self.work is None else self.work.blocks(self.seed, replicate)
+        work = self.work
+        blocks = [(0, self.tasks, None)] if work is None else work.blocks(self.seed, replicate, row)
         for first, last, sizes in blocks:
             self._place(state, arriving, own, turns, loads, report, first, last, sizes, out)
 

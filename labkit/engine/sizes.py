@@ -21,10 +21,12 @@ class Sizes:
     def __init__(self, given: np.ndarray | Callable, tasks: int) -> None:
         self.given, self.tasks = given, tasks
 
-    def blocks(self, seed: np.random.SeedSequence, replicate: int) -> Iterator[tuple[int, int, np.ndarray]]:
-        """Yield (first, last, sizes of the tasks first + 1 .. last) of one replicate."""
+    def blocks(
+        self, seed: np.random.SeedSequence, replicate: int, row: int
+    ) -> Iterator[tuple[int, int, np.ndarray]]:
+        """Yield (first, last, sizes of the tasks first + 1 .. last) of a replicate, the call's row-th."""
         if isinstance(self.given, np.ndarray):
-            yield 0, self.tasks, self.given if self.given.ndim == 1 else self.given[replicate]
+            yield 0, self.tasks, self.given if self.given.ndim == 1 else self.given[row]
             return
         draws = generator(seed, replicate, SIZES)
         for first in range(0, self.tasks, BLOCK):

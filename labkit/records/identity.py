@@ -34,7 +34,10 @@ COMPUTING = (
 
 # These do not shape the arriving work: the rule and what it knows, how often and when it is measured. Points
 # that differ only in them meet the same arrivals, and more replicates keep those already there.
-NOT_ARRIVALS = EXECUTION_ONLY | {"policies", "policy", "report_every", "replicates", "checkpoints", "entropy"}
+NOT_ARRIVALS = EXECUTION_ONLY | {
+    *("policies", "policy", "report_every", "checkpoints", "entropy"),
+    *("replicates", "precision", "most_replicates"),
+}
 
 
 @dataclass(frozen=True)

@@ -29,6 +29,8 @@ def check_stationary(fleet: Fleet) -> None:
             "grows for ever: there is no stationary state; place from a start of your own, and look at the "
             "excess over the optimum."
         )
+    if fleet.implicit is not None:
+        return  # every two servers share a choice
     carried = fair.split.by_option()[:, : fleet.options.shape[1]]
     tight = _tight_servers(fleet, carried)
     if tight.size:

@@ -11,7 +11,12 @@ from labkit.stationary.settling import loads_of
 
 
 def forecast_start(
-    fleet: Fleet, rule: Policy, replicates: int, seed: np.random.SeedSequence, whole: bool = True
+    fleet: Fleet,
+    rule: Policy,
+    replicates: int,
+    seed: np.random.SeedSequence,
+    whole: bool = True,
+    first_replicate: int = 0,
 ) -> np.ndarray:
     """Return starting loads, one independent draw of the stationary law a replicate.
 
@@ -26,6 +31,8 @@ def forecast_start(
         Replicate r draws from its stream 4.
     whole : bool
         Whether loads are kept as whole numbers; they are whole in any case.
+    first_replicate : int
+        The number of the replicate in the first row.
 
     Returns
     -------
@@ -34,17 +41,22 @@ def forecast_start(
         of rounds of one task a server.
     """
     law = law_of(fleet, rule)
-    return draw_loads(law, law.scale, replicates, seed, whole)
+    return draw_loads(law, law.scale, replicates, seed, whole, first_replicate)
 
 
 def draw_loads(
-    law: Law, scale: float, replicates: int, seed: np.random.SeedSequence, whole: bool = True
+    law: Law,
+    scale: float,
+    replicates: int,
+    seed: np.random.SeedSequence,
+    whole: bool = True,
+    first_replicate: int = 0,
 ) -> np.ndarray:
     """Return starting loads drawn from a law at another scale; see `forecast_start`."""
     room = law.field.network.room
     loads = zero_loads(room.size, replicates, whole)
-    for replicate in range(replicates):
-        draws = generator(seed, replicate, STARTS)
+    for row in range(replicates):
+        draws = generator(seed, first_replicate + row, STARTS)
         height = law.field.height + np.sqrt(scale) * law.field.draw(draws, 1)
-        loads[replicate] = loads_of(height, room, draws)[0]
+        loads[row] = loads_of(height, room, draws)[0]
     return loads

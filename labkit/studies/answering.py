@@ -18,6 +18,7 @@ from labkit.studies.grouping import Group
 from labkit.studies.model import Study
 from labkit.studies.page import write_page
 from labkit.studies.warmth import sources_digest
+from labkit.text import align
 
 # Tells from what the answer beside it was made, so that it is not made twice.
 MADE_FROM = "made_from.json"
@@ -186,14 +187,6 @@ def _answer_text(folder: Path) -> str:
         return ""
     with table.open(encoding="utf-8", newline="") as stream:
         return align([[_short(cell) for cell in row] for row in csv.reader(stream)])
-
-
-def align(rows: list[list[str]]) -> str:
-    """Return rows of texts as lines with aligned columns; the first row is the header."""
-    widths = [max(len(cell) for cell in column) for column in zip(*rows, strict=True)]
-    return "\n".join(
-        "  ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=True)).rstrip() for row in rows
-    )
 
 
 def _short(cell: str) -> str:

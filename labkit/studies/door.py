@@ -77,7 +77,8 @@ def check_points(study: "Study", points: Iterable["Point"]) -> None:
         place = values["fleet"]
         if place not in sizes:
             sizes[place] = len(read_fleet(from_root(place)))
-        _check_memory(values["replicates"], sizes[place], values.get("checkpoints", 1), len(policies))
+        key = "replicates" if values.get("precision") is None else "most_replicates"
+        _check_memory(key, values[key], sizes[place], values.get("checkpoints", 1), len(policies))
 
 
 def policy_names(policies: list[Any]) -> list[str]:
@@ -116,12 +117,12 @@ def check_answer(study: "Study", points: Iterable["Point"]) -> None:
             )
 
 
-def _check_memory(replicates: int, servers: int, checkpoints: int, policies: int) -> None:
+def _check_memory(key: str, replicates: int, servers: int, checkpoints: int, policies: int) -> None:
     needed = 8 * policies * replicates * (servers + _MEASURES * checkpoints)
     present = memory()
     if present is not None and needed > present:
         raise InputError(
-            f"replicates is {replicates:,}; with {servers:,} servers, {checkpoints:,} checkpoints and "
+            f"{key} is {replicates:,}; with {servers:,} servers, {checkpoints:,} checkpoints and "
             f"{policies} policies one run would take about {needed / 1e9:,.0f} GB of memory and this machine "
             f"has {present / 1e9:,.0f} GB: give fewer replicates (a larger risk needs fewer) or checkpoints."
         )

@@ -9,6 +9,7 @@ from functools import cached_property
 from pathlib import Path
 from typing import Any
 
+from labkit.analysis.stopping import stopping_rule
 from labkit.checks import check_fraction, check_whole, nearest
 from labkit.errors import InputError, TooFewReplicates
 from labkit.records.declared import EXECUTION_ONLY, Notebook, Parameter, is_path, read_notebook
@@ -16,7 +17,9 @@ from labkit.records.identity import Identity, check_entropy, identify
 from labkit.records.project import EXPERIMENTS, ROOT, check_study_name, find_notebook, path_text
 from labkit.studies.door import ANSWER, RULES, RUN, SURVEY, check_risk, check_values
 
-KEYS = ("title", "question", "notebook", "replicates", "entropy", "parameters", "grid", "answer")
+# Parameters of the notebook that stand at the top of the file.
+AT_TOP = ("replicates", "precision", "most_replicates", "entropy")
+KEYS = ("title", "question", "notebook", *AT_TOP, "parameters", "grid", "answer")
 # Handed to an answer notebook by the runner.
 HANDED = ("study", "store", "output", "runs")
 
@@ -117,12 +120,16 @@ def make_study(name: str, content: dict[str, Any], *, folder: Path) -> Study:
     for key in (*fixed, *grid):
         if key in EXECUTION_ONLY:
             raise InputError(f"parameter {key} is set by labkit itself; remove it from the study.")
-        if key in ("replicates", "entropy") or (key in fixed and key in grid):
-            raise InputError(f"{key} is given twice; give it once, replicates and entropy at the top.")
+        if key in AT_TOP:
+            place = "is given twice" if key in content else "is given in a table"
+            raise InputError(f"{key} {place}; give it once, at the top of the file.")
+        if key in fixed and key in grid:
+            raise InputError(f"{key} is given twice; give it once, in [parameters] or in [grid].")
     if "replicates" in content:
         fixed["replicates"] = check_whole("replicates", content["replicates"])
     if "entropy" in content:
         fixed["entropy"] = check_entropy(content["entropy"])
+    fixed |= _stopping(content, notebook)
     fixed = _typed(notebook, fixed, folder)
     grid = {
         key: [_typed(notebook, {key: value}, folder)[key] for value in values] for key, values in grid.items()
@@ -151,6 +158,26 @@ def make_study(name: str, content: dict[str, Any], *, folder: Path) -> Study:
     check_values(answer_notebook, answer)
     _check_answerable(answer_notebook.checked(answer), fixed.get("replicates"))
     return Study(name, title, question, notebook, fixed, grid, answer_notebook, answer, mixes)
+
+
+def _stopping(content: dict[str, Any], notebook: Notebook) -> dict[str, Any]:
+    """Return the checked precision and most_replicates of a file; nothing when it has none."""
+    if "precision" not in content:
+        if "most_replicates" in content:
+            raise InputError("most_replicates is given without a precision; give precision, too, or neither.")
+        return {}
+    for key in ("precision", "most_replicates"):
+        if key not in notebook.parameters:
+            raise InputError(
+                f"notebook {notebook.name} declares no parameter {key}, so it cannot stop by a precision; "
+                "remove precision or add the parameter."
+            )
+        if key not in content:
+            raise InputError(f"{key} is missing; a precision needs {key} = a whole number at the top, too.")
+    if "replicates" not in content:
+        raise InputError("replicates is missing; a precision needs it as the least number of replicates.")
+    rule = stopping_rule(content["precision"], content["replicates"], content["most_replicates"])
+    return {"precision": rule.precision, "most_replicates": rule.most_replicates}
 
 
 def _mixes(names: Any, grid: dict[str, Any]) -> tuple[str, ...]:

@@ -67,7 +67,8 @@ def begin_answer(notebook: str, namespace: MutableMapping[str, Any]) -> Path:
     saved = read_notebook(find_notebook(notebook))
     saved.check_names(injected_names(executed_cells(namespace) or []))
     values = saved.checked({name: namespace[name] for name in saved.parameters if name in namespace})
-    study = check_study_name(values["study"])
+    # An answer may be made from a frozen table instead of a study.
+    study = check_study_name(values["study"] or values.get("frozen", ""))
     namespace.update(values)
     return from_root(values["output"]) if values.get("output") else ANSWERS / study
 

@@ -3,6 +3,7 @@
 import ast
 import sys
 
+import pandas as pd
 import pytest
 from papermill.inspection import inspect_notebook
 
@@ -41,10 +42,27 @@ def by_study(tmp_path_factory):
 
 def test_the_record_is_that_of_the_study(by_study):
     origin, measures = the_record(by_study / "runs")
-    assert origin["parameters"] == {**VALUES, "fleet": "experiments/demo"}
+    stopping = {"precision": None, "most_replicates": 10000}
+    assert origin["parameters"] == {**VALUES, **stopping, "fleet": "experiments/demo"}
+    assert "stopping" not in measures.column_names
     assert measures.num_rows == len(POLICIES) * VALUES["replicates"] * VALUES["checkpoints"]
     assert set(measures["policy"].to_pylist()) == set(POLICIES)
     assert set(measures["information"].to_pylist()) == {"snapshot(every=7)"}
+
+
+def test_a_precision_adds_replicates_to_those_of_the_study(by_study, tmp_path):
+    path = write_study(tmp_path)
+    top = "replicates = 10\nprecision = 0.02\nmost_replicates = 24"
+    path.write_text(path.read_text().replace("replicates = 5", top))
+    assert main(["run", str(path), "--store", str(tmp_path / "runs")]) == 0
+    _, plain = the_record(by_study / "runs")
+    origin, measures = the_record(tmp_path / "runs")
+    assert (origin["parameters"]["precision"], origin["parameters"]["most_replicates"]) == (0.02, 24)
+    rows = measures.to_pandas()
+    assert rows["replicate"].nunique() == 24
+    assert rows["stopping"].str.startswith("mean gap within 2 % at 95 %: not reached with the most, 24").all()
+    first = rows[rows["replicate"] < VALUES["replicates"]].drop(columns="stopping").reset_index(drop=True)
+    pd.testing.assert_frame_equal(first, plain.to_pandas(), check_exact=True)
 
 
 def test_papermill_and_jupyter_execute_give_the_same_record(by_study, tmp_path):

@@ -10,6 +10,7 @@ from hypothesis import strategies as st
 from labkit.records import identity
 from labkit.records.declared import read_notebook
 from labkit.records.identity import canonical, content_digest, identify
+from labkit.studies.model import read_study
 from tests.records.tiny import PARAMETERS, write_notebook, write_tiny
 
 VALUES = st.fixed_dictionaries(
@@ -147,3 +148,17 @@ def test_a_notebook_without_entropy_has_nothing_random(tmp_path):
     one, other = identify(notebook, {"links": 1}), identify(notebook, {"links": 2})
     assert one.entropy == other.entropy == 0
     assert one.run_id != other.run_id
+
+
+@given(VALUES, st.one_of(st.none(), st.floats(0.01, 0.5)), st.integers(1, 10**6))
+def test_how_replicates_are_stopped_does_not_change_the_arrivals(tmp_path_factory, values, precision, most):
+    added = "precision: float = None\nmost_replicates: int = 10000"
+    folder = tmp_path_factory.getbasetemp()
+    before = read_notebook(write_notebook(folder / "before.ipynb", "x = 1"))
+    after = read_notebook(write_notebook(folder / "after.ipynb", "x = 1", parameters=PARAMETERS + added))
+    stopped = after.checked(values | {"precision": precision, "most_replicates": most})
+    assert identify(after, stopped).key == identify(before, before.checked(values)).key
+
+
+def test_the_demo_keeps_its_arrivals():
+    assert {point.identity.key for point in read_study("demo").points} == {910636980}

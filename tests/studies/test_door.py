@@ -38,6 +38,12 @@ def ask(tmp_path, monkeypatch, capsys):
     return run
 
 
+def test_the_most_replicates_must_fit_into_memory_too(ask):
+    status, err = ask(replicates="400\nprecision = 0.05\nmost_replicates = 1000000000000")
+    assert status == 2
+    assert "most_replicates is 1,000,000,000,000; with 100 servers, 12 checkpoints and 2 pol" in err
+
+
 @pytest.mark.parametrize(
     ("asked", "sentence"),
     [
@@ -80,11 +86,11 @@ def test_a_value_is_refused_in_one_sentence(ask, asked, sentence):
 
 def test_more_than_the_memory_is_refused_and_less_is_not(monkeypatch):
     monkeypatch.setattr(door, "memory", lambda: 8 * 2 * 10 * (100 + 120))
-    door._check_memory(10, 100, 12, 2)
+    door._check_memory("replicates", 10, 100, 12, 2)
     with pytest.raises(lk.InputError, match=r"replicates is 11; .* would take about .* GB of memory"):
-        door._check_memory(11, 100, 12, 2)
+        door._check_memory("replicates", 11, 100, 12, 2)
     monkeypatch.setattr(door, "memory", lambda: None)
-    door._check_memory(11, 100, 12, 2)
+    door._check_memory("replicates", 11, 100, 12, 2)
 
 
 def test_the_memory_of_this_machine_is_known():

@@ -122,3 +122,48 @@ def test_a_refusal_names_the_file(folder):
 @pytest.mark.parametrize("path", sorted(EXPERIMENTS.glob("*.toml")), ids=lambda path: path.stem)
 def test_every_study_of_the_project_can_be_read(path):
     assert read_study(path.stem).points
+
+
+@pytest.fixture
+def stopping(folder):
+    added = "\nprecision: float = None\nmost_replicates: int = 10000\nreplicates: int = 1\nentropy: int = 1"
+    write_notebook(folder / "stopping.ipynb", "x = 1", parameters="tasks: int = 5" + added)
+    content = {"notebook": "stopping.ipynb", "replicates": 20, "precision": 0.05, "most_replicates": 90}
+    return lambda **changes: study(folder, **(content | changes))
+
+
+def test_a_precision_and_its_cap_go_to_the_notebook(stopping):
+    given = stopping().points[0].parameters
+    assert (given["precision"], given["most_replicates"]) == (0.05, 90)
+    plain = stopping(precision=None, most_replicates=None).points[0]
+    assert "precision" not in plain.parameters
+    assert plain.identity.parameters["precision"] is None
+    assert plain.identity.key == stopping().points[0].identity.key
+
+
+@pytest.mark.parametrize(
+    ("changes", "match"),
+    [
+        ({"precision": 0}, "precision is 0; give a number above 0 and below 1"),
+        ({"precision": 5}, "precision is 5; give a number above 0 and below 1"),
+        ({"precision": "5 %"}, "precision is '5 %'; give a finite number"),
+        ({"most_replicates": 19}, "most_replicates is 19; give at least as many as replicates, 20"),
+        ({"most_replicates": 99.5}, "most_replicates is 99.5; give a whole number"),
+        (
+            {"most_replicates": None},
+            "most_replicates is missing; a precision needs most_replicates = a whole",
+        ),
+        ({"precision": None}, "most_replicates is given without a precision"),
+        ({"replicates": 9}, "replicates is 9; with a precision the first look"),
+        ({"notebook": "tiny.ipynb"}, "tiny.ipynb declares no parameter precision, so it cannot stop"),
+        ({"parameters": {"precision": 0.1}}, "precision is given twice; give it once, at the top"),
+        ({"grid": {"most_replicates": [99]}}, "most_replicates is given twice; give it once, at the top"),
+        (
+            {"precision": None, "most_replicates": None, "grid": {"precision": [0.1]}},
+            "precision is given in a table; give it once, at the top",
+        ),
+    ],
+)
+def test_a_precision_that_cannot_be_is_refused(stopping, changes, match):
+    with pytest.raises(lk.InputError, match=match):
+        stopping(**changes)
