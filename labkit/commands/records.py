@@ -17,6 +17,9 @@ def add(commands: Commands) -> None:
         "rerun", _rerun, "Execute a recorded run again and compare every measure bit for bit."
     )
     rerun.add_argument("run", metavar="RUN", help="the first digits of a run's id")
+    rerun.add_argument(
+        "--here", action="store_true", help="with today's code, even when the record is of an earlier commit"
+    )
 
 
 def _list(arguments: argparse.Namespace) -> int:
@@ -86,12 +89,14 @@ def _rerun(arguments: argparse.Namespace) -> int:
     from labkit.studies.rerun import rerun
 
     store = store_of(arguments)
-    result = rerun(store, store.locate(arguments.run, warn=say), say=say)
+    result = rerun(store, store.locate(arguments.run, warn=say), say=say, here=arguments.here)
     if arguments.json:
         print_json({**vars(result), "identical": not result.difference})
         return 1 if result.difference else 0
     for note in result.notes:
         print(f"note: {note}")
+    at = "here" if result.place == "here" else f"at commit {result.place[:10]} in a work tree of its own"
+    print(f"executed {at}")
     if result.difference:
         print(f"run {result.run_id} differs: {result.difference}")
         return 1

@@ -13,29 +13,31 @@ EXPERIMENTS = ROOT / "experiments"
 STORE = ROOT / "results" / "runs"
 ANSWERS = ROOT / "results" / "answers"
 PLANS = ROOT / "results" / "plans"
+FROZEN = ROOT / "results" / "frozen"
 
-_STUDY_NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9_.-]{0,63}")
+_FOLDER_NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9_.-]{0,63}")
 
 
-def find_notebook(notebook: str | Path) -> Path:
+def find_notebook(notebook: str | Path, root: Path = ROOT) -> Path:
     """Return the file of a notebook: a name from notebooks/, or the path (from the root) of an .ipynb."""
     text = str(notebook)
     if text.endswith(".ipynb"):
-        path = from_root(text)
+        path = from_root(text, root)
         if not path.is_file():
             raise InputError(f"notebook is {text!r}; there is no such file: give the path of an .ipynb file.")
         return path
-    known = sorted(path.stem for path in NOTEBOOKS.glob("*.ipynb"))
+    folder = root / NOTEBOOKS.name
+    known = sorted(path.stem for path in folder.glob("*.ipynb"))
     if text not in known:
         raise InputError(
             f"notebook is {text!r}; notebooks/ holds {', '.join(known) or 'none'}: name one of them."
         )
-    return NOTEBOOKS / f"{text}.ipynb"
+    return folder / f"{text}.ipynb"
 
 
-def from_root(text: str | Path) -> Path:
+def from_root(text: str | Path, root: Path = ROOT) -> Path:
     """Return the absolute path that a text means: absolute as it is, relative to the project root."""
-    return (ROOT / Path(text).expanduser()).resolve()
+    return (root / Path(text).expanduser()).resolve()
 
 
 def path_text(path: Path) -> str:
@@ -51,9 +53,14 @@ def notebook_text(path: Path) -> str:
 
 def check_study_name(name: Any) -> str:
     """Return the name of a study when it can be the name of a folder on every system."""
-    if isinstance(name, str) and _STUDY_NAME.fullmatch(name) and not name.endswith("."):
+    return check_folder_name("study", "a study's name", name)
+
+
+def check_folder_name(what: str, whose: str, name: Any) -> str:
+    """Return a name when it can be the name of a folder on every system; `whose` is its subject in words."""
+    if isinstance(name, str) and _FOLDER_NAME.fullmatch(name) and not name.endswith("."):
         return name
     raise InputError(
-        f"study is {name!r}; a study's name begins with a letter or digit and has up to 64 letters, digits, "
+        f"{what} is {name!r}; {whose} begins with a letter or digit and has up to 64 letters, digits, "
         "dots, dashes and underscores: choose such a name."
     )

@@ -154,7 +154,7 @@ class Store:
                 f"record {path} is torn or altered: its content does not have the digest in its name; "
                 "remove it and run its study again."
             )
-        table = _decode(content)
+        table = decode(content)
         missing = [name for name in ORIGIN.names if name not in table.column_names]
         if missing and "run_id" in table.column_names:
             raise StoreError(
@@ -204,7 +204,7 @@ def _foreign(path: Path) -> str:
     return f"file {path} is not a record of this store; move it elsewhere."
 
 
-def _decode(content: bytes) -> "pa.Table":
+def decode(content: bytes) -> "pa.Table":
     """Return the table in the content of a file, read by this thread alone.
 
     A worker thread of Arrow's may let go of the content, a Python object, only when Python is ending already,
@@ -242,7 +242,7 @@ def _write_whole(folder: Path, run_id: str, table: "pa.Table") -> Path:
             stream.flush()
             os.fsync(stream.fileno())
         written = beside.read_bytes()
-        if _digest(written) != digest or first_difference(_decode(written), table):
+        if _digest(written) != digest or first_difference(decode(written), table):
             raise StoreError(f"record {beside} did not read back as written; check the disk.")
         final = folder / f"{run_id}-{digest}.parquet"
         os.replace(beside, final)

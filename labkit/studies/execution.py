@@ -10,6 +10,7 @@ from typing import Any
 
 import labkit.errors
 from labkit.studies.light import import_jsonschema
+from labkit.studies.place import HERE, Place
 
 # Errors that say all in one sentence; the refusals among them mean a value, as opposed to code that broke.
 SENTENCES = {name: each for name, each in vars(labkit.errors).items() if isinstance(each, type)}
@@ -28,7 +29,7 @@ class Execution:
     details: str = ""
 
 
-def execute(notebook: Path, parameters: dict[str, Any], output: Path) -> Execution:
+def execute(notebook: Path, parameters: dict[str, Any], output: Path, place: Place = HERE) -> Execution:
     """Execute a notebook with these parameters in a kernel of its own; safe in several threads.
 
     Parameters
@@ -39,6 +40,8 @@ def execute(notebook: Path, parameters: dict[str, Any], output: Path) -> Executi
         Values for its parameters cell.
     output : Path
         Where the executed notebook goes, whole or partial.
+    place : Place
+        The checkout whose labkit, and the Python that, the kernel uses.
 
     Returns
     -------
@@ -48,7 +51,7 @@ def execute(notebook: Path, parameters: dict[str, Any], output: Path) -> Executi
     from labkit.studies.kernels import end_kernel, own_event_loop, start_kernel
 
     with own_event_loop():
-        kernel = start_kernel(notebook)
+        kernel = start_kernel(notebook, place)
         try:
             return _execute(notebook, parameters, output, kernel)
         finally:

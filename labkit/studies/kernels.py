@@ -1,4 +1,4 @@
-"""Kernels that can run side by side: no port race, always this Python and this labkit, nothing left behind.
+"""Kernels that can run side by side: no port race, the Python and labkit of one place, nothing left behind.
 
 Ports are picked before they are bound, so two kernels that start together can pick the same one. On POSIX
 systems each kernel gets Unix sockets in a folder of its own instead; elsewhere the usual ports.
@@ -19,17 +19,18 @@ from jupyter_client.manager import AsyncKernelManager
 from jupyter_core.utils import ensure_event_loop, run_sync
 from traitlets import default
 
-from labkit.records.project import ROOT
+from labkit.studies.place import HERE, Place
 
 # The kernels of this process that are alive; an interrupted command ends them.
 _alive: set["PrivateKernelManager"] = set()
 
 
 class PrivateKernelManager(AsyncKernelManager):
-    """A kernel over Unix sockets in a private folder, with the caller's Python and labkit."""
+    """A kernel over Unix sockets in a private folder, with the Python and labkit of its place."""
 
     _folder: str | None = None
     preload: tuple[str, ...] = ()
+    place: Place = HERE
 
     if os.name == "posix":
         transport = "ipc"
@@ -40,22 +41,22 @@ class PrivateKernelManager(AsyncKernelManager):
             return os.path.join(self._folder, "k")
 
     def format_kernel_cmd(self, extra_arguments: list[str] | None = None) -> list[str]:
-        """Return the command: this Python, whatever kernels are installed, and no history file."""
+        """Return the command: the place's Python, whatever kernels are installed, and no history file."""
         connection = os.path.realpath(self.connection_file)
-        command = [
-            sys.executable,
-            "-m",
-            "labkit.studies.kernel_main",
-            ",".join(self.preload),
-            "-f",
-            connection,
-        ]
+        # elsewhere labkit may be older than its own way of starting kernels
+        module = ["ipykernel_launcher"]
+        if self.place == HERE:
+            module = ["labkit.studies.kernel_main", ",".join(self.preload)]
+        command = [str(self.place.python), "-m", *module, "-f", connection]
         return [*command, "--HistoryManager.enabled=False", *(extra_arguments or [])]
 
     async def start_kernel(self, **options: Any) -> None:  # type: ignore[override]
-        """Start the kernel with this labkit first on its path."""
+        """Start the kernel with the place's labkit first on its path."""
         environment = dict(options.pop("env", os.environ))
-        paths = [str(ROOT), *filter(None, [environment.get("PYTHONPATH")])]
+        if self.place != HERE:
+            # machine code is kept by the path of its source, and this path will not come again
+            environment["NUMBA_CACHE_DIR"] = str(self.place.root / ".numba_cache")
+        paths = [str(self.place.root), *filter(None, [environment.get("PYTHONPATH")])]
         environment["PYTHONPATH"] = os.pathsep.join(paths)
         environment["PYDEVD_DISABLE_FILE_VALIDATION"] = "1"
         _alive.add(self)
@@ -75,14 +76,14 @@ class PrivateKernelManager(AsyncKernelManager):
             process.kill()
 
 
-def start_kernel(notebook: Path) -> type[PrivateKernelManager]:
+def start_kernel(notebook: Path, place: Place = HERE) -> type[PrivateKernelManager]:
     """Start a kernel for a notebook and return a class that nbclient can call for its manager.
 
     nbclient makes managers itself, from a class, and starts them when it is itself loaded. This kernel is on
     its way before that, so that both load at the same time; it begins with what the notebook will import.
     """
     manager = PrivateKernelManager(kernel_name="python3")
-    manager.preload = _imports(notebook)
+    manager.place, manager.preload = place, _imports(notebook)
     # the working directory that JupyterLab gives; papermill's own option would change it for all threads
     run_sync(manager.start_kernel)(cwd=str(notebook.parent))
 

@@ -56,6 +56,26 @@ def test_every_kind_of_difference_counts_and_differs(committed):
     assert len(seen) == 6
 
 
+def test_what_was_computed_is_no_source(committed):
+    (committed / ".gitignore").write_text("")
+    head = (
+        git(committed, "commit", "-q", "-a", "-m", "Second"),
+        git(committed, "rev-parse", "HEAD").strip(),
+    )[1]
+    frozen = committed / "results" / "frozen" / "name"
+    frozen.mkdir(parents=True)
+    (frozen / "table.csv").write_text("a\n1\n")
+    clean = {"git_hash": head, "dirty": False, "diff_digest": ""}
+    assert source_state(committed) == clean
+    git(committed, "add", ".")
+    assert source_state(committed) == clean
+    git(committed, "commit", "-q", "-m", "Third")
+    (frozen / "table.csv").write_text("a\n2\n")
+    assert not source_state(committed)["dirty"]
+    (committed / "labkit" / "results").write_text("a source")
+    assert source_state(committed)["dirty"]
+
+
 def test_the_digest_does_not_depend_on_what_is_staged(committed):
     (committed / "labkit" / "__init__.py").write_text("a = 2\n")
     before = source_state(committed)

@@ -10,8 +10,7 @@ import pytest
 from labkit.records.project import ROOT
 from labkit.records.schema import first_difference, measured_part
 from labkit.records.store import Store
-from labkit.studies import kernels, running
-from labkit.studies import rerun as rerunning
+from labkit.studies import kernels, places, running
 from labkit.studies.model import read_study
 from tests.records.tiny import MEASURE, snapshot, write_notebook, write_tiny
 
@@ -146,7 +145,7 @@ def test_no_kernel_at_all_is_refused(project):
 
 @pytest.mark.parametrize("warm", [True, False])
 def test_compiling_is_announced_once(project, monkeypatch, warm):
-    for module in (running, rerunning):
+    for module in (running, places):
         monkeypatch.setattr(module, "is_warm", lambda: warm)
     announced = 0 if warm else 1
     _, out, err = project("run", project.study(grid="tasks = [1, 2]"), "--json")
