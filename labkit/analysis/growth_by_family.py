@@ -12,6 +12,7 @@ from labkit.checks import check_number
 from labkit.errors import InputError
 from labkit.policies.naming import moves_placed_work, shown_name
 from labkit.randomness import seed_sequence
+from labkit.stationary.long_run import STATIONARY
 from labkit.text import align
 
 FEWEST_SIZES = 3
@@ -82,7 +83,9 @@ def fit_families(
                 f"{where}, {moment}: {len(used)} size{'s' * (len(used) != 1)}, too few for a law of growth."
             )
             continue
-        chosen = (measures[["family", "policy", "moment"]] == labels).all(axis=1)
+        chosen = (
+            (measures["family"] == family) & (measures["policy"] == policy) & (measures["moment"] == moment)
+        )
         rows = measures.loc[chosen & measures["servers"].isin(used), ["servers", "policy", "replicate", y]]
         own = np.random.SeedSequence(seed.entropy, spawn_key=(*seed.spawn_key, at))
         fit = fit_growth(rows, x="servers", y=y, rng=own, confidence=confidence)
@@ -184,17 +187,23 @@ def growth_in_words(laws: pd.DataFrame, left_out: list[str], *, confidence: floa
 
 
 def _best(family: Any, rows: pd.DataFrame) -> str:
-    """Return which placement rule has the lowest measure on a network at the larger size."""
+    """Return which placement rule has the lowest measure on a network at the larger size.
+
+    A mean at a horizon would be higher later, so where some rules become stationary only they are compared.
+    """
     rules = rows[[not moves_placed_work(policy) for policy in rows["policy"]]]
     if not len(rules):
         return f"On {in_words(family)} only references were measured."
-    best = rules.loc[rules["estimate"].idxmin()]
+    settled = rules["moment"] == STATIONARY
+    rules = rules[settled] if settled.any() else rules[rules["moment"] == rules["moment"].iloc[0]]
+    best = rules.sort_values("estimate").iloc[0]
     others = rules[(rules["policy"] != best["policy"]) & (rules["lower"] <= best["upper"])]["policy"].tolist()
     alike = f", not told apart from {' and '.join(others)}" if others else ""
     band = f"{best['estimate']:.3g} ({best['lower']:.3g} to {best['upper']:.3g})"
+    when = "" if settled.any() else f", {best['moment']},"
     return (
-        f"On {in_words(family)} of {best['ahead']:,} servers {best['policy']} would keep the fullest server "
-        f"lowest: {band} above the optimum{alike}."
+        f"On {in_words(family)} of {best['ahead']:,} servers{when} {best['policy']} would keep the fullest "
+        f"server lowest: {band} above the optimum{alike}."
     )
 
 

@@ -9,6 +9,7 @@ from scipy.stats import norm
 
 from labkit.checks import nearest
 from labkit.errors import InputError
+from labkit.stationary.long_run import STATIONARY
 
 # Standard errors by which the means of both kinds of start may differ: a false alarm in 16,000.
 APART = 4.0
@@ -83,7 +84,7 @@ def _row(group: pd.DataFrame, y: str) -> dict[str, Any]:
         "mean": values.mean(),
         "error": values.std(ddof=1) / np.sqrt(len(values)) if len(values) > 1 else np.nan,
     }
-    if not group["moment"].eq("stationary").all():
+    if not group["moment"].eq(STATIONARY).all():
         return {**row, "from_empty": row["mean"], "from_above": np.nan, "apart": np.nan, "settled": True}
     odd = group["replicate"].to_numpy() % 2 == 1
     below, above = values[~odd], values[odd]
@@ -106,7 +107,7 @@ def settled_in_words(table: pd.DataFrame) -> str:
     table : pandas.DataFrame
         From `long_run_table`.
     """
-    judged = table[table["moment"] == "stationary"]
+    judged = table[table["moment"] == STATIONARY]
     others = len(table) - len(judged)
     ending = f" The other {others} means are taken at a horizon, where loads are not stationary."
     ending = ending if others else ""

@@ -12,6 +12,7 @@ from labkit.checks import check_number
 from labkit.errors import InputError
 from labkit.figures.style import DASHES, FAINT, label_ends, looks, plain, styled
 from labkit.policies.naming import shown_name
+from labkit.stationary.long_run import STATIONARY
 
 _POINTS = 60
 
@@ -99,14 +100,14 @@ def _line(axes: Axes, each: FamilyFit, reach: float, look: dict) -> float:
     )
     axes.errorbar(
         sizes["x"], sizes["mean"], yerr=1.96 * sizes["standard_error"], color=colour, marker=look["marker"],
-        markersize=4.5, markerfacecolor=colour if each.moment == "stationary" else "white",
+        markersize=4.5, markerfacecolor=colour if each.moment == STATIONARY else "white",
         linestyle="none", capsize=2, linewidth=1, zorder=5,
     )  # fmt: skip
     return float(said["estimate"].iloc[-1])
 
 
 def _open_markers(fits: Sequence[FamilyFit]) -> str:
-    moments = sorted({each.moment for each in fits} - {"stationary"})
+    moments = sorted({each.moment for each in fits} - {STATIONARY})
     return f" · open markers: {' or '.join(moments)}, not stationary" if moments else ""
 
 
