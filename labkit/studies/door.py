@@ -9,7 +9,7 @@ from collections.abc import Iterable
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from labkit.checks import check_fraction, check_number, check_whole, nearest
+from labkit.checks import check_fraction, check_number, check_positive, check_whole, nearest
 from labkit.errors import InputError
 from labkit.records.declared import Notebook
 from labkit.records.project import from_root
@@ -18,12 +18,15 @@ if TYPE_CHECKING:
     from labkit.studies.model import Point, Study
 
 RUN, ANSWER, SURVEY, RULES = "headroom", "headroom_answer", "survey", "rules"
+LONG_RUN, GROWTH = "long_run", "growth"
 
 # The least whole number that each of these parameters can be.
 LEAST = {
     RUN: {"tasks": 1, "checkpoints": 1, "replicates": 1, "report_every": 0},
     RULES: {"tasks": 1, "replicates": 1, "dispatchers": 0, "forecast_rounds": 100},
     SURVEY: {"outages": 0, "links": 0, "distance": 2},
+    LONG_RUN: {"servers": 2, "horizon": 1, "replicates": 1, "most_replicates": 1},
+    GROWTH: {"entropy": 0},
 }
 
 LEAST_RISK = 1e-15
@@ -41,6 +44,11 @@ def check_values(notebook: Notebook, values: dict[str, Any]) -> None:
         allowed = check_number("max_headroom", values["max_headroom"])
         if allowed < 0:
             raise InputError(f"max_headroom is {allowed!r}; give a number of at least 0.")
+    if notebook.name == GROWTH:
+        if "ahead" in values:
+            check_positive("ahead", values["ahead"])
+        if "confidence" in values:
+            check_fraction("confidence", values["confidence"])
 
 
 def check_risk(value: Any) -> float:
@@ -66,6 +74,8 @@ def check_points(study: "Study", points: Iterable["Point"]) -> None:
     InputError
         For the first point that is refused.
     """
+    if study.notebook.name == LONG_RUN:
+        _check_families(points)
     if study.notebook.name not in (RUN, RULES):
         return
     from labkit.fleet.readers import read_fleet
@@ -79,6 +89,17 @@ def check_points(study: "Study", points: Iterable["Point"]) -> None:
             sizes[place] = len(read_fleet(from_root(place)))
         key = "replicates" if values.get("precision") is None else "most_replicates"
         _check_memory(key, values[key], sizes[place], values.get("checkpoints", 1), len(policies))
+
+
+def _check_families(points: Iterable["Point"]) -> None:
+    from labkit.fleet.named import fleet_of_family
+
+    for point in points:
+        values = point.identity.parameters
+        policy_names([*values["policies"], *filter(None, [values["reference"]])])
+        key = "replicates" if values["precision"] is None else "most_replicates"
+        _check_memory(key, values[key], values["servers"], 1, len(values["policies"]) + 1)
+        fleet_of_family(values["family"], values["servers"], rng=0)
 
 
 def policy_names(policies: list[Any]) -> list[str]:

@@ -15,7 +15,16 @@ from labkit.errors import InputError, TooFewReplicates
 from labkit.records.declared import EXECUTION_ONLY, Notebook, Parameter, is_path, read_notebook
 from labkit.records.identity import Identity, check_entropy, identify
 from labkit.records.project import EXPERIMENTS, ROOT, check_study_name, find_notebook, path_text
-from labkit.studies.door import ANSWER, RULES, RUN, SURVEY, check_risk, check_values
+from labkit.studies.door import (
+    ANSWER,
+    GROWTH,
+    LONG_RUN,
+    RULES,
+    RUN,
+    SURVEY,
+    check_risk,
+    check_values,
+)
 
 # Parameters of the notebook that stand at the top of the file.
 AT_TOP = ("replicates", "precision", "most_replicates", "entropy")
@@ -149,11 +158,7 @@ def make_study(name: str, content: dict[str, Any], *, folder: Path) -> Study:
             raise InputError(f"answer: {key} is set by labkit itself; remove it from the study.")
         if key not in answer_notebook.parameters:
             raise InputError(f"answer: notebook {answer_notebook.name} declares no parameter {key}; add it.")
-    if answer_notebook.name == ANSWER and notebook.name in (SURVEY, RULES):
-        raise InputError(
-            f"answer: notebook {ANSWER} reads runs of the notebook {RUN}, not of {notebook.name}; remove "
-            "[answer], since that notebook is its own answer."
-        )
+    _check_reads(answer_notebook.name, notebook.name)
     answer = _typed(answer_notebook, answer, folder)
     check_values(answer_notebook, answer)
     _check_answerable(answer_notebook.checked(answer), fixed.get("replicates"))
@@ -178,6 +183,17 @@ def _stopping(content: dict[str, Any], notebook: Notebook) -> dict[str, Any]:
         raise InputError("replicates is missing; a precision needs it as the least number of replicates.")
     rule = stopping_rule(content["precision"], content["replicates"], content["most_replicates"])
     return {"precision": rule.precision, "most_replicates": rule.most_replicates}
+
+
+def _check_reads(answer: str, run: str) -> None:
+    """Refuse one of the project's answer notebooks for runs of another of its notebooks than it reads."""
+    reads = {ANSWER: RUN, GROWTH: LONG_RUN}
+    read = reads.get(answer)
+    if read is None or run == read or run not in (RUN, LONG_RUN, SURVEY, RULES):
+        return
+    fitting = [name for name, each in reads.items() if each == run]
+    advice = f"name {fitting[0]}" if fitting else "remove [answer], since that notebook is its own answer"
+    raise InputError(f"answer: notebook {answer} reads runs of the notebook {read}, not of {run}; {advice}.")
 
 
 def _mixes(names: Any, grid: dict[str, Any]) -> tuple[str, ...]:

@@ -6,6 +6,7 @@ import labkit as lk
 from labkit.cli import main
 from labkit.records.project import EXPERIMENTS
 from labkit.studies import door
+from labkit.studies.model import make_study
 from labkit.studies.own_fleet import default_tasks
 from tests.records.tiny import snapshot
 
@@ -110,3 +111,56 @@ def test_tasks_fill_the_fleet_unless_capacities_are_no_amounts_of_work():
     assert (tasks, "no amount of work" in why) == (300, True)
     with pytest.raises(lk.InputError, match=r"total capacity of 3e\+12 tasks, too many .* or give --tasks N"):
         default_tasks(fleet(1e12, 1e12, 1e12))
+
+
+@pytest.mark.parametrize(
+    ("grid", "answer", "sentence"),
+    [
+        ('family = ["ring", "rings"]', "", "family is 'rings'; did you mean 'ring'"),
+        (
+            'family = ["ladder"]\nservers = [16, 25]',
+            "",
+            "servers is 25; a ladder has an even number: give 26",
+        ),
+        ("servers = [1]", "", "servers is 1; give a whole number of at least 2"),
+        ('policies = [["least-loded"]]', "", "policies: policy is 'least-loded'; did you mean"),
+        ('policies = [["pairwise-averaging"]]', "", "policies names 'pairwise-averaging' twice"),
+        ("horizon = [0]", "", "horizon is 0; give"),
+        ("servers = [100000000]", "", "with 100,000,000 servers, 1 checkpoints"),
+        ("servers = [16]", "ahead = 0", "ahead is 0.0; give a number above 0"),
+        ("servers = [16]", "confidence = 1.5", "confidence is 1.5; give"),
+        (
+            "servers = [16]",
+            'notebook = "headroom_answer"',
+            "reads runs of the notebook headroom, not of long_run",
+        ),
+    ],
+)
+def test_what_the_growth_notebooks_would_refuse(tmp_path, monkeypatch, capsys, grid, answer, sentence):
+    monkeypatch.setattr("labkit.studies.kernels.start_kernel", None)
+    path = tmp_path / "asked.toml"
+    named = "" if "notebook" in answer else 'notebook = "growth"\n'
+    path.write_text(
+        f'notebook = "long_run"\nreplicates = 10\nentropy = 1\n[grid]\n{grid}\n[answer]\n{named}{answer}\n'
+    )
+    before = snapshot(tmp_path)
+    assert main(["run", str(path), "--store", str(tmp_path / "runs"), "--output", str(tmp_path)]) == 2
+    assert snapshot(tmp_path) == before
+    out, err = capsys.readouterr()
+    assert out == ""
+    assert sentence in err
+    assert err.count("\n") == 1
+
+
+def test_the_growth_answer_reads_no_other_notebooks_runs():
+    content = {
+        "notebook": "headroom",
+        "replicates": 400,
+        "entropy": 1,
+        "parameters": {"fleet": "demo"},
+        "answer": {"notebook": "growth"},
+    }
+    with pytest.raises(
+        lk.InputError, match="growth reads runs of the notebook long_run, not of headroom; name"
+    ):
+        make_study("s", content, folder=EXPERIMENTS)
