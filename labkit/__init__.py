@@ -58,6 +58,7 @@ _HOMES = {
     "begin_run": "labkit.records.run",
     "begin_answer": "labkit.studies.subject",
     "read_study_records": "labkit.studies.reading",
+    "read_frozen": "labkit.records.frozen",
 }
 
 __all__ = [*_HOMES, "__version__"]

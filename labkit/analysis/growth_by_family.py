@@ -8,7 +8,7 @@ import pandas as pd
 
 from labkit.analysis.growth import GrowthFit, fit_growth
 from labkit.analysis.long_run_table import long_run_table
-from labkit.checks import check_number
+from labkit.checks import check_positive
 from labkit.errors import InputError
 from labkit.policies.naming import moves_placed_work, shown_name
 from labkit.randomness import seed_sequence
@@ -109,11 +109,12 @@ def laws_table(fits: list[FamilyFit], *, ahead: float = 4.0) -> pd.DataFrame:
     pandas.DataFrame
         family, policy, moment, sizes (how many), smallest, largest (servers), mean, error (at the largest),
         ahead (servers), estimate, lower, upper (there), times (estimate ÷ mean), laws (those not ruled out,
-        with weights), exponent, exponent_lower, exponent_upper (of a power law, by its better form),
-        held_out (relative error at the largest size when foretold from the others), inside (whether it was
-        foretold within the band; None when it could not be).
+        with weights; a power of negative exponent is called a levelling power), exponent, exponent_lower,
+        exponent_upper (of a power law, by its better form), held_out (relative error at the largest size when
+        foretold from the others), inside (whether it was foretold within the band; None when it could not
+        be).
     """
-    check_number("ahead", ahead)
+    check_positive("ahead", ahead)
     return pd.DataFrame([_row(each, ahead) for each in fits])
 
 
@@ -124,7 +125,12 @@ def _row(each: FamilyFit, ahead: float) -> dict[str, Any]:
     forms = fit.table()
     power = forms[forms["law"] == "power"]
     exponents = power.iloc[0] if len(power) else pd.Series(np.nan, index=forms.columns)
-    laws = ", ".join(f"{law} {weight:.2f}" for law, weight in fit.weights.items() if weight >= LEAST_WEIGHT)
+    names = fit.weights.index.to_series()
+    if len(power) and exponents["exponent"] < 0:
+        names = names.replace("power", "levelling power")
+    laws = ", ".join(
+        f"{names[law]} {weight:.2f}" for law, weight in fit.weights.items() if weight >= LEAST_WEIGHT
+    )
     held = fit.held_out
     return {
         "family": each.family,
@@ -212,7 +218,7 @@ def _cells(row: pd.Series) -> list[str]:
     if not row["exponent_lower"] > 0:
         laws = row["laws"].split(", ")
         more = f", {len(laws) - 3} more" if len(laws) > 3 else ""
-        growth = f"no clear power of n: {', '.join(laws[:3])}{more}"
+        growth = f"no clear power of n; {', '.join(laws[:3])}{more}"
     return [
         str(row["family"]),
         f"{row['largest']:,}",

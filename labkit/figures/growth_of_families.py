@@ -51,7 +51,7 @@ def growth_of_families(
     style = looks(each.family for each in fits)
     columns = min(2, len(policies))
     rows = -(-len(policies) // columns)
-    figure = Figure(figsize=(5.6 * columns, 4.0 * rows + 0.4), layout="constrained")
+    figure = Figure(figsize=(5.6 * columns, 4.0 * rows + 0.5), layout="constrained")
     panels = figure.subplots(rows, columns, sharex=True, sharey=True, squeeze=False)
     largest = max(each.fit.sizes["x"].max() for each in fits)
     smallest = min(each.fit.sizes["x"].min() for each in fits)
@@ -74,7 +74,7 @@ def growth_of_families(
         lowest.xaxis.set_tick_params(labelbottom=True)
     percent = f"{100 * fits[0].fit.confidence:g} %"
     figure.suptitle(
-        f"points: means, ±1.96 standard errors · band: {percent} at each size, choice of law included · "
+        f"points: means, ±1.96 standard errors · band: {percent} at each size, choice of law included\n"
         f"dashed: beyond the sizes measured{_open_markers(fits)}",
         fontsize=9, x=0.01, ha="left",
     )  # fmt: skip

@@ -1,11 +1,13 @@
 """Records for analyses: the rows of a study's runs as one table."""
 
-from collections.abc import Sequence
+from collections.abc import Collection, Sequence
 from pathlib import Path
+from typing import Any
 
 import pandas as pd
 
 from labkit.errors import InputError
+from labkit.records.identity import canonical
 from labkit.records.project import EXPERIMENTS, check_study_name
 from labkit.records.schema import row_of_origin
 from labkit.records.store import Store, open_store
@@ -46,10 +48,9 @@ def read_study_records(
     tables = [place.read(path) for path in paths]
     origins = [row_of_origin(table) for table in tables]
     frames = [table.to_pandas() for table in tables]
-    for name in _differing([origin["parameters"] for origin in origins]):
-        column = f"{name}_parameter" if name in frames[0].columns else name
-        for frame, origin in zip(frames, origins, strict=True):
-            frame[column] = origin["parameters"].get(name)
+    for column, values in differing_parameters(origins, frames[0].columns).items():
+        for frame, value in zip(frames, values, strict=True):
+            frame[column] = value
     return pd.concat(frames, ignore_index=True)
 
 
@@ -71,11 +72,27 @@ def _paths(study: str, runs: list[str], store: Store) -> list[Path]:
     return [path for path in found.values() if path is not None]
 
 
-def _differing(parameters: list[dict]) -> list[str]:
-    """Return the names whose values differ; policies have their own label."""
+def differing_parameters(origins: list[dict[str, Any]], taken: Collection[str]) -> dict[str, list[Any]]:
+    """Return a column for each parameter in which runs differ; policies have their own label.
+
+    Parameters
+    ----------
+    origins : list of dict
+        Where each run comes from, as `labkit.records.schema.row_of_origin` returns it.
+    taken : collection of str
+        Columns that the records have; a parameter of such a name becomes ``<name>_parameter``.
+
+    Returns
+    -------
+    dict of str to list
+        Column name → the value of each run; lists as JSON text.
+    """
+    parameters = [origin["parameters"] for origin in origins]
     names = dict.fromkeys(name for each in parameters for name in each)
-    return [
-        name
-        for name in names
-        if name != "policies" and any(each.get(name) != parameters[0].get(name) for each in parameters[1:])
-    ]
+    found = {}
+    for name in names:
+        values = [each.get(name) for each in parameters]
+        if name != "policies" and any(value != values[0] for value in values[1:]):
+            column = f"{name}_parameter" if name in taken else name
+            found[column] = [canonical(value) if isinstance(value, list) else value for value in values]
+    return found

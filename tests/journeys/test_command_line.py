@@ -24,7 +24,7 @@ def test_help_imports_nothing_heavy():
     )
     done = subprocess.run([sys.executable, "-c", code], env=environment(), capture_output=True, text=True)
     assert done.stdout.endswith("\n[]\n"), done.stderr
-    for command in ("run", "answer", "survey", "list", "show", "rerun"):
+    for command in ("run", "answer", "survey", "list", "show", "rerun", "freeze", "verify"):
         assert f"    {command} " in done.stdout
 
 

@@ -4,12 +4,16 @@ import pytest
 
 import labkit as lk
 from labkit.cli import main
+from labkit.records.store import Store
+from labkit.studies.freezing import freeze
 from labkit.studies.model import read_study
 from tests.records.tiny import write_tiny
 
 
 class Project:
     """A folder with the tiny notebook, studies of it and a store, driven by the command line."""
+
+    GRID = "share = [0.5, 0.25]\ntasks = [3, 4]"  # four runs
 
     def __init__(self, folder, capsys):
         self.folder, self.store, self.capsys = folder, folder / "runs", capsys
@@ -48,3 +52,22 @@ class Project:
 @pytest.fixture
 def project(tmp_path, capsys):
     return Project(tmp_path, capsys)
+
+
+@pytest.fixture
+def folder(project):
+    return project.folder / "results" / "frozen"
+
+
+@pytest.fixture
+def frozen(project, folder):
+    """Freeze a study with what its tests record; further keywords go to `freeze`."""
+
+    def make(name="first", study=None, **options):
+        path = study or project.study(grid=project.GRID, replicates=5)
+        if not any(Store(project.store).files("s")):
+            project.record(path)
+        options = {"allow_changes": True, "output": project.folder / "answers", **options}
+        return freeze(path, name, Store(project.store), folder=folder, **options)
+
+    return make

@@ -1,0 +1,238 @@
+"""Verifying a frozen table: every byte of it, the table from its rows, and a sample of its runs anew."""
+
+import random
+from collections import Counter
+from collections.abc import Callable
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from labkit.checks import check_whole
+from labkit.errors import InputError
+from labkit.records.frozen import MANIFEST, RUNS, TABLE, Finding, check_files, find_frozen
+from labkit.records.frozen_index import check_index
+from labkit.records.project import FROZEN
+from labkit.records.store import decode
+from labkit.studies.freezing import table_of
+
+if TYPE_CHECKING:
+    import pandas as pd
+    import pyarrow as pa
+
+
+@dataclass(frozen=True)
+class Row:
+    """A row of the table: where it is, counted from 0, its labels in words, and the runs behind it."""
+
+    at: int
+    about: str
+    runs: list[str]
+
+
+@dataclass
+class Verification:
+    """What was checked of a frozen table, and what does not hold.
+
+    Attributes
+    ----------
+    name : str
+    files : int
+        Files checked, the manifest among them.
+    findings : list of Finding
+        Empty when all holds.
+    sampled : list of Row
+        Rows of the table that were drawn; their runs were executed again.
+    runs : list of str
+        Ids of these runs.
+    rows : int
+        Measured rows that were compared bit for bit.
+    notes : list of str
+        What should be known about the executions.
+    """
+
+    name: str
+    files: int = 0
+    findings: list[Finding] = field(default_factory=list)
+    sampled: list[Row] = field(default_factory=list)
+    runs: list[str] = field(default_factory=list)
+    rows: int = 0
+    notes: list[str] = field(default_factory=list)
+
+
+def verify(
+    name: str,
+    rerun: int | None = None,
+    *,
+    folder: Path = FROZEN,
+    say: Callable[[str], None] = lambda sentence: None,
+) -> Verification:
+    """Check a frozen table, and execute the runs behind some of its rows again.
+
+    Parameters
+    ----------
+    name : str
+        The name of the table.
+    rerun : int, optional
+        The number of rows, drawn at random, whose runs are executed again; all when there are fewer. Nothing
+        is executed when the files do not hold.
+    folder : Path
+        The folder of frozen tables.
+    say : callable
+        Called with a sentence for the user before anything that takes time.
+
+    Raises
+    ------
+    InputError
+        When there is no such table, `rerun` is below 1, or a run cannot be executed here.
+    """
+    if rerun is not None:
+        check_whole("rerun", rerun)
+    place = find_frozen(name, folder)
+    manifest, findings = check_files(place, name)
+    result = Verification(name, len(manifest.get("files", ())) + bool(manifest), findings)
+    if not manifest:
+        return result
+    findings += check_index(folder, name, manifest)
+    wrong = {each.file for each in findings if each.kind in ("missing", "changed", "manifest")}
+    if not wrong & {RUNS, TABLE, MANIFEST}:
+        findings += _recomputed(place, manifest)
+    if rerun is not None:
+        if findings:
+            result.notes.append("nothing was executed again, since the files do not hold")
+        else:
+            _rerun(result, place, manifest, rerun, say)
+    return result
+
+
+def _recomputed(place: Path, manifest: dict[str, Any]) -> list[Finding]:
+    """Compute the table again from its rows and compare every bit of it."""
+    tables = {}
+    for file in (RUNS, TABLE):
+        try:
+            tables[file] = decode((place / file).read_bytes())
+        except (OSError, ValueError) as error:
+            return [
+                Finding("unreadable", file, f"file {file} cannot be read as a table ({error}); restore it.")
+            ]
+    found = _disagreement(tables[RUNS], tables[TABLE], manifest)
+    if found:
+        return [Finding("recomputed", RUNS, f"file {found}; restore it.")]
+    try:
+        found = _difference(tables[TABLE].to_pandas(), table_of(tables[RUNS], manifest["query"]))
+    except (InputError, KeyError, TypeError) as error:
+        found = f"it cannot be computed: {error}"
+    if not found:
+        return []
+    sentence = f"file {TABLE} is not what {RUNS} gives: {found}; one of the two was changed: restore both."
+    return [Finding("recomputed", TABLE, sentence)]
+
+
+def _disagreement(runs: "pa.Table", table: "pa.Table", manifest: dict[str, Any]) -> str:
+    """Return what of the numbers of rows in the manifest does not hold."""
+    if "run_id" not in runs.column_names:
+        return f"{RUNS} has no column 'run_id'"
+    held = Counter(runs["run_id"].to_pylist())
+    for run in manifest["runs"]:
+        rows = held.pop(run["run_id"], 0)
+        if rows != run["rows"]:
+            return f"{RUNS} has {rows} rows of run {run['run_id']} and {MANIFEST} says {run['rows']}"
+    if held:
+        return f"{RUNS} has rows of run {next(iter(held))}, which {MANIFEST} does not name"
+    if table.num_rows != manifest["rows"]:
+        return f"{TABLE} has {table.num_rows} rows and {MANIFEST} says {manifest['rows']}"
+    return ""
+
+
+def _difference(table: "pd.DataFrame", again: "pd.DataFrame") -> str:
+    import pyarrow as pa
+
+    from labkit.records.schema import first_difference
+
+    return first_difference(
+        pa.Table.from_pandas(table, preserve_index=False), pa.Table.from_pandas(again, preserve_index=False)
+    )
+
+
+def _rerun(
+    result: Verification, place: Path, manifest: dict[str, Any], count: int, say: Callable[[str], None]
+) -> None:
+    from labkit.analysis.summary import runs_behind
+    from labkit.analysis.tables import describe
+    from labkit.studies.places import ExecutionFailed, Places
+
+    runs = decode((place / RUNS).read_bytes())
+    behind = runs_behind(runs.to_pandas(), manifest["query"]["labels"])
+    drawn = random.SystemRandom().sample(range(len(behind)), min(count, len(behind)))
+    table = decode((place / TABLE).read_bytes()).to_pandas()
+    for at in sorted(drawn):
+        about = describe(table.iloc[at], [*manifest["query"]["labels"], "tasks"])
+        result.sampled.append(Row(at, about, behind[at]))
+    result.runs = list(dict.fromkeys(run for row in result.sampled for run in row.runs))
+    origins = {run["run_id"]: run for run in manifest["runs"]}
+    measured: dict[str, pa.Table] = {}
+    with Places(say) as places:
+        for run in result.runs:
+            try:
+                again, notes = places.measured_again(origins[run])
+            except ExecutionFailed as error:
+                sentence = f"run {run} could not be executed again: {error}."
+                result.findings.append(Finding("failed", RUNS, sentence))
+                continue
+            result.notes += [f"run {run}: {note}" for note in notes]
+            measured[run] = again
+    for run, again in measured.items():
+        difference = _run_difference(runs, run, again, manifest["query"]["parameters"])
+        result.rows += again.num_rows
+        if difference:
+            sentence = f"run {run} executed again differs from {RUNS}: {difference}."
+            result.findings.append(Finding("rerun", RUNS, sentence))
+    _check_rows(result, place, runs, measured, manifest["query"])
+
+
+def _run_difference(runs: "pa.Table", run: str, again: "pa.Table", parameters: list[str]) -> str:
+    """Return where the frozen rows of a run differ from what it measured again."""
+    from labkit.records.schema import first_difference
+
+    return first_difference(_measured_rows(runs, run, again.column_names, parameters), again)
+
+
+def _measured_rows(runs: "pa.Table", run: str, names: list[str], parameters: list[str]) -> "pa.Table":
+    """Return the frozen rows of a run; columns that only other runs have are left out."""
+    import pyarrow.compute as pc
+
+    rows = runs.filter(pc.equal(runs["run_id"], run)).drop_columns(["run_id", *parameters])
+    kept = [name for name in rows.column_names if name in names or rows[name].null_count < rows.num_rows]
+    return rows.select(kept)
+
+
+def _check_rows(
+    result: Verification,
+    place: Path,
+    runs: "pa.Table",
+    measured: "dict[str, pa.Table]",
+    query: dict[str, Any],
+) -> None:
+    """Compute the drawn rows of the table again from what was measured again."""
+    import pyarrow as pa
+    import pyarrow.compute as pc
+
+    if result.findings:
+        return  # rows that differ are named already
+    parts = []
+    for run in pc.unique(runs["run_id"]).to_pylist():
+        rows = runs.filter(pc.equal(runs["run_id"], run))
+        if run in measured:
+            again = measured[run]
+            for name in again.column_names:
+                at = rows.column_names.index(name)
+                rows = rows.set_column(at, name, again[name].cast(rows[name].type))
+        parts.append(rows)
+    drawn = [row.at for row in result.sampled]
+    table = decode((place / TABLE).read_bytes()).to_pandas()
+    found = _difference(
+        table.iloc[drawn].reset_index(drop=True),
+        table_of(pa.concat_tables(parts), query).iloc[drawn].reset_index(drop=True),
+    )
+    if found:
+        sentence = f"the rows of {TABLE} computed from the runs executed again differ: {found}."
+        result.findings.append(Finding("rerun", TABLE, sentence))
