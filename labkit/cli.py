@@ -10,7 +10,7 @@ from types import FrameType
 from typing import NoReturn
 
 from labkit import __version__
-from labkit.commands import frozen, planning, records, running, surveying
+from labkit.commands import frozen, planning, records, running, sizing, surveying
 from labkit.commands.parts import Commands, say
 from labkit.errors import InputError
 
@@ -61,7 +61,7 @@ def _parser() -> argparse.ArgumentParser:
     )
     parser.add_argument("--version", action="version", version=f"labkit {__version__}")
     commands = Commands(parser)
-    for module in (running, surveying, planning, records, frozen):
+    for module in (running, sizing, surveying, planning, records, frozen):
         module.add(commands)
     return parser
 

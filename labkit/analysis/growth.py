@@ -8,6 +8,7 @@ import numpy as np
 import pandas as pd
 from scipy.stats import norm, t
 
+from labkit.analysis.growth_bands import check_points, quantile_band
 from labkit.analysis.growth_laws import (
     Form,
     Law,
@@ -18,15 +19,13 @@ from labkit.analysis.growth_laws import (
     misfit_of,
     usable_forms,
 )
-from labkit.analysis.growth_words import (
+from labkit.analysis.growth_sizes import (
     SizeGroups,
-    check_points,
-    conclusions,
     moderated_errors,
-    quantile_band,
     resampled_means,
     sizes_and_values,
 )
+from labkit.analysis.growth_words import conclusions
 from labkit.checks import check_fraction, check_whole
 from labkit.errors import InputError
 from labkit.randomness import seed_sequence

@@ -125,11 +125,12 @@ def _row(each: FamilyFit, ahead: float) -> dict[str, Any]:
     forms = fit.table()
     power = forms[forms["law"] == "power"]
     exponents = power.iloc[0] if len(power) else pd.Series(np.nan, index=forms.columns)
-    names = fit.weights.index.to_series()
-    if len(power) and exponents["exponent"] < 0:
-        names = names.replace("power", "levelling power")
+    levelling = len(power) and exponents["exponent"] < 0
+    named = {"power": "levelling power"} if levelling else {}
     laws = ", ".join(
-        f"{names[law]} {weight:.2f}" for law, weight in fit.weights.items() if weight >= LEAST_WEIGHT
+        f"{named.get(str(law), law)} {weight:.2f}"
+        for law, weight in fit.weights.items()
+        if weight >= LEAST_WEIGHT
     )
     held = fit.held_out
     return {

@@ -30,6 +30,10 @@ COMPUTING = (
     "engine",
     "stationary",
     "placing.py",
+    # By what rule replicates are added, and in which groups, decides what rows a record has.
+    "analysis/stopping.py",
+    "analysis/precision.py",
+    "analysis/tables.py",
 )
 
 # These do not shape the arriving work: the rule and what it knows, how often and when it is measured. Points

@@ -90,7 +90,7 @@ def run_points(
         points.
     """
     jobs = cores() if jobs is None else check_whole("jobs", jobs)
-    _check_notebook(study)
+    check_notebook(study)
     store.check_writable(study.name)
     report = Report()
     pending = []
@@ -205,7 +205,8 @@ def _why_no_record(point: Point) -> str:
     return "the notebook ended without a record of its run; let it call begin_run and run.record(...)."
 
 
-def _check_notebook(study: Study) -> None:
+def check_notebook(study: Study) -> None:
+    """Refuse a notebook that does not take what a runner hands to it."""
     missing = sorted({"study", "store"} - set(study.notebook.parameters))
     if missing:
         raise InputError(

@@ -1,6 +1,7 @@
 """Whether compiled code is likely to be on disk already: several processes on an empty cache all compile."""
 
 import contextlib
+import os
 from functools import cache
 from pathlib import Path
 
@@ -26,6 +27,13 @@ def _mark() -> Path:
 def is_warm() -> bool:
     """Tell whether a run of these very sources was executed on this machine before."""
     return _mark().exists()
+
+
+def compiled_files() -> int:
+    """Return how many files of compiled code there are; more of them mean that something was compiled."""
+    place = os.environ.get("NUMBA_CACHE_DIR")
+    code = Path(place) if place else _mark().parent / f"compiled-{sources_digest()}"
+    return sum(1 for _ in code.rglob("*.nbc"))
 
 
 def set_warm() -> None:

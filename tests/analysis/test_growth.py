@@ -10,8 +10,9 @@ from matplotlib.backends.backend_agg import FigureCanvasAgg
 from scipy import stats
 
 import labkit as lk
+from labkit.analysis.growth_bands import quantile_band
 from labkit.analysis.growth_laws import Law
-from labkit.analysis.growth_words import SizeGroups, moderated_errors, quantile_band, resampled_means
+from labkit.analysis.growth_sizes import SizeGroups, moderated_errors, resampled_means
 from labkit.errors import InputError, TooFewReplicates
 from labkit.figures.growth_curve import growth_curve
 
@@ -369,3 +370,12 @@ def test_figure_refuses(fit):
         growth_curve(fit.table())
     with pytest.raises(InputError, match="reach is 20; give a number from 1 to 16"):
         growth_curve(fit, reach=20)
+
+
+def test_a_fit_draws_itself(fit):
+    assert isinstance(fit, lk.GrowthFit)
+    figure = fit.figure(reach=2.0, measure="gap, tasks")
+    assert figure.axes[0].get_ylabel() == "gap, tasks"
+    assert figure.axes[0].get_xlim()[1] == pytest.approx(2 * fit.sizes["x"].max())
+    with pytest.raises(InputError, match="reach"):
+        fit.figure(reach=0.5)
