@@ -24,6 +24,14 @@ _LONG = 600.0  # seconds, for a large repository on a slow disk
 _OTHERWISE = "or execute today's code with: labkit rerun RUN --here."
 
 
+class CommitMissing(InputError):
+    """A commit that cannot be had here; `fact` says why in a part of a sentence."""
+
+    def __init__(self, fact: str, remedy: str) -> None:
+        super().__init__(f"{fact}; {remedy}, {_OTHERWISE}")
+        self.fact = fact
+
+
 class Commits:
     """Work trees of commits in temporary folders, made when asked for and removed at the end of ``with``.
 
@@ -59,8 +67,10 @@ class Commits:
 
         Raises
         ------
+        CommitMissing
+            When git, the repository or the commit is missing.
         InputError
-            When git, the repository or the commit is missing, or the environment cannot be made.
+            When the work tree or its environment cannot be made.
         """
         if commit not in self._places:
             inside = self._check_known(commit)
@@ -91,22 +101,20 @@ class Commits:
                 return inside
             shallow = git(self._root, "rev-parse", "--is-shallow-repository").stdout.strip() == b"true"
         except OSError:
-            raise InputError(
-                f"commit {short} cannot be had: there is no git; install it, {_OTHERWISE}"
-            ) from None
+            raise CommitMissing(f"commit {short} cannot be had: there is no git", "install it") from None
         except subprocess.SubprocessError as error:
-            raise InputError(
-                f"commit {short} cannot be had: {self._root} is no git repository ({_reason(error)}); work "
-                f"in a clone of the project, {_OTHERWISE}"
+            raise CommitMissing(
+                f"commit {short} cannot be had: {self._root} is no git repository ({_reason(error)})",
+                "work in a clone of the project",
             ) from None
         if shallow:
-            raise InputError(
-                f"commit {short} is not in this clone, which is shallow; get the rest with: "
-                f"git fetch --unshallow, {_OTHERWISE}"
+            raise CommitMissing(
+                f"commit {short} is not in this clone, which is shallow",
+                "get the rest with: git fetch --unshallow",
             )
-        raise InputError(
-            f"commit {short} is not in the repository {self._root}; fetch the branch that holds it with: "
-            f"git fetch --all, {_OTHERWISE}"
+        raise CommitMissing(
+            f"commit {short} is not in the repository {self._root}",
+            "fetch the branch that holds it with: git fetch --all",
         )
 
     def _python(self, root: Path, short: str) -> Path:

@@ -150,6 +150,26 @@ def test_a_fresh_clone_verifies_after_the_code_moved_on(copy, place, tmp_path):
     assert "identical to the bit" in out
 
 
+def test_without_its_commit_equal_bits_hold_and_others_are_told(copy, place, tmp_path):
+    """A shallow clone lacks the commit of the runs; today's code may give the same bits, or not."""
+    source = copy.root / "labkit" / "engine" / "shift.py"
+    before = source.read_text()
+    try:
+        for text, holds in (("SHIFT = 0.0  # as it was\n", True), ("SHIFT = 0.125\n", False)):
+            source.write_text(text)
+            copy.commit()
+            clone = tmp_path / f"clone-{holds}"
+            copy.git("clone", "-q", "--depth", "1", copy.root.as_uri(), str(clone))
+            status, out, err = copy("verify", "first", "--rerun", "1", root=clone)
+            assert (status == 0) is holds, out + err
+            assert "which is shallow; executed with today's code" in out
+            assert "labkit was 0.1.0+" in out
+            assert ("identical to the bit" in out) is holds
+            copy.git("reset", "-q", "HEAD~1")
+    finally:
+        source.write_text(before)
+
+
 def test_every_file_is_missed_and_every_changed_byte_found(copy, place):
     files = sorted(path.name for path in place.iterdir())
     assert len(files) == 12

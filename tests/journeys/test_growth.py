@@ -105,7 +105,7 @@ def test_the_growth_page_is_made_from_the_frozen_table(tmp_path):
     output = tmp_path / "out"
     result = execute(NOTEBOOKS / "growth.ipynb", {"output": str(output)}, tmp_path / "growth.ipynb")
     assert result.error == ""
-    assert "On a ring of 2,304 servers smooth-feedback" in (output / "answer.txt").read_text()
+    assert "On a ring of 1,600 servers smooth-feedback" in (output / "answer.txt").read_text()
 
 
 @pytest.mark.parametrize(
