@@ -13,7 +13,7 @@ from labkit.errors import InputError
 from labkit.fleet.model import Fleet, check_fleet
 from labkit.policies.base import Policy
 from labkit.policies.naming import parse_policy
-from labkit.randomness import MOST_REPLICATES, seed_sequence
+from labkit.randomness import check_replicates, seed_sequence
 from labkit.stationary.start import forecast_start
 
 
@@ -89,13 +89,7 @@ def place(
     check_fleet(fleet)
     rule = parse_policy(policy)
     tasks = check_whole("tasks", tasks)
-    replicates = check_whole("replicates", replicates)
-    first_replicate = check_whole("first_replicate", first_replicate, least=0)
-    if first_replicate + replicates > MOST_REPLICATES:
-        raise InputError(
-            f"first_replicate is {first_replicate} and replicates is {replicates}; replicates are numbered "
-            f"from 0 to {MOST_REPLICATES - 1}, so give smaller numbers."
-        )
+    first_replicate, replicates = check_replicates(first_replicate, replicates)
     workers = check_whole("workers", workers)
     seed = seed_sequence(rng)
     moments = _checked_checkpoints(checkpoints, tasks)

@@ -9,6 +9,7 @@ from typing import Any
 
 import numpy as np
 
+from labkit.checks import check_whole
 from labkit.errors import InputError
 
 ARRIVALS, COINS, SIZES, TURNS, STARTS = 0, 1, 2, 3, 4
@@ -59,3 +60,15 @@ def kernel_state(seed: np.random.SeedSequence, replicate: int, stream: int) -> n
 def generator(seed: np.random.SeedSequence, replicate: int, stream: int) -> np.random.Generator:
     """Return a NumPy generator on one stream of one replicate."""
     return np.random.Generator(np.random.SFC64(child(seed, replicate, stream)))
+
+
+def check_replicates(first: Any, count: Any) -> tuple[int, int]:
+    """Return the number of the first replicate and the count, when all have streams of their own."""
+    count = check_whole("replicates", count)
+    first = check_whole("first_replicate", first, least=0)
+    if first + count > MOST_REPLICATES:
+        raise InputError(
+            f"first_replicate is {first} and replicates is {count}; replicates are numbered from 0 to "
+            f"{MOST_REPLICATES - 1}, so give smaller numbers."
+        )
+    return first, count

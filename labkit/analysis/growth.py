@@ -247,7 +247,9 @@ def fit_growth(
     Returns
     -------
     GrowthFit
-        With ``.predict(xs)``, ``.table()`` and the attributes described there.
+        With ``.predict(xs)`` (within 16 times the sizes measured unless forced), ``.by_law(xs)``,
+        ``.table()``, ``.notes()``, from `labkit.fit_growth` also ``.figure()``, and the attributes described
+        there.
 
     Raises
     ------

@@ -76,7 +76,7 @@ def sizes_and_values(measures: Any, x: str, y: str) -> SizeGroups:
     if x == y:
         raise InputError(f"x and y are both {x!r}; name the size as x and the measure as y.")
     for column in (x, y):
-        _check_numbers(table, column)
+        check_numbers(table, column)
     low = table[x].to_numpy(dtype=np.float64) < 1 / LARGEST
     if low.any():
         row = int(np.flatnonzero(low)[0])
@@ -107,7 +107,8 @@ def sizes_and_values(measures: Any, x: str, y: str) -> SizeGroups:
     return groups
 
 
-def _check_numbers(table: pd.DataFrame, column: str) -> None:
+def check_numbers(table: pd.DataFrame, column: str) -> None:
+    """Refuse a column that does not hold finite real numbers."""
     numbers = table[column]
     if isinstance(numbers, pd.DataFrame):
         raise InputError(f"measures has several columns {column!r}; keep one.")

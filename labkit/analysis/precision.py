@@ -30,7 +30,8 @@ def replicate_until(
     Parameters
     ----------
     batch : callable
-        ``batch(first, count)`` returns the table of measures of the replicates first … first + count − 1: in
+        ``batch(first, count)`` returns the table of measures of the replicates first … first + count − 1,
+        with the columns replicate, tasks and the measure, and any labels such as policy: in
         each block of rows the replicates ascend, and each has the same rows, as ``outcome.measures`` has with
         ``place(..., first_replicate=first, replicates=count)``, or several of them under each other.
     precision : float or None

@@ -23,7 +23,10 @@ _TEX = {
     "|": r"\textbar{}",
     "±": r"$\pm$",
     "×": r"$\times$",
-    **{sign: f"\\{sign}" for sign in "&%$#_{}"},
+    # Unlike an escaped brace these leave the braces of a BibTeX field balanced.
+    "{": r"\textbraceleft{}",
+    "}": r"\textbraceright{}",
+    **{sign: f"\\{sign}" for sign in "&%$#_"},
 }
 
 

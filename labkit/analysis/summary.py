@@ -114,8 +114,8 @@ def labels_of(runs: pd.DataFrame, parameters: Sequence[str]) -> list[str]:
         When the rows are not those of replicates.
     """
     last = _last_rows(runs)
-    found = [*_own_labels(runs, parameters)]
-    found += [name for name in parameters if not _is_said(last, name)]
+    own = _own_labels(runs, parameters)
+    found = [*own, *(name for name in parameters if not _is_said(last, name, own))]
     first = [name for name in FIRST_LABELS if name in found]
     ordered = first + [name for name in found if name not in first]
     return [name for name in ordered if name == "policy" or last[name].nunique(dropna=False) > 1]
@@ -174,12 +174,12 @@ def _is_number(column: pd.Series) -> bool:
     return pd.api.types.is_numeric_dtype(column) and not pd.api.types.is_bool_dtype(column)
 
 
-def _is_said(last: pd.DataFrame, name: str) -> bool:
-    """Tell whether another column says all that a parameter says."""
+def _is_said(last: pd.DataFrame, name: str, own: Sequence[str]) -> bool:
+    """Tell whether one of the records' `own` labels says all that a parameter says."""
     if _SAID_BY.get(name) in last.columns:
         return True
     base = name.removesuffix("_parameter")
-    return base != name and base in last.columns and bool((last[base] == last[name]).all())
+    return base != name and base in {*own, *KEYS} and bool((last[base] == last[name]).all())
 
 
 def _check_measures(last: pd.DataFrame, labels: list[str], measures: list[str]) -> None:

@@ -78,6 +78,8 @@ def _show(arguments: argparse.Namespace) -> int:
     print(f"{'file':<16} {path}")
     print(f"{'rows':<16} {measured.num_rows}")
     frame = measured.to_pandas()
+    for at, how in enumerate(frame["stopping"].unique() if "stopping" in frame.columns else []):
+        print(f"{'stopping' if at == 0 else '':<16} {how}")
     labels = [name for name in ("policy", "information", "tasks") if name in frame.columns]
     if labels:
         means = frame.drop(columns="replicate", errors="ignore").groupby(labels).mean(numeric_only=True)

@@ -25,7 +25,9 @@ def add(commands: Commands) -> None:
     size.add_argument(
         "--pilot", metavar="N", type=whole, default=20, help="replicates a point of the first look (20)"
     )
-    size.add_argument("--measure", metavar="NAME", default="gap", help="column of the records (gap)")
+    size.add_argument(
+        "--measure", metavar="NAME", help="column of the records (the notebook's precision_of, or gap)"
+    )
     size.add_argument("--jobs", metavar="N", type=whole, help="kernels at the same time (one a core)")
     size.add_argument(
         "--x", metavar="NAME", help="grid parameter that is the size (servers, if there is one)"
@@ -60,7 +62,7 @@ def _size(arguments: argparse.Namespace) -> int:
     print(table_text(found.size, found.labels))
     print()
     print(" ".join(told))
-    print(f"For the top of the study file, to know each mean {arguments.measure} that well:")
+    print(f"For the top of the study file, to know each mean {found.measure} to {found.precision:g}:")
     print()
     print("\n".join(found.lines))
     return 0

@@ -11,6 +11,7 @@ from labkit.analysis.growth_by_family import FamilyFit
 from labkit.checks import check_number
 from labkit.errors import InputError
 from labkit.figures.style import DASHES, FAINT, label_ends, looks, plain, styled
+from labkit.fleet.named import FAMILIES
 from labkit.policies.naming import shown_name
 from labkit.stationary.long_run import STATIONARY
 
@@ -48,7 +49,8 @@ def growth_of_families(
     if not fits:
         raise InputError("fits is empty; give at least one fit.")
     policies = list(dict.fromkeys(each.policy for each in fits))
-    style = looks(each.family for each in fits)
+    # The networks that a study may name keep their colours whichever of them are drawn.
+    style = looks([*FAMILIES, *(each.family for each in fits)])
     columns = min(2, len(policies))
     rows = -(-len(policies) // columns)
     figure = Figure(figsize=(5.6 * columns, 4.0 * rows + 0.5), layout="constrained")
@@ -65,7 +67,8 @@ def growth_of_families(
         labels.append((axes, ends))
     for axes in panels.flat[len(policies) :]:
         axes.set_visible(False)
-    _scales(panels, smallest, largest * reach)
+    heights = np.concatenate([each.fit.sizes["mean"].to_numpy() for each in fits])
+    _scales(panels, smallest, largest * reach, float(heights[heights > 0].min(initial=np.inf)))
     for axes in panels[:, 0]:
         axes.set_ylabel(measure)
     for column in range(columns):
@@ -111,13 +114,13 @@ def _open_markers(fits: Sequence[FamilyFit]) -> str:
     return f" · open markers: {' or '.join(moments)}, not stationary" if moments else ""
 
 
-def _scales(panels: np.ndarray, smallest: float, farthest: float) -> None:
+def _scales(panels: np.ndarray, smallest: float, farthest: float, lowest: float) -> None:
     axes = panels.flat[0]
     axes.set_xscale("log")
     axes.set_yscale("log")
     axes.set_xlim(smallest / 1.15, farthest)
-    low, high = axes.get_ylim()
-    axes.set_ylim(max(low, 0.3), high)
+    # A band may reach far down, even below zero.
+    axes.set_ylim(lowest / 2, axes.get_ylim()[1])
     for each in panels.flat:
         each.xaxis.set_major_locator(LogLocator(subs=(1, 2, 5)))
         each.xaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:,.0f}"))

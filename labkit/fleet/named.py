@@ -38,6 +38,7 @@ _FAMILIES: dict[str, Callable[[int, Any], Fleet]] = {
     "complete": lambda servers, rng: complete(servers),
 }
 FAMILIES = tuple(_FAMILIES)
+_LEAST = {"ring": 3, "ring-with-chords": 3, "random-regular": _DEGREE + 1}
 
 
 def fleet_of_family(family: str, servers: int, *, rng: Any) -> Fleet:
@@ -66,4 +67,4 @@ def fleet_of_family(family: str, servers: int, *, rng: Any) -> Fleet:
     Fleet(16 servers, 32 choices of 2 options, capacity 1 each, demand 1 each)
     """
     check_member("family", family, FAMILIES)
-    return _FAMILIES[family](check_whole("servers", servers), rng)
+    return _FAMILIES[family](check_whole("servers", servers, least=_LEAST.get(family, 2)), rng)

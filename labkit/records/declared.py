@@ -99,11 +99,13 @@ class Notebook:
         """SHA-256 of what can change its results.
 
         These are the code cells in order, where the parameters cell counts by names and types only: its
-        values are part of the run's parameters. Prose does not count: a corrected sentence keeps the records.
+        values are part of the run's parameters, and the modules beside the notebook that it imports. Prose
+        does not count: a corrected sentence keeps the records.
         """
         declared = json.dumps([[each.name, each.annotation] for _, each in sorted(self.parameters.items())])
         cells = [declared if at == self.parameters_at else cell for at, cell in enumerate(self.cells)]
-        return hashlib.sha256(json.dumps(cells).encode()).hexdigest()
+        beside = _modules_beside(self.path.parent, self.cells)
+        return hashlib.sha256(json.dumps([cells, beside] if beside else cells).encode()).hexdigest()
 
     def check_names(self, names: Any) -> None:
         """Refuse names that are not among the declared parameters."""
@@ -145,6 +147,32 @@ def read_notebook(path: Path) -> Notebook:
         )
     sources = tuple(source for source, _ in code)
     return Notebook(path, sources, at[0], _declarations(path, sources[at[0]]))
+
+
+def _modules_beside(folder: Path, sources: tuple[str, ...]) -> dict[str, str]:
+    """Return the text of each Python file in a folder that sources import, directly or through another."""
+    found: dict[str, str] = {}
+    pending = list(sources)
+    while pending:
+        for name in _imported(pending.pop()):
+            for file in (folder / f"{name}.py", *sorted((folder / name).rglob("*.py"))):
+                key = file.relative_to(folder).as_posix()
+                if key not in found and file.is_file():
+                    found[key] = file.read_text(encoding="utf-8")
+                    pending.append(found[key])
+    return found
+
+
+def _imported(source: str) -> set[str]:
+    """Return the first names of the modules that a source imports; lines for IPython alone do not count."""
+    lines = [line for line in source.splitlines() if not line.lstrip().startswith(("%", "!"))]
+    try:
+        nodes = list(ast.walk(ast.parse("\n".join(lines))))
+    except SyntaxError:
+        return set()
+    names = {alias.name for node in nodes if isinstance(node, ast.Import) for alias in node.names}
+    names |= {node.module or "" for node in nodes if isinstance(node, ast.ImportFrom)}
+    return {name.split(".")[0] for name in names} - {""}
 
 
 def _declarations(path: Path, source: str) -> dict[str, Parameter]:

@@ -38,6 +38,9 @@ KEYS: dict[str, type] = {
 }
 QUERY = frozenset({"study", "moment", "labels", "parameters", "measures", "risk", "confidence"})
 
+# What desktops and JupyterLab leave in a folder that one has only looked into.
+LITTER = frozenset({".DS_Store", "Thumbs.db", "desktop.ini", ".ipynb_checkpoints"})
+
 # Digits of a digest in a sentence.
 SHOWN = 12
 
@@ -255,7 +258,7 @@ def check_files(place: Path, name: str | None = None) -> tuple[dict[str, Any], l
         known = {*files, MANIFEST}
         for path in sorted(each for each in place.rglob("*")):
             file = path.relative_to(place).as_posix()
-            if file not in known:
+            if file not in known and not LITTER.intersection(path.relative_to(place).parts):
                 sentence = f"file {file} is not part of the frozen table; move it elsewhere."
                 findings.append(Finding("added", file, sentence))
     return manifest, findings

@@ -1,5 +1,6 @@
 """The index of frozen tables in results/README.md, made from the manifests of their folders."""
 
+import itertools
 from pathlib import Path
 from typing import Any
 
@@ -7,7 +8,7 @@ from labkit.errors import StoreError
 from labkit.records.frozen import SHOWN, Finding, check_files, frozen_names
 from labkit.records.store import unwritable
 
-_HEADER = "| frozen table | title | rows | runs | frozen | commit | manifest |"
+_HEADER = "| frozen table | title | rows | runs | frozen | at commit | manifest |"
 _RULE = "| --- | --- | ---: | ---: | --- | --- | --- |"
 
 
@@ -52,7 +53,7 @@ def index_line(folder: Path, manifest: dict[str, Any]) -> str:
 
 
 def write_index(folder: Path) -> Path:
-    """Write the index anew below what else stands in its file; return the file.
+    """Write the index anew, leaving what stands above and below it in its file; return the file.
 
     Raises
     ------
@@ -62,8 +63,10 @@ def write_index(folder: Path) -> Path:
     path, table = index_of(folder), index_text(folder)
     try:
         present = path.read_text(encoding="utf-8") if path.is_file() else ""
-        above = present.partition(_HEADER)[0].rstrip()
-        parts = [part for part in (above, table.rstrip()) if part]
+        above, header, rest = present.partition(_HEADER)
+        lines = rest.splitlines() if header else []
+        below = "\n".join(itertools.dropwhile(lambda line: not line or line.startswith("|"), lines))
+        parts = [part for part in (above.rstrip(), table.rstrip(), below.rstrip()) if part]
         path.write_text("\n\n".join(parts) + "\n", encoding="utf-8", newline="\n")
     except OSError as error:
         raise unwritable("index", path, error) from None

@@ -40,7 +40,7 @@ COMPUTING = (
 # that differ only in them meet the same arrivals, and more replicates keep those already there.
 NOT_ARRIVALS = EXECUTION_ONLY | {
     *("policies", "policy", "report_every", "checkpoints", "entropy"),
-    *("replicates", "precision", "most_replicates"),
+    *("replicates", "precision", "most_replicates", "precision_of"),
 }
 
 
@@ -118,17 +118,19 @@ def _digest(value: Any) -> str:
 
 def content_digest(path: Path) -> str:
     """Return the SHA-256 of a file, or of the .csv and .parquet files in a folder with their names."""
-    files = [path]
-    if path.is_dir():
-        files = sorted(
-            file for file in path.iterdir() if file.suffix in (".csv", ".parquet") and file.is_file()
-        )
     total = hashlib.sha256()
-    for file in files:
+    for file in content_files(path):
         state = file.stat()
         name = file.name if path.is_dir() else ""
         total.update(f"{name}\0{_file_digest(file, state.st_size, state.st_mtime_ns)}\0".encode())
     return total.hexdigest()
+
+
+def content_files(path: Path) -> list[Path]:
+    """Return a file itself, or the .csv and .parquet files in a folder: what `content_digest` reads."""
+    if not path.is_dir():
+        return [path]
+    return sorted(file for file in path.iterdir() if file.suffix in (".csv", ".parquet") and file.is_file())
 
 
 @cache

@@ -16,7 +16,7 @@ from labkit.policies.mixed import Mixed
 from labkit.policies.naming import parse_policy
 from labkit.policies.one_choice import OneChoice
 from labkit.policies.static_split import StaticSplit
-from labkit.randomness import seed_sequence
+from labkit.randomness import check_replicates, seed_sequence
 from labkit.stationary.existence import check_stationary
 from labkit.survey.connectivity import algebraic_connectivity
 from labkit.survey.demand import total_demand
@@ -58,9 +58,9 @@ def long_run(
     first_replicate : int
         Number of the first replicate: calls for parts of a range give the same rows as one call for all.
     rounds : int, optional
-        Length of a run, in tasks a server. Default: see `settling_rounds`.
+        Length of a run, in tasks a server. Default: see `settling_rounds`, or the horizon.
     horizon : int
-        Length in tasks a server where there is no stationary state; a default of `rounds` is never less.
+        Length in tasks a server where there is no stationary state; the default of `rounds` is never less.
     workers : int
         Threads.
 
@@ -84,18 +84,17 @@ def long_run(
     """
     check_fleet(fleet)
     rule = parse_policy(policy)
-    replicates = check_whole("replicates", replicates)
-    first = check_whole("first_replicate", first_replicate, least=0)
+    first, replicates = check_replicates(first_replicate, replicates)
     horizon = check_whole("horizon", horizon)
     workers = check_whole("workers", workers)
     seed = seed_sequence(rng)
     if rounds is not None:
         rounds = check_whole("rounds", rounds)
     if not settles(fleet, rule):
-        length = horizon * fleet.size
-        outcome = _place(fleet, rule, length, seed, replicates, first, workers)
+        horizon = horizon if rounds is None else rounds
+        outcome = _place(fleet, rule, horizon * fleet.size, seed, replicates, first, workers)
         return _labelled(outcome, f"after {horizon} tasks a server")
-    rounds = settling_rounds(fleet, least=horizon) if rounds is None else rounds
+    rounds = settling_rounds(fleet, rule, least=horizon) if rounds is None else rounds
     length = rounds * fleet.size
     # Replicate 2p starts empty, replicate 2p + 1 from double; each run has a key of its own.
     empty, before, after = (
@@ -138,17 +137,20 @@ def refusals(fleet: Fleet, rules: Iterable[Policy]) -> dict[str, str]:
     return found
 
 
-def settling_rounds(fleet: Fleet, *, least: int = 1) -> int:
+def settling_rounds(fleet: Fleet, rule: Policy, *, least: int = 1) -> int:
     """Return how many tasks a server settle the loads of a fleet under a rule that compares loads.
 
     Four relaxation times of the slowest wave of least-loaded, by its response linearised: the rate a round
     is slope/2 · n · λ / D with n servers, a total demand D and algebraic connectivity λ. Sixteen where
-    servers are offered unequal demands.
+    servers are offered unequal demands. Under mixed(beta) waves are larger and so the response weaker: times
+    1 / beta².
 
     Parameters
     ----------
     fleet : Fleet
         With a stationary state, and equal or nearly equal capacities.
+    rule : Policy
+        A rule that steers more than least-loaded does needs less.
     least : int
 
     Returns
@@ -171,7 +173,8 @@ def settling_rounds(fleet: Fleet, *, least: int = 1) -> int:
     if fleet.capacity is not None:
         relaxation *= float(np.mean(fleet.capacity))
     times = _RELAXATIONS if _offered_alike(fleet) else _WITH_PROFILE
-    needed = max(float(least), times * relaxation)
+    share = float(rule.beta) if isinstance(rule, Mixed) else 1.0
+    needed = max(float(least), times * relaxation / share**2)
     unit = 10 ** max(0, math.floor(math.log10(needed)) - 1)
     return math.ceil(needed / unit) * unit
 

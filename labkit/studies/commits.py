@@ -91,6 +91,16 @@ class Commits:
             self._places[commit] = Place(root, self._python(root, short), commit)
         return self._places[commit]
 
+    def has_other_lock(self, commit: str) -> bool:
+        """Tell whether a commit's environment is made from something else than the running one was."""
+        made_from = Path(sys.prefix, "made-from")
+        try:
+            inside = self._check_known(commit)
+            then = b"".join(git(self._root, "show", f"{commit}:{inside}{name}").stdout for name in RECIPE)
+            return made_from.is_file() and made_from.read_bytes().partition(b"\n")[2] != then
+        except (CommitMissing, OSError, subprocess.SubprocessError):
+            return False
+
     def _check_known(self, commit: str) -> str:
         """Return the project's folder inside its repository; refuse a commit that is not there."""
         short = commit[:10]

@@ -9,7 +9,7 @@ from collections.abc import Iterable
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from labkit.checks import check_fraction, check_number, check_positive, check_whole, nearest
+from labkit.checks import check_fraction, check_number, check_whole, nearest
 from labkit.errors import InputError
 from labkit.records.declared import Notebook
 from labkit.records.project import from_root
@@ -46,7 +46,9 @@ def check_values(notebook: Notebook, values: dict[str, Any]) -> None:
             raise InputError(f"max_headroom is {allowed!r}; give a number of at least 0.")
     if notebook.name == GROWTH:
         if "ahead" in values:
-            check_positive("ahead", values["ahead"])
+            from labkit.analysis.growth_by_family import check_ahead
+
+            check_ahead(values["ahead"])
         if "confidence" in values:
             check_fraction("confidence", values["confidence"])
 

@@ -18,7 +18,8 @@ from labkit.records.frozen import (
     write_frozen,
 )
 from labkit.records.frozen_index import index_of, index_text, write_index
-from labkit.records.project import ANSWERS, FROZEN, ROOT, path_text
+from labkit.records.identity import content_files
+from labkit.records.project import ANSWERS, FROZEN, ROOT, from_root, path_text
 from labkit.records.provenance import git, source_state, versions
 from labkit.records.store import Store, check_writable, decode
 from labkit.studies.answering import MADE_FROM, write_answer
@@ -87,9 +88,11 @@ def freeze(
     state = source_state(root)
     changes = _changes(find_study(study), asked, origins, state, root)
     if changes and not allow_changes:
+        recorded = any(each["dirty"] for each in origins)
         raise InputError(
-            f"table {name} cannot be frozen: {'; '.join(changes)}. Commit all changes and run the study "
-            "again, or give --allow-changes: the table then says so itself."
+            f"table {name} cannot be frozen: {'; '.join(changes)}. Commit all changes"
+            f"{' and run the study again' if recorded else ''}, or give --allow-changes: the table then says "
+            "so itself."
         )
     runs, parameters = evidence(tables, origins)
     content = encode(runs)
@@ -103,9 +106,7 @@ def freeze(
         "frozen": datetime.now(UTC).isoformat(timespec="seconds"),
         "git_hash": state["git_hash"],
         "dirty": bool(changes),
-        "note": f"Not all of this table can be made again from a commit: {'; '.join(changes)}."
-        if changes
-        else "",
+        "note": f"No commit holds all that this table rests on: {'; '.join(changes)}." if changes else "",
         "query": query,
         "runs": origins,
         "rows": len(table),
@@ -170,9 +171,11 @@ def _records(study: Study, asked: str, store: Store) -> "list[pa.Table]":
     found = {point.run_id: store.find(study.name, point.run_id) for point in study.points}
     missing = [run for run, path in found.items() if path is None]
     if missing:
+        others = sum(path.name[:16] not in found for path in store.files(study.name))
+        known = f" (it holds {others} runs of other code or other values)" if others else ""
         raise InputError(
-            f"study {study.name}: {len(missing)} of {len(found)} runs are not recorded in {store.folder}, "
-            f"the first being {missing[0]}; run labkit run {asked}."
+            f"study {study.name}: {len(missing)} of {len(found)} runs are not recorded in {store.folder}"
+            f"{known}, the first being {missing[0]}; run labkit run {asked}."
         )
     return [store.read(path) for path in found.values() if path is not None]
 
@@ -193,6 +196,14 @@ def _changes(
         f"the {what} {path_text(path)} is not committed"
         for what, path in files.items()
         if not _git_says(root, "ls-files", "--error-unmatch", "--", str(path.resolve()))
+    ]
+    read = {(name, str(each["parameters"][name])) for each in origins for name in each["inputs"]}
+    found += [
+        f"{name} {text} is not committed"
+        for name, text in sorted(read)
+        if not _git_says(
+            root, "ls-files", "--error-unmatch", "--", *map(str, content_files(from_root(text, root)))
+        )
     ]
     runs = len(origins)
     dirty = [each["run_id"] for each in origins if each["dirty"] and each["git_hash"]]

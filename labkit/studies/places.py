@@ -2,7 +2,7 @@
 
 import json
 import tempfile
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -49,9 +49,9 @@ class Places(Commits):
     def measured_again(self, origin: Mapping[str, Any]) -> tuple["pa.Table", list[str]]:
         """Execute a recorded run again, and return what it measured and what should be known about it.
 
-        It is executed here when today's code gives the run the id that it has in the record; otherwise at the
-        recorded commit, in a work tree of its own. A run recorded with changes that are in no commit is
-        executed here, with a note.
+        It is executed here when today's code gives the run the id that it has in the record, with the same
+        packages or the same lock; otherwise at the recorded commit, in a work tree of its own. A run recorded
+        with changes that are in no commit is executed here, with a note.
 
         Parameters
         ----------
@@ -98,9 +98,13 @@ class Places(Commits):
 
     def _choose(self, origin: Mapping[str, Any]) -> tuple[Place, list[str]]:
         today = _identity_here(origin)
+        committed = bool(origin["git_hash"]) and not origin["dirty"]
         if today is not None and today.run_id == origin["run_id"]:
+            packages = _changes(origin["versions"], versions(), PACKAGES)
+            if packages and committed and self.has_other_lock(origin["git_hash"]):
+                return self.of(origin["git_hash"]), []
             return HERE, []
-        if origin["git_hash"] and not origin["dirty"]:
+        if committed:
             return self.of(origin["git_hash"]), []
         if not origin["git_hash"]:
             return HERE, ["the record names no commit; executed with today's code"]
@@ -175,10 +179,13 @@ def _input_files(origin: Mapping[str, Any], place: Place) -> dict[str, str]:
     return paths
 
 
-def _changes(then: Mapping[str, str], now: Mapping[str, str]) -> list[str]:
-    names = [name for name in ("labkit", "python", *PACKAGES) if name in then and name in now]
+def _changes(
+    then: Mapping[str, str],
+    now: Mapping[str, str],
+    names: Iterable[str] = ("labkit", "python", *PACKAGES),
+) -> list[str]:
     return [
         f"{name} was {then[name] or 'missing'} and is {now[name] or 'missing'}"
         for name in names
-        if then[name] != now[name]
+        if name in then and name in now and then[name] != now[name]
     ]

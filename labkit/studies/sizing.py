@@ -23,9 +23,11 @@ FIRST_LOOK = 30
 
 @dataclass(frozen=True)
 class Sizing:
-    """What was found about a study: its size, the lines for its file, and the labels of its groups."""
+    """What was found: the measure, the study's size, lines for its file and their precision, group labels."""
 
+    measure: str
     size: StudySize
+    precision: float
     lines: list[str]
     labels: list[str]
 
@@ -36,7 +38,7 @@ def size_of(
     precision: Any = None,
     minutes: Any = 10.0,
     pilot: Any = 20,
-    measure: str = "gap",
+    measure: str | None = None,
     jobs: int | None = None,
     x: str | None = None,
     say: Callable[[str], None] = lambda sentence: None,
@@ -53,7 +55,8 @@ def size_of(
         That running the study may take.
     pilot : int
         Replicates of each point's first run.
-    measure : str
+    measure : str, optional
+        Default: what the notebook's parameter precision_of says, or the gap.
     jobs : int, optional
         Kernels at the same time; default one a core, as `labkit run` does.
     x : str, optional
@@ -70,6 +73,7 @@ def size_of(
     precision = study.parameters.get("precision", PRECISION) if precision is None else precision
     precision = check_fraction("precision", precision)
     seconds = 60 * check_positive("minutes", minutes)
+    measure = _measure(study) if measure is None else measure
     jobs = cores() if jobs is None else check_whole("jobs", jobs)
     x = _size_parameter(study, x)
     check_notebook(study)
@@ -81,13 +85,24 @@ def size_of(
     )  # fmt: skip
     least = _first_look(study)
     size = size_study(table, precision=precision, seconds=seconds, jobs=jobs, least=least, x=x)
-    lines = study_lines(size, least, stops="precision" in study.notebook.parameters)
+    # What does not fit is no advice: the lines are then for the precision that does.
+    within = size
+    if not size.fits and size.precision_in_time is not None:
+        reachable = size.precision_in_time
+        within = size_study(table, precision=reachable, seconds=seconds, jobs=jobs, least=least, x=x)
+    lines = study_lines(within, least, stops="precision" in study.notebook.parameters)
     labels = [name for name in ("policy", "information", "moment") if _differs(table, name)]
-    return Sizing(size, lines, labels)
+    return Sizing(measure, size, within.precision, lines, labels)
 
 
 def _differs(table: Any, name: str) -> bool:
     return name in table.columns and (name == "policy" or table[name].nunique() > 1)
+
+
+def _measure(study: Study) -> str:
+    """Return the measure by whose precision the study's notebook stops."""
+    declared = study.notebook.parameters.get("precision_of")
+    return str(study.parameters.get("precision_of", declared.default if declared else "gap"))
 
 
 def _size_parameter(study: Study, x: str | None) -> str | None:

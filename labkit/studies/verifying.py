@@ -94,6 +94,8 @@ def verify(
     result = Verification(name, len(manifest.get("files", ())) + bool(manifest), findings)
     if not manifest:
         return result
+    if manifest["note"]:
+        result.notes.append(manifest["note"].rstrip("."))
     findings += check_index(folder, name, manifest)
     wrong = {each.file for each in findings if each.kind in ("missing", "changed", "manifest")}
     if not wrong & {RUNS, TABLE, MANIFEST}:
@@ -214,8 +216,9 @@ def _measured_rows(runs: "pa.Table", run: str, names: list[str], parameters: lis
     import pyarrow.compute as pc
 
     rows = runs.filter(pc.equal(runs["run_id"], run)).drop_columns(["run_id", *parameters])
-    kept = [name for name in rows.column_names if name in names or rows[name].null_count < rows.num_rows]
-    return rows.select(kept)
+    present = [name for name in names if name in rows.column_names]
+    others = [name for name in rows.column_names if name not in names]
+    return rows.select([*present, *(name for name in others if rows[name].null_count < rows.num_rows)])
 
 
 def _check_rows(

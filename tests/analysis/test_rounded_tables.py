@@ -58,7 +58,9 @@ def test_latex_is_a_plain_tabular(table):
     lines = latex_text(table, ["gap"], "A note: 50 %.").splitlines()
     assert lines[0] == r"\begin{tabular}{lrrrrrrr}"
     assert lines[-1] == r"\end{tabular}"
-    assert lines[4].startswith(r"=a\textbar{}b\_c\&50\%\$x\textasciicircum{}\{2\}\textasciitilde{}")
+    assert lines[4].startswith(
+        r"=a\textbar{}b\_c\&50\%\$x\textasciicircum{}\textbraceleft{}2\textbraceright{}\textasciitilde{}"
+    )
     assert r"$0.123 \pm 0.012$ & $0.312$ & $0.300$ & $0.325$ \\" in lines[4]
     assert r"$1 \times 10^{-5}$" in lines[5]
     assert "A note: 50 \\%." in lines[-2]

@@ -287,10 +287,7 @@ def test_changes_are_refused_or_told_in_the_table_itself(copy, place):
         assert snapshot(copy.root / "results") == before
         status, out, err = copy("freeze", "s", "--name", "second", "--allow-changes", "--measures", "gap")
         assert status == 0, err
-        note = (
-            "Not all of this table can be made again from a commit: the work tree differs from commit "
-            f"{commit}."
-        )
+        note = f"No commit holds all that this table rests on: the work tree differs from commit {commit}."
         other = place.with_name("second")
         for name in (MANIFEST, "statement.txt", "table.md", "table.tex"):
             assert note in (other / name).read_text()

@@ -42,7 +42,7 @@ def by_study(tmp_path_factory):
 
 def test_the_record_is_that_of_the_study(by_study):
     origin, measures = the_record(by_study / "runs")
-    stopping = {"precision": None, "most_replicates": 10000}
+    stopping = {"precision": None, "most_replicates": 10000, "precision_of": "gap"}
     assert origin["parameters"] == {**VALUES, **stopping, "fleet": "experiments/demo"}
     assert "stopping" not in measures.column_names
     assert measures.num_rows == len(POLICIES) * VALUES["replicates"] * VALUES["checkpoints"]

@@ -89,3 +89,22 @@ def test_what_is_no_notebook_is_refused_by_name(tmp_path):
     (tmp_path / "n.ipynb").write_text("{")
     with pytest.raises(lk.InputError, match=r"notebook .*n\.ipynb cannot be read as a notebook"):
         read_notebook(tmp_path / "n.ipynb")
+
+
+def test_modules_beside_a_notebook_are_part_of_its_digest(tmp_path):
+    """What it imports from its own folder can change its results; prose and other files there cannot."""
+    path = write_notebook(tmp_path / "n.ipynb", "%matplotlib inline\nimport helper\nfrom parts.one import f")
+    digests = [read_notebook(path).digest]
+    (tmp_path / "other.py").write_text("x = 1")
+    assert read_notebook(path).digest == digests[0]
+    (tmp_path / "parts").mkdir()
+    for name, text in (
+        ("helper.py", "import deeper"),
+        ("helper.py", "import deeper  # changed"),
+        ("deeper.py", "x = 1"),
+        ("deeper.py", "x = 2"),
+        ("parts/one.py", "def f(): pass"),
+    ):
+        (tmp_path / name).write_text(text)
+        digests.append(read_notebook(path).digest)
+    assert len(set(digests)) == len(digests)

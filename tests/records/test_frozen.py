@@ -114,6 +114,14 @@ def test_a_file_too_many_is_found_at_any_depth(folder):
     assert found == [("added", ".hidden"), ("added", "deep"), ("added", "deep/x")]
 
 
+@pytest.mark.parametrize("litter", [".DS_Store", "Thumbs.db", ".ipynb_checkpoints/table-checkpoint.md"])
+def test_what_desktops_leave_is_no_file_of_the_table(folder, litter):
+    place = folder / "first"
+    (place / litter).parent.mkdir(exist_ok=True)
+    (place / litter).write_text("x")
+    assert check_files(place, "first")[1] == []
+
+
 def test_a_manifest_of_another_name_or_schema_is_found(folder):
     (folder / "first").rename(folder / "second")
     _, (finding,) = check_files(folder / "second", "second")
@@ -213,6 +221,9 @@ class TestIndex:
         assert second.startswith(first)
         assert "| aaaaaaaaaa with changes |" in second
         assert second.endswith(index_text(folder))
+        path.write_text(second + "\nBelow | all.\n")
+        write_index(folder)
+        assert path.read_text() == second + "\nBelow | all.\n"
 
     def test_a_line_that_is_missing_or_other_is_found(self, folder):
         path, manifest = index_of(folder), check_files(folder / "first")[0]

@@ -6,10 +6,13 @@ import pandas as pd
 import pytest
 
 import labkit as lk
+from labkit.analysis.long_run_table import long_run_table
 from labkit.fleet.digest import fleet_digest
 from labkit.fleet.named import FAMILIES
 from labkit.policies.naming import parse_policy
 from labkit.stationary.long_run import doubled, refusals, settles, settling_rounds
+
+LEAST = parse_policy("least-loaded")
 
 
 @pytest.mark.parametrize("cut", [1, 2, 3, 6])
@@ -86,14 +89,40 @@ def test_an_unbalanced_fleet_is_measured_at_the_horizon():
 
 def test_rounds_follow_the_slowest_wave():
     """A ring of twice the size takes four times as long; a ladder's open ends take four times more."""
-    ring = [settling_rounds(lk.ring(n)) for n in (100, 200, 400)]
+    ring = [settling_rounds(lk.ring(n), LEAST) for n in (100, 200, 400)]
     assert ring[1] / ring[0] == pytest.approx(4, rel=0.06)
     assert ring[2] / ring[1] == pytest.approx(4, rel=0.06)
     closed = lk.fleet_from_graph(nx.circular_ladder_graph(100))
     # The slowest wave of an open ladder is twice as long as that of a closed one.
-    assert settling_rounds(lk.ladder(100)) / settling_rounds(closed) == pytest.approx(16, rel=0.06)
-    assert settling_rounds(lk.complete(64), least=200) == 200
-    assert settling_rounds(lk.ring(3)) >= 1
+    assert settling_rounds(lk.ladder(100), LEAST) / settling_rounds(closed, LEAST) == pytest.approx(
+        16, rel=0.06
+    )
+    assert settling_rounds(lk.complete(64), LEAST, least=200) == 200
+    assert settling_rounds(lk.ring(3), LEAST) >= 1
+
+
+def test_weaker_rules_take_longer():
+    """Differences are 1/beta as large and count beta as much: the rate falls with beta squared."""
+    half, least = (settling_rounds(lk.ring(200), rule) for rule in (parse_policy("mixed(beta=0.5)"), LEAST))
+    assert half / least == pytest.approx(4, rel=0.06)
+
+
+@pytest.mark.parametrize("beta", [0.2, 0.5])
+def test_a_mixed_rule_is_reached_from_both_sides(beta):
+    """Four standard errors, and the gap that a run five times as long ends with."""
+    rule = f"mixed(beta={beta})"
+    table = lk.long_run(lk.ring(16), rule, replicates=400, rng=2, workers=2)
+    row = long_run_table(table.assign(family="ring", servers=16), "gap").iloc[0]
+    assert abs(row["apart"]) < 4
+    rounds = 5 * int(table["tasks"].iloc[0] // 16)
+    longer = lk.long_run(lk.ring(16), rule, replicates=400, rng=3, rounds=rounds, workers=2)["gap"]
+    assert abs(row["mean"] - longer.mean()) < 4 * np.hypot(row["error"], longer.std() / 20)
+
+
+def test_the_length_given_counts_at_a_horizon_too():
+    table = lk.long_run(lk.ring(8), "one-choice", replicates=2, rng=1, rounds=50)
+    assert table["tasks"].tolist() == [400, 400]
+    assert table["moment"].unique().tolist() == ["after 50 tasks a server"]
 
 
 def test_doubling_keeps_the_shape_and_no_load_is_below_zero():
@@ -115,6 +144,8 @@ def test_refusals_name_the_rule():
     [
         ({"replicates": 0}, "replicates is 0"),
         ({"first_replicate": -1}, "first_replicate is -1"),
+        ({"first_replicate": 2**34}, "give smaller numbers"),
+        ({"replicates": 10**10}, "give smaller numbers"),
         ({"rounds": 0}, "rounds is 0"),
         ({"horizon": 1.5}, "horizon is 1.5"),
         ({"workers": 0}, "workers is 0"),
@@ -149,9 +180,9 @@ class TestFamilies:
             ("ladder", 7, "a ladder has an even number: give 8"),
             ("torus", 50, "a square number of at least 9: give 49"),
             ("torus", 4, "give 9"),
-            ("ring", 2, "at least 3"),
+            ("ring", 2, "servers is 2; give a whole number of at least 3"),
             ("ring", "8", "servers is '8'"),
-            ("random-regular", 4, "degree"),
+            ("random-regular", 4, "servers is 4; give a whole number of at least 5"),
         ],
     )
     def test_a_size_that_does_not_fit_is_refused(self, family, servers, sentence):

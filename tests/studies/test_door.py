@@ -127,7 +127,7 @@ def test_tasks_fill_the_fleet_unless_capacities_are_no_amounts_of_work():
         ('policies = [["pairwise-averaging"]]', "", "policies names 'pairwise-averaging' twice"),
         ("horizon = [0]", "", "horizon is 0; give"),
         ("servers = [100000000]", "", "with 100,000,000 servers, 1 checkpoints"),
-        ("servers = [16]", "ahead = 0", "ahead is 0.0; give a number above 0"),
+        ("servers = [16]", "ahead = 0", "ahead is 0.0; give a number from 1 to 16"),
         ("servers = [16]", "confidence = 1.5", "confidence is 1.5; give"),
         (
             "servers = [16]",

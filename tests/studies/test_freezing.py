@@ -192,11 +192,33 @@ class TestChanges:
 
         path = project.study()
         state = {**source_state(ROOT), "dirty": False}
-        origin = {"run_id": "r", "git_hash": state["git_hash"], "dirty": False}
+        origin = {"run_id": "r", "git_hash": state["git_hash"], "dirty": False, "inputs": {}}
         found = freezing._changes(ROOT / "README.md", read_study(path), [origin], state, ROOT)
         assert found == [f"the notebook {project.notebook} is not committed"]
         found = freezing._changes(ROOT / "README.md", read_study(path), [{**origin, **change}], state, ROOT)
         assert found[1:] == [words]
+
+    def test_what_runs_read_must_be_committed_too(self, project, tmp_path):
+        from labkit.records.project import ROOT
+        from labkit.records.provenance import source_state
+        from labkit.studies.model import read_study
+
+        state = {**source_state(ROOT), "dirty": False}
+        origin = {"run_id": "r", "git_hash": state["git_hash"], "dirty": False}
+        own = tmp_path / "own fleet"
+        own.mkdir()
+        (own / "servers.csv").write_text("server")
+        found = [
+            freezing._changes(
+                ROOT / "README.md",
+                read_study(project.study()),
+                [{**origin, "inputs": {"fleet": "0"}, "parameters": {"fleet": fleet}}],
+                state,
+                ROOT,
+            )[1:]
+            for fleet in ("experiments/demo", own.as_posix())
+        ]
+        assert found == [[], [f"fleet {own.as_posix()} is not committed"]]
 
 
 FACTS = {
@@ -220,7 +242,7 @@ class TestCiting:
         )
         text = citation(FACTS, b"", tmp_path)
         assert text.startswith("@misc{labkit-t,\n  author = {Bold\\_e, Ann and {Us all}},\n")
-        assert "  title = {{A \\{title\\}: 50 \\%}},\n  year = {2026},\n" in text
+        assert "  title = {{A \\textbraceleft{}title\\textbraceright{}: 50 \\%}},\n  year = {2026},\n" in text
         assert "e3b0c44298fc1c149afbf4c8996fb92427ae41e4649b934ca495991b7852b855" in text
 
     @pytest.mark.parametrize("content", [None, "title: x\n", "authors: []\ntitle: x\n", "[", "- a\n"])

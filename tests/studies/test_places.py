@@ -1,10 +1,14 @@
 """A run is measured again where its code is; one work tree serves all runs of a commit."""
 
+from types import SimpleNamespace
+
 import pytest
 
 from labkit.errors import InputError
+from labkit.records.provenance import versions
 from labkit.records.schema import first_difference, measured_part, row_of_origin
 from labkit.records.store import Store
+from labkit.studies import places as places_module
 from labkit.studies.commits import Commits
 from labkit.studies.place import HERE
 from labkit.studies.places import ExecutionFailed, Places
@@ -103,6 +107,24 @@ class TestCommits:
             assert commits.of(head) is place
         assert len(said) == 2
         assert copy.left() == NOTHING_LEFT
+
+    def test_packages_of_another_lock_are_those_of_the_commit(self, copy, monkeypatch):
+        """Today's code gives the run its id, but the packages that the record names are gone."""
+        first = copy.git("rev-parse", "HEAD")
+        copy.write("requirements.lock", "second\n")
+        second = copy.commit()
+        places = Places(root=copy.root)
+        assert not places.has_other_lock(first)
+        assert places.has_other_lock(second)
+        assert not places.has_other_lock("0" * 40)
+        monkeypatch.setattr(places_module, "_identity_here", lambda origin: SimpleNamespace(run_id="r"))
+        monkeypatch.setattr(Places, "of", lambda self, commit: commit)
+        origin = {"run_id": "r", "git_hash": second, "dirty": False, "versions": versions()}
+        assert places._choose(origin) == (HERE, [])
+        origin["versions"] = {**origin["versions"], "numpy": "0.1"}
+        assert places._choose(origin) == (second, [])
+        assert places._choose({**origin, "git_hash": first}) == (HERE, [])
+        assert places._choose({**origin, "dirty": True}) == (HERE, [])
 
     def test_without_a_set_up_script_the_commit_is_refused(self, copy):
         (copy.root / ".ci" / "setup").unlink()
