@@ -12,7 +12,7 @@ from labkit.studies.execution import execute
 STUDY = """
 title = "Small growth"
 notebook = "long_run"
-replicates = 24
+replicates = 80
 entropy = 5
 
 [parameters]
@@ -88,14 +88,14 @@ def test_two_sizes_are_no_law(done, capsys):
 def test_more_precision_means_more_replicates_and_says_so(done, capsys):
     folder, _ = done
     text = STUDY.format(families='["complete"]', sizes="[9]").split("[answer]")[0]
-    text = text.replace("replicates = 24", "replicates = 24\nprecision = 0.05\nmost_replicates = 4000")
+    text = text.replace("replicates = 80", "replicates = 80\nprecision = 0.05\nmost_replicates = 4000")
     (folder / "precise.toml").write_text(text)
     assert run(folder, "precise", "--json") == 0
     (run_id,) = json.loads(capsys.readouterr().out)["recorded"]
     assert main(["show", run_id, "--json", "--store", str(folder / "runs")]) == 0
     shown = json.loads(capsys.readouterr().out)
     assert (shown["parameters"]["precision"], shown["parameters"]["most_replicates"]) == (0.05, 4000)
-    assert 24 < len(shown["measures"]) / 2 < 4000
+    assert 80 < len(shown["measures"]) / 2 < 4000
     for row in shown["measures"]:
         assert row["stopping"].startswith("mean excess within 5 % at 95 %: reached with ")
 

@@ -147,3 +147,20 @@ class TestRings:
         assert offset["weight"] > 0.99
         assert offset["exponent_upper"] - offset["exponent_lower"] < 4 * 0.01
         assert abs(offset["exponent"] - 0.5) < 0.05
+
+
+@pytest.mark.parametrize(
+    ("family", "servers", "gap", "error"),
+    [("ring", 400, 17.3, 0.2), ("torus", 256, 3.2415, 0.0023), ("complete", 64, 1.6787, 0.0013)],
+)
+def test_the_frozen_growth_table_agrees_with_another_simulation(family, servers, gap, error):
+    """Stationary gaps of a simulation made elsewhere, with its standard errors; four joint standard errors.
+
+    That one averages over all phases of the loads' period, the table is taken at whole mean loads, which
+    differ by less than one task in `servers`.
+    """
+    table = lk.read_frozen("growth").table
+    row = table[(table["family"] == family) & (table["servers"] == servers)].set_index("policy")
+    found, own = row.loc["least-loaded", ["excess", "excess_error"]]
+    assert abs(found - gap) < 4 * np.hypot(own, error) + 1 / servers
+    assert own < 0.025 * found
