@@ -39,7 +39,7 @@ def fleets(draw):
 
 @pytest.mark.parametrize("ahead", [False, True], ids=["as drawn", "drawn ahead"])
 @pytest.mark.parametrize("rule", RULES)
-@settings(max_examples=60)
+@settings(max_examples=40)
 @given(
     fleet=fleets(),
     entropy=st.integers(0, 2**40),

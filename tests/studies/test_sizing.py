@@ -8,7 +8,7 @@ from labkit.cli import main
 from tests.records.tiny import snapshot, write_notebook
 
 PARAMETERS = """
-servers: int = 1  # a replicate sleeps 0.2 ms for each
+servers: int = 1  # a replicate sleeps 0.1 ms for each
 policies: list = ["one-choice", "least-loaded"]
 spread: float = 0.1
 mode: str = "good"
@@ -30,7 +30,7 @@ if mode == "broken":
 if mode == "refused":
     raise lk.InputError("mode is 'refused'; give another.")
 assert precision is None
-time.sleep(2e-4 * replicates * servers)
+time.sleep(1e-4 * replicates * servers)
 draws = np.random.default_rng(run.seed).standard_normal(replicates)
 tables = [
     pd.DataFrame({{"policy": name, "replicate": range(replicates), "tasks": 5, "gap": 2 + share * draws}})
@@ -71,8 +71,9 @@ def test_sizes_that_take_too_long_are_extrapolated_and_left_out(asked):
     large, small, middle = found["points"]
     assert [point["piloted"] for point in (large, small, middle)] == [False, True, True]
     assert large["source"] == "extrapolated from servers = 1000"
-    assert middle["seconds_a_replicate"] == pytest.approx(0.2, rel=0.3)
-    assert large["seconds_a_replicate"] == pytest.approx(20, rel=0.8)
+    # Sleeping is never shorter than asked, and longer on a busy machine.
+    assert 0.08 < middle["seconds_a_replicate"] < 1
+    assert large["seconds_a_replicate"] > 2
     assert {point["policy"] for point in found["points"]} == {"least-loaded"}
     # a spread of 5 % to 1 % takes 97 replicates; pilots of ten or more tell it to a factor of two
     assert all(50 < point["replicates"] < 250 for point in found["points"])
