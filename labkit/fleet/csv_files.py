@@ -14,7 +14,7 @@ from labkit.errors import InputError
 from labkit.fleet.tables import Source
 
 _WHOLE = r"^(0|-?[1-9][0-9]*)$"
-_NUMBER = re.compile(
+NUMBER = re.compile(
     r"[+-]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][+-]?[0-9]+)?|[+-]?(inf|infinity|nan)", re.IGNORECASE
 )
 _SEPARATORS = {";": "semicolons", "\t": "tabs", "|": "bars"}
@@ -28,8 +28,8 @@ def read_csv(path: Path, numbers: tuple[str, ...]) -> tuple[dict[str, pa.Chunked
     InputError
         When the file is empty, not UTF-8, has rows of unequal length or something that is no number.
     """
-    source = Source(str(path), lambda row: f"{path} line {_line(path, row)}")
-    header = _header(path)
+    source = Source(str(path), lambda row: f"{path} line {line_of(path, row)}")
+    header = header_of(path)
     try:
         table = pacsv.read_csv(
             path,
@@ -43,7 +43,7 @@ def read_csv(path: Path, numbers: tuple[str, ...]) -> tuple[dict[str, pa.Chunked
             ),
         ).slice(1)
     except pa.ArrowInvalid as error:
-        raise InputError(_why_unreadable(path, len(header), str(error))) from None
+        raise InputError(why_unreadable(path, len(header), str(error))) from None
     columns = {}
     for place, label in enumerate(header):
         text = pc.utf8_trim_whitespace(table.column(place))
@@ -75,11 +75,14 @@ def whole_options(text: pa.ChunkedArray) -> pd.Series:
     )
 
 
-def _header(path: Path) -> list[str]:
+def header_of(path: Path) -> list[str]:
+    """Return the trimmed column names; refuse an empty file, other separators, missing or doubled names."""
     try:
-        header = [label.strip() for label in next((cells for _, cells in _records(path)), [])]
+        header = [label.strip() for label in next((cells for _, cells in records(path)), [])]
     except UnicodeDecodeError:
         raise InputError(f"{path} is not UTF-8 text; save it as CSV in UTF-8.") from None
+    except csv.Error:
+        raise InputError(f"{path} has no readable header; look for an unclosed quotation mark.") from None
     if not header:
         raise InputError(f"{path} is empty; give a header and at least one row.")
     for sign, word in _SEPARATORS.items():
@@ -98,16 +101,20 @@ def _numbers(text: pa.ChunkedArray, label: str, source: Source) -> pa.ChunkedArr
         return text.cast(pa.float64())
     except pa.ArrowInvalid:
         for row, value in enumerate(text.to_pylist()):
-            if not _NUMBER.fullmatch(value):
-                shown = repr(value) if value else "blank"
-                raise InputError(
-                    f"{source.at(row)}: {label} is {shown}, which is not a number; "
-                    "write digits with a decimal point and no thousands separators."
-                ) from None
+            if not NUMBER.fullmatch(value):
+                raise InputError(no_number(source.at(row), label, value)) from None
         raise InputError(f"{source.label}: column {label!r} is not made of numbers; correct it.") from None
 
 
-def _records(path: Path) -> Iterator[tuple[int, list[str]]]:
+def no_number(place: str, label: str, value: str) -> str:
+    """Return the refusal of a trimmed cell that holds no number."""
+    return (
+        f"{place}: {label} is {repr(value) if value else 'blank'}, which is not a number; "
+        "write digits with a decimal point and no thousands separators."
+    )
+
+
+def records(path: Path) -> Iterator[tuple[int, list[str]]]:
     """Yield the first line, counted from 1, and the cells of each row that is not empty."""
     with path.open(encoding="utf-8-sig", newline="") as lines:
         reader = csv.reader(lines)
@@ -118,17 +125,19 @@ def _records(path: Path) -> Iterator[tuple[int, list[str]]]:
             start = reader.line_num + 1
 
 
-def _line(path: Path, row: int) -> int:
-    for place, (line, _) in enumerate(_records(path)):
+def line_of(path: Path, row: int) -> int:
+    """Return the line, counted from 1, on which a row starts; rows are counted from 0 below the header."""
+    for place, (line, _) in enumerate(records(path)):
         if place == row + 1:
             return line
     return row + 2
 
 
-def _why_unreadable(path: Path, width: int, reason: str) -> str:
+def why_unreadable(path: Path, width: int, reason: str) -> str:
+    """Return the refusal of a file that Arrow cannot read: the first line whose shape is wrong."""
     line = 1
     try:
-        for line, cells in _records(path):
+        for line, cells in records(path):
             if len(cells) != width:
                 count = f"{len(cells)} cell{'s' * (len(cells) != 1)}"
                 return f"{path} line {line} has {count} and the header {width}; give the same number in each."

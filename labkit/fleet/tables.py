@@ -36,7 +36,15 @@ def check_columns(table: Any, source: Source, required: tuple[str, ...], optiona
     """Refuse a table that is no DataFrame, is empty, or whose columns are missing, doubled or unknown."""
     if not isinstance(table, pd.DataFrame):
         raise InputError(f"{source.label} is a {type(table).__name__}; give a pandas DataFrame.")
-    labels = list(table.columns)
+    check_labels(list(table.columns), source, required, optional)
+    if len(table) == 0:
+        raise InputError(f"{source.label} has no rows; give at least one.")
+
+
+def check_labels(
+    labels: list[Any], source: Source, required: tuple[str, ...], optional: tuple[str, ...], advice: str = ""
+) -> None:
+    """Refuse column names that are missing, doubled or unknown; `advice` ends the last refusal."""
     known = [*required, *optional]
     if "option_1" in known:
         known += [f"option_{place}" for place in range(3, 1 + option_count(labels))]
@@ -46,12 +54,10 @@ def check_columns(table: Any, source: Source, required: tuple[str, ...], optiona
     for label in labels:
         if label not in known:
             hint = _missing_option(label, labels, known) or nearest(label, known)
-            raise InputError(f"{source.label} has an unknown column {label!r}; {hint}.")
+            raise InputError(f"{source.label} has an unknown column {label!r}; {hint}{advice}.")
     for label in required:
         if label not in labels:
             raise InputError(f"{source.label} has no column {label!r}; its columns are {_listed(labels)}.")
-    if len(table) == 0:
-        raise InputError(f"{source.label} has no rows; give at least one.")
 
 
 def option_count(labels: list[Any]) -> int:
