@@ -1,4 +1,14 @@
-"""Plain text for a terminal."""
+"""Plain text: aligned columns for a terminal, and names with parameters."""
+
+import inspect
+import re
+from collections.abc import Mapping
+from typing import Any
+
+from labkit.checks import nearest
+from labkit.errors import InputError
+
+_FORM = re.compile(r"\s*([\w-]+)\s*(?:\((.*)\))?\s*")
 
 
 def align(rows: list[list[str]]) -> str:
@@ -7,3 +17,61 @@ def align(rows: list[list[str]]) -> str:
     return "\n".join(
         "  ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=True)).rstrip() for row in rows
     )
+
+
+def name_part(text: str) -> str | None:
+    """Return the part before the parameters, as `mixed` in ``"mixed(beta=0.5)"``; None when it is no name."""
+    form = _FORM.fullmatch(text)
+    return form.group(1) if form else None
+
+
+def from_name(argument: str, text: Any, kinds: Mapping[str, type], example: str, value: str = "0.5") -> Any:
+    """Return an object of one of the `kinds` from its name in words.
+
+    Parameters
+    ----------
+    argument : str
+        What a refusal calls the text, such as "policy".
+    text : str
+        A name and its parameters, such as ``"mixed(beta=0.5)"``; anything else is refused.
+    kinds : mapping of str to type
+        Classes by name; their parameters are numbers or words.
+    example : str
+        A name that a refusal shows.
+    value : str
+        What a refusal gives a missing parameter in its example.
+
+    Raises
+    ------
+    InputError
+        Unknown name, unknown or missing parameter, or a value that the class refuses.
+    """
+    form = _FORM.fullmatch(text) if isinstance(text, str) else None
+    if form is None:
+        raise InputError(f"{argument} is {text!r}; give a {argument} or its name, such as {example!r}.")
+    name, inside = form.groups()
+    if name not in kinds:
+        raise InputError(f"{argument} is {text!r}; {nearest(name, kinds)}.")
+    known = inspect.signature(kinds[name]).parameters
+    values: dict[str, Any] = {}
+    for part in filter(None, (part.strip() for part in (inside or "").split(","))):
+        key, equals, given = (piece.strip() for piece in part.partition("="))
+        if key in values:
+            raise InputError(f"{argument} is {text!r}; give {key} once.")
+        if not equals or key not in known:
+            allowed = nearest(key, known) if known else "it takes no parameters"
+            raise InputError(f"{argument} is {text!r}, with {part!r}; {allowed}.")
+        values[key] = _number_or_word(given)
+    needed = [key for key, about in known.items() if about.default is about.empty]
+    if not set(needed) <= values.keys():
+        missing = " and ".join(key for key in needed if key not in values)
+        shown = ", ".join(f"{key}={value}" for key in needed)
+        raise InputError(f"{argument} is {text!r}; it needs {missing}, as in '{name}({shown})'.")
+    return kinds[name](**values)
+
+
+def _number_or_word(text: str) -> float | str:
+    try:
+        return int(text) if re.fullmatch(r"[+-]?[0-9]+", text) else float(text)
+    except ValueError:
+        return text
