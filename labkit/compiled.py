@@ -30,6 +30,8 @@ compiled = numba.njit(**OPTIONS)
 # Inlined before compiling proper: inside a hot loop even an uncalled-for reference count would cost more than
 # the rest of the loop. Such helpers have no array in only one branch, for the same reason.
 inlined = numba.njit(inline="always", **OPTIONS)
+# Inlined by LLVM instead, which compiles faster; for pieces with many arguments that hot loops call.
+folded = numba.njit(forceinline=True, **OPTIONS)
 
 
 @lru_cache(maxsize=1)
@@ -89,7 +91,19 @@ if CONFIG.DISABLE_JIT:
     def borrowed(array):  # noqa: D103
         return array
 
+    def bits_of(number):  # noqa: D103
+        return np.float64(number).view(np.int64)
+
 else:
+
+    @intrinsic
+    def bits_of(typingctx, number):
+        """Return the 64 bits of a float as a whole number: exponent first, so that order is kept above 0."""
+
+        def generate(context, builder, signature, arguments):
+            return builder.bitcast(arguments[0], ir.IntType(64))
+
+        return numba.int64(numba.float64), generate
 
     @intrinsic
     def multiply_wide(typingctx, a, b):

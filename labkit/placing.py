@@ -93,7 +93,7 @@ def place(
     workers = check_whole("workers", workers)
     seed = seed_sequence(rng)
     moments = _checked_checkpoints(checkpoints, tasks)
-    information = checked_information(information)
+    information = checked_information(information, in_tasks=True)
     work = sizes_of(sizes, tasks, replicates)
     whole = work is None and not rule.moves_work
     if isinstance(start, str):

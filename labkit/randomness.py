@@ -13,6 +13,7 @@ from labkit.checks import check_whole
 from labkit.errors import InputError
 
 ARRIVALS, COINS, SIZES, TURNS, STARTS = 0, 1, 2, 3, 4
+TIMES, REQUIREMENTS, FAILURES, MOVES = 5, 6, 7, 8
 # A larger number would take two words of a spawn key and could meet a key of another depth.
 MOST_REPLICATES = 2**32
 BIT_GENERATOR = "SFC64"

@@ -150,7 +150,20 @@ def draw_from_table(options, threshold, alias, state, loads, picked, coins, rows
 def draw_from_all(servers, distinct, state, loads, picked, coins, count):
     """Draw `count` arrivals whose options are any servers, one raw word an option (see `draw_from_table`)."""
     a, b, c, counter = state[0], state[1], state[2], state[3]
-    for index in range(count):
+    pairs = distinct and picked.shape[1] == 2
+    for index in range(count if pairs else 0):
+        here = np.uint64(index)
+        word, a, b, c, counter = advance(a, b, c, counter)
+        one = multiply_wide(word, servers)[0]
+        word, a, b, c, counter = advance(a, b, c, counter)
+        other, coin = multiply_wide(word, servers - np.uint64(1))
+        other += np.uint64(other >= one)
+        picked[here, np.uint64(0)] = np.uint32(one)
+        picked[here, np.uint64(1)] = np.uint32(other)
+        coins[here] = coin
+        prefetch(loads, one)
+        prefetch(loads, other)
+    for index in range(0 if pairs else count):
         here = np.uint64(index)
         for position in range(picked.shape[1]):
             word, a, b, c, counter = advance(a, b, c, counter)
@@ -168,8 +181,6 @@ def draw_from_all(servers, distinct, state, loads, picked, coins, count):
 @compiled
 def skip_taken(picked, row, position, rank):
     """Return the server with the given rank among those not yet picked in this row (few, so quadratic)."""
-    if position == 1:
-        return rank + np.uint64(rank >= np.uint64(picked[row, np.uint64(0)]))
     floor = np.int64(-1)
     for _ in range(position):
         smallest = np.int64(9223372036854775807)

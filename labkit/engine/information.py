@@ -1,6 +1,8 @@
 """What a policy can see of the loads when a task arrives."""
 
-from labkit.checks import check_whole
+import numpy as np
+
+from labkit.checks import check_positive, check_whole
 from labkit.errors import InputError
 
 # Each keeps a picture of all loads of its own.
@@ -12,13 +14,14 @@ class Information:
 
     Attributes
     ----------
-    every : int
-        Tasks from one report of the loads to the next; 0 for loads as they are.
+    every : int or float
+        From one report of the loads to the next, in tasks where work stays (`labkit.place`), in units of time
+        where it leaves (`labkit.serve`, `labkit.replay` of a trace with durations); 0 for loads as they are.
     dispatchers : int
         How many dispatchers place tasks, each of which knows its own placements at once; 0 where none does.
     """
 
-    every: int = 0
+    every: float = 0
     dispatchers: int = 0
 
     @property
@@ -47,13 +50,13 @@ class Snapshot(Information):
 
     Parameters
     ----------
-    every : int
-        A report is made before the first task and after every `every` tasks, at least 1. ``Snapshot(1)`` is
-        the same as ``Fresh()``.
+    every : int or float
+        Where work stays: a report is made before the first task and after every `every` tasks, a whole
+        number; ``Snapshot(1)`` is the same as ``Fresh()``. Where work leaves: the time between reports.
     """
 
-    def __init__(self, every: int) -> None:
-        self.every = check_whole("every", every)
+    def __init__(self, every: float) -> None:
+        self.every = _checked_every(every)
 
 
 class Dispatchers(Information):
@@ -66,22 +69,30 @@ class Dispatchers(Information):
     ----------
     count : int
         Number of dispatchers, from 1 to 4,096. With one alone it is as if loads were fresh.
-    every : int
-        A report of all loads is made before the first task and after every `every` tasks, at least 1.
+    every : int or float
+        From one report of all loads to the next, as in `Snapshot`.
     """
 
-    def __init__(self, count: int, every: int) -> None:
+    def __init__(self, count: int, every: float) -> None:
         self.dispatchers = check_whole("count", count)
         if self.dispatchers > MOST_DISPATCHERS:
             raise InputError(f"count is {count!r}; give at most {MOST_DISPATCHERS:,} dispatchers.")
-        self.every = check_whole("every", every)
+        self.every = _checked_every(every)
 
 
-def checked_information(information: Information | None) -> Information:
-    """Return the information model, fresh by default."""
+def _checked_every(every: float) -> float:
+    number = check_positive("every", every)
+    # Whole numbers stay whole, in names too.
+    return int(every) if isinstance(every, int | np.integer) else number
+
+
+def checked_information(information: Information | None, *, in_tasks: bool = False) -> Information:
+    """Return the information model, fresh by default; with `in_tasks` reports come after whole numbers."""
     if information is None:
         return Fresh()
     if isinstance(information, Information):
+        if in_tasks:
+            check_whole("every", information.every, least=0)
         return information
     raise InputError(
         f"information is {information!r}; give lk.Fresh(), lk.Snapshot(every=k) or "

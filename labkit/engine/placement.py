@@ -13,7 +13,7 @@ from labkit.compiled import CONFIG, compiled, inlined, specialise
 from labkit.engine.arrivals import Arrivals, arrivals_of, read_only
 from labkit.engine.information import Fresh, Information
 from labkit.engine.loop import place_drawn, place_near, place_shared, place_tasks
-from labkit.engine.measures import MEASURED
+from labkit.engine.measures import MEASURED, measure
 from labkit.engine.sizes import Sizes
 from labkit.engine.weights import comparison_weights
 from labkit.errors import InputError
@@ -173,6 +173,14 @@ def place_loads(
         with ThreadPoolExecutor(workers) as pool:
             list(pool.map(run, range(replicates)))
     return Outcome(fleet, rule.name, information.name, loads, checkpoints, measured, tasks, first_replicate)
+
+
+def measured_loads(fleet: Fleet, loads: np.ndarray) -> np.ndarray:
+    """Return what is measured of one replicate's loads, float64 of shape (len(MEASURED),)."""
+    out = np.empty(len(MEASURED))
+    demand = read_only(np.empty(0)) if fleet.demand is None else fleet.demand
+    measure(loads, fleet.capacity, arrivals_of(fleet).options, demand, _pairs_of(fleet), out)
+    return out
 
 
 def zero_loads(servers: int, replicates: int, whole: bool) -> np.ndarray:

@@ -53,6 +53,10 @@ class Policy:
     compares: float = 1.0
     # Whether it moves work already placed, so that loads are no longer whole numbers.
     moves_work: ClassVar[bool] = False
+    # Whether its tables go by the position of an option within its choice, and whether what it decides
+    # depends on the loads of servers beyond the options.
+    by_table: ClassVar[bool] = False
+    looks_far: bool = False
     cached: ClassVar[bool] = True
 
     @property

@@ -42,6 +42,7 @@ class OwnRule(Policy):
     """A policy made by `lk.policy` from a user's function; call it to try the function itself."""
 
     cached = False
+    looks_far = True
 
     def __init__(self, function: Callable) -> None:
         self.function = function

@@ -1,6 +1,6 @@
 """Static split: fixed shares from the fair split of the demand, and no look at the loads."""
 
-from typing import Any
+from typing import Any, ClassVar
 
 import numpy as np
 
@@ -35,6 +35,7 @@ class StaticSplit(Policy):
 
     choose = staticmethod(choose)
     knows, compares = "the demands; no loads", 0.0
+    by_table: ClassVar[bool] = True
 
     @property
     def name(self) -> str:

@@ -1,6 +1,6 @@
 """Tree flow: work is pushed between the halves of nested server sets, each task for one of the sets."""
 
-from typing import Any
+from typing import Any, ClassVar
 
 import numpy as np
 
@@ -67,6 +67,8 @@ class TreeFlow(Policy):
     """
 
     knows = "the loads of the options, and for each of its server sets which half is fuller"
+    by_table: ClassVar[bool] = True
+    looks_far = True
     renew = staticmethod(renew)
     after = staticmethod(after)
 

@@ -123,7 +123,7 @@ def stationary_gap(
     rounds = check_whole("rounds", rounds, least=100)
     chains = check_whole("chains", chains, least=2)
     workers = check_whole("workers", workers)
-    information = checked_information(information)
+    information = checked_information(information, in_tasks=True)
     seed = seed_sequence(rng)
     if isinstance(rule, OneChoice | StaticSplit) or (isinstance(rule, Mixed) and rule.beta == 0):
         checked_rule(fleet, rule)  # refuses

@@ -64,9 +64,11 @@ def test_bad_arguments_get_one_sentence(changed, sentence):
     assert "\n" not in str(refusal.value)
 
 
-def test_a_snapshot_needs_a_whole_period():
-    with pytest.raises(lk.InputError, match="every is 0; give a whole number of at least 1"):
+def test_a_snapshot_needs_a_period_and_a_whole_one_where_work_stays():
+    with pytest.raises(lk.InputError, match="every is 0; give a number above 0"):
         lk.Snapshot(every=0)
+    with pytest.raises(lk.InputError, match="every is 0.5; give a whole number"):
+        lk.place(RING, "least-loaded", tasks=10, rng=1, information=lk.Snapshot(every=0.5))
 
 
 def test_a_misspelt_argument_is_an_error():
@@ -86,7 +88,7 @@ def test_a_generator_is_advanced_and_an_int_is_not():
     ("count", "every", "refusal"),
     [
         (0, 5, "count is 0; give a whole number of at least 1"),
-        (2, 0, "every is 0; give a whole number of at least 1"),
+        (2, 0, "every is 0; give a number above 0"),
         (2.5, 5, "count is 2.5; give a whole number"),
         (5_000, 5, "count is 5000; give at most 4,096 dispatchers"),
     ],

@@ -1,0 +1,59 @@
+"""What `labkit.serve` and `labkit.replay` are given about limits, failures and times of day, checked."""
+
+import math
+from collections.abc import Sequence
+from typing import Any
+
+import numpy as np
+
+from labkit.checks import LARGEST_WHOLE, check_member, check_positive
+from labkit.engine.arrival_times import Rates
+from labkit.engine.sizes import as_numbers
+from labkit.errors import InputError
+from labkit.fleet.model import Fleet
+
+FULL = ("another", "lost")
+
+
+def checked_rates(mean: float, profile: Sequence[float] | None, period: float | None) -> Rates:
+    """Return arrival rates of this mean: constant, or following the profile of a period."""
+    if profile is None:
+        if period is not None:
+            raise InputError(f"period is {period!r} but there is no profile; give both or neither.")
+        return Rates(np.array([mean]), math.inf)
+    given = as_numbers(profile)
+    if given is None or given.ndim != 1 or not given.size or not np.all((given >= 0) & (given < math.inf)):
+        raise InputError(
+            f"profile is {profile!r}; give relative rates of at least 0, one a part of the period."
+        )
+    if not given.any():
+        raise InputError("profile holds only zeros; give at least one rate above 0.")
+    if period is None:
+        raise InputError("profile needs a period; give its length in units of time, such as period=24.0.")
+    relative = given.astype(np.float64)
+    return Rates(mean * relative / relative.mean(), check_positive("period", period) / relative.size)
+
+
+def checked_limits(limit: Any, fleet: Fleet) -> np.ndarray | None:
+    """Return the most tasks of each server, int64 of shape (servers,), or None."""
+    if limit is None:
+        return None
+    if isinstance(limit, str):
+        check_member("limit", limit, ("capacity",))
+        given = np.floor(np.ones(fleet.size) if fleet.capacity is None else fleet.capacity)
+    else:
+        found = as_numbers(limit)
+        if found is None or found.shape not in ((), (fleet.size,)):
+            raise InputError(
+                f"limit is {limit!r}; give a whole number, one for each of the {fleet.size} servers, or "
+                '"capacity".'
+            )
+        given = np.broadcast_to(found, fleet.size)
+    wrong = ~((given >= 1) & (given <= LARGEST_WHOLE) & (given == np.floor(given)))
+    if wrong.any():
+        where = fleet.names[int(np.flatnonzero(wrong)[0])]
+        raise InputError(
+            f"limit is {given[wrong][0]:g} for server {where!r}; give whole numbers of at least 1 (a "
+            "capacity below 1 holds no task)."
+        )
+    return given.astype(np.int64)
