@@ -225,7 +225,8 @@ def serve_tasks(
     if counts[RENEW] > 0:
         counts[RENEW] = 0
         renew(state, seen[0])
-    done = stop
+    done, failed = stop, 0
+    before = counts[SEEN] - begin
     for index in range(begin, stop):
         k = np.uint64(index)
         now = times[k]
@@ -253,14 +254,12 @@ def serve_tasks(
                 renew(state, seen[0])
             tally[REPORT] += every
         if renewal < 0:
-            if counts[SEEN] == 0 and every == 0.0:
+            if before + index == 0 and every == 0.0:
                 renew(state, seen[0])
-        elif renewal > 0 and counts[SEEN] % renewal == 0:
+        elif renewal > 0 and (before + index) % renewal == 0:
             if every == 0.0:
                 settle_all(server, place, pool, loads, tally, counts, hist, by_level, now, discipline)
             renew(state, seen[0])
-        counts[SEEN] += 1
-        counts[ARRIVED] += 1
         turn = multiply_wide(next_raw(turns), dispatchers)[0] if shared else np.uint64(0)
         picture = seen[turn]
         if guarded:
@@ -273,7 +272,8 @@ def serve_tasks(
                 limits, divert, keeps_waiting,
             )  # fmt: skip
             if target == -3:
-                return -(index + 1)
+                done, failed = index, index + 1
+                break
             if target < 0:
                 counts[BLOCKED] += target == -1
                 counts[LOST] += target == -2
@@ -283,7 +283,8 @@ def serve_tasks(
         else:
             position = choose(state, picture, weights, options, k, count, rows[k], coins[k], own)
             if position >= np.uint64(count):
-                return -(index + 1)
+                done, failed = index, index + 1
+                break
             v = np.uint64(options[k, position])
         if every > 0.0:
             while server[v, NEXT] <= now:
@@ -297,6 +298,10 @@ def serve_tasks(
         if far:
             note_next(calendar, v, server[v, NEXT])
         after(state, loads, weights, options, k, count, v, amounts[k], every == 0.0)
+    counts[SEEN] += done - begin
+    counts[ARRIVED] += done - begin
+    if failed:
+        return -failed
     if done == stop or times[np.uint64(done)] < until:
         return done
     # What happens at `until` must not show in a report of before.

@@ -57,6 +57,12 @@ def bottleneck_words(fleet: Fleet, most: int = 4) -> str:
     return shown + (f" and {len(names) - most} more" if len(names) > most else "")
 
 
+def highest_load_factor(fleet: Fleet, *, even_split: bool) -> float:
+    """Return the load factor that a rule cannot reach: one-choice's own, or that of every rule."""
+    limit = stability_limit(fleet)
+    return min(limit, even_split_limit(fleet)[0]) if even_split else limit
+
+
 def refuse_unstable(fleet: Fleet, load_factor: float, *, even_split: bool, availability: float = 1.0) -> None:
     """Refuse a load factor at which queues would grow without end.
 
