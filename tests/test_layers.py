@@ -26,6 +26,7 @@ FLOORS = [
     {"placing", "serving", "replaying"},
     {"plans"},
     {"analysis"},
+    {"provisioning"},
     {"records"},
     {"figures"},
     {"studies"},

@@ -5,7 +5,7 @@ from typing import Any, cast
 import numpy as np
 import pandas as pd
 
-from labkit.analysis.tables import describe, prepare
+from labkit.analysis.tables import describe, moments_of, prepare
 from labkit.checks import check_fraction, nearest
 from labkit.errors import InputError, TooFewReplicates
 from labkit.randomness import seed_sequence
@@ -28,7 +28,8 @@ def compare(
     ----------
     measures : pandas.DataFrame
         One row a policy, replicate and checkpoint, as in ``outcome.measures``; see `headroom` for the labels.
-        Policies are compared within equal tasks and equal labels.
+        Policies are compared within equal tasks (where work leaves equal load_factor and horizon) and equal
+        labels.
     baseline : str or Policy
         The policy that the others are compared with.
     of : str
@@ -79,58 +80,67 @@ def compare(
         )
     others = [name for name in labels if name != "policy"]
     groups = [group for _, group in table.groupby(others, observed=True)] if others else [table]
-    rows = [row for group in groups for row in _rows(group, others, baseline, of, confidence, seed)]
-    columns = [*labels, "tasks", "replicates", "baseline", "difference", "lower", "upper", "share_lower"]
+    moments = moments_of(table)
+    rows = [row for group in groups for row in _rows(group, others, moments, baseline, of, confidence, seed)]
+    columns = [*labels, *moments, "replicates", "baseline", "difference", "lower", "upper", "share_lower"]
     result = pd.DataFrame(rows, columns=[*columns, "confidence"])
-    return result.sort_values([*labels, "tasks"], ignore_index=True)
+    return result.sort_values([*labels, *moments], ignore_index=True)
 
 
 def _rows(
     group: pd.DataFrame,
     others: list[str],
+    moments: list[str],
     baseline: str,
     of: str,
     confidence: float,
     seed: np.random.SeedSequence,
 ) -> list[dict[str, Any]]:
     """Return the rows of one set of labels other than the policy."""
-    grid = group.pivot(index="replicate", columns=["policy", "tasks"], values=of)
+    grid = group.pivot(index="replicate", columns=["policy", *moments], values=of)
     if baseline not in grid.columns.get_level_values("policy"):
         raise InputError(
             f"baseline {baseline!r} has no rows for {describe(group.iloc[0], others)}; run it there too."
         )
-    columns = cast("list[tuple[str, int]]", grid.columns.tolist())
+    columns = cast("list[tuple[Any, ...]]", grid.columns.tolist())
     pairs = [pair for pair in columns if pair[0] != baseline]
     _check_paired(grid, pairs, baseline)
     differences = np.column_stack(
-        [grid[pair].to_numpy(np.float64) - grid[(baseline, pair[1])].to_numpy(np.float64) for pair in pairs]
+        [grid[pair].to_numpy(np.float64) - grid[(baseline, *pair[1:])].to_numpy(np.float64) for pair in pairs]
         or [np.empty((len(grid), 0))]
     )
     lower, upper = _bands(differences, confidence, seed)
     rows: list[dict[str, Any]] = []
-    for at, (policy, tasks) in enumerate(pairs):
+    for at, (policy, *moment) in enumerate(pairs):
         row = {"policy": policy, **{name: group.iloc[0][name] for name in others}}
-        row |= {"tasks": tasks, "replicates": len(grid), "baseline": baseline}
+        row |= {**dict(zip(moments, moment, strict=True)), "replicates": len(grid), "baseline": baseline}
         row |= {"difference": differences[:, at].mean(), "lower": lower[at], "upper": upper[at]}
         row |= {"share_lower": (differences[:, at] < 0).mean(), "confidence": confidence}
         rows.append(row)
     return rows
 
 
-def _check_paired(grid: pd.DataFrame, pairs: list[tuple[str, int]], baseline: str) -> None:
-    for policy, tasks in pairs:
-        if (baseline, tasks) not in grid.columns:
+def _check_paired(grid: pd.DataFrame, pairs: list[tuple[Any, ...]], baseline: str) -> None:
+    names = [str(name) for name in grid.columns.names[1:]]
+    alike = "checkpoints" if names == ["tasks"] else " and ".join(names)
+
+    def words(pair: tuple[Any, ...]) -> str:
+        return ", ".join(f"{name} {value}" for name, value in zip(names, pair[1:], strict=True))
+
+    for pair in pairs:
+        if (baseline, *pair[1:]) not in grid.columns:
             raise InputError(
-                f"policy {policy!r} is measured at tasks {tasks} but the baseline {baseline!r} is not; "
-                "give both the same checkpoints."
+                f"policy {pair[0]!r} is measured at {words(pair)} but the baseline {baseline!r} is not; "
+                f"give both the same {alike}."
             )
     missing = np.argwhere(grid.isna().to_numpy())
     if len(missing):
         row, column = missing[0]
-        policy, tasks = grid.columns[column]
+        pair = grid.columns[column]
         raise InputError(
-            f"replicate {grid.index[row]} of policy {policy!r} is missing at tasks {tasks}; differences need "
-            "the same replicates of every policy, so run the missing ones or drop that replicate everywhere."
+            f"replicate {grid.index[row]} of policy {pair[0]!r} is missing at {words(pair)}; differences "
+            "need the same replicates of every policy, so run the missing ones or drop that replicate "
+            "everywhere."
         )
     if len(grid) < 2:
         raise TooFewReplicates(

@@ -6,7 +6,7 @@ import numpy as np
 import pandas as pd
 from scipy.stats import binom
 
-from labkit.analysis.tables import describe, prepare
+from labkit.analysis.tables import describe, moments_of, prepare
 from labkit.checks import check_fraction
 from labkit.errors import TooFewReplicates
 
@@ -28,9 +28,10 @@ def headroom(
     Parameters
     ----------
     measures : pandas.DataFrame
-        One row a replicate and checkpoint, as in ``outcome.measures``. Groups are formed by `tasks` and by
-        the labels: `policy`, `information`, `server` (in ``outcome.by_server``: what each server needs for
-        itself), any other column of text and any named index level.
+        One row a replicate and checkpoint, as in ``outcome.measures``. Groups are formed by `tasks` (where
+        work leaves by `load_factor` and `horizon`) and by the labels: `policy`, `information`, `server` (in
+        ``outcome.by_server``: what each server needs for itself), any other column of text and any named
+        index level.
     risk : float
         The accepted probability, in (0, 1), that the fullest server goes beyond the headroom; with rows of
         ``outcome.by_server``, that this one server does: that some server does is far more likely then.
@@ -42,9 +43,9 @@ def headroom(
     Returns
     -------
     pandas.DataFrame
-        One row a group, sorted by labels and tasks: the labels, tasks, replicates, mean_load,
-        mean_utilisation and fair_utilisation (means over replicates, where the table has them), headroom,
-        lower, upper (in units of `of`), risk, confidence.
+        One row a group, sorted by labels and tasks: the labels, tasks (or load_factor, horizon), replicates,
+        mean_load, mean_utilisation and fair_utilisation (means over replicates, where the table has them),
+        headroom, lower, upper (in units of `of`), risk, confidence.
 
     Raises
     ------
@@ -70,7 +71,7 @@ def headroom(
     risk = check_fraction("risk", risk)
     confidence = check_fraction("confidence", confidence)
     table, labels = prepare(measures, of)
-    keys = [*labels, "tasks"]
+    keys = [*labels, *moments_of(table)]
     rows = []
     for _, group in table.groupby(keys, sort=True, observed=True):
         first = group.iloc[0]

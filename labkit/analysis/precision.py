@@ -8,7 +8,7 @@ import pandas as pd
 from scipy.stats import t as student
 
 from labkit.analysis.stopping import stopping_rule
-from labkit.analysis.tables import prepare
+from labkit.analysis.tables import moments_of, prepare
 from labkit.checks import check_whole
 from labkit.errors import InputError
 
@@ -31,9 +31,10 @@ def replicate_until(
     ----------
     batch : callable
         ``batch(first, count)`` returns the table of measures of the replicates first … first + count − 1,
-        with the columns replicate, tasks and the measure, and any labels such as policy: in
-        each block of rows the replicates ascend, and each has the same rows, as ``outcome.measures`` has with
-        ``place(..., first_replicate=first, replicates=count)``, or several of them under each other.
+        with the columns replicate, tasks (where work leaves load_factor or horizon) and the measure, and
+        any labels such as policy: in each block of rows the replicates ascend, and each has the same rows, as
+        ``outcome.measures`` has with ``place(..., first_replicate=first, replicates=count)``, or several of
+        them under each other.
     precision : float or None
         Largest half-width of the confidence interval of the mean, as a share of the mean, in (0, 1). None:
         exactly one batch of `replicates`, returned as it is.
@@ -133,7 +134,7 @@ class _Rows:
         self.count = count
         self.table = pd.concat([piece for block in zip(*self.pieces, strict=True) for piece in block])
         self.table = self.table.reset_index(drop=True)
-        keys = [*labels, "tasks"]
+        keys = [*labels, *moments_of(self.table)]
         if (self.table.groupby(keys, observed=True).size() != count).any():
             raise self._refusal(first, more)
 
@@ -158,15 +159,19 @@ class _Rows:
     def groups(self) -> list[np.ndarray]:
         """Return the values of the measure in each group at its last checkpoint."""
         which = self._which()
-        last = self.table["tasks"] == self.table["tasks"].groupby(which).transform("max")
+        last = pd.Series(True, index=self.table.index)
+        if "tasks" in self.table.columns:
+            last = self.table["tasks"] == self.table["tasks"].groupby(which).transform("max")
         measured = self.table.loc[last, self.measure].groupby(which[last])
         return [values.to_numpy(dtype=np.float64) for _, values in measured]
 
     def _which(self) -> pd.Series:
         """Return the number of the group of each row."""
-        if not self.labels:
+        # Each load factor is a question of its own; checkpoints of one run are not.
+        keys = [*self.labels, *(name for name in moments_of(self.table) if name != "tasks")]
+        if not keys:
             return pd.Series(0, index=self.table.index)
-        return self.table.groupby(self.labels, observed=True, sort=False).ngroup()
+        return self.table.groupby(keys, observed=True, sort=False).ngroup()
 
     def with_stopping(self, words: list[str]) -> pd.DataFrame:
         """Return all rows with the column `stopping`, from the words for each group."""

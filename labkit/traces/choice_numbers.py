@@ -3,6 +3,7 @@
 import numpy as np
 
 from labkit.fleet.model import Fleet
+from labkit.fleet.names import ABSENT
 
 
 class ChoiceNumbers:
@@ -34,11 +35,10 @@ class ChoiceNumbers:
         """
         ordered = np.sort(options, axis=1)
         width = options.shape[1]
-        absent = np.uint32(0xFFFFFFFF)
         if width < self.width:
-            filler = np.full((len(ordered), self.width - width), absent)
+            filler = np.full((len(ordered), self.width - width), ABSENT)
             ordered = np.concatenate([ordered, filler], axis=1)
-        wider = (ordered[:, self.width :] != absent).any(axis=1)
+        wider = (ordered[:, self.width :] != ABSENT).any(axis=1)
         code = self._codes(ordered[:, : self.width], learn=False)
         at = np.minimum(np.searchsorted(self.codes, code), len(self.codes) - 1)
         return np.where((self.codes[at] == code) & (code >= 0) & ~wider, self.rows[at], -1)

@@ -1,0 +1,370 @@
+"""How much capacity holds a risk down where work leaves: a search over a common factor of all capacities."""
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Any
+
+import pandas as pd
+
+from labkit.analysis.block_bootstrap import block_bootstrap
+from labkit.analysis.headroom import headroom, replicates_needed
+from labkit.analysis.service_limits import service_limits
+from labkit.checks import check_fraction, check_positive
+from labkit.engine.failures import checked_failures
+from labkit.engine.placement import Outcome
+from labkit.engine.service_measures import ServiceOutcome
+from labkit.errors import InputError, TooFewReplicates
+from labkit.fleet.model import Fleet, check_fleet
+from labkit.fleet.scaling import scaled
+from labkit.policies.base import Policy
+from labkit.policies.naming import parse_policy
+from labkit.policies.one_choice import OneChoice
+from labkit.replaying import replay
+from labkit.serving import serve
+from labkit.survey.stability import highest_load_factor
+
+# So close to the stability limit, runs are too short to tell anything.
+CLOSEST = 1.02
+# A fleet this many times as large settles any question of a target, or nothing does.
+LARGEST = 64.0
+STEP = 1.25
+
+
+@dataclass(frozen=True)
+class Provision:
+    """The capacity that holds a risk down, and what was run to find it.
+
+    Attributes
+    ----------
+    table : pandas.DataFrame
+        One row: policy, information, criterion, risk, scale (factor on all capacities), lower, upper (its
+        confidence limits), capacity (total capacity at the scale), load_factor (at the scale; NaN for
+        traces), confidence.
+    curve : pandas.DataFrame
+        One row a scale that was run: scale, share (how often the criterion failed), lower, upper; empty when
+        one run tells all.
+    """
+
+    table: pd.DataFrame
+    curve: pd.DataFrame
+
+    def __repr__(self) -> str:
+        row = self.table.iloc[0]
+        return (
+            f"<{row['policy']}: {row['capacity']:,.4g} units of capacity ({row['scale']:.4g} x, limits "
+            f"{row['lower']:.4g} to {row['upper']:.4g}) for {row['criterion']} at a risk of {row['risk']:g}>"
+        )
+
+
+def serve_headroom(
+    fleet: Fleet,
+    policy: Policy | str,
+    *,
+    load_factor: float,
+    risk: float,
+    target: float | None = None,
+    confidence: float = 0.95,
+    tolerance: float = 0.005,
+    **serving: Any,
+) -> Provision:
+    """Find the capacity at which arriving work meets a risk, by the factor that all capacities need.
+
+    Arrivals and requirements stay as they are, number by number (common random numbers), while the capacities
+    of all servers are multiplied by one factor.
+
+    - With `target`: at most a share `risk` of the tasks takes longer than `target` from arrival to departure.
+      The factor is searched for by runs; the limits are the factors at which the confidence limits of the
+      share meet the risk.
+    - Without, for ``discipline="sessions"`` and no `limit`: the highest utilisation within the window goes
+      beyond 1 with a probability of at most `risk`. What rules decide does not depend on the factor, so that
+      one call tells it: a quantile over replicates, with limits that assume no distribution.
+    - Without, and with a `limit`: at most a share `risk` of the tasks is blocked; the limit is then the
+      capacity of each server, rounded down.
+
+    Parameters
+    ----------
+    fleet : Fleet
+    policy : Policy or str
+    load_factor : float
+        Arriving work ÷ total capacity at the capacities as they are (factor 1). It may be above what they can
+        serve.
+    risk : float
+        The accepted probability, or share of tasks, in (0, 1).
+    target : float, optional
+        Longest sojourn that counts as in time, in units of time.
+    confidence : float
+        Coverage of the limits, in (0, 1).
+    tolerance : float
+        How exactly the factor is searched for, as a share of it; it meets the risk, and is too large by that
+        share at most.
+    **serving
+        All else that `labkit.serve` takes: horizon, warmup, service, discipline, replicates, rng, ...
+
+    Returns
+    -------
+    Provision
+
+    Raises
+    ------
+    InputError
+        When an argument is refused, or no factor up to 64 meets the risk (a target below the longest
+        requirements, say, on sessions).
+    TooFewReplicates
+        When the replicates do not suffice for the risk.
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> found = lk.serve_headroom(
+    ...     lk.ring(10), "least-loaded", load_factor=1.0, risk=0.01, target=8.0,
+    ...     horizon=600.0, warmup=60.0, replicates=4, rng=1,
+    ... )
+    >>> bool(1.1 < found.table["scale"].item() < 1.6)
+    True
+    """
+    check_fleet(fleet)
+    risk, confidence, tolerance = _checked(risk, confidence, tolerance)
+    load_factor = check_positive("load_factor", load_factor)
+    sessions = serving.get("discipline", "fcfs") == "sessions"
+    limited = serving.get("limit") is not None
+    if target is not None and sessions:
+        raise InputError(
+            f"target is {target!r}, but sessions stay for their time whatever the capacity; leave it out."
+        )
+    if target is None and not sessions:
+        raise InputError('target is missing; give the longest sojourn, or discipline="sessions".')
+    if limited and not isinstance(serving["limit"], str):
+        raise InputError(f'limit is {serving["limit"]!r}; give "capacity", which grows with the capacities.')
+
+    def run(factor: float) -> ServiceOutcome:
+        grown = scaled(fleet, factor)
+        return serve(grown, policy, load_factor=load_factor / factor, target=target, **serving)
+
+    if target is None and not limited:
+        return _of_highest(run(1.0), load_factor, risk, confidence, "replicate")
+    of = "late_share" if target is not None else "blocked_share"
+    least = 0.0
+    if not sessions and not limited:
+        even_split = isinstance(parse_policy(policy), OneChoice)
+        least = CLOSEST * load_factor / highest_load_factor(fleet, even_split=even_split)
+        failures = checked_failures(serving.get("failures"))
+        if failures is not None and serving.get("on_failure", "wait") == "wait":
+            least /= failures.availability(fleet, check_positive("horizon", serving.get("horizon")))
+
+    def share(outcome: ServiceOutcome) -> tuple[float, float, float]:
+        row = service_limits(outcome.measures, outcome.by_interval, of=of, confidence=confidence).iloc[0]
+        return row["estimate"], row["lower"], row["upper"]
+
+    return _search(run, share, of, target, load_factor, risk, confidence, tolerance, least)
+
+
+def replay_headroom(
+    fleet: Fleet,
+    trace: Any,
+    policy: Policy | str,
+    *,
+    risk: float,
+    block: float,
+    rng: Any,
+    target: float | None = None,
+    confidence: float = 0.95,
+    tolerance: float = 0.005,
+    **replaying: Any,
+) -> Provision:
+    """Find the capacity at which a recorded trace meets a risk, by the factor that all capacities need.
+
+    - Without `target`, for sessions (the default discipline): the highest utilisation within a block of time,
+      such as a day, goes beyond 1 in at most a share `risk` of the blocks. One replay tells it, as in
+      `labkit.serve_headroom`; the limits assume that blocks are independent.
+    - With `target`: at most a share `risk` of the tasks takes longer; limits by `labkit.block_bootstrap`.
+
+    Parameters
+    ----------
+    fleet : Fleet
+    trace : pandas.DataFrame, str or pathlib.Path
+        With durations; see `labkit.replay`.
+    policy : Policy or str
+    risk : float
+        The accepted share of blocks, or of tasks, in (0, 1).
+    block : float
+        Length of a block, in the units of time of the trace.
+    rng : int, numpy.random.SeedSequence or numpy.random.Generator
+    target : float, optional
+        Longest sojourn that counts as in time; for ``discipline="fcfs"`` or ``"ps"``.
+    confidence, tolerance : float
+        As in `labkit.serve_headroom`.
+    **replaying
+        All else that `labkit.replay` takes.
+
+    Returns
+    -------
+    Provision
+        Its `load_factor` is NaN.
+
+    Raises
+    ------
+    InputError, TooFewReplicates
+        As in `labkit.serve_headroom`; the second also when the trace has too few blocks.
+    """
+    check_fleet(fleet)
+    risk, confidence, tolerance = _checked(risk, confidence, tolerance)
+    queues = replaying.get("discipline", "sessions") != "sessions"
+    if queues != (target is not None):
+        raise InputError(
+            f'target is {target!r}; give the longest sojourn with discipline "fcfs" or "ps", none with '
+            "sessions."
+        )
+
+    def run(factor: float) -> ServiceOutcome:
+        grown = scaled(fleet, factor)
+        outcome = replay(grown, trace, policy, rng=rng, block=block, target=target, **replaying)
+        if isinstance(outcome, Outcome):
+            raise InputError("trace has no column 'duration'; work that stays needs labkit.headroom instead.")
+        return outcome
+
+    if target is None:
+        return _of_highest(run(1.0), math.nan, risk, confidence, "interval")
+
+    def share(outcome: ServiceOutcome) -> tuple[float, float, float]:
+        row = block_bootstrap(outcome.by_interval, of="late_share", confidence=confidence, rng=rng).iloc[0]
+        return row["estimate"], row["lower"], row["upper"]
+
+    return _search(run, share, "late_share", target, math.nan, risk, confidence, tolerance, 0.0)
+
+
+def _checked(risk: Any, confidence: Any, tolerance: Any) -> tuple[float, float, float]:
+    return (
+        check_fraction("risk", risk),
+        check_fraction("confidence", confidence),
+        check_fraction("tolerance", tolerance),
+    )
+
+
+def _of_highest(
+    outcome: ServiceOutcome, load_factor: float, risk: float, confidence: float, each: str
+) -> Provision:
+    """Return the factor from the highest utilisations at factor 1: they fall in proportion to it."""
+    if each == "replicate":
+        highest = outcome.measures
+        words = "highest utilisation beyond 1 in the window"
+    else:
+        # The last interval is shorter than the others, unless it ends with the trace.
+        table = outcome.by_interval
+        full = (table["end"] - table["start"]) >= (table["end"] - table["start"]).max() * (1 - 1e-9)
+        # Coins are no other days: of each block the mean over replicates.
+        means = table[full].groupby("interval")["max_utilisation"].mean()
+        needed = replicates_needed(risk, confidence)
+        if len(means) < needed:
+            raise TooFewReplicates(
+                f"the trace has {len(means)} full blocks; a risk of {risk:g} with {100 * confidence:g} % "
+                f"limits needs at least {needed}, so give shorter blocks, a longer trace, or a larger risk."
+            )
+        highest = means.rename_axis("replicate").reset_index().assign(horizon=outcome.horizon)
+        words = "highest utilisation beyond 1 in a block"
+    found = headroom(highest, risk=risk, confidence=confidence, of="max_utilisation").iloc[0]
+    limits = (found["headroom"], found["lower"], found["upper"])
+    return Provision(_table(outcome, words, limits, load_factor, risk, confidence), pd.DataFrame())
+
+
+def _table(
+    outcome: ServiceOutcome,
+    criterion: str,
+    scales: tuple[float, float, float],
+    load_factor: float,
+    risk: float,
+    confidence: float,
+    per: float = 1.0,
+) -> pd.DataFrame:
+    scale, lower, upper = scales
+    return pd.DataFrame(
+        [
+            {
+                "policy": outcome.policy,
+                "information": outcome.information,
+                "criterion": criterion,
+                "risk": risk,
+                "scale": scale,
+                "lower": lower,
+                "upper": upper,
+                "capacity": scale * outcome.fleet.total_capacity / per,
+                "load_factor": load_factor / scale,
+                "confidence": confidence,
+            }
+        ]
+    )
+
+
+def _search(
+    run: Callable[[float], ServiceOutcome],
+    share: Callable[[ServiceOutcome], tuple[float, float, float]],
+    of: str,
+    target: float | None,
+    load_factor: float,
+    risk: float,
+    confidence: float,
+    tolerance: float,
+    least: float,
+) -> Provision:
+    """Search for the factors at which a share, and its two limits, meet the risk."""
+    known: dict[float, tuple[float, float, float]] = {}
+    last: list[tuple[float, ServiceOutcome]] = []
+
+    def limits(factor: float) -> tuple[float, float, float]:
+        if factor not in known:
+            outcome = run(factor)
+            last[:] = [(factor, outcome)]
+            known[factor] = share(outcome)
+        return known[factor]
+
+    scales = []
+    for which in range(3):
+
+        def beyond(logarithm: float, which: int = which) -> float:
+            return limits(math.exp(logarithm))[which] - risk
+
+        low, high = _bracket(beyond, known, which, risk, least, of)
+        # A share moves in steps where capacities are rounded: the side that meets the risk is the answer.
+        while high - low > tolerance:
+            middle = (low + high) / 2
+            low, high = (middle, high) if beyond(middle) > 0 else (low, middle)
+        scales.append(math.exp(high))
+    factor, outcome = last[0]
+    criterion = f"sojourns beyond {target:g}" if target is not None else "blocked tasks"
+    found = (scales[0], min(scales), max(scales))
+    table = _table(outcome, criterion, found, load_factor, risk, confidence, factor)
+    curve = pd.DataFrame(
+        [(scale, *values) for scale, values in sorted(known.items())],
+        columns=["scale", "share", "lower", "upper"],
+    )
+    return Provision(table, curve)
+
+
+def _bracket(
+    beyond: Callable[[float], float],
+    known: dict[float, tuple[float, float, float]],
+    which: int,
+    risk: float,
+    least: float,
+    of: str,
+) -> tuple[float, float]:
+    """Return logarithms of factors on both sides of the wanted one; twice the least where that will do."""
+    above = [math.log(factor) for factor, values in known.items() if values[which] > risk]
+    below = [math.log(factor) for factor, values in known.items() if values[which] <= risk]
+    floor = math.log(least) if least > 0 else -math.log(LARGEST)
+    start = max(0.0, floor)
+    low = max(above, default=start)
+    while beyond(low) <= 0:
+        if low <= floor:
+            return low, low
+        below.append(low)
+        low = max(floor, low - math.log(STEP))
+    high = min((value for value in below if value > low), default=low + math.log(STEP))
+    while beyond(high) > 0:
+        low, high = high, high + math.log(STEP)
+        if high > math.log(LARGEST * max(1.0, least)):
+            raise InputError(
+                f"no capacity up to {LARGEST:g} times the present one brings {of} down to the risk of "
+                f"{risk:g}; accept a larger risk or a longer target."
+            )
+    return low, high
