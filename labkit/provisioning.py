@@ -13,6 +13,7 @@ from labkit.analysis.service_limits import service_limits
 from labkit.checks import check_fraction, check_positive
 from labkit.engine.failures import checked_failures
 from labkit.engine.placement import Outcome
+from labkit.engine.service_checks import checked_discipline, lasting_availability
 from labkit.engine.service_measures import ServiceOutcome
 from labkit.errors import InputError, TooFewReplicates
 from labkit.fleet.model import Fleet, check_fleet
@@ -126,7 +127,7 @@ def serve_headroom(
     check_fleet(fleet)
     risk, confidence, tolerance = _checked(risk, confidence, tolerance)
     load_factor = check_positive("load_factor", load_factor)
-    sessions = serving.get("discipline", "fcfs") == "sessions"
+    sessions = checked_discipline(serving.get("discipline", "fcfs")) == "sessions"
     limited = serving.get("limit") is not None
     if target is not None and sessions:
         raise InputError(
@@ -149,8 +150,7 @@ def serve_headroom(
         even_split = isinstance(parse_policy(policy), OneChoice)
         least = CLOSEST * load_factor / highest_load_factor(fleet, even_split=even_split)
         failures = checked_failures(serving.get("failures"))
-        if failures is not None and serving.get("on_failure", "wait") == "wait":
-            least /= failures.availability(fleet, check_positive("horizon", serving.get("horizon")))
+        least /= lasting_availability(failures, serving.get("on_failure", "wait"))
 
     def share(outcome: ServiceOutcome) -> tuple[float, float, float]:
         row = service_limits(outcome.measures, outcome.by_interval, of=of, confidence=confidence).iloc[0]
@@ -209,7 +209,7 @@ def replay_headroom(
     """
     check_fleet(fleet)
     risk, confidence, tolerance = _checked(risk, confidence, tolerance)
-    queues = replaying.get("discipline", "sessions") != "sessions"
+    queues = checked_discipline(replaying.get("discipline", "sessions")) != "sessions"
     if queues != (target is not None):
         raise InputError(
             f'target is {target!r}; give the longest sojourn with discipline "fcfs" or "ps", none with '

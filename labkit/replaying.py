@@ -11,7 +11,7 @@ from labkit.engine.failures import Failures, RandomFailures, checked_failures
 from labkit.engine.information import Information, checked_information
 from labkit.engine.placement import Outcome
 from labkit.engine.service import DISCIPLINES, FAILURE_MODES, ServiceJob, ServiceRules
-from labkit.engine.service_checks import FULL, checked_limits
+from labkit.engine.service_checks import FULL, checked_discipline, checked_limits
 from labkit.engine.service_measures import ServiceOutcome
 from labkit.engine.trace_runs import AS_PLACED, AsPlaced, TraceRun, Window
 from labkit.errors import InputError
@@ -131,7 +131,8 @@ def replay(
     first_replicate, replicates = check_replicates(first_replicate, replicates)
     numbers = range(first_replicate, first_replicate + replicates)
     workers, seed = check_whole("workers", workers), seed_sequence(rng)
-    kind = DISCIPLINES[check_member("discipline", discipline, DISCIPLINES)]
+    discipline = checked_discipline(discipline)
+    kind = DISCIPLINES[discipline]
     check_member("on_full", on_full, FULL)
     check_member("on_failure", on_failure, FAILURE_MODES)
     stays = not source.has_duration

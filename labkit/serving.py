@@ -14,7 +14,13 @@ from labkit.engine.arrival_times import Rates, poisson_batches
 from labkit.engine.failures import Failures, RandomFailures, checked_failures
 from labkit.engine.information import Information, checked_information
 from labkit.engine.service import DISCIPLINES, FAILURE_MODES, INTERVAL, ServiceJob, ServiceRules
-from labkit.engine.service_checks import FULL, checked_limits, checked_rates
+from labkit.engine.service_checks import (
+    FULL,
+    checked_discipline,
+    checked_limits,
+    checked_rates,
+    lasting_availability,
+)
 from labkit.engine.service_laws import ServiceLaw, parse_service
 from labkit.engine.service_measures import Measured, ServiceOutcome, measured
 from labkit.errors import InputError
@@ -72,13 +78,14 @@ def serve(
         When the run ends, in units of time. The fleet is empty at time 0.
     warmup : float, optional
         When measuring begins, from 0 to below `horizon`. Default: found by MSER-5 on the number of tasks in a
-        pilot of the first 8 replicates, and reported.
+        pilot of the replicates 0 to 7 (fewer where none has so high a number), and reported.
     service : ServiceLaw or str
-        Law of the requirements, such as ``"exponential"``, ``"lognormal(cv=2)"`` or ``lk.Empirical(sample)``: work
-        that a server of capacity 1 does in that time; for sessions the time itself.
+        Law of the requirements, such as ``"exponential"``, ``"lognormal(cv=2)"`` or ``lk.Empirical(sample)``:
+        work that a server of capacity 1 does in that time; for sessions the time itself.
     discipline : {"fcfs", "ps", "sessions"}
         First come, first served; processor sharing (the tasks on a server share its capacity equally); or
-        sessions that begin at once and stay for their time.
+        sessions that begin at once and stay for their time. "first-come-first-served" and
+        "processor-sharing" are understood, too.
     replicates : int
         Independent repetitions.
     rng : int, numpy.random.SeedSequence or numpy.random.Generator
@@ -105,7 +112,7 @@ def serve(
     target : float, optional
         Time beyond which a sojourn counts as late: adds `late_share`.
     levels : int
-        Adds to `by_server` the share of time with at least 1 .. levels tasks on the server.
+        Adds to `by_server` the share of time with at least 1 .. levels tasks on the server; at most 1,023.
     intervals : int
         Equal parts of the window for which sums are kept, for batch means.
     workers : int
@@ -149,15 +156,17 @@ def serve(
     first_replicate, replicates = check_replicates(first_replicate, replicates)
     workers, intervals = check_whole("workers", workers), check_whole("intervals", intervals)
     seed = seed_sequence(rng)
-    kind = DISCIPLINES[check_member("discipline", discipline, DISCIPLINES)]
+    discipline = checked_discipline(discipline)
+    kind = DISCIPLINES[discipline]
     check_member("on_full", on_full, FULL)
     check_member("on_failure", on_failure, FAILURE_MODES)
+    if check_whole("levels", levels, least=0) > q.TOP:
+        raise InputError(f"levels is {levels}; give at most {q.TOP}.")
     limits = checked_limits(limit, fleet)
     rates = checked_rates(load_factor * fleet.total_capacity / law.mean, profile, period)
     failures = checked_failures(failures)
     if kind != q.SESSIONS and limits is None:
-        waits = failures is not None and on_failure == "wait"
-        up = failures.availability(fleet, horizon) if failures is not None and waits else 1.0
+        up = lasting_availability(failures, on_failure)
         refuse_unstable(fleet, load_factor, even_split=isinstance(rule, OneChoice), availability=up)
     rules = ServiceRules(
         discipline=kind,
@@ -167,13 +176,14 @@ def serve(
         fails=failures is not None,
         on_failure=on_failure,
         target=math.inf if target is None else check_positive("target", target),
-        levels=check_whole("levels", levels, least=0),
+        levels=int(levels),
     )
     job = _Serving(ServiceJob(fleet, rule, rules, seed), rates, law, failures, horizon)
-    numbers = range(first_replicate, first_replicate + replicates)
+    after = first_replicate + replicates
+    numbers = range(first_replicate, after)
     found_by = "given" if warmup is not None else "MSER-5"
     if warmup is None:
-        warmup = job.found_warm_up(numbers[:PILOT_REPLICATES], workers)
+        warmup = job.found_warm_up(range(min(after, PILOT_REPLICATES)), workers)
     warmup = check_number("warmup", warmup)
     if not 0 <= warmup < horizon:
         raise InputError(
@@ -250,8 +260,8 @@ class _Serving:
             count = int(self.horizon / period)
             if count < LEAST_INTERVALS:
                 raise InputError(
-                    f"warmup is not given, and the horizon holds {count} periods of the profile; it can be found "
-                    f"from {LEAST_INTERVALS} on, so give a warmup, such as a few periods."
+                    f"warmup is not given, and the horizon holds {count} periods of the profile; it can be "
+                    f"found from {LEAST_INTERVALS} on, so give a warmup, such as a few periods."
                 )
             edges = np.linspace(0.0, count * period, count + 1)
         pilot = [each.intervals for each in self.run_all(replicates, edges, workers)]

@@ -12,7 +12,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from tests.reference import WORD, WORD, arrival, pick, words
+from tests.reference import WORD, arrival, pick, words
 
 ARRIVALS, COINS, TURNS, TIMES, REQUIREMENTS, MOVES = 0, 1, 3, 5, 6, 8
 BLOCK = 16_384

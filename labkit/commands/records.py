@@ -80,7 +80,8 @@ def _show(arguments: argparse.Namespace) -> int:
     frame = measured.to_pandas()
     for at, how in enumerate(frame["stopping"].unique() if "stopping" in frame.columns else []):
         print(f"{'stopping' if at == 0 else '':<16} {how}")
-    labels = [name for name in ("policy", "information", "tasks") if name in frame.columns]
+    telling = ("policy", "information", "network", "failures", "load_factor", "tasks")
+    labels = [name for name in telling if name in frame.columns]
     if labels:
         means = frame.drop(columns="replicate", errors="ignore").groupby(labels).mean(numeric_only=True)
         print(f"\nmeans over replicates\n{means.reset_index().to_string(index=False)}")

@@ -15,8 +15,8 @@ pool : float64, shape (tasks that fit, 5)
 loads : float64, shape (servers,)
     Total size of the tasks on a server.
 tally : float64; counts : int64; hist : int64, shape (2, BINS); by_level : float64
-    What is measured: `SOJOURN` and on, `USED` and on, counts of sojourn and waiting times in bins, time of each
-    server with 0, 1, 2 ... tasks.
+    What is measured: `SOJOURN` and on, `USED` and on, counts of sojourn and waiting times in bins, time of
+    each server with 0, 1, 2 ... tasks.
 """
 
 import numpy as np

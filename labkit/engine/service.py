@@ -175,8 +175,8 @@ class Progress:
             if done < 0:
                 raise InputError(
                     f"policy {job.rule.name} picked a position outside the options of task "
-                    f"{self.counts[q.SEEN] + 1}; it must return a whole number from 0 to the number of options "
-                    "less 1."
+                    f"{self.counts[q.SEEN] + 1}; it must return a whole number from 0 to the number of "
+                    "options less 1."
                 )
             begin = done
             if done == stop or batch.times[done] >= until:

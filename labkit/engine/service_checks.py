@@ -8,15 +8,25 @@ import numpy as np
 
 from labkit.checks import LARGEST_WHOLE, check_member, check_positive
 from labkit.engine.arrival_times import Rates
+from labkit.engine.failures import Failures, RandomFailures
+from labkit.engine.service import DISCIPLINES
 from labkit.engine.sizes import as_numbers
 from labkit.errors import InputError
 from labkit.fleet.model import Fleet
 
 FULL = ("another", "lost")
+LONG_NAMES = {"first-come-first-served": "fcfs", "processor-sharing": "ps"}
+# Tasks a unit of time: beyond these, times of arrival are no numbers any more.
+LEAST_RATE, MOST_RATE = 1e-200, 1e200
 
 
 def checked_rates(mean: float, profile: Sequence[float] | None, period: float | None) -> Rates:
     """Return arrival rates of this mean: constant, or following the profile of a period."""
+    if not LEAST_RATE <= mean <= MOST_RATE:
+        raise InputError(
+            f"load_factor gives {mean:g} tasks a unit of time (× total capacity ÷ mean requirement); "
+            f"choose units in which it lies between {LEAST_RATE:g} and {MOST_RATE:g}."
+        )
     if profile is None:
         if period is not None:
             raise InputError(f"period is {period!r} but there is no profile; give both or neither.")
@@ -49,11 +59,27 @@ def checked_limits(limit: Any, fleet: Fleet) -> np.ndarray | None:
                 '"capacity".'
             )
         given = np.broadcast_to(found, fleet.size)
-    wrong = ~((given >= 1) & (given <= LARGEST_WHOLE) & (given == np.floor(given)))
-    if wrong.any():
-        where = fleet.names[int(np.flatnonzero(wrong)[0])]
+    wrong = np.flatnonzero(~((given >= 1) & (given <= LARGEST_WHOLE) & (given == np.floor(given))))
+    if wrong.size:
+        where = fleet.names.take(wrong[:1]).tolist()[0]
         raise InputError(
-            f"limit is {given[wrong][0]:g} for server {where!r}; give whole numbers of at least 1 (a "
-            "capacity below 1 holds no task)."
+            f"limit is {given[wrong[0]]:g} for server {where!r}; give whole numbers from 1 to "
+            f"{LARGEST_WHOLE} (a capacity below 1 holds no task)."
         )
     return given.astype(np.int64)
+
+
+def lasting_availability(failures: Failures | RandomFailures | None, on_failure: str) -> float:
+    """Return the share of time that servers are up in the long run, where their work is not lost.
+
+    A schedule passes; only failures that go on for ever lower what a fleet can serve.
+    """
+    if isinstance(failures, RandomFailures) and on_failure != "lost":
+        return failures.up / (failures.up + failures.down)
+    return 1.0
+
+
+def checked_discipline(discipline: Any) -> str:
+    """Return the short name of a discipline, which may also be given by its long one."""
+    known = {**{name: name for name in DISCIPLINES}, **LONG_NAMES}
+    return known[check_member("discipline", discipline, known)]

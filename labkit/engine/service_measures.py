@@ -113,8 +113,8 @@ class ServiceOutcome:
         One row a replicate and server: queue_mean, utilisation, max_load, and (with ``levels``)
         share_at_least_1 and on, the share of time with that many tasks.
     tails : pandas.DataFrame
-        All servers pooled, one row a replicate and `tasks`: `share`, the share of server time with at least
-        that many.
+        All servers pooled, one row a replicate and number of tasks `at_least`: `share`, the share of
+        server time with at least that many.
     policy, information, discipline, service : str
         What was run, in words.
     warmup_found_by : str
@@ -143,10 +143,16 @@ class ServiceOutcome:
         whole = [name for name in INTERVAL[2:10]]
         table[whole] = table[whole].astype(np.int64)
         table[["start", "end"]] += self.origin
-        table.insert(0, "policy", self.policy)
-        table.insert(1, "replicate", np.repeat([each.replicate for each in self.results], counts))
-        table.insert(2, "interval", np.concatenate([np.arange(count) for count in counts]))
-        return table
+        about: dict[str, Any] = dict(self._about)
+        about["replicate"] = np.repeat([each.replicate for each in self.results], counts)
+        about["interval"] = np.concatenate([np.arange(count) for count in counts])
+        return pd.concat([pd.DataFrame(about), table], axis=1)
+
+    @property
+    def _about(self) -> dict[str, Any]:
+        """What tells the rows of this outcome from those of another."""
+        about: dict[str, Any] = {"policy": self.policy, "information": self.information}
+        return about if np.isnan(self.load_factor) else about | {"load_factor": self.load_factor}
 
     @cached_property
     def measures(self) -> pd.DataFrame:
@@ -158,10 +164,7 @@ class ServiceOutcome:
         highest = dict(zip(INTERVAL, each.intervals.max(axis=0), strict=True))
         span = self.horizon - self.warmup
         completed, arrived = sums["completed"], sums["arrivals"]
-        row: dict[str, Any] = {"policy": self.policy, "information": self.information}
-        row["replicate"] = each.replicate
-        if not np.isnan(self.load_factor):
-            row["load_factor"] = self.load_factor
+        row: dict[str, Any] = self._about | {"replicate": each.replicate}
         row |= {"warmup": self.origin + self.warmup, "horizon": self.origin + self.horizon}
         row |= {"arrivals": int(arrived), "completed": int(completed)}
         for which, name in enumerate(("sojourn", "waiting")):
@@ -181,6 +184,9 @@ class ServiceOutcome:
         row["little_error"] = _ratio(each.overlap - sums["area"], sums["area"]) if sums["area"] else 0.0
         return row
 
+    def _row_of(self, replicate: int) -> dict[str, Any]:
+        return self._about | {"replicate": replicate, "horizon": self.origin + self.horizon}
+
     @cached_property
     def by_server(self) -> pd.DataFrame:
         """What each server had over the window, one row a replicate and server."""
@@ -190,8 +196,7 @@ class ServiceOutcome:
         )
         tables = []
         for each in self.results:
-            columns: dict[str, Any] = {"policy": self.policy, "replicate": each.replicate}
-            columns["server"] = pd.Series(self.fleet.names)
+            columns: dict[str, Any] = {"server": pd.Series(self.fleet.names)}
             columns["queue_mean"] = each.area / span
             columns["utilisation"] = each.work / (span * capacity)
             columns["max_load"] = each.peak
@@ -199,7 +204,7 @@ class ServiceOutcome:
                 passed = np.cumsum(each.by_level[:, ::-1], axis=1)[:, ::-1]
                 for level in range(1, each.by_level.shape[1]):
                     columns[f"share_at_least_{level}"] = passed[:, level] / span
-            tables.append(pd.DataFrame(columns))
+            tables.append(pd.DataFrame({**self._row_of(each.replicate), **columns}))
         return pd.concat(tables, ignore_index=True)
 
     @cached_property
@@ -209,9 +214,8 @@ class ServiceOutcome:
         tables = [
             pd.DataFrame(
                 {
-                    "policy": self.policy,
-                    "replicate": each.replicate,
-                    "tasks": np.arange(len(each.level_time)),
+                    **self._row_of(each.replicate),
+                    "at_least": np.arange(len(each.level_time)),
                     "share": np.cumsum(each.level_time[::-1])[::-1] / span,
                 }
             )

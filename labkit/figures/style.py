@@ -88,6 +88,11 @@ def plain(value: float, _: float) -> str:
     return f"{value:g}"
 
 
+def grouped(value: float, _: float) -> str:
+    """Return the words at a tick of a long axis, with thousands separated."""
+    return f"{value:,.0f}" if abs(value) >= 1000 else f"{value:g}"
+
+
 def looks(names: Iterable[str]) -> dict[str, dict]:
     """Return colour, marker and dashes for each name; the same names get the same looks in every figure."""
     return {

@@ -29,18 +29,29 @@ COMPUTING = (
     "policies",
     "engine",
     "stationary",
+    "traces",
     "placing.py",
+    "serving.py",
+    "replaying.py",
     # By what rule replicates are added, and in which groups, decides what rows a record has.
     "analysis/stopping.py",
     "analysis/precision.py",
     "analysis/tables.py",
+    # A search for capacity goes where its limits lead it.
+    "provisioning.py",
+    "analysis/headroom.py",
+    "analysis/service_limits.py",
+    "analysis/block_bootstrap.py",
 )
 
-# These do not shape the arriving work: the rule and what it knows, how often and when it is measured. Points
-# that differ only in them meet the same arrivals, and more replicates keep those already there.
+# These do not shape the arriving work: the rule and what it knows, what is done with tasks when they are
+# there, how often and when it is measured. Points that differ only in them meet the same arrivals, and more
+# replicates keep those already there. Each of several load factors meets its own.
 NOT_ARRIVALS = EXECUTION_ONLY | {
     *("policies", "policy", "report_every", "checkpoints", "entropy"),
     *("replicates", "precision", "most_replicates", "precision_of"),
+    *("discipline", "failures", "on_failure", "limit", "on_full", "report_age", "load_factors"),
+    *("warmup", "target", "block", "day", "unit"),
 }
 
 

@@ -50,8 +50,24 @@ MEASURED = pa.schema(
         ("excess", pa.float64()),
         ("load_variance", pa.float64()),
         ("edge_difference", pa.float64()),
+        # Where work leaves.
+        ("load_factor", pa.float64()),
+        ("warmup", pa.float64()),
+        ("horizon", pa.float64()),
+        *((name, pa.int64()) for name in ("arrivals", "completed")),
+        *((f"sojourn_{which}", pa.float64()) for which in ("mean", "p50", "p90", "p99", "max")),
+        *((f"waiting_{which}", pa.float64()) for which in ("mean", "p50", "p90", "p99", "share")),
+        ("queue_mean", pa.float64()),
+        ("utilisation", pa.float64()),
+        ("blocked_share", pa.float64()),
+        *((name, pa.int64()) for name in ("lost", "requeued", "waited")),
+        ("late_share", pa.float64()),
+        ("little_error", pa.float64()),
     ]
 )
+
+# Numbers that tell runs apart, although they are no whole numbers.
+SETTINGS = ("load_factor",)
 
 
 def measured_table(measures: Any) -> pa.Table:
@@ -78,7 +94,9 @@ def measured_table(measures: Any) -> pa.Table:
     order = [name for name in MEASURED.names if name in columns]
     order += [name for name in columns if name not in MEASURED.names]
     arrays = [_typed(name, frame[name]) for name in order]
-    labels = [name for name in order if not pd.api.types.is_float_dtype(frame[name].dtype)]
+    labels = [
+        name for name in order if name in SETTINGS or not pd.api.types.is_float_dtype(frame[name].dtype)
+    ]
     if labels and frame.duplicated(labels).any():
         row = frame.loc[frame.duplicated(labels), labels].iloc[0].to_dict()
         raise InputError(f"measures has two rows for {row}; give each policy, replicate and checkpoint once.")

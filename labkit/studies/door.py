@@ -1,6 +1,6 @@
 """Values that the project's own notebooks would refuse, refused before any kernel starts.
 
-What is known here about the parameters of the headroom notebooks is known nowhere else outside them.
+What is known here about the parameters of the notebooks is known nowhere else outside them.
 """
 
 import contextlib
@@ -19,11 +19,14 @@ if TYPE_CHECKING:
 
 RUN, ANSWER, SURVEY, RULES = "headroom", "headroom_answer", "survey", "rules"
 LONG_RUN, GROWTH = "long_run", "growth"
+SERVE, REPLAY = "serve", "replay"
 
 # The least whole number that each of these parameters can be.
 LEAST = {
     RUN: {"tasks": 1, "checkpoints": 1, "replicates": 1, "report_every": 0},
     RULES: {"tasks": 1, "replicates": 1, "dispatchers": 0, "forecast_rounds": 100},
+    SERVE: {"replicates": 1},
+    REPLAY: {"replicates": 1},
     SURVEY: {"outages": 0, "links": 0, "distance": 2},
     LONG_RUN: {"servers": 2, "horizon": 1, "replicates": 1, "most_replicates": 1},
     GROWTH: {"entropy": 0},
@@ -78,6 +81,8 @@ def check_points(study: "Study", points: Iterable["Point"]) -> None:
     """
     if study.notebook.name == LONG_RUN:
         _check_families(points)
+    if study.notebook.name in (SERVE, REPLAY):
+        _check_leaving(study.notebook.name, points)
     if study.notebook.name not in (RUN, RULES):
         return
     from labkit.fleet.readers import read_fleet
@@ -91,6 +96,20 @@ def check_points(study: "Study", points: Iterable["Point"]) -> None:
             sizes[place] = len(read_fleet(from_root(place)))
         key = "replicates" if values.get("precision") is None else "most_replicates"
         _check_memory(key, values[key], sizes[place], values.get("checkpoints", 1), len(policies))
+
+
+def _check_leaving(notebook: str, points: Iterable["Point"]) -> None:
+    from labkit.studies.leaving import check_replaying, check_serving, fleet_of
+
+    for point in points:
+        values = point.identity.parameters
+        policies = policy_names(values["policies"])
+        fleet = fleet_of(from_root(values["fleet"]), values.get("capacity", 1.0))
+        _check_memory("replicates", values["replicates"], len(fleet), 1, len(policies))
+        if notebook == SERVE:
+            check_serving(values, fleet)
+        else:
+            check_replaying(values, fleet, from_root(values["trace_path"]))
 
 
 def _check_families(points: Iterable["Point"]) -> None:

@@ -19,8 +19,10 @@ from labkit.studies.door import (
     ANSWER,
     GROWTH,
     LONG_RUN,
+    REPLAY,
     RULES,
     RUN,
+    SERVE,
     SURVEY,
     check_risk,
     check_values,
@@ -189,7 +191,7 @@ def _check_reads(answer: str, run: str) -> None:
     """Refuse one of the project's answer notebooks for runs of another of its notebooks than it reads."""
     reads = {ANSWER: RUN, GROWTH: LONG_RUN}
     read = reads.get(answer)
-    if read is None or run == read or run not in (RUN, LONG_RUN, SURVEY, RULES):
+    if read is None or run == read or run not in (RUN, LONG_RUN, SURVEY, RULES, SERVE, REPLAY):
         return
     fitting = [name for name, each in reads.items() if each == run]
     advice = f"name {fitting[0]}" if fitting else "remove [answer], since that notebook is its own answer"

@@ -15,7 +15,7 @@ import numpy as np
 import pandas as pd
 
 from labkit.analysis.sizing import replicates_for
-from labkit.analysis.tables import prepare
+from labkit.analysis.tables import moments_of, prepare
 from labkit.checks import check_whole, nearest
 from labkit.errors import InputError
 from labkit.records.identity import canonical, identify
@@ -334,7 +334,7 @@ def groups_of_means(measures: pd.DataFrame, measure: str) -> list[dict[str, Any]
     table, labels = prepare(measures, measure)
     found = []
     for _, rows in table.groupby(labels, sort=False, observed=True) if labels else [((), table)]:
-        values = rows.loc[rows["tasks"] == rows["tasks"].max(), measure].to_numpy(dtype=np.float64)
+        values = _at_the_end(rows)[measure].to_numpy(dtype=np.float64)
         labelled = {name: rows[name].iloc[0] for name in labels}
         mean, deviation = float(values.mean()), float(values.std(ddof=1)) if np.ptp(values) else 0.0
         cubes = np.mean(((values - mean) / deviation) ** 3) if deviation else 0.0
@@ -346,6 +346,13 @@ def groups_of_means(measures: pd.DataFrame, measure: str) -> list[dict[str, Any]
             )
         found.append({**labelled, "mean": mean, "deviation": deviation, "skewness": float(cubes)})
     return found
+
+
+def _at_the_end(rows: pd.DataFrame) -> pd.DataFrame:
+    """Return the rows of the last checkpoint, or of the highest load where work leaves."""
+    for name in moments_of(rows):
+        rows = rows[rows[name] == rows[name].max()]
+    return rows
 
 
 def _slope(smaller: float, larger: float, between: float) -> float:

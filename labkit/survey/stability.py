@@ -73,7 +73,7 @@ def refuse_unstable(fleet: Fleet, load_factor: float, *, even_split: bool, avail
     even_split : bool
         The rule splits each choice's demand in proportion to capacity, whatever the loads.
     availability : float
-        Mean share of the time that a server is up, where the work of a server that is down waits for it.
+        Mean share of the time that a server is up, where no work of a server that is down is lost.
 
     Raises
     ------
@@ -85,13 +85,15 @@ def refuse_unstable(fleet: Fleet, load_factor: float, *, even_split: bool, avail
     if load_factor >= limit:
         optimum = "1 ÷ the optimum utilisation" if limit < availability else "its whole capacity"
         raise InputError(
-            f"load_factor is {load_factor:g}; the fleet's stability limit{up} is {limit:.6g}, {optimum}, set by "
-            f"{bottleneck_words(fleet)}; give less, add capacity there, or give a limit of places."
+            f"load_factor is {load_factor:g}; the fleet's stability limit{up} is {limit:.6g}, {optimum}, "
+            f"set by {bottleneck_words(fleet)}; give less, add capacity there, or give a limit of places."
         )
     if even_split:
+        # While a server is down, its tasks go to others that are up: its own availability cancels.
         own, fullest = even_split_limit(fleet)
-        if load_factor >= own * availability:
+        if load_factor >= own:
             raise InputError(
-                f"load_factor is {load_factor:g}; one-choice overloads server {fleet.names[fullest]!r} from "
-                f"{own * availability:.6g} on{up} (other rules: {limit:.6g}); give less or another rule."
+                f"load_factor is {load_factor:g}; one-choice overloads server "
+                f"{fleet.names.take([fullest]).tolist()[0]!r} from {own:.6g} on (other rules: "
+                f"{limit:.6g}{up}); give less or another rule."
             )

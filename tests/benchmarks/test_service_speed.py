@@ -107,7 +107,8 @@ def test_serving_keeps_up_with_c(plain, report):
     assert math.isclose(row["sojourn_mean"], mean, rel_tol=1e-3)
     found = ratio(ours, lambda: plain(HORIZON))
     each = seconds(lambda: plain(HORIZON)) / (2 * completed) * 1e9
-    report(f"fcfs, least-loaded, {SERVERS} servers, load {LOAD}: {found:.2f} x the time of plain C ({each:.1f} ns an event)")
+    setting = f"fcfs, least-loaded, {SERVERS} servers, load {LOAD}"
+    report(f"{setting}: {found:.2f} x the time of plain C ({each:.1f} ns an event)")
     assert found <= 1.5
 
 

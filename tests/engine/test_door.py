@@ -67,7 +67,7 @@ def test_bad_arguments_get_one_sentence(changed, sentence):
 def test_a_snapshot_needs_a_period_and_a_whole_one_where_work_stays():
     with pytest.raises(lk.InputError, match="every is 0; give a number above 0"):
         lk.Snapshot(every=0)
-    with pytest.raises(lk.InputError, match="every is 0.5; give a whole number"):
+    with pytest.raises(lk.InputError, match=r"every is 0\.5; give a whole number"):
         lk.place(RING, "least-loaded", tasks=10, rng=1, information=lk.Snapshot(every=0.5))
 
 

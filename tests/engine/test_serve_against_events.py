@@ -111,7 +111,7 @@ def assert_same_tails(outcome, record, replicate):
     servers = len(record.capacity)
     levels = [time_at_levels(record, server, WARMUP, HORIZON) for server in range(servers)]
     for row in outcome.tails.query("replicate == @replicate").to_dict("records"):
-        time = sum(time for held in levels for load, time in held.items() if load >= row["tasks"])
+        time = sum(time for held in levels for load, time in held.items() if load >= row["at_least"])
         assert row["share"] == pytest.approx(time / servers / (HORIZON - WARMUP), rel=1e-9, abs=1e-9)
 
 
