@@ -13,7 +13,7 @@ from labkit.engine import queues as q
 from labkit.engine.arrival_times import Rates, poisson_batches
 from labkit.engine.failures import Failures, RandomFailures, checked_failures
 from labkit.engine.information import Information, checked_information
-from labkit.engine.service import DISCIPLINES, FAILURE_MODES, INTERVAL, ServiceJob, ServiceRules
+from labkit.engine.service import DISCIPLINES, FAILURE_MODES, INTERVAL, Moment, ServiceJob, ServiceRules
 from labkit.engine.service_checks import (
     FULL,
     checked_discipline,
@@ -178,6 +178,8 @@ def serve(
         target=math.inf if target is None else check_positive("target", target),
         levels=int(levels),
     )
+    if isinstance(failures, Failures):
+        failures.check_servers(fleet)
     job = _Serving(ServiceJob(fleet, rule, rules, seed), rates, law, failures, horizon)
     after = first_replicate + replicates
     numbers = range(first_replicate, after)
@@ -227,27 +229,10 @@ class _Serving:
         """Run one replicate up to the last edge."""
         job = self.job
         progress = job.start(replicate)
-        moments = iter(self._moments(replicate, edges))
-        at, what = next(moments)
+        progress.expect(self._moments(replicate, edges))
         for batch in poisson_batches(job.fleet, self.rates, self.law, job.seed, replicate):
-            stop = len(batch.times)
-            begin = 0
-            while True:
-                begin = progress.advance(batch, begin, stop, at)
-                if begin == stop:
-                    break
-                if what is None:
-                    progress.close(at)
-                    if not progress.measuring:
-                        progress.reset(at)
-                elif what[1]:
-                    progress.back(what[0], at)
-                else:
-                    progress.fail(what[0], at)
-                following = next(moments, None)
-                if following is None:
-                    return measured(progress, at)
-                at, what = following
+            if not progress.take(batch, beyond=False):
+                return measured(progress, float(edges[-1]))
         raise AssertionError("arrivals never end")
 
     def found_warm_up(self, replicates: range, workers: int) -> float:
@@ -268,9 +253,9 @@ class _Serving:
         series = np.array([intervals[:, INTERVAL.index("area")] for intervals in pilot])
         return float(edges[first_kept(series, name="the number of tasks in the pilot run")])
 
-    def _moments(self, replicate: int, edges: np.ndarray) -> Iterator[tuple[float, tuple[int, bool] | None]]:
+    def _moments(self, replicate: int, edges: np.ndarray) -> Iterator[Moment]:
         """Yield when an interval ends (None) or a server (position, whether it comes back) changes."""
-        ends = [(float(edge), None) for edge in edges]
+        ends: list[Moment] = [(float(edge), None) for edge in edges]
         if self.failures is None:
             return iter(ends)
         draws = generator(self.job.seed, replicate, FAILURES)

@@ -55,7 +55,9 @@ def from_name(argument: str, text: Any, kinds: Mapping[str, type], example: str,
     known = inspect.signature(kinds[name]).parameters
     values: dict[str, Any] = {}
     for part in filter(None, (part.strip() for part in (inside or "").split(","))):
-        key, equals, given = (piece.strip() for piece in part.partition("="))
+        # A colon will do: a line of a notebook's parameters cell may hold one equals sign only.
+        sign = "=" if "=" in part else ":"
+        key, equals, given = (piece.strip() for piece in part.partition(sign))
         if key in values:
             raise InputError(f"{argument} is {text!r}; give {key} once.")
         if not equals or key not in known:

@@ -93,6 +93,15 @@ class Failures:
         count = int(np.searchsorted(self.times, horizon, side="left"))
         return self.times[:count].copy(), servers[:count], self.ups[:count].copy()
 
+    def check_servers(self, fleet: Fleet) -> None:
+        """Refuse a schedule that names a server the fleet does not have.
+
+        Raises
+        ------
+        InputError
+        """
+        self._positions(fleet)
+
     def availability(self, fleet: Fleet, horizon: float) -> float:
         """Return the mean share of the time up to the horizon that a server is up."""
         times, _, ups = self.events(fleet, horizon, np.random.default_rng(0))

@@ -1,6 +1,7 @@
 """Running the loop for work that leaves: what one call prepares, and how one replicate goes on in time."""
 
-from collections.abc import Callable
+import math
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from functools import lru_cache
 from typing import NamedTuple
@@ -22,6 +23,10 @@ from labkit.randomness import COINS, MOVES, TURNS, kernel_state
 DISCIPLINES = {"fcfs": q.FCFS, "ps": q.SHARED, "sessions": q.SESSIONS}
 FAILURE_MODES = ("wait", "requeue", "lost")
 NO_LIMIT = np.iinfo(np.int64).max
+
+# When something happens, and what: None for the end of an interval, else a server and whether it comes back.
+Moment = tuple[float, tuple[int, bool] | None]
+NEVER: Moment = (math.inf, None)
 
 # What is kept of each interval, in order; after the first two, sums and counts.
 INTERVAL = (
@@ -149,6 +154,8 @@ class Progress:
         self.intervals: list[np.ndarray] = []
         self.since = 0.0
         self.measuring = False  # the warm-up is over
+        self.moments: Iterator[Moment] = iter(())
+        self.next = NEVER
 
     def _queues(self) -> tuple[np.ndarray, ...]:
         return (
@@ -182,6 +189,34 @@ class Progress:
             if done == stop or batch.times[done] >= until:
                 return done
             self._make_room(len(self.pool))
+
+    def expect(self, moments: Iterator[Moment]) -> None:
+        """Take the moments, in order, at which something other than an arrival happens."""
+        self.moments = moments
+        self.next = next(moments, NEVER)
+
+    def take(self, batch: Batch, *, beyond: bool) -> bool:
+        """Serve the tasks of a batch, and what happens between them.
+
+        The first end of an interval ends the warm-up. Returns whether there is something left to happen;
+        where nothing is, the rest of the batch is served only if `beyond`.
+        """
+        begin, stop = 0, len(batch.times)
+        while self.next is not NEVER or beyond:
+            at, what = self.next
+            begin = self.advance(batch, begin, stop, at)
+            if begin == stop:
+                return True
+            if what is None:
+                self.close(at)
+                if not self.measuring:
+                    self.reset(at)
+            elif what[1]:
+                self.back(what[0], at)
+            else:
+                self.fail(what[0], at)
+            self.next = next(self.moments, NEVER)
+        return False
 
     def _make_room(self, rows: int) -> None:
         self.pool = np.concatenate([self.pool, np.empty((rows, 5))])

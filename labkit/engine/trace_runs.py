@@ -12,7 +12,7 @@ import numpy as np
 from labkit.engine import queues as q
 from labkit.engine.failures import Failures, RandomFailures
 from labkit.engine.placement import Outcome, measured_loads
-from labkit.engine.service import Batch, ServiceJob
+from labkit.engine.service import Batch, Moment, ServiceJob
 from labkit.engine.service_measures import ServiceOutcome, measured
 from labkit.errors import InputError
 from labkit.fleet.model import Fleet
@@ -23,8 +23,6 @@ from labkit.traces.reading import Block, Trace
 
 AS_PLACED = "as-placed"
 ROWS = 65_536  # read and placed at a time
-# When something happens, and what: None for the end of an interval, else a server and whether it comes back.
-Moment = tuple[float, tuple[int, bool] | None]
 
 
 class AsPlaced(OneChoice):
@@ -169,7 +167,7 @@ class TraceRun:
         """Serve tasks that leave; return what `serve` returns."""
         job = self.job
         for lane, its in zip(self.lanes, moments, strict=True):
-            lane.expect(its)
+            lane.progress.expect(its)
         self._run(Lane.leave, (batch._replace(times=batch.times - window.origin) for batch in self.batches()))
         return ServiceOutcome(
             fleet=job.fleet, policy=job.rule.name, information=job.rules.information.name,
@@ -197,16 +195,6 @@ class Lane:
         self.job, self.progress = job, job.start(replicate)
         self.words = generator(job.seed, replicate, ARRIVALS).bit_generator
         self.measured: list[np.ndarray] = []
-        self.moments: Iterator[Moment] = iter(())
-        self.next: Moment = (math.inf, None)
-
-    def expect(self, moments: Iterator[Moment]) -> None:
-        """Take the moments at which an interval ends or a server fails or comes back."""
-        self.moments = moments
-        self._look_ahead()
-
-    def _look_ahead(self) -> None:
-        self.next = next(self.moments, (math.inf, None))
 
     def _own(self, batch: Batch) -> Batch:
         """Return the batch with the replicate's coins, and a line of its own for open options."""
@@ -231,22 +219,7 @@ class Lane:
 
     def leave(self, batch: Batch) -> None:
         """Serve the tasks of a batch, and what happens between them."""
-        batch, progress = self._own(batch), self.progress
-        begin, stop = 0, len(batch.times)
-        while True:
-            at, what = self.next
-            begin = progress.advance(batch, begin, stop, at)
-            if begin == stop:
-                return
-            if what is None:
-                progress.close(at)
-                if not progress.measuring:
-                    progress.reset(at)
-            elif what[1]:
-                progress.back(what[0], at)
-            else:
-                progress.fail(what[0], at)
-            self._look_ahead()
+        self.progress.take(self._own(batch), beyond=True)
 
     def finish(self, now: float) -> Any:
         """End the last interval at the time of the last row."""

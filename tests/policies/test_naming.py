@@ -32,3 +32,7 @@ def test_every_built_in_refuses_unknown_words():
 def test_malformed_names_are_refused(text):
     with pytest.raises(lk.InputError):
         parse_policy(text)
+
+
+def test_a_colon_will_do():
+    assert parse_policy("mixed(beta: 0.5)") == parse_policy("mixed(beta=0.5)")
