@@ -1,5 +1,6 @@
 """How much capacity holds a risk down where work leaves: a search over a common factor of all capacities."""
 
+import inspect
 import math
 from collections.abc import Callable
 from dataclasses import dataclass
@@ -10,7 +11,7 @@ import pandas as pd
 from labkit.analysis.block_bootstrap import block_bootstrap
 from labkit.analysis.headroom import headroom, replicates_needed
 from labkit.analysis.service_limits import service_limits
-from labkit.checks import check_fraction, check_positive
+from labkit.checks import check_fraction, check_positive, nearest
 from labkit.engine.failures import checked_failures
 from labkit.engine.placement import Outcome
 from labkit.engine.service_checks import checked_discipline, lasting_availability
@@ -98,7 +99,8 @@ def serve_headroom(
         Coverage of the limits, in (0, 1).
     tolerance : float
         How exactly the factor is searched for, as a share of it; it meets the risk, and is too large by that
-        share at most.
+        share at most. Where the least capacity that makes sense meets it already (1.02 × what the stability
+        limit asks for, or one place a server), that is the answer, and `criterion` says so.
     **serving
         All else that `labkit.serve` takes: horizon, warmup, service, discipline, replicates, rng, ...
 
@@ -129,6 +131,7 @@ def serve_headroom(
     load_factor = check_positive("load_factor", load_factor)
     sessions = checked_discipline(serving.get("discipline", "fcfs")) == "sessions"
     limited = serving.get("limit") is not None
+    _check_names(serve, serving, ("fleet", "policy", "load_factor", "target"))
     if target is not None and sessions:
         raise InputError(
             f"target is {target!r}, but sessions stay for their time whatever the capacity; leave it out."
@@ -145,12 +148,19 @@ def serve_headroom(
     if target is None and not limited:
         return _of_highest(run(1.0), load_factor, risk, confidence, "replicate")
     of = "late_share" if target is not None else "blocked_share"
+    failures, on_failure = checked_failures(serving.get("failures")), serving.get("on_failure", "wait")
+    if target is not None and (limited or (failures is not None and on_failure == "lost")):
+        what = "limit" if limited else 'on_failure="lost"'
+        raise InputError(f"{what} is given with a target; what is turned away or lost cannot be in time.")
     least = 0.0
-    if not sessions and not limited:
-        even_split = isinstance(parse_policy(policy), OneChoice)
-        least = CLOSEST * load_factor / highest_load_factor(fleet, even_split=even_split)
-        failures = checked_failures(serving.get("failures"))
-        least /= lasting_availability(failures, serving.get("on_failure", "wait"))
+    if limited:
+        # A server below a capacity of one holds no task.
+        least = 1.0 if fleet.capacity is None else 1.0 / float(fleet.capacity.min())
+    elif not sessions:
+        least = CLOSEST * load_factor / highest_load_factor(
+            fleet, even_split=isinstance(parse_policy(policy), OneChoice),
+            availability=lasting_availability(failures), requeued=on_failure == "requeue",
+        )  # fmt: skip
 
     def share(outcome: ServiceOutcome) -> tuple[float, float, float]:
         row = service_limits(outcome.measures, outcome.by_interval, of=of, confidence=confidence).iloc[0]
@@ -209,6 +219,12 @@ def replay_headroom(
     """
     check_fleet(fleet)
     risk, confidence, tolerance = _checked(risk, confidence, tolerance)
+    _check_names(replay, replaying, ("fleet", "trace", "policy", "rng", "block", "target"))
+    if replaying.get("limit") is not None or replaying.get("on_failure") == "lost":
+        what = "limit" if replaying.get("limit") is not None else 'on_failure="lost"'
+        raise InputError(
+            f"{what} turns work away; leave it out, since a capacity for all of it is looked for."
+        )
     queues = checked_discipline(replaying.get("discipline", "sessions")) != "sessions"
     if queues != (target is not None):
         raise InputError(
@@ -239,6 +255,19 @@ def _checked(risk: Any, confidence: Any, tolerance: Any) -> tuple[float, float, 
         check_fraction("confidence", confidence),
         check_fraction("tolerance", tolerance),
     )
+
+
+def _check_names(function: Callable[..., Any], given: dict[str, Any], taken: tuple[str, ...]) -> None:
+    """Refuse names that a function does not take, and what it needs and is not given."""
+    known = {
+        name: about for name, about in inspect.signature(function).parameters.items() if name not in taken
+    }
+    for name in given:
+        if name not in known:
+            raise InputError(f"{name} is no argument of {function.__name__}; {nearest(name, known)}.")
+    for name, about in known.items():
+        if about.default is about.empty and name not in given:
+            raise InputError(f"{name} is missing; {function.__name__} needs it.")
 
 
 def _of_highest(
@@ -307,34 +336,38 @@ def _search(
     least: float,
 ) -> Provision:
     """Search for the factors at which a share, and its two limits, meet the risk."""
-    known: dict[float, tuple[float, float, float]] = {}
+    known: dict[float, tuple[float, float, float]] = {}  # by the logarithm of the factor
     last: list[tuple[float, ServiceOutcome]] = []
 
-    def limits(factor: float) -> tuple[float, float, float]:
-        if factor not in known:
+    def limits(logarithm: float) -> tuple[float, float, float]:
+        if logarithm not in known:
+            factor = math.exp(logarithm)
             outcome = run(factor)
             last[:] = [(factor, outcome)]
-            known[factor] = share(outcome)
-        return known[factor]
+            known[logarithm] = share(outcome)
+        return known[logarithm]
 
+    floor = math.log(least) if least > 0 else -math.log(LARGEST)
     scales = []
     for which in range(3):
 
         def beyond(logarithm: float, which: int = which) -> float:
-            return limits(math.exp(logarithm))[which] - risk
+            return limits(logarithm)[which] - risk
 
-        low, high = _bracket(beyond, known, which, risk, least, of)
+        low, high = _bracket(beyond, known, which, risk, floor, of)
         # A share moves in steps where capacities are rounded: the side that meets the risk is the answer.
         while high - low > tolerance:
             middle = (low + high) / 2
             low, high = (middle, high) if beyond(middle) > 0 else (low, middle)
-        scales.append(math.exp(high))
+        scales.append(high)
     factor, outcome = last[0]
     criterion = f"sojourns beyond {target:g}" if target is not None else "blocked tasks"
-    found = (scales[0], min(scales), max(scales))
+    if scales[0] == floor:
+        criterion += ", at the least capacity that was tried"
+    found = (math.exp(scales[0]), math.exp(min(scales)), math.exp(max(scales)))
     table = _table(outcome, criterion, found, load_factor, risk, confidence, factor)
     curve = pd.DataFrame(
-        [(scale, *values) for scale, values in sorted(known.items())],
+        [(math.exp(logarithm), *values) for logarithm, values in sorted(known.items())],
         columns=["scale", "share", "lower", "upper"],
     )
     return Provision(table, curve)
@@ -345,13 +378,12 @@ def _bracket(
     known: dict[float, tuple[float, float, float]],
     which: int,
     risk: float,
-    least: float,
+    floor: float,
     of: str,
 ) -> tuple[float, float]:
     """Return logarithms of factors on both sides of the wanted one; twice the least where that will do."""
-    above = [math.log(factor) for factor, values in known.items() if values[which] > risk]
-    below = [math.log(factor) for factor, values in known.items() if values[which] <= risk]
-    floor = math.log(least) if least > 0 else -math.log(LARGEST)
+    above = [logarithm for logarithm, values in known.items() if values[which] > risk]
+    below = [logarithm for logarithm, values in known.items() if values[which] <= risk]
     start = max(0.0, floor)
     low = max(above, default=start)
     while beyond(low) <= 0:
@@ -362,7 +394,7 @@ def _bracket(
     high = min((value for value in below if value > low), default=low + math.log(STEP))
     while beyond(high) > 0:
         low, high = high, high + math.log(STEP)
-        if high > math.log(LARGEST * max(1.0, least)):
+        if high > math.log(LARGEST) + max(0.0, floor):
             raise InputError(
                 f"no capacity up to {LARGEST:g} times the present one brings {of} down to the risk of "
                 f"{risk:g}; accept a larger risk or a longer target."

@@ -11,7 +11,13 @@ from labkit.engine.failures import Failures, RandomFailures, checked_failures
 from labkit.engine.information import Information, checked_information
 from labkit.engine.placement import Outcome
 from labkit.engine.service import DISCIPLINES, FAILURE_MODES, ServiceJob, ServiceRules
-from labkit.engine.service_checks import FULL, checked_discipline, checked_limits
+from labkit.engine.service_checks import (
+    FULL,
+    MOST_INTERVALS,
+    checked_discipline,
+    checked_levels,
+    checked_limits,
+)
 from labkit.engine.service_measures import ServiceOutcome
 from labkit.engine.trace_runs import AS_PLACED, AsPlaced, TraceRun, Window
 from labkit.errors import InputError
@@ -20,8 +26,6 @@ from labkit.policies.base import Policy
 from labkit.policies.naming import parse_policy
 from labkit.randomness import FAILURES, check_replicates, generator, seed_sequence
 from labkit.traces.reading import Trace, open_trace
-
-MOST_INTERVALS = 100_000
 
 
 def replay(
@@ -156,7 +160,7 @@ def replay(
         fails=failures is not None,
         on_failure=on_failure,
         target=math.inf if target is None else check_positive("target", target),
-        levels=check_whole("levels", levels, least=0),
+        levels=checked_levels(levels),
     )
     if stays:
         marks = _checked_marks(checkpoints)

@@ -16,10 +16,13 @@ from labkit.engine.information import Information, checked_information
 from labkit.engine.service import DISCIPLINES, FAILURE_MODES, INTERVAL, Moment, ServiceJob, ServiceRules
 from labkit.engine.service_checks import (
     FULL,
+    MOST_INTERVALS,
     checked_discipline,
+    checked_levels,
     checked_limits,
     checked_rates,
     lasting_availability,
+    queues_are_cut,
 )
 from labkit.engine.service_laws import ServiceLaw, parse_service
 from labkit.engine.service_measures import Measured, ServiceOutcome, measured
@@ -155,19 +158,22 @@ def serve(
     horizon = check_positive("horizon", horizon)
     first_replicate, replicates = check_replicates(first_replicate, replicates)
     workers, intervals = check_whole("workers", workers), check_whole("intervals", intervals)
+    if intervals > MOST_INTERVALS:
+        raise InputError(f"intervals is {intervals}; give at most {MOST_INTERVALS:,}.")
     seed = seed_sequence(rng)
     discipline = checked_discipline(discipline)
     kind = DISCIPLINES[discipline]
     check_member("on_full", on_full, FULL)
     check_member("on_failure", on_failure, FAILURE_MODES)
-    if check_whole("levels", levels, least=0) > q.TOP:
-        raise InputError(f"levels is {levels}; give at most {q.TOP}.")
     limits = checked_limits(limit, fleet)
-    rates = checked_rates(load_factor * fleet.total_capacity / law.mean, profile, period)
+    rates = checked_rates(load_factor * fleet.total_capacity / law.mean, profile, period, horizon)
     failures = checked_failures(failures)
-    if kind != q.SESSIONS and limits is None:
-        up = lasting_availability(failures, on_failure)
-        refuse_unstable(fleet, load_factor, even_split=isinstance(rule, OneChoice), availability=up)
+    levels = checked_levels(levels)
+    if kind != q.SESSIONS and limits is None and not queues_are_cut(failures, on_failure):
+        refuse_unstable(
+            fleet, load_factor, even_split=isinstance(rule, OneChoice),
+            availability=lasting_availability(failures), requeued=on_failure == "requeue",
+        )  # fmt: skip
     rules = ServiceRules(
         discipline=kind,
         information=checked_information(information),
@@ -176,7 +182,7 @@ def serve(
         fails=failures is not None,
         on_failure=on_failure,
         target=math.inf if target is None else check_positive("target", target),
-        levels=int(levels),
+        levels=levels,
     )
     if isinstance(failures, Failures):
         failures.check_servers(fleet)

@@ -88,6 +88,12 @@ def test_places_for_one_percent_of_blocked_calls():
         ({"target": None, "discipline": "sessions", "limit": 3}, 'limit is 3; give "capacity"'),
         ({"target": 1e-4, "horizon": 30.0, "warmup": 1.0}, "no capacity up to 64 times"),
         ({"horizon": 100.0}, "warmup is 200 and horizon 100"),
+        ({"limit": "capacity"}, "limit is given with a target"),
+        (
+            {"failures": "random(up=9, down=1)", "on_failure": "lost"},
+            'on_failure="lost" is given with a target',
+        ),
+        ({"horizn": 3}, "horizn is no argument of serve; did you mean 'horizon'"),
     ],
 )
 def test_refusals(changed, sentence):
@@ -95,9 +101,19 @@ def test_refusals(changed, sentence):
         lk.serve_headroom(lk.ring(6), "least-loaded", **QUEUE | changed)
 
 
-def test_an_argument_that_does_not_exist_is_an_error():
-    with pytest.raises(TypeError, match="horizn"):
-        lk.serve_headroom(lk.ring(6), "least-loaded", **QUEUE, horizn=3)
+def test_what_is_needed_and_missing_is_named():
+    given = {name: value for name, value in QUEUE.items() if name != "horizon"}
+    with pytest.raises(lk.InputError, match="horizon is missing; serve needs it"):
+        lk.serve_headroom(lk.ring(6), "least-loaded", **given)
+
+
+def test_a_roomy_fleet_with_places_goes_down_to_one_place_a_server():
+    found = lk.serve_headroom(
+        lk.ring(4), "least-loaded", load_factor=0.1, risk=0.3, discipline="sessions", limit="capacity",
+        horizon=200.0, warmup=10.0, replicates=4, rng=1,
+    ).table.iloc[0]  # fmt: skip
+    assert found["scale"] == 1.0
+    assert found["criterion"] == "blocked tasks, at the least capacity that was tried"
 
 
 def test_too_few_replicates_for_the_risk_say_how_many():
@@ -148,6 +164,8 @@ def test_a_trace_with_queues_meets_its_target():
         ({"target": 3.0}, 'target is 3.0; give the longest sojourn with discipline "fcfs" or "ps"'),
         ({"block": 20.0}, "the trace has 4 full blocks; a risk of 0.1 with 95 % limits needs at least 36"),
         ({"risk": 2}, "risk is 2"),
+        ({"limit": 1}, "limit turns work away"),
+        ({"horizon": 3.0}, "horizon is no argument of replay"),
     ],
 )
 def test_refusals_of_traces(changed, sentence):

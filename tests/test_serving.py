@@ -120,6 +120,8 @@ SCHEDULE = pd.DataFrame({"time": [1.0], "server": ["nowhere"], "state": ["down"]
             "the fleet's stability limit with servers up 25 % of the time is 0.25",
         ),
         ({"on_full": "queue"}, "on_full is 'queue'; allowed: another, lost"),
+        ({"profile": [1.0, 2.0], "period": 1e-300}, "which makes more than 1e+08 parts"),
+        ({"intervals": 10**12}, "intervals is 1000000000000; give at most 100,000"),
         ({"failures": 0.1}, "failures is 0.1; give lk.Failures(schedule), lk.RandomFailures(up=, down=)"),
         ({"failures": "random(up=9)"}, "it needs down"),
         ({"failures": lk.Failures(SCHEDULE)}, "nowhere"),
@@ -235,3 +237,12 @@ def test_where_nothing_happens():
     assert row["completed"] == 0
     assert np.isnan(row["sojourn_mean"])
     assert abs(row["little_error"]) < 1e-9
+
+
+def test_huge_relative_rates_are_as_good_as_others():
+    given = {"profile": [1e308, 0.5e308], "period": 4.0, "horizon": 60.0}
+    pd.testing.assert_frame_equal(
+        serve(**given).measures, serve(**given | {"profile": [2.0, 1.0]}).measures, check_exact=True
+    )
+    with np.errstate(all="raise"):
+        serve(profile=[5e-324, 0.0], period=1.0)

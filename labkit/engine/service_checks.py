@@ -6,7 +6,8 @@ from typing import Any
 
 import numpy as np
 
-from labkit.checks import LARGEST_WHOLE, check_member, check_positive
+from labkit.checks import LARGEST_WHOLE, check_member, check_positive, check_whole
+from labkit.engine import queues as q
 from labkit.engine.arrival_times import Rates
 from labkit.engine.failures import Failures, RandomFailures
 from labkit.engine.service import DISCIPLINES
@@ -18,9 +19,13 @@ FULL = ("another", "lost")
 LONG_NAMES = {"first-come-first-served": "fcfs", "processor-sharing": "ps"}
 # Tasks a unit of time: beyond these, times of arrival are no numbers any more.
 LEAST_RATE, MOST_RATE = 1e-200, 1e200
+# Parts of a profile that a run goes through, and intervals that are kept.
+MOST_PIECES, MOST_INTERVALS = 1e8, 100_000
 
 
-def checked_rates(mean: float, profile: Sequence[float] | None, period: float | None) -> Rates:
+def checked_rates(
+    mean: float, profile: Sequence[float] | None, period: float | None, horizon: float
+) -> Rates:
     """Return arrival rates of this mean: constant, or following the profile of a period."""
     if not LEAST_RATE <= mean <= MOST_RATE:
         raise InputError(
@@ -40,8 +45,14 @@ def checked_rates(mean: float, profile: Sequence[float] | None, period: float | 
         raise InputError("profile holds only zeros; give at least one rate above 0.")
     if period is None:
         raise InputError("profile needs a period; give its length in units of time, such as period=24.0.")
-    relative = given.astype(np.float64)
-    return Rates(mean * relative / relative.mean(), check_positive("period", period) / relative.size)
+    relative = given.astype(np.float64) / float(given.max())
+    length = check_positive("period", period) / relative.size
+    if not length * MOST_PIECES >= horizon:
+        raise InputError(
+            f"period is {period:g}, which makes more than {MOST_PIECES:g} parts up to the horizon of "
+            f"{horizon:g}; give a longer one."
+        )
+    return Rates(mean * relative / relative.mean(), length)
 
 
 def checked_limits(limit: Any, fleet: Fleet) -> np.ndarray | None:
@@ -69,14 +80,23 @@ def checked_limits(limit: Any, fleet: Fleet) -> np.ndarray | None:
     return given.astype(np.int64)
 
 
-def lasting_availability(failures: Failures | RandomFailures | None, on_failure: str) -> float:
-    """Return the share of time that servers are up in the long run, where their work is not lost.
-
-    A schedule passes; only failures that go on for ever lower what a fleet can serve.
-    """
-    if isinstance(failures, RandomFailures) and on_failure != "lost":
+def lasting_availability(failures: Failures | RandomFailures | None) -> float:
+    """Return the share of time that servers are up in the long run; a schedule passes, and counts as none."""
+    if isinstance(failures, RandomFailures):
         return failures.up / (failures.up + failures.down)
     return 1.0
+
+
+def queues_are_cut(failures: Failures | RandomFailures | None, on_failure: str) -> bool:
+    """Tell whether failures go on losing all tasks of a server, so that no queue grows without end."""
+    return isinstance(failures, RandomFailures) and on_failure == "lost"
+
+
+def checked_levels(levels: Any) -> int:
+    """Return for how many numbers of tasks the time at each is kept."""
+    if check_whole("levels", levels, least=0) > q.TOP:
+        raise InputError(f"levels is {levels}; give at most {q.TOP}.")
+    return int(levels)
 
 
 def checked_discipline(discipline: Any) -> str:

@@ -52,7 +52,7 @@ def measured(progress: Progress, now: float) -> Measured:
 
 
 def quantiles(counts: np.ndarray, shares: np.ndarray, longest: float) -> np.ndarray:
-    """Return quantiles of times that were counted in bins, exact to half a bin: 0.1 %.
+    """Return quantiles of times that were counted in bins, exact to one bin: 0.2 %.
 
     Parameters
     ----------
@@ -96,7 +96,7 @@ class ServiceOutcome:
         - policy, information, replicate, load_factor, warmup, horizon
         - arrivals, completed: tasks that arrived and that left within the window
         - sojourn_mean, sojourn_p50, sojourn_p90, sojourn_p99, sojourn_max: time from arrival to departure,
-          of the tasks that left within the window; quantiles to 0.1 %
+          of the tasks that left within the window, those that were lost left out; quantiles to 0.2 %
         - waiting_mean, waiting_p50, waiting_p90, waiting_p99: sojourn less the time that the task alone on
           its server would have taken; waiting_share: share of tasks that waited
         - queue_mean: mean number of tasks on a server, waiting and in service

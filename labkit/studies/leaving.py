@@ -7,7 +7,7 @@ from typing import Any
 from labkit.checks import check_fraction, check_member, check_positive, check_whole
 from labkit.engine.failures import checked_failures
 from labkit.engine.service import DISCIPLINES, FAILURE_MODES
-from labkit.engine.service_checks import lasting_availability
+from labkit.engine.service_checks import lasting_availability, queues_are_cut
 from labkit.engine.service_laws import parse_service
 from labkit.errors import InputError, TooFewReplicates
 from labkit.fleet.model import Fleet
@@ -57,11 +57,15 @@ def check_serving(values: Mapping[str, Any], fleet: Fleet) -> None:
         return
     if values["replicates"] < 2:
         raise TooFewReplicates(f"replicates is {values['replicates']}; limits need at least 2.")
-    up = lasting_availability(failures, on_failure)
+    cut = queues_are_cut(failures, on_failure)
     for policy in values["policies"]:
-        rule = parse_policy(policy)
         refuse_unstable(
-            fleet, max(values["load_factors"]), even_split=isinstance(rule, OneChoice), availability=up
+            fleet,
+            max(values["load_factors"]),
+            even_split=isinstance(parse_policy(policy), OneChoice),
+            # The page serves without failures, too, where none of the work is lost.
+            availability=1.0 if cut else lasting_availability(failures),
+            requeued=on_failure == "requeue",
         )
 
 

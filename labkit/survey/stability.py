@@ -2,10 +2,8 @@
 
 import numpy as np
 
-from labkit.compiled import kept
 from labkit.errors import InputError
-from labkit.fleet.model import Fleet, check_fleet
-from labkit.survey.demand import split_evenly, total_demand
+from labkit.fleet.model import ABSENT, Fleet, check_fleet
 from labkit.survey.fair import fair_profile
 
 
@@ -36,16 +34,37 @@ def stability_limit(fleet: Fleet) -> float:
     return min(1.0, 1.0 / highest)
 
 
-def even_split_limit(fleet: Fleet) -> tuple[float, int]:
-    """Return the load factor at which one-choice overloads a server, and the server's position."""
+def even_split_limit(fleet: Fleet, availability: float = 1.0, *, requeued: bool = False) -> tuple[float, int]:
+    """Return the load factor from which on one-choice overloads a server, and the server's position.
+
+    Parameters
+    ----------
+    fleet : Fleet
+    availability : float
+        Share of the time that a server is up, each on its own. While a server is up it also gets what would
+        have gone to options that are down. That is exact for choices of two; of more options each counts as
+        always up, which is too high a limit.
+    requeued : bool
+        Tasks of a server that is down go to other options; else they wait for its return. The limit is then
+        one that must not be reached, but may be too high, since requeued tasks start anew.
+    """
     if fleet.implicit is not None:
-        return 1.0, 0
-    capacity, demand = (np.empty(0) if given is None else given for given in (fleet.capacity, fleet.demand))
+        return availability, 0
+    present = fleet.options != ABSENT
+    capacity = np.ones(fleet.size) if fleet.capacity is None else fleet.capacity
+    share = np.where(present, capacity[np.where(present, fleet.options, 0)], 0.0)
+    share /= share.sum(axis=1, keepdims=True)
+    up, down = availability, 1.0 - availability
+    pairs = present.sum(axis=1, keepdims=True) == 2
+    more = up * share + down if requeued else (up**2 * share + up * down + down**2 * share) / up
+    share = np.where(pairs & present, more, share)
+    demand = np.ones(len(share)) if fleet.demand is None else fleet.demand
     received = np.zeros(fleet.size)
-    kept(split_evenly)(fleet.options, demand, capacity, received)
-    total = total_demand(fleet) if fleet.demand is not None else float(len(fleet.options))
+    np.add.at(received, fleet.options[present], (share * demand[:, None])[present])
+    received /= capacity
     fullest = int(np.argmax(received))
-    return min(1.0, total / (float(received[fullest]) * fleet.total_capacity)), fullest
+    limit = demand.sum() / (float(received[fullest]) * fleet.total_capacity)
+    return min(availability, limit), fullest
 
 
 def bottleneck_words(fleet: Fleet, most: int = 4) -> str:
@@ -57,13 +76,17 @@ def bottleneck_words(fleet: Fleet, most: int = 4) -> str:
     return shown + (f" and {len(names) - most} more" if len(names) > most else "")
 
 
-def highest_load_factor(fleet: Fleet, *, even_split: bool) -> float:
+def highest_load_factor(
+    fleet: Fleet, *, even_split: bool, availability: float = 1.0, requeued: bool = False
+) -> float:
     """Return the load factor that a rule cannot reach: one-choice's own, or that of every rule."""
-    limit = stability_limit(fleet)
-    return min(limit, even_split_limit(fleet)[0]) if even_split else limit
+    limit = stability_limit(fleet) * availability
+    return min(limit, even_split_limit(fleet, availability, requeued=requeued)[0]) if even_split else limit
 
 
-def refuse_unstable(fleet: Fleet, load_factor: float, *, even_split: bool, availability: float = 1.0) -> None:
+def refuse_unstable(
+    fleet: Fleet, load_factor: float, *, even_split: bool, availability: float = 1.0, requeued: bool = False
+) -> None:
     """Refuse a load factor at which queues would grow without end.
 
     Parameters
@@ -74,6 +97,8 @@ def refuse_unstable(fleet: Fleet, load_factor: float, *, even_split: bool, avail
         The rule splits each choice's demand in proportion to capacity, whatever the loads.
     availability : float
         Mean share of the time that a server is up, where no work of a server that is down is lost.
+    requeued : bool
+        Tasks of a server that is down go to other options.
 
     Raises
     ------
@@ -89,11 +114,10 @@ def refuse_unstable(fleet: Fleet, load_factor: float, *, even_split: bool, avail
             f"set by {bottleneck_words(fleet)}; give less, add capacity there, or give a limit of places."
         )
     if even_split:
-        # While a server is down, its tasks go to others that are up: its own availability cancels.
-        own, fullest = even_split_limit(fleet)
+        own, fullest = even_split_limit(fleet, availability, requeued=requeued)
         if load_factor >= own:
             raise InputError(
                 f"load_factor is {load_factor:g}; one-choice overloads server "
-                f"{fleet.names.take([fullest]).tolist()[0]!r} from {own:.6g} on (other rules: "
-                f"{limit:.6g}{up}); give less or another rule."
+                f"{fleet.names.take([fullest]).tolist()[0]!r} from {own:.6g} on{up} (other rules: "
+                f"{limit:.6g}); give less or another rule."
             )

@@ -80,15 +80,6 @@ def test_a_study_with_a_single_network_is_enough(done, capsys):
     assert "On a ring of 60" in (folder / "answers" / "one" / "answer.txt").read_text()
 
 
-def test_two_sizes_are_no_law(done, capsys):
-    folder, _ = done
-    (folder / "few.toml").write_text(of_one_network("[9, 12]", 4))
-    assert run(folder, "few") == 2
-    err = capsys.readouterr().err
-    assert "measures has no growth to fit: " in err
-    assert "2 sizes, too few for a law of growth" in err
-
-
 def test_more_precision_means_more_replicates_and_says_so(done, capsys):
     folder, _ = done
     text = STUDY.format(families='["complete"]', sizes="[9]").split("[answer]")[0]

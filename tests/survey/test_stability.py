@@ -106,13 +106,18 @@ def test_refusals_name_limit_and_bottleneck():
     refuse_unstable(fleet, own * 0.999, even_split=True)
     with pytest.raises(lk.InputError, match=r"one-choice overloads server 'b' from .* on \(other rules: "):
         refuse_unstable(fleet, own, even_split=True)
-    # what a server's being down costs it, it does not get meanwhile
+    # A server in the middle gets half of two choices, and when it is up all of a choice whose other end is
+    # down: per unit of work (u²/2 + u(1 − u) + (1 − u)²/2) / u = 1/(2u) of each choice's half.
     path = fleet_of([1, 1, 1], [("a", "b"), ("b", "c")])
-    refuse_unstable(path, 0.66, even_split=True, availability=0.7)
+    refuse_unstable(path, 2 / 3 * 0.7 * 0.999, even_split=True, availability=0.7)
     with pytest.raises(
-        lk.InputError, match=r"server 'b' from 0\.666667 on \(other rules: 0\.7 with servers up 70 %"
+        lk.InputError,
+        match=r"server 'b' from 0\.466667 on with servers up 70 % of the time \(other rules: 0\.7",
     ):
-        refuse_unstable(path, 0.67, even_split=True, availability=0.7)
+        refuse_unstable(path, 2 / 3 * 0.7 * 1.001, even_split=True, availability=0.7)
+    # Requeued work must be done while it is up: 0.7/2 + 0.3 of each choice.
+    own, _ = even_split_limit(path, 0.7, requeued=True)
+    assert own == pytest.approx(1 / (3 * 0.65))
     with pytest.raises(lk.InputError, match="overloads server 1 from"):
         refuse_unstable(lk.fleet_from_graph(nx.path_graph(3)), 0.67, even_split=True)
     with pytest.raises(lk.InputError, match="fleet is str"):
