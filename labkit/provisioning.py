@@ -6,6 +6,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
 
+import numpy as np
 import pandas as pd
 
 from labkit.analysis.block_bootstrap import block_bootstrap
@@ -22,6 +23,7 @@ from labkit.fleet.scaling import scaled
 from labkit.policies.base import Policy
 from labkit.policies.naming import parse_policy
 from labkit.policies.one_choice import OneChoice
+from labkit.randomness import seed_sequence
 from labkit.replaying import replay
 from labkit.serving import serve
 from labkit.survey.stability import highest_load_factor
@@ -31,6 +33,7 @@ CLOSEST = 1.02
 # A fleet this many times as large settles any question of a target, or nothing does.
 LARGEST = 64.0
 STEP = 1.25
+RESAMPLES = 1_999
 
 
 @dataclass(frozen=True)
@@ -146,7 +149,7 @@ def serve_headroom(
         return serve(grown, policy, load_factor=load_factor / factor, target=target, **serving)
 
     if target is None and not limited:
-        return _of_highest(run(1.0), load_factor, risk, confidence, "replicate")
+        return _of_highest(run(1.0), load_factor, risk, confidence)
     of = "late_share" if target is not None else "blocked_share"
     failures, on_failure = checked_failures(serving.get("failures")), serving.get("on_failure", "wait")
     if target is not None and (limited or (failures is not None and on_failure == "lost")):
@@ -185,8 +188,9 @@ def replay_headroom(
     """Find the capacity at which a recorded trace meets a risk, by the factor that all capacities need.
 
     - Without `target`, for sessions (the default discipline): the highest utilisation within a block of time,
-      such as a day, goes beyond 1 in at most a share `risk` of the blocks. One replay tells it, as in
-      `labkit.serve_headroom`; the limits assume that blocks are independent.
+      such as a day, goes beyond 1 in at most a share `risk` of the blocks, over all coins. One replay
+      tells it, as in `labkit.serve_headroom`; the limits come from whole blocks drawn anew (bootstrap), and
+      take blocks as independent.
     - With `target`: at most a share `risk` of the tasks takes longer; limits by `labkit.block_bootstrap`.
 
     Parameters
@@ -240,7 +244,7 @@ def replay_headroom(
         return outcome
 
     if target is None:
-        return _of_highest(run(1.0), math.nan, risk, confidence, "interval")
+        return _of_highest_in_blocks(run(1.0), risk, confidence, rng)
 
     def share(outcome: ServiceOutcome) -> tuple[float, float, float]:
         row = block_bootstrap(outcome.by_interval, of="late_share", confidence=confidence, rng=rng).iloc[0]
@@ -270,30 +274,39 @@ def _check_names(function: Callable[..., Any], given: dict[str, Any], taken: tup
             raise InputError(f"{name} is missing; {function.__name__} needs it.")
 
 
-def _of_highest(
-    outcome: ServiceOutcome, load_factor: float, risk: float, confidence: float, each: str
-) -> Provision:
+def _of_highest(outcome: ServiceOutcome, load_factor: float, risk: float, confidence: float) -> Provision:
     """Return the factor from the highest utilisations at factor 1: they fall in proportion to it."""
-    if each == "replicate":
-        highest = outcome.measures
-        words = "highest utilisation beyond 1 in the window"
-    else:
-        # The last interval is shorter than the others, unless it ends with the trace.
-        table = outcome.by_interval
-        full = (table["end"] - table["start"]) >= (table["end"] - table["start"]).max() * (1 - 1e-9)
-        # Coins are no other days: of each block the mean over replicates.
-        means = table[full].groupby("interval")["max_utilisation"].mean()
-        needed = replicates_needed(risk, confidence)
-        if len(means) < needed:
-            raise TooFewReplicates(
-                f"the trace has {len(means)} full blocks; a risk of {risk:g} with {100 * confidence:g} % "
-                f"limits needs at least {needed}, so give shorter blocks, a longer trace, or a larger risk."
-            )
-        highest = means.rename_axis("replicate").reset_index().assign(horizon=outcome.horizon)
-        words = "highest utilisation beyond 1 in a block"
-    found = headroom(highest, risk=risk, confidence=confidence, of="max_utilisation").iloc[0]
-    limits = (found["headroom"], found["lower"], found["upper"])
+    row = headroom(outcome.measures, risk=risk, confidence=confidence, of="max_utilisation").iloc[0]
+    limits = (row["headroom"], row["lower"], row["upper"])
+    words = "highest utilisation beyond 1 in the window"
     return Provision(_table(outcome, words, limits, load_factor, risk, confidence), pd.DataFrame())
+
+
+def _of_highest_in_blocks(outcome: ServiceOutcome, risk: float, confidence: float, rng: Any) -> Provision:
+    """Return the factor from the highest utilisation of each block and replicate.
+
+    Coins are no other days: the share beyond is a mean over blocks and coins, its limits come from whole
+    blocks drawn anew.
+    """
+    table = outcome.by_interval
+    # The last interval is shorter than the others, unless it ends with the trace.
+    length = table["end"] - table["start"]
+    full = table[length >= length.max() * (1 - 1e-9)]
+    highest = full.pivot(index="interval", columns="replicate", values="max_utilisation").to_numpy()
+    needed = replicates_needed(risk, confidence)
+    if len(highest) < needed:
+        raise TooFewReplicates(
+            f"the trace has {len(highest)} full blocks; a risk of {risk:g} with {100 * confidence:g} % "
+            f"limits needs at least {needed}, so give shorter blocks, a longer trace, or a larger risk."
+        )
+    draws = np.random.default_rng(seed_sequence(rng))
+    drawn = draws.integers(0, len(highest), (RESAMPLES, len(highest)))
+    again = [np.quantile(highest[blocks], 1 - risk, method="inverted_cdf") for blocks in drawn]
+    estimate = float(np.quantile(highest, 1 - risk, method="inverted_cdf"))
+    lower, upper = np.quantile(again, [(1 - confidence) / 2, (1 + confidence) / 2])
+    words = "highest utilisation beyond 1 in a block"
+    limits = (estimate, min(float(lower), estimate), max(float(upper), estimate))
+    return Provision(_table(outcome, words, limits, math.nan, risk, confidence), pd.DataFrame())
 
 
 def _table(

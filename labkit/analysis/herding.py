@@ -32,8 +32,8 @@ def against_blind(
     Returns
     -------
     pandas.DataFrame
-        One row a network, policy and age: estimate, lower, upper (of the ratio of the means, limits from the
-        differences of paired replicates), blind_mean, mean.
+        One row a network, policy and age: estimate, lower, upper (of the ratio of the means of paired
+        replicates, by the delta method), blind_mean, mean.
 
     Raises
     ------
@@ -54,7 +54,9 @@ def against_blind(
         others = group[group["policy"] != blind]
         for (policy, age), runs in others.groupby(["policy", "age"], sort=True):
             values = runs.set_index("replicate")[of]
-            ratios = values / base.mean() - (base.reindex(values.index) / base.mean() - 1)
+            ratio = values.mean() / base.mean()
+            # The delta method: how far each pair of replicates is from this ratio.
+            ratios = ratio + (values - ratio * base.reindex(values.index)) / base.mean()
             count = len(ratios)
             if count < 2 or ratios.isna().any():
                 raise TooFewReplicates(
@@ -135,13 +137,22 @@ def herding_words(found: pd.DataFrame, *, service_time: float, unit: str) -> str
         if np.isfinite(row["age"]):
             lines.append(
                 f"{where}{row['policy']} is worse than not looking once reports are about {row['age']:.3g} "
-                f"mean service times ({service_time * row['age']:.3g} {unit}) apart."
+                f"mean service times ({service_time * row['age']:.3g} {unit}) apart{_how_sure(row)}."
             )
         elif np.isfinite(row["better_at"]):
             lines.append(
-                f"{where}{row['policy']} is better than not looking at each age that was tried, up to "
-                f"{row['better_at']:.3g} mean service times."
+                f"{where}{row['policy']} is better than not looking up to {row['better_at']:.3g} mean "
+                "service times, and on the whole at each age that was tried."
             )
         else:
-            lines.append(f"{where}{row['policy']} is not better than not looking at any age that was tried.")
+            lines.append(
+                f"{where}{row['policy']} is not better than not looking, with certainty, at the youngest age "
+                "that was tried."
+            )
     return "\n".join(lines)
+
+
+def _how_sure(row: pd.Series) -> str:
+    if np.isfinite(row["better_at"]) and np.isfinite(row["worse_at"]):
+        return f" (better for certain up to {row['better_at']:.3g}, worse at {row['worse_at']:.3g})"
+    return " (within the uncertainty of these replicates)"

@@ -35,7 +35,7 @@ def measure_words(measure: str, unit: str) -> str:
     return MEASURES.get(measure, measure).format(unit=unit)
 
 
-def stability_words(fleet: Fleet, policies: Iterable[Any]) -> str:
+def stability_words(fleet: Fleet, policies: Iterable[Any], *, sessions: bool = False) -> str:
     """Return, in Markdown, which load factors the fleet and each rule can serve at all.
 
     Parameters
@@ -43,6 +43,8 @@ def stability_words(fleet: Fleet, policies: Iterable[Any]) -> str:
     fleet : Fleet
     policies : iterable of Policy or str
         The rules that are to be run.
+    sessions : bool
+        Tasks do not queue, so that any load can be carried.
     """
     limit, which = stability_limit(fleet), bottleneck_words(fleet, 9)
     if which == "all servers":
@@ -55,6 +57,11 @@ def stability_words(fleet: Fleet, policies: Iterable[Any]) -> str:
         f"{choices}.",
         f"- **Stability limit**: a load factor of {limit:.4g}; {reason}.",
     ]
+    if sessions:
+        return (
+            f"{lines[0]}\n- **Sessions** do not queue: any load can be carried, and what counts is how often "
+            "a server holds more than its capacity."
+        )
     if any(isinstance(parse_policy(policy), OneChoice) for policy in policies):
         own, fullest = even_split_limit(fleet)
         if own < limit:
@@ -248,17 +255,18 @@ def replay_page(
     ].mean()
     beyond = by_interval.assign(beyond=by_interval["max_utilisation"] > 1)
     blocks = by_interval["interval"].nunique()
-    columns = {
-        "highest load ÷ capacity": means["max_utilisation"].round(3),
-        f"blocks beyond capacity, of {blocks}": beyond.groupby("policy")["beyond"]
-        .mean()
-        .mul(blocks)
-        .round(1),
-        "highest load": means["max_load"].round(1),
-    }
-    if not sessions:
-        del columns[f"blocks beyond capacity, of {blocks}"]
+    columns = {"highest load": means["max_load"].round(1)}
+    if sessions:
         columns |= {
+            "highest load ÷ capacity": means["max_utilisation"].round(3),
+            f"blocks beyond capacity, of {blocks}": beyond.groupby("policy")["beyond"]
+            .mean()
+            .mul(blocks)
+            .round(1),
+        }
+    else:
+        columns |= {
+            "utilisation": means["utilisation"].round(3),
             f"mean sojourn, {unit}": means["sojourn_mean"].round(3),
             f"1 % exceed, {unit}": means["sojourn_p99"].round(3),
         }
@@ -266,13 +274,13 @@ def replay_page(
     return table.rename(index=shown_name).rename_axis("rule")
 
 
-def bands_page(levels: pd.DataFrame, against: pd.DataFrame, baseline: str) -> pd.DataFrame:
+def bands_page(levels: pd.DataFrame, against: pd.DataFrame | None, baseline: str) -> pd.DataFrame:
     """Return bands of `labkit.block_bootstrap` as text, one row a rule: levels and differences.
 
     Parameters
     ----------
     levels, against : pandas.DataFrame
-        Of one or several measures, without and with the baseline.
+        Of one or several measures, without and with the baseline; None where there is one rule only.
     baseline : str
         The policy that the others are compared with.
     """
@@ -280,15 +288,14 @@ def bands_page(levels: pd.DataFrame, against: pd.DataFrame, baseline: str) -> pd
         "max_utilisation": "mean over blocks of the highest load ÷ capacity",
         "overload_share": "share of blocks beyond capacity",
         "late_share": "share of late tasks",
+        "sojourn_mean": "mean sojourn",
     }
     tables = {}
     for of, rows in levels.groupby("of", sort=False):
-        tables[words[str(of)]] = pd.DataFrame(
-            {
-                f"{100 * rows['confidence'].iloc[0]:g} % band": _texts(_possible(rows)),
-                f"less that of {shown_name(baseline)}": _texts(against[against["of"] == of]),
-            }
-        )
+        columns = {f"{100 * rows['confidence'].iloc[0]:g} % band": _texts(_possible(rows))}
+        if against is not None:
+            columns[f"less that of {shown_name(baseline)}"] = _texts(against[against["of"] == of])
+        tables[words[str(of)]] = pd.DataFrame(columns)
     table = pd.concat(tables, axis=1).fillna("–")
     return table.rename(index=shown_name).rename_axis("rule")
 

@@ -29,6 +29,7 @@ def profile_of_day(facts: TraceFacts, *, day: float, unit: str) -> Figure:
     matplotlib.figure.Figure
     """
     table = facts.arrivals.pivot(index="day", columns="part", values="tasks")
+    table = table.reindex(columns=range(facts.parts))
     whole = table.dropna()
     edges = np.linspace(0.0, day, facts.parts + 1)
     figure = Figure(figsize=(7.6, 3.4), layout="constrained")
@@ -44,11 +45,10 @@ def profile_of_day(facts: TraceFacts, *, day: float, unit: str) -> Figure:
     axes.set_xlim(0, day)
     axes.xaxis.set_major_locator(MaxNLocator(12, steps=[1, 2, 3, 6, 10]))
     axes.xaxis.set_major_formatter(plain)
-    axes.set_xlabel(f"time of day since the first row of the log, {unit}")
+    axes.set_xlabel(f"time since the first row of the log, in days of {day:g} {unit}")
     axes.set_ylabel(f"tasks in each of {facts.parts} parts of a day")
     each = "thin: each day" if len(table) <= MOST_LINES else "band: all days"
-    axes.set_title(
-        f"thick: mean of {max(len(whole), 1):,} whole days · {each}", fontsize=9, fontweight="normal"
-    )
+    days = f"mean of {len(whole):,} whole days" if len(whole) else "what there is of one day"
+    axes.set_title(f"thick: {days} · {each}", fontsize=9, fontweight="normal")
     axes.grid(True)
     return figure

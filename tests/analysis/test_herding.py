@@ -15,7 +15,7 @@ def measures(crossing=4.0, replicates=5):
     base = 10.0 + np.arange(replicates)
     rows = [("a ring", np.nan, "one-choice", at, base[at]) for at in range(replicates)]
     rows += [
-        ("a ring", age, "least-loaded", at, base[at] + base.mean() * (age / crossing - 1) + 0.01 * (-1) ** at)
+        ("a ring", age, "least-loaded", at, base[at] * age / crossing + 0.01 * (-1) ** at)
         for age in AGES
         for at in range(replicates)
     ]
@@ -40,8 +40,8 @@ def test_the_age_is_where_the_ratio_crosses_one():
     ("crossing", "words"),
     [
         (3.0, "worse than not looking once reports are about 2.83"),
-        (100.0, "better than not looking at each age that was tried, up to 8"),
-        (0.5, "not better than not looking at any age"),
+        (100.0, "better than not looking up to 8 mean service times"),
+        (0.5, "not better than not looking, with certainty, at the youngest age"),
     ],
 )
 def test_words(crossing, words):
