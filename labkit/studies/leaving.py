@@ -46,12 +46,13 @@ def check_serving(values: Mapping[str, Any], fleet: Fleet) -> None:
         raise InputError(
             f"warmup is {warmup:g} and horizon {horizon:g}; give a warm-up of at least 0 and a later horizon."
         )
-    for age in values["report_ages"]:
-        check_positive("report_ages", age)
     check_fraction("risk", values["risk"])
     check_positive("target", values["target"])
-    for load in values["load_factors"]:
-        check_positive("load_factors", load)
+    for name in ("load_factors", "report_ages"):
+        for place, number in enumerate(values[name]):
+            check_positive(name, number)
+            if number in values[name][:place]:
+                raise InputError(f"{name} holds {number:g} more than once; give each once.")
     if discipline == "sessions":
         _check_replicates(values["replicates"], values["risk"])
         return
@@ -92,6 +93,11 @@ def check_replaying(values: Mapping[str, Any], fleet: Fleet, trace: Path) -> Non
         raise InputError(
             f"{source.label} has no column 'duration', so that its work stays; lk.replay places it, and "
             "headroom.ipynb answers for a fleet made of it."
+        )
+    if source.unit == "s" and values["unit"] not in ("seconds", "s"):
+        raise InputError(
+            f"unit is {values['unit']!r}, but the times of {source.label} are dates, which become seconds; "
+            'give unit "seconds", and day, block and warmup in seconds (a day has 86400).'
         )
     discipline = check_member("discipline", values["discipline"], tuple(DISCIPLINES))
     block = check_positive("block", values["block"])

@@ -121,6 +121,7 @@ def test_a_log_is_replayed_beside_what_happened_on_a_fleet_made_of_it(place, tmp
         ("serve", {"warmup": 60.0}, "warmup is 60 and horizon 60"),
         ("serve", {"failures": "often"}, "failures is 'often'"),
         ("serve", {"report_ages": [0.0]}, "report_ages is 0"),
+        ("serve", {"load_factors": [0.5, 0.5]}, "load_factors holds 0.5 more than once"),
         ("serve", {"discipline": "sessions"}, r"there are 2 replicates; limits at a risk of 0.05 need 7\d"),
         ("replay", {"policies": ["fastest"]}, "policy is 'fastest'"),
         ("replay", {"trace_path": "no-such-log.csv"}, "trace_path is '.*no-such-log.csv'"),
@@ -147,6 +148,15 @@ def test_a_log_of_work_that_stays_is_sent_elsewhere(place, tmp_path, capsys):
     path = study_file(tmp_path, "replay", replaying(place) | {"trace_path": str(tmp_path / "stays.csv")})
     assert main(["run", str(path), "--store", str(tmp_path / "runs")]) == 2
     assert "no column 'duration', so that its work stays" in capsys.readouterr().err
+
+
+def test_a_log_with_dates_is_in_seconds(place, tmp_path, capsys):
+    log = pd.read_csv(place / "log" / "trace.csv")
+    log["time"] = pd.Timestamp("2031-03-01") + pd.to_timedelta(log["time"], unit="h")
+    log.to_csv(tmp_path / "dated.csv", index=False)
+    path = study_file(tmp_path, "replay", replaying(place) | {"trace_path": str(tmp_path / "dated.csv")})
+    assert main(["run", str(path), "--store", str(tmp_path / "runs")]) == 2
+    assert "are dates, which become seconds" in capsys.readouterr().err
 
 
 def test_the_notebook_itself_refuses_too(place, tmp_path):
