@@ -10,6 +10,7 @@ import numpy as np
 import pandas as pd
 
 from labkit.analysis.block_bootstrap import block_bootstrap
+from labkit.analysis.capacity_search import Share, find_scale
 from labkit.analysis.headroom import headroom, replicates_needed
 from labkit.analysis.service_limits import service_limits
 from labkit.checks import check_fraction, check_positive, nearest
@@ -30,9 +31,6 @@ from labkit.survey.stability import highest_load_factor
 
 # So close to the stability limit, runs are too short to tell anything.
 CLOSEST = 1.02
-# A fleet this many times as large settles any question of a target, or nothing does.
-LARGEST = 64.0
-STEP = 1.25
 RESAMPLES = 1_999
 
 
@@ -114,8 +112,7 @@ def serve_headroom(
     Raises
     ------
     InputError
-        When an argument is refused, or no factor up to 64 meets the risk (a target below the longest
-        requirements, say, on sessions).
+        When an argument is refused, or no factor up to 64 meets the risk.
     TooFewReplicates
         When the replicates do not suffice for the risk.
 
@@ -135,6 +132,8 @@ def serve_headroom(
     sessions = checked_discipline(serving.get("discipline", "fcfs")) == "sessions"
     limited = serving.get("limit") is not None
     _check_names(serve, serving, ("fleet", "policy", "load_factor", "target"))
+    # A Generator would give each factor other arrivals.
+    serving["rng"] = seed_sequence(serving["rng"])
     if target is not None and sessions:
         raise InputError(
             f"target is {target!r}, but sessions stay for their time whatever the capacity; leave it out."
@@ -169,7 +168,7 @@ def serve_headroom(
         row = service_limits(outcome.measures, outcome.by_interval, of=of, confidence=confidence).iloc[0]
         return row["estimate"], row["lower"], row["upper"]
 
-    return _search(run, share, of, target, load_factor, risk, confidence, tolerance, least)
+    return _search(fleet, run, share, of, target, load_factor, risk, confidence, tolerance, least)
 
 
 def replay_headroom(
@@ -224,6 +223,7 @@ def replay_headroom(
     check_fleet(fleet)
     risk, confidence, tolerance = _checked(risk, confidence, tolerance)
     _check_names(replay, replaying, ("fleet", "trace", "policy", "rng", "block", "target"))
+    seed = seed_sequence(rng)
     if replaying.get("limit") is not None or replaying.get("on_failure") == "lost":
         what = "limit" if replaying.get("limit") is not None else 'on_failure="lost"'
         raise InputError(
@@ -238,19 +238,19 @@ def replay_headroom(
 
     def run(factor: float) -> ServiceOutcome:
         grown = scaled(fleet, factor)
-        outcome = replay(grown, trace, policy, rng=rng, block=block, target=target, **replaying)
+        outcome = replay(grown, trace, policy, rng=seed, block=block, target=target, **replaying)
         if isinstance(outcome, Outcome):
             raise InputError("trace has no column 'duration'; work that stays needs labkit.headroom instead.")
         return outcome
 
     if target is None:
-        return _of_highest_in_blocks(run(1.0), risk, confidence, rng)
+        return _of_highest_in_blocks(run(1.0), risk, confidence, seed)
 
     def share(outcome: ServiceOutcome) -> tuple[float, float, float]:
-        row = block_bootstrap(outcome.by_interval, of="late_share", confidence=confidence, rng=rng).iloc[0]
+        row = block_bootstrap(outcome.by_interval, of="late_share", confidence=confidence, rng=seed).iloc[0]
         return row["estimate"], row["lower"], row["upper"]
 
-    return _search(run, share, "late_share", target, math.nan, risk, confidence, tolerance, 0.0)
+    return _search(fleet, run, share, "late_share", target, math.nan, risk, confidence, tolerance, 0.0)
 
 
 def _checked(risk: Any, confidence: Any, tolerance: Any) -> tuple[float, float, float]:
@@ -279,10 +279,14 @@ def _of_highest(outcome: ServiceOutcome, load_factor: float, risk: float, confid
     row = headroom(outcome.measures, risk=risk, confidence=confidence, of="max_utilisation").iloc[0]
     limits = (row["headroom"], row["lower"], row["upper"])
     words = "highest utilisation beyond 1 in the window"
-    return Provision(_table(outcome, words, limits, load_factor, risk, confidence), pd.DataFrame())
+    return Provision(
+        _table(outcome.fleet, outcome, words, limits, load_factor, risk, confidence), pd.DataFrame()
+    )
 
 
-def _of_highest_in_blocks(outcome: ServiceOutcome, risk: float, confidence: float, rng: Any) -> Provision:
+def _of_highest_in_blocks(
+    outcome: ServiceOutcome, risk: float, confidence: float, seed: np.random.SeedSequence
+) -> Provision:
     """Return the factor from the highest utilisation of each block and replicate.
 
     Coins are no other days: the share beyond is a mean over blocks and coins, its limits come from whole
@@ -299,24 +303,26 @@ def _of_highest_in_blocks(outcome: ServiceOutcome, risk: float, confidence: floa
             f"the trace has {len(highest)} full blocks; a risk of {risk:g} with {100 * confidence:g} % "
             f"limits needs at least {needed}, so give shorter blocks, a longer trace, or a larger risk."
         )
-    draws = np.random.default_rng(seed_sequence(rng))
+    draws = np.random.default_rng(seed)
     drawn = draws.integers(0, len(highest), (RESAMPLES, len(highest)))
     again = [np.quantile(highest[blocks], 1 - risk, method="inverted_cdf") for blocks in drawn]
     estimate = float(np.quantile(highest, 1 - risk, method="inverted_cdf"))
     lower, upper = np.quantile(again, [(1 - confidence) / 2, (1 + confidence) / 2])
     words = "highest utilisation beyond 1 in a block"
     limits = (estimate, min(float(lower), estimate), max(float(upper), estimate))
-    return Provision(_table(outcome, words, limits, math.nan, risk, confidence), pd.DataFrame())
+    return Provision(
+        _table(outcome.fleet, outcome, words, limits, math.nan, risk, confidence), pd.DataFrame()
+    )
 
 
 def _table(
+    fleet: Fleet,
     outcome: ServiceOutcome,
     criterion: str,
     scales: tuple[float, float, float],
     load_factor: float,
     risk: float,
     confidence: float,
-    per: float = 1.0,
 ) -> pd.DataFrame:
     scale, lower, upper = scales
     return pd.DataFrame(
@@ -329,7 +335,7 @@ def _table(
                 "scale": scale,
                 "lower": lower,
                 "upper": upper,
-                "capacity": scale * outcome.fleet.total_capacity / per,
+                "capacity": scale * fleet.total_capacity,
                 "load_factor": load_factor / scale,
                 "confidence": confidence,
             }
@@ -338,8 +344,9 @@ def _table(
 
 
 def _search(
+    fleet: Fleet,
     run: Callable[[float], ServiceOutcome],
-    share: Callable[[ServiceOutcome], tuple[float, float, float]],
+    share: Callable[[ServiceOutcome], Share],
     of: str,
     target: float | None,
     load_factor: float,
@@ -348,68 +355,17 @@ def _search(
     tolerance: float,
     least: float,
 ) -> Provision:
-    """Search for the factors at which a share, and its two limits, meet the risk."""
-    known: dict[float, tuple[float, float, float]] = {}  # by the logarithm of the factor
-    last: list[tuple[float, ServiceOutcome]] = []
+    last: dict[str, ServiceOutcome] = {}
 
-    def limits(logarithm: float) -> tuple[float, float, float]:
-        if logarithm not in known:
-            factor = math.exp(logarithm)
-            outcome = run(factor)
-            last[:] = [(factor, outcome)]
-            known[logarithm] = share(outcome)
-        return known[logarithm]
+    def share_at(factor: float) -> Share:
+        last["outcome"] = run(factor)
+        return share(last["outcome"])
 
-    floor = math.log(least) if least > 0 else -math.log(LARGEST)
-    scales = []
-    for which in range(3):
-
-        def beyond(logarithm: float, which: int = which) -> float:
-            return limits(logarithm)[which] - risk
-
-        low, high = _bracket(beyond, known, which, risk, floor, of)
-        # A share moves in steps where capacities are rounded: the side that meets the risk is the answer.
-        while high - low > tolerance:
-            middle = (low + high) / 2
-            low, high = (middle, high) if beyond(middle) > 0 else (low, middle)
-        scales.append(high)
-    factor, outcome = last[0]
+    found = find_scale(share_at, risk=risk, tolerance=tolerance, least=least, of=of)
     criterion = f"sojourns beyond {target:g}" if target is not None else "blocked tasks"
-    if scales[0] == floor:
+    if found.at_least:
         criterion += ", at the least capacity that was tried"
-    found = (math.exp(scales[0]), math.exp(min(scales)), math.exp(max(scales)))
-    table = _table(outcome, criterion, found, load_factor, risk, confidence, factor)
-    curve = pd.DataFrame(
-        [(math.exp(logarithm), *values) for logarithm, values in sorted(known.items())],
-        columns=["scale", "share", "lower", "upper"],
+    scales = (found.estimate, found.lower, found.upper)
+    return Provision(
+        _table(fleet, last["outcome"], criterion, scales, load_factor, risk, confidence), found.curve
     )
-    return Provision(table, curve)
-
-
-def _bracket(
-    beyond: Callable[[float], float],
-    known: dict[float, tuple[float, float, float]],
-    which: int,
-    risk: float,
-    floor: float,
-    of: str,
-) -> tuple[float, float]:
-    """Return logarithms of factors on both sides of the wanted one; twice the least where that will do."""
-    above = [logarithm for logarithm, values in known.items() if values[which] > risk]
-    below = [logarithm for logarithm, values in known.items() if values[which] <= risk]
-    start = max(0.0, floor)
-    low = max(above, default=start)
-    while beyond(low) <= 0:
-        if low <= floor:
-            return low, low
-        below.append(low)
-        low = max(floor, low - math.log(STEP))
-    high = min((value for value in below if value > low), default=low + math.log(STEP))
-    while beyond(high) > 0:
-        low, high = high, high + math.log(STEP)
-        if high > math.log(LARGEST) + max(0.0, floor):
-            raise InputError(
-                f"no capacity up to {LARGEST:g} times the present one brings {of} down to the risk of "
-                f"{risk:g}; accept a larger risk or a longer target."
-            )
-    return low, high

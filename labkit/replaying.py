@@ -2,6 +2,7 @@
 
 import math
 from collections.abc import Iterable
+from dataclasses import replace
 from itertools import pairwise
 from typing import Any
 
@@ -10,7 +11,7 @@ from labkit.engine import queues as q
 from labkit.engine.failures import Failures, RandomFailures, checked_failures
 from labkit.engine.information import Information, checked_information
 from labkit.engine.placement import Outcome
-from labkit.engine.service import DISCIPLINES, FAILURE_MODES, ServiceJob, ServiceRules
+from labkit.engine.service import DISCIPLINES, FAILURE_MODES, ServiceJob, ServiceRules, counting_scale
 from labkit.engine.service_checks import (
     FULL,
     MOST_INTERVALS,
@@ -63,7 +64,7 @@ def replay(
         really got the task). Files are read in pieces: memory does not grow with their length. Rows of one
         time are taken in their order, after what leaves at that time.
     policy : Policy or str
-        The rule, its name, or "as-placed" for what really happened.
+        The rule, its name, or "as-placed" for what really happened (whether or not that was an option).
     rng : int, numpy.random.SeedSequence or numpy.random.Generator
         Source of the coins; the same int or SeedSequence gives every policy the same coins.
     replicates : int
@@ -174,6 +175,7 @@ def replay(
             'on_failure is "requeue", which needs a fleet with a table of choices; give "wait" or "lost".'
         )
     window = _window(source, warmup, block)
+    rules = replace(rules, scale=counting_scale(window.span, 2.0**-8, 2.0**48))
     moments = [window.moments(fleet, failures, generator(seed, each, FAILURES)) for each in numbers]
     replaying = TraceRun(ServiceJob(fleet, rule, rules, seed), source, numbers, workers)
     return replaying.leaving(window, moments, discipline)

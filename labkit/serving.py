@@ -13,7 +13,16 @@ from labkit.engine import queues as q
 from labkit.engine.arrival_times import Rates, poisson_batches
 from labkit.engine.failures import Failures, RandomFailures, checked_failures
 from labkit.engine.information import Information, checked_information
-from labkit.engine.service import DISCIPLINES, FAILURE_MODES, INTERVAL, Moment, ServiceJob, ServiceRules
+from labkit.engine.service import (
+    DISCIPLINES,
+    FAILURE_MODES,
+    INTERVAL,
+    Moment,
+    ServiceJob,
+    ServiceRules,
+    changes,
+    counting_scale,
+)
 from labkit.engine.service_checks import (
     FULL,
     MOST_INTERVALS,
@@ -36,6 +45,8 @@ from labkit.stationary.warm_up import LEAST_INTERVALS, first_kept
 from labkit.survey.stability import refuse_unstable
 
 INTERVALS = 60
+# More would take days.
+MOST_TASKS = 1e12
 # Intervals of the series that the end of the warm-up is looked for in, and how many replicates it averages.
 PILOT_INTERVALS, PILOT_REPLICATES = 400, 8
 
@@ -121,7 +132,8 @@ def serve(
     workers : int
         Threads that share the replicates. The result does not depend on it.
     first_replicate : int
-        The number of the first replicate; see `labkit.place`.
+        The number of the first replicate; see `labkit.place`. Give `warmup`, too, where a run is split: the
+        pilot that finds it has as many replicates as the call, up to 8.
 
     Returns
     -------
@@ -167,6 +179,11 @@ def serve(
     check_member("on_failure", on_failure, FAILURE_MODES)
     limits = checked_limits(limit, fleet)
     rates = checked_rates(load_factor * fleet.total_capacity / law.mean, profile, period, horizon)
+    if rates.mean * horizon > MOST_TASKS:
+        raise InputError(
+            f"horizon is {horizon:g}, in which about {rates.mean * horizon:.3g} tasks arrive; give a shorter "
+            f"one (at most {MOST_TASKS:g} tasks)."
+        )
     failures = checked_failures(failures)
     levels = checked_levels(levels)
     if kind != q.SESSIONS and limits is None and not queues_are_cut(failures, on_failure):
@@ -174,6 +191,8 @@ def serve(
             fleet, load_factor, even_split=isinstance(rule, OneChoice),
             availability=lasting_availability(failures), requeued=on_failure == "requeue",
         )  # fmt: skip
+    # Tasks of mean size on a server of mean capacity.
+    typical = law.mean if kind == q.SESSIONS else law.mean * fleet.size / fleet.total_capacity
     rules = ServiceRules(
         discipline=kind,
         information=checked_information(information),
@@ -183,6 +202,7 @@ def serve(
         on_failure=on_failure,
         target=math.inf if target is None else check_positive("target", target),
         levels=levels,
+        scale=counting_scale(typical, 2.0**-16, 2.0**16),
     )
     if isinstance(failures, Failures):
         failures.check_servers(fleet)
@@ -236,7 +256,7 @@ class _Serving:
         job = self.job
         progress = job.start(replicate)
         progress.expect(self._moments(replicate, edges))
-        for batch in poisson_batches(job.fleet, self.rates, self.law, job.seed, replicate):
+        for batch in poisson_batches(job.fleet, self.rates, self.law, self.horizon, job.seed, replicate):
             if not progress.take(batch, beyond=False):
                 return measured(progress, float(edges[-1]))
         raise AssertionError("arrivals never end")
@@ -265,6 +285,5 @@ class _Serving:
         if self.failures is None:
             return iter(ends)
         draws = generator(self.job.seed, replicate, FAILURES)
-        times, servers, ups = self.failures.events(self.job.fleet, self.horizon, draws)
-        changes = zip(times.tolist(), zip(servers.tolist(), ups.tolist(), strict=True), strict=True)
-        return heapq.merge(ends, changes, key=lambda moment: moment[0])
+        happening = self.failures.events(self.job.fleet, self.horizon, draws)
+        return heapq.merge(ends, changes(*happening), key=lambda moment: moment[0])

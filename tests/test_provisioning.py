@@ -11,6 +11,7 @@ import pandas as pd
 import pytest
 
 import labkit as lk
+from labkit.randomness import seed_sequence
 
 QUEUE = {"load_factor": 0.9, "risk": 0.05, "target": 8.0, "horizon": 2000.0, "warmup": 200.0, "rng": 1}
 
@@ -179,3 +180,12 @@ def test_a_trace_without_durations_has_no_headroom_here():
     fleet, trace = trace_of(10)
     with pytest.raises(lk.InputError, match="no column 'duration'"):
         lk.replay_headroom(fleet, trace.drop(columns="duration"), "least-loaded", risk=0.1, block=1.0, rng=1)
+
+
+def test_a_generator_gives_all_factors_the_same_arrivals():
+    given = QUEUE | {"replicates": 3, "horizon": 400.0, "warmup": 40.0}
+    drawn, seeded = (
+        lk.serve_headroom(lk.ring(10), "least-loaded", **given | {"rng": rng})
+        for rng in (np.random.default_rng(1), seed_sequence(np.random.default_rng(1)))
+    )
+    pd.testing.assert_frame_equal(drawn.curve, seeded.curve, check_exact=True)

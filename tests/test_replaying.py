@@ -5,11 +5,7 @@ as plain Python, in a process of its own, and a few cases with the loop compiled
 """
 
 import math
-import os
-import subprocess
-import sys
 from itertools import pairwise
-from pathlib import Path
 
 import numpy as np
 import pandas as pd
@@ -22,10 +18,10 @@ from labkit.survey.fair import fair_profile
 from labkit.traces.reading import Trace
 from tests.event_measures import measures, overlap
 from tests.events import plain_python_replay, serve
+from tests.plain_python import in_plain_python
 from tests.reference import WORD, pick, words
 from tests.reference import measures as measures_of_loads
 
-ROOT = Path(__file__).parents[1]
 NAMES = list("abcde")
 CHOICES = [[0, 1, 2], [1, 2], [2, 3, 4], [3, 4], [4, 0], [0, 2]]
 CAPACITY = [1.0, 2.0, 4.0, 2.0, 1.0]
@@ -203,21 +199,8 @@ def agree_on_any_case():
         assert_tree_flow_as_by_hand(log, seed)
 
 
-def run_plain(call):
-    """Run a function of this file with the loop left as plain Python."""
-    done = subprocess.run(
-        [sys.executable, "-c", f"import tests.test_replaying as tests; tests.{call}()"],
-        cwd=ROOT,
-        env={**os.environ, "NUMBA_DISABLE_JIT": "1"},
-        capture_output=True,
-        text=True,
-        check=False,
-    )
-    assert done.returncode == 0, done.stdout + done.stderr
-
-
 def test_plain_python_loop_replays_any_trace_as_the_oracle_does():
-    run_plain("agree_on_any_case")
+    in_plain_python("tests.test_replaying", "agree_on_any_case()")
 
 
 def in_fleet_order(log):
@@ -295,11 +278,11 @@ def agree_on_tables_of_any_width():
 
 
 def test_what_has_one_option_waits_there_when_its_server_fails():
-    run_plain("single_options_wait_where_their_server_failed")
+    in_plain_python("tests.test_replaying", "single_options_wait_where_their_server_failed()")
 
 
 def test_tables_of_any_width():
-    run_plain("agree_on_tables_of_any_width")
+    in_plain_python("tests.test_replaying", "agree_on_tables_of_any_width()")
 
 
 FAILING = pd.DataFrame(

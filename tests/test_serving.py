@@ -121,6 +121,7 @@ SCHEDULE = pd.DataFrame({"time": [1.0], "server": ["nowhere"], "state": ["down"]
         ),
         ({"on_full": "queue"}, "on_full is 'queue'; allowed: another, lost"),
         ({"profile": [1.0, 2.0], "period": 1e-300}, "which makes more than 1e+08 parts"),
+        ({"horizon": 1e13}, "tasks arrive; give a shorter one (at most 1e+12 tasks)"),
         ({"intervals": 10**12}, "intervals is 1000000000000; give at most 100,000"),
         ({"failures": 0.1}, "failures is 0.1; give lk.Failures(schedule), lk.RandomFailures(up=, down=)"),
         ({"failures": "random(up=9)"}, "it needs down"),
@@ -246,3 +247,24 @@ def test_huge_relative_rates_are_as_good_as_others():
     )
     with np.errstate(all="raise"):
         serve(profile=[5e-324, 0.0], period=1.0)
+
+
+@pytest.mark.parametrize("mean", [1e18, 1e-14, 1e60])
+def test_the_unit_of_time_does_not_matter(mean):
+    given = {"warmup": 0.0, "replicates": 2}
+    units = serve(horizon=200.0, **given).measures
+    other = serve(horizon=200.0 * mean, service=f"exponential(mean={mean})", **given).measures
+    for name in ("sojourn_mean", "sojourn_p50", "sojourn_p99", "waiting_p90"):
+        assert other[name].to_numpy() / mean == pytest.approx(units[name].to_numpy(), rel=2e-3)
+
+
+def test_reports_without_a_pause_are_as_good_as_fresh_loads():
+    fresh = serve(horizon=100.0).by_server.drop(columns="information")
+    for every in (1e-310, 1e-300, 1e-12):
+        late = serve(horizon=100.0, information=lk.Snapshot(every=every)).by_server
+        pd.testing.assert_frame_equal(late.drop(columns="information"), fresh)
+
+
+def test_hardly_any_task_in_many_short_days():
+    row = serve(load_factor=1e-9, profile=[1.0, 2.0], period=1.0, horizon=100.0).measures.iloc[0]
+    assert row["arrivals"] == 0

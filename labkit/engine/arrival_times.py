@@ -37,14 +37,14 @@ class Rates:
         return float(self.rate.mean())
 
 
-def spend(gaps, rate, length, state):
-    """Turn gaps of a Poisson process of rate one into times of arrival, in place.
+def spend(gaps, rate, length, horizon, state):
+    """Turn gaps of a Poisson process of rate one into times of arrival, in place; infinite after the horizon.
 
     Parameters
     ----------
     gaps : float64 array, shape (tasks,), changed in place
     rate : float64 array, shape (pieces,)
-    length : float
+    length, horizon : float
     state : float64 array, shape (3,), changed in place
         Time, number of the piece, and when the piece ends.
     """
@@ -55,22 +55,28 @@ def spend(gaps, rate, length, state):
         if not now + step < end:
             # Also where nothing arrives: pace is infinite, and step then infinite or not a number.
             left = gaps[index]
-            while not now + left / rate[piece] < end:
+            while now < horizon and not now + left / rate[piece] < end:
                 left -= (end - now) * rate[piece]
                 now = end
                 piece = (piece + 1) % rate.size
                 end += length
             pace = 1.0 / rate[piece]
             step = left * pace
-        now += step
+        # Where nobody looks, no parts of the day need be gone through.
+        now = now + step if now < horizon else np.inf
         gaps[index] = now
     state[0], state[1], state[2] = now, float(piece), end
 
 
 def poisson_batches(
-    fleet: Fleet, rates: Rates, law: ServiceLaw, seed: np.random.SeedSequence, replicate: int
+    fleet: Fleet,
+    rates: Rates,
+    law: ServiceLaw,
+    horizon: float,
+    seed: np.random.SeedSequence,
+    replicate: int,
 ) -> Iterator[Batch]:
-    """Yield the tasks of one replicate in batches, without end.
+    """Yield the tasks of one replicate in batches, without end; those after the horizon never arrive.
 
     The same replicate has the same gaps (in tasks), choices, coins and requirements whatever the rates.
     """
@@ -85,7 +91,7 @@ def poisson_batches(
     options = np.empty((BATCH + 1, width), np.uint32)
     while True:
         gaps = times.standard_exponential(BATCH)
-        kept(spend)(gaps, rates.rate, rates.length, clock)
+        kept(spend)(gaps, rates.rate, rates.length, horizon, clock)
         # Without the compiler unsigned words are NumPy scalars, which warn when they wrap around.
         with np.errstate(over="ignore" if CONFIG.DISABLE_JIT else "warn"):
             if arrivals.servers == 0:

@@ -16,8 +16,8 @@ from labkit.fleet.csv_files import whole_options
 from labkit.fleet.model import Fleet, positions_of
 from labkit.text import from_name
 
-# More events than these would not fit into memory beside the run.
-MOST_EVENTS = 200_000_000
+# More events than these take minutes and hundreds of MB for each replicate.
+MOST_EVENTS = 10_000_000
 # Times drawn at once; part of the law of the bits, so it never changes with a setting.
 _DRAWN = 1 << 14
 

@@ -41,11 +41,11 @@ ARRIVED, COMPLETED, BLOCKED, LOST, REQUEUED, WAITED, DELAYED, LATE = range(4, 12
 FREE = 16  # and on: first free part of 2, 4, 8 ... rows, or -1
 COUNTS = 64
 # Places in `tally`.
-SOJOURN, WAITING, OVERLAP, LONGEST, WINDOW, TARGET, REPORT = range(7)
+SOJOURN, WAITING, OVERLAP, LONGEST, WINDOW, TARGET, REPORT, SCALE = range(8)
 LEVELS = 16  # and on: time that servers spent with 0, 1, 2 ... tasks
 TOP = 1023
 TALLIES = LEVELS + TOP + 1
-# Times are counted in bins of 1/512 of an octave, from 2⁻⁴⁰ to 2⁵⁶ time units.
+# Times are counted in bins of 1/512 of an octave, from 2⁻⁴⁰ to 2⁵⁶, after they were multiplied by `SCALE`.
 BINS = 96 << 9
 _LOWEST = (1023 - 40) << 9
 # A wait below this share of the clock is rounding.
@@ -224,8 +224,8 @@ def leave(server, place, pool, loads, tally, counts, hist, by_level, v, discipli
     counts[COMPLETED] += 1
     counts[DELAYED] += waiting > 0.0
     counts[LATE] += sojourn > tally[TARGET]
-    hist[np.uint64(0), bin_of(sojourn)] += 1
-    hist[np.uint64(1), bin_of(waiting)] += 1
+    hist[np.uint64(0), bin_of(sojourn * tally[SCALE])] += 1
+    hist[np.uint64(1), bin_of(waiting * tally[SCALE])] += 1
 
 
 @compiled

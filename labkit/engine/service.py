@@ -27,6 +27,8 @@ NO_LIMIT = np.iinfo(np.int64).max
 # When something happens, and what: None for the end of an interval, else a server and whether it comes back.
 Moment = tuple[float, tuple[int, bool] | None]
 NEVER: Moment = (math.inf, None)
+# Failures and returns that are Python objects at a time.
+SLICE = 4_096
 
 # What is kept of each interval, in order; after the first two, sums and counts.
 INTERVAL = (
@@ -34,6 +36,14 @@ INTERVAL = (
     *("sojourn_sum", "waiting_sum", "area", "work", "max_load", "max_utilisation"),
 )
 _COUNTED = (q.ARRIVED, q.COMPLETED, q.BLOCKED, q.LOST, q.REQUEUED, q.WAITED, q.DELAYED, q.LATE)
+
+
+def changes(times: np.ndarray, servers: np.ndarray, ups: np.ndarray) -> Iterator[Moment]:
+    """Yield when servers (positions) go down or come back, as `Failures.events` returns them."""
+    for first in range(0, len(times), SLICE):
+        part = slice(first, first + SLICE)
+        what = zip(servers[part].tolist(), ups[part].tolist(), strict=True)
+        yield from zip(times[part].tolist(), what, strict=True)
 
 
 class Batch(NamedTuple):
@@ -68,6 +78,8 @@ class ServiceRules:
         Sojourns beyond it are counted as late.
     levels : int
         For how many numbers of tasks the time at each is kept for each server; 0 for none.
+    scale : float
+        What times are multiplied by before they are counted, a power of two; see `counting_scale`.
     """
 
     discipline: int
@@ -78,6 +90,20 @@ class ServiceRules:
     on_failure: str = "wait"
     target: float = np.inf
     levels: int = 0
+    scale: float = 1.0
+
+
+def counting_scale(typical: float, low: float, high: float) -> float:
+    """Return the power of two that brings a typical time into the middle of what is counted.
+
+    Parameters
+    ----------
+    typical : float
+        Such as a mean service time, above 0.
+    low, high : float
+        Typical times between these are counted as they are.
+    """
+    return 1.0 if low <= typical <= high else 2.0 ** -math.frexp(typical)[1]
 
 
 class ServiceJob:
@@ -136,7 +162,7 @@ class Progress:
         self.counts = np.zeros(q.COUNTS, np.int64)
         self.counts[q.FREE :] = -1
         self.tally = np.zeros(q.TALLIES)
-        self.tally[q.TARGET] = rules.target
+        self.tally[q.TARGET], self.tally[q.SCALE] = rules.target, rules.scale
         self.hist = np.zeros((2, q.BINS), np.int64)
         self.by_level = np.zeros((servers if rules.levels else 0, rules.levels + 1))
         every, dispatchers = rules.information.every, rules.information.dispatchers

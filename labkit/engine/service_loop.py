@@ -2,8 +2,11 @@
 
 import numpy as np
 
-from labkit.compiled import borrowed, compiled, folded, inlined, multiply_wide, next_raw
+from labkit.compiled import borrowed, compiled, folded, multiply_wide, next_raw
 from labkit.engine.arrivals import options_in
+
+# Stand-ins, until `labkit.compiled.specialise` puts the policy's own in their place.
+from labkit.engine.loop import after, choose, renew
 from labkit.engine.queues import (
     AMOUNT,
     ARRIVED,
@@ -25,22 +28,6 @@ from labkit.engine.queues import (
     settle_all,
 )
 from labkit.policies.least_loaded import least_fair
-
-
-@inlined
-def choose(state, seen, weights, options, row, count, choice, coin, own):
-    """Stand for the policy's chooser until `labkit.compiled.specialise` puts it in place."""
-    return np.uint64(0)
-
-
-@inlined
-def renew(state, seen):
-    """Stand for what the policy works out now and then, until `labkit.compiled.specialise` puts it there."""
-
-
-@inlined
-def after(state, loads, weights, options, row, count, server, amount, fresh):
-    """Stand for what the policy does when loads change, until `labkit.compiled.specialise` puts it there."""
 
 
 @folded
@@ -247,7 +234,7 @@ def serve_tasks(
                 while server[v, NEXT] <= now:
                     leave(server, place, pool, loads, tally, counts, hist, by_level, v, discipline)
         elif now >= tally[REPORT]:
-            tally[REPORT] = np.floor(now / every) * every
+            tally[REPORT] = min(np.floor(now / every) * every, now)
             settle_all(server, place, pool, loads, tally, counts, hist, by_level, tally[REPORT], discipline)
             publish(loads, report, pictures, shared)
             if renewal < 0:
@@ -306,7 +293,7 @@ def serve_tasks(
         return done
     # What happens at `until` must not show in a report of before.
     if every > 0.0 and tally[REPORT] < until:
-        tally[REPORT] = max(tally[REPORT], (np.ceil(until / every) - 1.0) * every)
+        tally[REPORT] = max(tally[REPORT], min((np.ceil(until / every) - 1.0) * every, until))
         settle_all(server, place, pool, loads, tally, counts, hist, by_level, tally[REPORT], discipline)
         publish(loads, report, pictures, shared)
         if renewal < 0:

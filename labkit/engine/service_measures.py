@@ -34,12 +34,12 @@ class Measured:
 def measured(progress: Progress, now: float) -> Measured:
     """Return what a replicate has measured up to `now`, the end of its last interval."""
     shares = np.array(list(PROBABILITIES.values()))
-    longest = float(progress.tally[q.LONGEST])
+    longest, scale = float(progress.tally[q.LONGEST]), progress.job.rules.scale
     last = int(np.flatnonzero(progress.tally[q.LEVELS :]).max(initial=0)) + 1
     return Measured(
         replicate=progress.replicate,
         intervals=np.array(progress.intervals),
-        quantiles=np.array([quantiles(counts, shares, longest) for counts in progress.hist]),
+        quantiles=np.array([quantiles(counts, shares, longest * scale) for counts in progress.hist]) / scale,
         longest=longest,
         level_time=progress.tally[q.LEVELS : q.LEVELS + last].copy(),
         by_level=progress.by_level,
@@ -65,7 +65,7 @@ def quantiles(counts: np.ndarray, shares: np.ndarray, longest: float) -> np.ndar
     Returns
     -------
     float64 array
-        NaN when nothing was counted; 0 in the lowest bin.
+        NaN when nothing was counted, and in the highest bin, which has no end; 0 in the lowest bin.
     """
     total = int(counts.sum())
     if total == 0:
@@ -76,6 +76,7 @@ def quantiles(counts: np.ndarray, shares: np.ndarray, longest: float) -> np.ndar
     inside = (ranks - (passed[bins] - counts[bins]) - 0.5) / counts[bins]
     low, high = _edges(bins), _edges(bins + 1)
     found = np.where(bins == 0, 0.0, low + inside * (high - low))
+    found = np.where(bins == q.BINS - 1, np.nan, found)
     return np.minimum(found, longest)
 
 

@@ -12,7 +12,7 @@ import numpy as np
 from labkit.engine import queues as q
 from labkit.engine.failures import Failures, RandomFailures
 from labkit.engine.placement import Outcome, measured_loads
-from labkit.engine.service import Batch, Moment, ServiceJob
+from labkit.engine.service import Batch, Moment, ServiceJob, changes
 from labkit.engine.service_measures import ServiceOutcome, measured
 from labkit.errors import InputError
 from labkit.fleet.model import Fleet
@@ -60,9 +60,8 @@ class Window(NamedTuple):
         shift = self.origin if isinstance(failures, Failures) else 0.0
         # What fails at the time of the last row, fails before it.
         times, servers, ups = failures.events(fleet, math.nextafter(shift + self.span, math.inf), draws)
-        since = np.maximum(times - shift, 0.0).tolist()
-        changes = zip(since, zip(servers.tolist(), ups.tolist(), strict=True), strict=True)
-        return heapq.merge(ends, changes, key=lambda moment: moment[0])
+        happening = changes(np.maximum(times - shift, 0.0), servers, ups)
+        return heapq.merge(ends, happening, key=lambda moment: moment[0])
 
 
 class TraceRun:

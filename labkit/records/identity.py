@@ -39,6 +39,7 @@ COMPUTING = (
     "analysis/tables.py",
     # A search for capacity goes where its limits lead it.
     "provisioning.py",
+    "analysis/capacity_search.py",
     "analysis/headroom.py",
     "analysis/service_limits.py",
     "analysis/block_bootstrap.py",

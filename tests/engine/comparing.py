@@ -1,5 +1,6 @@
 """Run a fleet through the compiled loop and the slow one and compare every load and measure."""
 
+import pandas as pd
 import pytest
 
 import labkit as lk
@@ -17,6 +18,20 @@ RULES = {
     "static-split": ("static-split",),
     "pairwise-averaging": ("pairwise-averaging",),
 }
+
+
+def mixed_fleet():
+    """Return a fleet with two and three options a choice, unequal capacities and demands."""
+    servers = pd.DataFrame({"server": list("abcde"), "capacity": [1, 2, 3, 2, 1]})
+    choices = pd.DataFrame(
+        {
+            "option_1": ["a", "b", "c", "d", "e", "a"],
+            "option_2": ["b", "c", "d", "e", "a", "c"],
+            "option_3": ["c", None, "e", None, None, "e"],
+            "demand": [1.0, 0.5, 2.0, 0.0, 1.5, 1.0],
+        }
+    )
+    return lk.Fleet(servers, choices)
 
 
 def assert_same_path(fleet, rule, *, ahead, entropy, every=0, sizes=None, start=None, dispatchers=0):

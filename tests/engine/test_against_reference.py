@@ -16,23 +16,9 @@ import labkit as lk
 from labkit.compiled import next_raw
 from labkit.engine.arrivals import arrivals_of
 from labkit.randomness import child, kernel_state, seed_sequence
-from tests.engine.comparing import RULES, assert_same_path
+from tests.engine.comparing import RULES, assert_same_path, mixed_fleet
 
 ROOT = Path(__file__).parents[2]
-
-
-def mixed_fleet():
-    """Return a fleet with two and three options a choice, unequal capacities and demands."""
-    servers = pd.DataFrame({"server": list("abcde"), "capacity": [1, 2, 3, 2, 1]})
-    choices = pd.DataFrame(
-        {
-            "option_1": ["a", "b", "c", "d", "e", "a"],
-            "option_2": ["b", "c", "d", "e", "a", "c"],
-            "option_3": ["c", None, "e", None, None, "e"],
-            "demand": [1.0, 0.5, 2.0, 0.0, 1.5, 1.0],
-        }
-    )
-    return lk.Fleet(servers, choices)
 
 
 @pytest.mark.parametrize("rule", RULES)

@@ -4,11 +4,6 @@ Compiling every rule would take minutes, so any small fleet under any circumstan
 left as plain Python, in a process of its own, and a few cases with the loop compiled.
 """
 
-import os
-import subprocess
-import sys
-from pathlib import Path
-
 import numpy as np
 import pandas as pd
 import pytest
@@ -20,10 +15,11 @@ from labkit.engine.arrivals import arrivals_of
 from labkit.survey.demand import evenly_balanced
 from labkit.survey.fair import fair_profile
 from tests.engine.any_fleet import fleets
+from tests.engine.comparing import mixed_fleet
 from tests.event_measures import measures, measures_by_interval, time_at_levels
 from tests.events import arrival_times, requirements_of, serve
+from tests.plain_python import in_plain_python
 
-ROOT = Path(__file__).parents[2]
 RULES = {
     "one-choice": ("one-choice",),
     "least-loaded": ("least-loaded", "random"),
@@ -169,34 +165,8 @@ def agree_on_any_case():
 
 
 def test_plain_python_loop_serves_any_fleet_as_the_oracle_does():
-    done = subprocess.run(
-        [
-            sys.executable,
-            "-c",
-            "from tests.engine.test_serve_against_events import agree_on_any_case as agree; print(agree())",
-        ],
-        cwd=ROOT,
-        env={**os.environ, "NUMBA_DISABLE_JIT": "1"},
-        capture_output=True,
-        text=True,
-        check=False,
-    )
-    assert done.returncode == 0, done.stdout + done.stderr
-    assert int(done.stdout.split()[-1]) >= 25
-
-
-def mixed_fleet():
-    """Return a fleet with two and three options a choice, unequal capacities and demands."""
-    servers = pd.DataFrame({"server": list("abcde"), "capacity": [1, 2, 3, 2, 1]})
-    choices = pd.DataFrame(
-        {
-            "option_1": ["a", "b", "c", "d", "e", "a"],
-            "option_2": ["b", "c", "d", "e", "a", "c"],
-            "option_3": ["c", None, "e", None, None, "e"],
-            "demand": [1.0, 0.5, 2.0, 0.0, 1.5, 1.0],
-        }
-    )
-    return lk.Fleet(servers, choices)
+    served = in_plain_python("tests.engine.test_serve_against_events", "agree_on_any_case()")
+    assert int(served) >= 25
 
 
 FAILURES = (

@@ -45,8 +45,8 @@ def test_zeros_stay_zero():
     found = counted(np.concatenate([np.zeros(900), np.full(100, 2.5)]))
     assert found == pytest.approx([0, 0, 0, 2.5, 2.5], rel=2e-3)
     assert found[:3].tolist() == [0, 0, 0]
-    # times beyond the last bin count there, and none is longer than the longest
-    assert counted([1e30, 2e30])[-1] <= 2e30
+    # what lies beyond the last bin is not known
+    assert np.isnan(counted([1e30, 2e30])).all()
 
 
 def test_nothing_counted_has_no_quantile():

@@ -2,10 +2,6 @@
 
 import ast
 import itertools
-import os
-import subprocess
-import sys
-from pathlib import Path
 
 import numpy as np
 import pandas as pd
@@ -14,6 +10,7 @@ import pytest
 import labkit as lk
 from labkit.engine.service import Progress
 from labkit.policies.naming import BUILT_IN
+from tests.plain_python import in_plain_python
 
 
 @lk.policy
@@ -93,21 +90,7 @@ def test_a_rule_that_cannot_be_compiled_is_refused_before_anything_runs(monkeypa
         serve("least-loaded")
 
 
-# Compiling all rules would take minutes: these run with the loop as plain Python, in a process of its own.
-
-
-def in_plain_python(call):
-    """Return what a function of this file returns there."""
-    done = subprocess.run(
-        [sys.executable, "-c", f"from tests.engine import test_service_rules as t; print(t.{call})"],
-        cwd=Path(__file__).parents[2],
-        env={**os.environ, "NUMBA_DISABLE_JIT": "1"},
-        capture_output=True,
-        text=True,
-        check=False,
-    )
-    assert done.returncode == 0, done.stdout + done.stderr
-    return ast.literal_eval(done.stdout.splitlines()[-1])
+HERE = "tests.engine.test_service_rules"
 
 
 def means_of_every_rule():
@@ -122,7 +105,7 @@ def means_of_every_rule():
 
 
 def test_every_rule_does_what_it_is_for():
-    means = in_plain_python("means_of_every_rule()")
+    means = ast.literal_eval(in_plain_python(HERE, "means_of_every_rule()"))
     blind, least = means["one-choice"], means["least-loaded"]
     assert len(means) == 6
     # least-loaded 2.5 and one-choice 5 in the long run
@@ -149,6 +132,6 @@ def tree_flow_both_ways():
 
 
 def test_differences_kept_up_to_date_are_those_worked_out_anew():
-    completed = in_plain_python("tree_flow_both_ways()")
+    completed = ast.literal_eval(in_plain_python(HERE, "tree_flow_both_ways()"))
     assert len(completed) == 12
     assert min(completed) > 400
