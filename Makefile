@@ -42,11 +42,9 @@ bench: setup ## speed and memory (minutes; keep the machine quiet)
 readme: answer ## remake the answer table and figure that README.md shows
 	$(BIN)/python .readme/update.py
 
-# An empty JUPYTER_TOKEN would switch the token off; without one the server makes its own and shows it.
+# Loopback and a token come last, so that they win over any configuration and over LAB, which is for other flags.
 lab: setup ## JupyterLab on this machine only, opened at the project
-	@[ -n "$$JUPYTER_TOKEN" ] || unset JUPYTER_TOKEN; \
-	if [ "$$(id -u)" = 0 ]; then set -- --allow-root; else set --; fi; \
-	exec $(BIN)/jupyter lab --ip=127.0.0.1 --ServerApp.root_dir="$(CURDIR)" "$$@" $(LAB)
+	@exec $(BIN)/python .lab/start.py $(LAB)
 
 lock: ## remake requirements.lock after a change in pyproject.toml (needs uv; UPGRADE=--upgrade for newer versions)
 	@command -v $(UV) >/dev/null || { echo "make lock needs uv on the PATH, or its place: make lock UV=..." >&2; exit 1; }

@@ -75,6 +75,7 @@ _HOMES = {
     "fit_growth": "labkit.figures.growth",
     "GrowthFit": "labkit.figures.growth",
     "register_law": "labkit.analysis.growth_laws",
+    "use_scheduler": "labkit.sharing.scheduler",
     "begin_run": "labkit.records.run",
     "begin_answer": "labkit.studies.subject",
     "read_study_records": "labkit.studies.reading",

@@ -12,11 +12,19 @@ from labkit.errors import InputError
 LARGEST_WHOLE = 2**53
 
 
+def shown(value: Any) -> str:
+    """Return a value as a refusal shows it; Python does not write out numbers of thousands of digits."""
+    try:
+        return repr(value)
+    except (ValueError, RecursionError):
+        return "a number of thousands of digits" if isinstance(value, int) else f"a {type(value).__name__}"
+
+
 def check_whole(name: str, value: Any, *, least: int = 1) -> int:
     """Return `value` as an int when it is a whole number from `least` to `LARGEST_WHOLE`."""
     whole = isinstance(value, numbers.Integral) and not isinstance(value, bool)
     if not whole or int(value) < least:
-        raise InputError(f"{name} is {value!r}; give a whole number of at least {least}.")
+        raise InputError(f"{name} is {shown(value)}; give a whole number of at least {least}.")
     if int(value) > LARGEST_WHOLE:
         size = f"{float(value):.4g}" if int(value) < 10**300 else "far larger"
         raise InputError(f"{name} is {size}; give a whole number of at most {LARGEST_WHOLE}.")
@@ -31,7 +39,7 @@ def check_number(name: str, value: Any) -> float:
     except OverflowError:
         real, value = False, "far larger than any float"
     if not real:
-        raise InputError(f"{name} is {value!r}; give a finite number.")
+        raise InputError(f"{name} is {shown(value)}; give a finite number.")
     return float(value)
 
 
@@ -39,7 +47,7 @@ def check_positive(name: str, value: Any) -> float:
     """Return `value` as a float when it is finite and above zero."""
     number = check_number(name, value)
     if number <= 0:
-        raise InputError(f"{name} is {value!r}; give a number above 0.")
+        raise InputError(f"{name} is {shown(value)}; give a number above 0.")
     return number
 
 
@@ -49,7 +57,7 @@ def check_fraction(name: str, value: Any, *, closed: bool = False) -> float:
     inside = 0 <= number <= 1 if closed else 0 < number < 1
     if not inside:
         bounds = "from 0 to 1" if closed else "above 0 and below 1"
-        raise InputError(f"{name} is {value!r}; give a number {bounds}.")
+        raise InputError(f"{name} is {shown(value)}; give a number {bounds}.")
     return number
 
 
@@ -58,7 +66,7 @@ def check_member(name: str, value: Any, allowed: Iterable[str]) -> str:
     words = list(allowed)
     if isinstance(value, str) and value in words:
         return value
-    raise InputError(f"{name} is {value!r}; {nearest(value, words)}.")
+    raise InputError(f"{name} is {shown(value)}; {nearest(value, words)}.")
 
 
 def nearest(value: Any, words: Iterable[str]) -> str:

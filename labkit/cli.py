@@ -10,9 +10,9 @@ from types import FrameType
 from typing import NoReturn
 
 from labkit import __version__
-from labkit.commands import frozen, planning, records, running, sizing, surveying
+from labkit.commands import frozen, planning, records, running, sizing, store, surveying
 from labkit.commands.parts import Commands, say
-from labkit.errors import InputError
+from labkit.errors import InputError, SchedulerLost
 
 
 def main(words: Sequence[str] | None = None) -> int:
@@ -31,8 +31,11 @@ def main(words: Sequence[str] | None = None) -> int:
     except InputError as error:
         say(str(error))
         return 2
-    except KeyboardInterrupt:
-        say("interrupted; runs already recorded are kept")
+    except SchedulerLost as error:
+        say(str(error))
+        return 1
+    except KeyboardInterrupt as interrupted:
+        say(str(interrupted) or "interrupted; runs already recorded are kept")
         return 130
     except BrokenPipeError:
         # the reader has seen enough; python would complain once more at exit
@@ -61,7 +64,7 @@ def _parser() -> argparse.ArgumentParser:
     )
     parser.add_argument("--version", action="version", version=f"labkit {__version__}")
     commands = Commands(parser)
-    for module in (running, sizing, surveying, planning, records, frozen):
+    for module in (running, sizing, surveying, planning, records, store, frozen):
         module.add(commands)
     return parser
 

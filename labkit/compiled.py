@@ -179,6 +179,16 @@ def next_raw(state):
     return out
 
 
+@compiled
+def copy_into(target, source):
+    """Copy an array into another of its length.
+
+    ``target[:] = source`` would compile numba's own refusal of unequal shapes, too, which takes seconds.
+    """
+    for place in range(target.size):
+        target[np.uint64(place)] = source[np.uint64(place)]
+
+
 @inlined
 def unit_interval(word):
     """Return the top 53 bits of a word as a float in [0, 1)."""

@@ -11,10 +11,14 @@ from labkit.engine.placement import Outcome, place_loads, zero_loads
 from labkit.engine.sizes import LARGEST_SIZE, numbers_for, sizes_of
 from labkit.errors import InputError
 from labkit.fleet.model import Fleet, check_fleet
+from labkit.memory import check_memory
 from labkit.policies.base import Policy
 from labkit.policies.naming import parse_policy
 from labkit.randomness import check_replicates, seed_sequence
 from labkit.stationary.start import forecast_start
+
+# Numbers kept for each replicate and checkpoint, more or less.
+_MEASURES = 10
 
 
 def place(
@@ -94,6 +98,11 @@ def place(
     seed = seed_sequence(rng)
     moments = _checked_checkpoints(checkpoints, tasks)
     information = checked_information(information, in_tasks=True)
+    check_memory(
+        f"replicates is {replicates:,}; with {fleet.size:,} servers and {len(moments):,} checkpoints they",
+        8 * replicates * (fleet.size + _MEASURES * len(moments)),
+        "give fewer replicates or checkpoints",
+    )
     work = sizes_of(sizes, tasks, replicates)
     whole = work is None and not rule.moves_work
     if isinstance(start, str):

@@ -3,7 +3,6 @@
 import heapq
 import math
 from collections.abc import Iterator, Sequence
-from concurrent.futures import ThreadPoolExecutor
 from typing import Any
 
 import numpy as np
@@ -41,6 +40,7 @@ from labkit.policies.base import Policy
 from labkit.policies.naming import parse_policy
 from labkit.policies.one_choice import OneChoice
 from labkit.randomness import FAILURES, check_replicates, generator, seed_sequence
+from labkit.sharing.replicates import run_replicates
 from labkit.stationary.warm_up import LEAST_INTERVALS, first_kept
 from labkit.survey.stability import refuse_unstable
 
@@ -241,15 +241,7 @@ class _Serving:
 
     def run_all(self, replicates: range, edges: np.ndarray, workers: int) -> list[Measured]:
         """Run replicates and measure between the edges of intervals; the first edge ends the warm-up."""
-
-        def run(replicate: int) -> Measured:
-            return self.run(replicate, edges)
-
-        if workers == 1 or len(replicates) == 1:
-            return [run(replicate) for replicate in replicates]
-        first = run(replicates[0])  # compiles before threads share the loop
-        with ThreadPoolExecutor(workers) as pool:
-            return [first, *pool.map(run, replicates[1:])]
+        return run_replicates(_Window(self, edges), replicates, workers=workers)
 
     def run(self, replicate: int, edges: np.ndarray) -> Measured:
         """Run one replicate up to the last edge."""
@@ -287,3 +279,20 @@ class _Serving:
         draws = generator(self.job.seed, replicate, FAILURES)
         happening = self.failures.events(self.job.fleet, self.horizon, draws)
         return heapq.merge(ends, changes(*happening), key=lambda moment: moment[0])
+
+
+class _Window:
+    """A call of `serve`, measured between the edges of intervals."""
+
+    def __init__(self, serving: _Serving, edges: np.ndarray) -> None:
+        self.serving, self.edges = serving, edges
+
+    def compile(self) -> None:
+        """Serve for no time at all, so that the loop is compiled before threads share it."""
+        serving, job = self.serving, self.serving.job
+        batches = poisson_batches(job.fleet, serving.rates, serving.law, serving.horizon, job.seed, 0)
+        job.start(0).advance(next(batches), 0, 0, 0.0)
+
+    def run(self, replicate: int, given: None) -> Measured:
+        """Run one replicate."""
+        return self.serving.run(replicate, self.edges)

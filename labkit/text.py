@@ -8,6 +8,12 @@ from typing import Any
 from labkit.checks import nearest
 from labkit.errors import InputError
 
+# A spreadsheet takes a text that begins so for a formula, some also in their wide forms.
+FORMULA = ("=", "+", "-", "@", "\t", "\r", "\n", "＝", "＋", "－", "＠")
+
+# Characters of a name with its parameters.
+LONGEST = 2_000
+
 _FORM = re.compile(r"\s*([\w-]+)\s*(?:\((.*)\))?\s*")
 
 
@@ -19,9 +25,14 @@ def align(rows: list[list[str]]) -> str:
     )
 
 
+def harmless(value: Any) -> Any:
+    """Return a cell for a spreadsheet: text that it would take for a formula gets an apostrophe before it."""
+    return f"'{value}" if isinstance(value, str) and value.startswith(FORMULA) else value
+
+
 def name_part(text: str) -> str | None:
     """Return the part before the parameters, as `mixed` in ``"mixed(beta=0.5)"``; None when it is no name."""
-    form = _FORM.fullmatch(text)
+    form = _FORM.fullmatch(text) if len(text) <= LONGEST else None
     return form.group(1) if form else None
 
 
@@ -46,7 +57,7 @@ def from_name(argument: str, text: Any, kinds: Mapping[str, type], example: str,
     InputError
         Unknown name, unknown or missing parameter, or a value that the class refuses.
     """
-    form = _FORM.fullmatch(text) if isinstance(text, str) else None
+    form = _FORM.fullmatch(text) if isinstance(text, str) and len(text) <= LONGEST else None
     if form is None:
         raise InputError(f"{argument} is {text!r}; give a {argument} or its name, such as {example!r}.")
     name, inside = form.groups()

@@ -13,9 +13,10 @@ PACKAGE = Path(__file__).parents[1] / "labkit"
 
 # From the top down; a line is one room or a few that share a floor.
 FLOORS = [
-    {"errors", "checks", "text"},
+    {"errors", "checks", "text", "memory", "files"},
     {"sources"},
     {"randomness"},
+    {"sharing"},
     {"compiled"},
     {"fleet"},
     {"traces"},

@@ -19,6 +19,7 @@ def add(commands: Commands) -> None:
     run = commands.add("run", _run, "Run a study: execute what is not recorded yet, then write its answer.")
     run.add_argument("study", metavar="STUDY", help="a study of experiments/, or the path of a TOML file")
     executing(run)
+    _computing(run)
 
     answer = commands.add(
         "answer", _answer, "Answer for a fleet of your own: two tables in a folder, no study file."
@@ -43,6 +44,16 @@ def add(commands: Commands) -> None:
     answer.add_argument("--entropy", metavar="E", type=whole, help="number that all randomness starts from")
     answer.add_argument("--name", metavar="NAME", help="name of the study (the name of the folder)")
     executing(answer)
+    _computing(answer)
+
+
+def _computing(command: argparse.ArgumentParser) -> None:
+    command.add_argument(
+        "--scheduler", metavar="ADDRESS", help="have replicates computed by a Dask cluster: tcp://host:port"
+    )
+    command.add_argument(
+        "--timeout", metavar="S", type=number, help="end a run after so many seconds; it counts as failed"
+    )
 
 
 def _run(arguments: argparse.Namespace) -> int:
@@ -78,7 +89,7 @@ def _run_and_answer(study: "Study", arguments: argparse.Namespace, note: str = "
     groups = groups_of(study) if study.answer_notebook is not None else []
     for group in groups:
         check_writable("output", output / group.folder)
-    report = _run_points(study, store, arguments.jobs, output, note)
+    report = _run_points(study, store, arguments, output, note)
     for trouble in report.troubles:
         where = f" (see {trouble.evidence})" if trouble.evidence else ""
         first = (trouble.error.splitlines() or ["no message"])[0]
@@ -126,14 +137,17 @@ def _run_and_answer(study: "Study", arguments: argparse.Namespace, note: str = "
     return status
 
 
-def _run_points(study: "Study", store: "Store", jobs: int | None, output: Path, note: str) -> "Report":
+def _run_points(
+    study: "Study", store: "Store", arguments: argparse.Namespace, output: Path, note: str
+) -> "Report":
     """Run the points behind a progress bar, which appears when nothing has been refused."""
     from labkit.studies.running import run_points
 
     with contextlib.ExitStack() as shown:
         bar: Any = None
+        lively = sys.stderr.isatty()  # a log gets a line a run, no more
 
-        def tick(done: int) -> None:
+        def tick(done: int, replicates: int) -> None:
             nonlocal bar
             if bar is None:
                 from tqdm import tqdm
@@ -143,6 +157,20 @@ def _run_points(study: "Study", store: "Store", jobs: int | None, output: Path, 
                 bar = shown.enter_context(
                     tqdm(total=len(study.points), desc=study.name, unit="run", file=sys.stderr)
                 )
-            bar.update(done - bar.n)
+            if replicates:
+                bar.set_postfix_str(f"{replicates:,} replicates", refresh=False)
+            if done > bar.n:
+                bar.update(done - bar.n)
+            elif lively:
+                bar.refresh()
 
-        return run_points(study, store, jobs=jobs, output=output, tick=tick, say=say)
+        return run_points(
+            study,
+            store,
+            jobs=arguments.jobs,
+            output=output,
+            scheduler=arguments.scheduler,
+            timeout=arguments.timeout,
+            tick=tick,
+            say=say,
+        )

@@ -1,17 +1,17 @@
 """The table of a schedule of failures, read and checked row by row."""
 
+from collections.abc import Hashable
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import pandas as pd
-import pyarrow as pa
-import pyarrow.parquet as pq
 
 from labkit.checks import nearest
 from labkit.errors import InputError
 from labkit.fleet.csv_files import read_csv
+from labkit.fleet.parquet_files import frame_of, read_parquet
 from labkit.fleet.tables import Source, check_labels, is_blank, table_source
 
 COLUMNS = ("time", "server", "state")
@@ -84,11 +84,9 @@ def _table(schedule: Any) -> tuple[pd.DataFrame, Source, bool]:
             columns, source = read_csv(path, ("time",))
             frame = pd.DataFrame({label: column.to_pandas() for label, column in columns.items()})
             return frame, source, True
-        frame = pq.ParquetFile(path).read().to_pandas(ignore_metadata=True)
+        frame = frame_of(path, read_parquet(path), ignore_metadata=True)
     except OSError as error:
         raise InputError(f"{path} cannot be read: {error.strerror or error}.") from None
-    except (pa.ArrowInvalid, pa.ArrowNotImplementedError):
-        raise InputError(f"{path} is not a whole parquet file; write it again.") from None
     return frame, Source(str(path), lambda row: f"{path} row {row + 1}"), False
 
 
@@ -130,7 +128,13 @@ def _servers(column: pd.Series, source: Source) -> tuple[np.ndarray, list[Any]]:
     for row, value in enumerate(values):
         if is_blank(value):
             raise InputError(f"{source.at(row)}: server is blank; name the server of each event.")
+        if not isinstance(value, Hashable):
+            raise InputError(f"{source.at(row)}: server is {value!r}; give the name of one server in a cell.")
     code, names = pd.factorize(values)
+    if (code < 0).any():  # another kind of nothing, such as a date that is none
+        raise InputError(
+            f"{source.at(int(np.argmax(code < 0)))}: server is blank; name the server of each event."
+        )
     return code.astype(np.int64), list(names)
 
 

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from labkit.compiled import advance, inlined, multiply_wide, next_raw
+from labkit.compiled import advance, copy_into, inlined, multiply_wide, next_raw
 from labkit.engine.arrivals import AHEAD, draw_from_all, draw_from_table, options_in
 from labkit.engine.measures import measure
 
@@ -153,7 +153,9 @@ def place_tasks(
     picked = np.empty((AHEAD, arrivals.options.shape[1]), np.uint32)
     coins = np.empty(AHEAD, np.uint64)
     rows = np.zeros(AHEAD, np.uint64)
-    mark = np.searchsorted(checkpoints, first + 1)
+    mark = 0
+    while mark < checkpoints.size and checkpoints[mark] <= first:
+        mark += 1
     done = first
     while done < last:
         stop = last
@@ -161,10 +163,10 @@ def place_tasks(
             stop = checkpoints[mark]
         if every > 0:
             if done % every == 0:
-                report[:] = loads
+                copy_into(report, loads)
                 if pictures is not None:
                     for dispatcher in range(pictures.shape[0]):
-                        pictures[dispatcher] = loads
+                        copy_into(pictures[dispatcher], loads)
                 if renewal < 0:
                     renew(state, seen)
             stop = min(stop, done - done % every + every)

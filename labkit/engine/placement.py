@@ -1,10 +1,9 @@
 """Work that arrives and stays: the public function, its checks, and its table of measures."""
 
 from collections.abc import Callable
-from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from functools import cached_property, lru_cache
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 import pandas as pd
@@ -20,6 +19,7 @@ from labkit.errors import InputError
 from labkit.fleet.model import ABSENT, Fleet
 from labkit.policies.base import Policy
 from labkit.randomness import ARRIVALS, COINS, TURNS, kernel_state
+from labkit.sharing.replicates import run_replicates
 from labkit.survey.fair import fair_profile
 from labkit.survey.optimum import optimum_of_unit_work
 
@@ -158,21 +158,34 @@ def place_loads(
     Outcome
     """
     information = Fresh() if information is None else information
-    replicates = len(loads)
-    measured = np.empty((replicates, checkpoints.size, len(MEASURED)))
+    replicates = range(first_replicate, first_replicate + len(loads))
+    measured = np.empty((len(loads), checkpoints.size, len(MEASURED)))
     job = _Job(fleet, rule, seed, information, checkpoints, tasks, work)
-
-    def run(row: int) -> None:
-        job.run(first_replicate + row, row, loads[row], measured[row])
-
-    job.compile(loads[0], measured[0])
-    if workers == 1:
-        for row in range(replicates):
-            run(row)
-    else:
-        with ThreadPoolExecutor(workers) as pool:
-            list(pool.map(run, range(replicates)))
+    rows = [_Row(at, each, measured[at]) for at, each in enumerate(loads)]
+    results = run_replicates(job, replicates, given=rows, workers=workers)
+    for row, (ours, out) in zip(rows, results, strict=True):
+        if ours is not row.loads:  # it comes from another process
+            row.loads[:], row.measured[:] = ours, out
     return Outcome(fleet, rule.name, information.name, loads, checkpoints, measured, tasks, first_replicate)
+
+
+class _Row(NamedTuple):
+    """A replicate's place in a call: the number of its row, its loads, and where its measures go."""
+
+    at: int
+    loads: np.ndarray
+    measured: np.ndarray
+
+    def __reduce__(self) -> tuple:
+        """Send no numbers that are not there yet, and a row of zeros by its length."""
+        loads = self.loads if self.loads.any() else (self.loads.size, self.loads.dtype.str)
+        return _row_again, (self.at, loads, self.measured.shape)
+
+
+def _row_again(at: int, loads: Any, shape: tuple[int, ...]) -> _Row:
+    if isinstance(loads, tuple):
+        loads = np.zeros(loads[0], loads[1])
+    return _Row(at, loads, np.empty(shape))
 
 
 def measured_loads(fleet: Fleet, loads: np.ndarray) -> np.ndarray:
@@ -203,14 +216,17 @@ class _Job:
         checkpoints: np.ndarray,
         tasks: int,
         work: Sizes | None,
+        state: tuple[Any, ...] | None = None,
     ) -> None:
+        self.fleet, self.information = fleet, information
         self.rule, self.seed, self.checkpoints = rule, seed, checkpoints
         self.every, self.dispatchers = information.every, information.dispatchers
         self.tasks, self.work = tasks, work
         self.arrivals = arrivals_of(fleet)
         self.capacity, self.weights = fleet.capacity, comparison_weights(fleet.capacity)
         self.demand = read_only(np.empty(0)) if fleet.demand is None else fleet.demand
-        self.state, self.renewal = rule.prepare(fleet), rule.renewal(fleet)
+        self.state = rule.prepare(fleet) if state is None else state
+        self.renewal = rule.renewal(fleet)
         self._no_sizes = None if work is None else np.empty(0)
         self.pairs_of = _pairs_of(fleet)
         self.several = None if only_pairs(self.arrivals) else True
@@ -220,25 +236,35 @@ class _Job:
         rule.check(np.int64 if work is None and not rule.moves_work else np.float64)
         self.loop = loop_of(rule)
 
-    def compile(self, loads: np.ndarray, out: np.ndarray) -> None:
+    def __reduce__(self) -> tuple:
+        """Send what was given, and the rule's tables, which another processor could work out differently."""
+        given = (self.fleet, self.rule, self.seed, self.information, self.checkpoints, self.tasks, self.work)
+        return _Job, (*given, self.state)
+
+    def compile(self) -> None:
         """Place no task at all, so that the loop is compiled before threads share it."""
+        whole = self.work is None and not self.rule.moves_work
+        loads = np.zeros(self.fleet.size, np.int64 if whole else np.float64)
+        out = np.empty((self.checkpoints.size, len(MEASURED)))
         words = np.zeros(4, np.uint64)
         self._place(self.state, words, words.copy(), words.copy(), loads, loads, 0, 0, self._no_sizes, out)
 
-    def run(self, replicate: int, row: int, loads: np.ndarray, out: np.ndarray) -> None:
-        """Place all tasks of one replicate: loads and measures are written into the two arrays.
+    def run(self, replicate: int, given: _Row) -> tuple[np.ndarray, np.ndarray]:
+        """Place all tasks of one replicate: loads and measures are written into its row, and returned.
 
-        `replicate` numbers its streams; given sizes that differ between replicates have it in row `row`.
+        `replicate` numbers its streams; given sizes that differ between replicates have it in row `given.at`.
         """
+        loads, out = given.loads, given.measured
         arriving = kernel_state(self.seed, replicate, ARRIVALS)
         own = kernel_state(self.seed, replicate, COINS)
         turns = kernel_state(self.seed, replicate, TURNS)
         report = loads if self.every == 0 else loads.copy()
         state = self.rule.own_state(self.state)
         work = self.work
-        blocks = [(0, self.tasks, None)] if work is None else work.blocks(self.seed, replicate, row)
+        blocks = [(0, self.tasks, None)] if work is None else work.blocks(self.seed, replicate, given.at)
         for first, last, sizes in blocks:
             self._place(state, arriving, own, turns, loads, report, first, last, sizes, out)
+        return loads, out
 
     def _pictures(self, loads: np.ndarray) -> np.ndarray | None:
         """Return room for what each dispatcher sees, or None; a report fills it before the first task."""

@@ -4,7 +4,7 @@ import math
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from functools import lru_cache
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 
@@ -109,7 +109,14 @@ def counting_scale(typical: float, low: float, high: float) -> float:
 class ServiceJob:
     """One call, prepared: what all its replicates share."""
 
-    def __init__(self, fleet: Fleet, rule: Policy, rules: ServiceRules, seed: np.random.SeedSequence) -> None:
+    def __init__(
+        self,
+        fleet: Fleet,
+        rule: Policy,
+        rules: ServiceRules,
+        seed: np.random.SeedSequence,
+        state: tuple[Any, ...] | None = None,
+    ) -> None:
         if rule.moves_work:
             raise InputError(
                 f"policy {rule.name} moves work already placed, which has no meaning where work leaves; "
@@ -117,7 +124,8 @@ class ServiceJob:
             )
         self.fleet, self.rule, self.rules, self.seed = fleet, rule, rules, seed
         self.weights = comparison_weights(fleet.capacity)
-        self.state, self.renewal = rule.prepare(fleet), rule.renewal(fleet)
+        self.state = rule.prepare(fleet) if state is None else state
+        self.renewal = rule.renewal(fleet)
         self.guarded = rules.limits is not None or rules.fails
         limits = np.full(fleet.size, NO_LIMIT) if rules.limits is None else rules.limits
         self.limits = limits if self.guarded else np.empty(0, np.int64)
@@ -125,6 +133,10 @@ class ServiceJob:
         self.far = rule.looks_far and rules.information.every == 0 and rules.discipline != q.STAYS
         rule.check(np.float64)
         self.loops = loops_of(rule)
+
+    def __reduce__(self) -> tuple:
+        """Send what was given, and the rule's tables, which another processor could work out differently."""
+        return ServiceJob, (self.fleet, self.rule, self.rules, self.seed, self.state)
 
     def start(self, replicate: int) -> "Progress":
         """Return an empty fleet at time 0."""

@@ -16,6 +16,7 @@ from labkit.analysis.survey_words import rerouted_table
 from labkit.errors import InputError
 from labkit.figures.style import save_figure
 from labkit.survey.facts import Survey
+from labkit.text import harmless
 
 DOTS_PER_INCH = 144
 
@@ -106,6 +107,19 @@ def _joined(table: pd.DataFrame) -> pd.DataFrame:
     return table.map(lambda value: "; ".join(map(str, value)) if isinstance(value, tuple) else value)
 
 
+def _harmless(table: pd.DataFrame) -> pd.DataFrame:
+    """Return a table whose texts no spreadsheet takes for formulas; numbers stay as they are."""
+    texts = [name for name in table.columns if not pd.api.types.is_numeric_dtype(table[name].dtype)]
+    changed = table.assign(**{str(name): table[name].map(_cell) for name in texts})
+    return changed.rename(columns=_cell)
+
+
+def _cell(value: Any) -> Any:
+    """Return a harmless cell; a bare carriage return, which would not be quoted, becomes a line feed."""
+    value = harmless(value)
+    return value.replace("\r\n", "\n").replace("\r", "\n") if isinstance(value, str) else value
+
+
 def _plain(value: Any) -> Any:
     """Return a value as JSON knows it: a number that is not finite is null."""
     if isinstance(value, Mapping):
@@ -124,7 +138,7 @@ def _write(
         folder.mkdir(parents=True, exist_ok=True)
         written = [folder / f"{name}.csv" for name in tables]
         for path, table in zip(written, tables.values(), strict=True):
-            table.to_csv(path, index=False, lineterminator="\n")
+            _harmless(table).to_csv(path, index=False, lineterminator="\n")
         for name, text in texts.items():
             (folder / name).write_text(text + "\n", encoding="utf-8", newline="\n")
             written.append(folder / name)

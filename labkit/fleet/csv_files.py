@@ -4,6 +4,7 @@ import csv
 import re
 from collections.abc import Iterator
 from pathlib import Path
+from typing import TextIO
 
 import pandas as pd
 import pyarrow as pa
@@ -12,11 +13,16 @@ import pyarrow.csv as pacsv
 
 from labkit.errors import InputError
 from labkit.fleet.tables import Source
+from labkit.memory import check_memory
 
 _WHOLE = r"^(0|-?[1-9][0-9]*)$"
 NUMBER = re.compile(
-    r"[+-]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][+-]?[0-9]+)?|[+-]?(inf|infinity|nan)", re.IGNORECASE
+    r"[+-]?([0-9]+(\.[0-9]*)?|\.[0-9]+)([eE][+-]?[0-9]+)?|[+-]?(inf|infinity|nan)", re.IGNORECASE
 )
+# Bytes of memory for each byte of a file, with the copies that are made on the way.
+_COPIES = 6
+# Characters of a line; Arrow takes no longer one either.
+_LONGEST_LINE = 1 << 20
 _SEPARATORS = {";": "semicolons", "\t": "tabs", "|": "bars"}
 
 
@@ -29,6 +35,9 @@ def read_csv(path: Path, numbers: tuple[str, ...]) -> tuple[dict[str, pa.Chunked
         When the file is empty, not UTF-8, has rows of unequal length or something that is no number.
     """
     source = Source(str(path), lambda row: f"{path} line {line_of(path, row)}")
+    size = path.stat().st_size
+    what = f"{path}: its {size:,} bytes"
+    check_memory(what, _COPIES * size, "keep only the rows and columns that belong there")
     header = header_of(path)
     try:
         table = pacsv.read_csv(
@@ -71,7 +80,8 @@ def whole_options(text: pa.ChunkedArray) -> pd.Series:
         )
     plain = re.compile(_WHOLE)
     return pd.Series(
-        [int(name) if name and plain.match(name) else name for name in named.to_pylist()], dtype=object
+        [int(name) if name and len(name) < 100 and plain.match(name) else name for name in named.to_pylist()],
+        dtype=object,
     )
 
 
@@ -117,12 +127,20 @@ def no_number(place: str, label: str, value: str) -> str:
 def records(path: Path) -> Iterator[tuple[int, list[str]]]:
     """Yield the first line, counted from 1, and the cells of each row that is not empty."""
     with path.open(encoding="utf-8-sig", newline="") as lines:
-        reader = csv.reader(lines)
+        reader = csv.reader(lines_of(lines))
         start = 1
         for cells in reader:
             if cells:
                 yield start, cells
             start = reader.line_num + 1
+
+
+def lines_of(stream: TextIO) -> Iterator[str]:
+    """Yield the lines of a file; refuse, as the module csv does, one that is longer than any row."""
+    while line := stream.readline(_LONGEST_LINE):
+        if len(line) == _LONGEST_LINE and line[-1] not in "\r\n":
+            raise csv.Error("line too long")
+        yield line
 
 
 def line_of(path: Path, row: int) -> int:

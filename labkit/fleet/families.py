@@ -8,6 +8,7 @@ from labkit.checks import check_whole
 from labkit.errors import InputError
 from labkit.fleet.model import CompleteLaw, Fleet
 from labkit.fleet.names import MOST_SERVERS
+from labkit.memory import check_memory
 from labkit.randomness import generator, seed_sequence
 
 _STREAM = 3  # apart from arrivals, coins and sizes: one seed may make a fleet and then place work on it
@@ -61,6 +62,7 @@ def torus(*sides: int) -> Fleet:
         raise InputError("sides is empty; give at least one side, for example torus(16, 16).")
     sides = tuple(check_whole(f"side {place + 1}", side, least=3) for place, side in enumerate(sides))
     size = _total("sides", sides)
+    _fits("sides", size, 16 * len(sides))
     options = np.empty((size, len(sides), 2), dtype=np.uint32)
     here = np.arange(size, dtype=np.uint32).reshape(sides)
     for axis in range(len(sides)):
@@ -86,6 +88,7 @@ def hypercube(dimension: int) -> Fleet:
     if dimension > 31:
         raise InputError(f"dimension is {dimension}; give at most 31.")
     size = 1 << dimension
+    _fits("dimension", size, 8 * dimension + 16)
     options = np.empty((dimension, size // 2, 2), dtype=np.uint32)
     here = np.arange(size, dtype=np.uint32)
     for digit in range(dimension):
@@ -111,6 +114,7 @@ def ladder(n: int) -> Fleet:
     """
     n = check_whole("n", n)
     _total("n", (2, n))
+    _fits("n", 2 * n, 32)
     here = np.arange(2 * n, dtype=np.uint32)
     first = np.concatenate([here[: n - 1], here[n:-1], here[:n]])
     second = np.concatenate([here[1:n], here[n + 1 :], here[n:]])
@@ -180,6 +184,9 @@ def ring_with_chords(n: int, chords: int, *, rng: Any) -> Fleet:
     most = n * (n - 3) // 2
     if chords > most:
         raise InputError(f"chords is {chords}; a ring of {n} servers has room for at most {most}.")
+    _fits("n", n, 32)
+    # To draw without repetition takes a table of all pairs, where they are not many more than the chords.
+    _fits("chords", chords, 48 + 8 * min(50, most // max(1, chords)), "choices")
     # Pairs at distance 2, 3, ... along the ring, n starts each; opposite servers, met last, only n/2.
     pairs = generator(seed, 0, _STREAM).choice(most, size=chords, replace=False) if chords else np.arange(0)
     start = pairs % n
@@ -226,6 +233,8 @@ def random_regular(n: int, degree: int, *, rng: Any) -> Fleet:
         raise InputError(f"degree is {degree}; with {n} servers give at most {n - 1}.")
     if n * degree % 2:
         raise InputError(f"n × degree is {n} × {degree}, an odd number; make one of them even.")
+    # Above half, all pairs of servers are listed; else some copies of the open ends.
+    _fits("degree", n, 24 * n if 2 * degree > n - 1 else 40 * degree)
     generated = generator(seed, 0, _STREAM)
     if 2 * degree > n - 1:
         first, second = np.triu_indices(n, 1)
@@ -284,6 +293,10 @@ def _among(drawn: np.ndarray, keys: np.ndarray) -> np.ndarray:
     found = place < len(keys)
     found[found] = keys[place[found]] == drawn[found]
     return found
+
+
+def _fits(name: str, count: int, bytes_each: int, what: str = "servers") -> None:
+    check_memory(f"{name} asks for {count:,} {what}, which", count * bytes_each, "give fewer")
 
 
 def _servers(name: str, value: Any, *, least: int) -> int:

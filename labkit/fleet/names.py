@@ -13,6 +13,7 @@ ABSENT = np.uint32(0xFFFFFFFF)
 UNKNOWN = np.uint32(0xFFFFFFFE)
 MOST_SERVERS = int(UNKNOWN)
 SPREAD = 4  # direct lookup while the range of integer names is at most this many times their number
+LONGEST_NAME = 1_000  # characters
 HASHED = 200_000  # from here on text is found by a 64-bit hash and then compared
 _LARGEST = 2**63 - 1
 
@@ -111,6 +112,11 @@ def _refuse_blank_text(names: pd.Index, source: Source) -> None:
         for row, value in enumerate(names[start : start + CHUNK], start):
             if is_blank(value):
                 raise InputError(f"{source.at(row)}: server is blank; name servers by text or whole numbers.")
+            if isinstance(value, str) and len(value) > LONGEST_NAME:
+                raise InputError(
+                    f"{source.at(row)}: server is {value[:40]!r}… of {len(value):,} characters; give a name "
+                    f"of at most {LONGEST_NAME:,}."
+                )
 
 
 class NameMap:

@@ -5,11 +5,12 @@ from typing import Any
 
 import pandas as pd
 import pyarrow as pa
-import pyarrow.parquet as pq
 
 from labkit.errors import InputError
+from labkit.files import check_inside
 from labkit.fleet.csv_files import read_csv, whole_names, whole_options
 from labkit.fleet.model import Fleet
+from labkit.fleet.parquet_files import frame_of, read_parquet
 from labkit.fleet.tables import Source
 
 Columns = dict[str, Any]
@@ -87,6 +88,7 @@ def _find(folder: Path, stem: str) -> Path:
     path = folder / found[0]
     if not path.is_file():
         raise InputError(f"{path} is not a file; give a table there.")
+    check_inside(path, folder, str(path))
     return path
 
 
@@ -100,19 +102,13 @@ def _read(path: Path, amount: str) -> tuple[Columns, Source]:
 
 
 def _read_parquet(path: Path) -> Columns:
-    try:
-        table = pq.ParquetFile(path).read()
-    except (pa.ArrowInvalid, pa.ArrowNotImplementedError):
-        raise InputError(f"{path} is not a whole parquet file; write it again.") from None
-    for place, label in enumerate(table.column_names):
-        if label in table.column_names[:place]:
-            raise InputError(f"{path} has two columns named {label!r}; keep one.")
+    table = read_parquet(path)
     # Whole numbers with blanks would become floats, which lose digits beyond 2^53.
     blanks = any(pa.types.is_integer(column.type) and column.null_count for column in table.columns)
-    frame = table.to_pandas(types_mapper=_nullable if blanks else None)
+    frame = frame_of(path, table, types_mapper=_nullable if blanks else None)
     if frame.index.names != [None]:
         frame = frame.reset_index()
-    return dict(frame.items())
+    return {str(label): column for label, column in frame.items()}
 
 
 def _nullable(kind: pa.DataType) -> pd.Int64Dtype | None:

@@ -23,7 +23,7 @@ class Dispatcher:
         self.rule, self.settings = self.header["policy"]["rule"], self.header["policy"]["parameters"]
         self.tables = {name: self.table(name) for name in self.header["files"]}
         servers, choices = self.tables["servers.csv"], self.tables["choices.csv"]
-        self.names, self.weight = servers["name"], servers["weight"]
+        self.names, self.weight = [name.removeprefix("'") for name in servers["name"]], servers["weight"]
         options, bounds = ([choices[c] for c in choices if kind in c] for kind in ("option_", "bound_"))
         self.options = [[one for one in row if one is not None] for row in zip(*options, strict=True)]
         self.bounds = [[one for one in row if one is not None] for row in zip(*bounds, strict=True)]

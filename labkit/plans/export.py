@@ -181,7 +181,7 @@ def _header(fleet: Fleet, rule: Policy, parts: Parts, tables: dict[str, pd.DataF
     meanings = {
         SERVERS: {
             "number": "number of the server, from 0; other tables name it so",
-            "name": "its name",
+            "name": "its name; an apostrophe at the begin of text does not belong to it",
             "kind": "whether the name is text or a whole number",
             "capacity": "its capacity",
             "weight": "number in the ratio of the capacities: compares utilisations, weights coins",

@@ -1,16 +1,21 @@
 """Reading a plan back: only what was written as it is, and for the fleet it was made for."""
 
+import csv
 import json
 from pathlib import Path
 from typing import Any
 
 from labkit.errors import InputError
+from labkit.files import check_inside
 from labkit.fleet.model import Fleet, check_fleet
+from labkit.memory import check_memory
 from labkit.plans.model import DISPATCHER, HEADER, Plan
 from labkit.plans.schema import FILE as SCHEMA
 from labkit.plans.schema import VERSION, fault_of, header_digest
 from labkit.plans.tables import read_csv_bytes, sha256
 
+# Tables whose columns the header names one by one.
+_EXACT = ("servers.csv", "choices.csv", "vectors.csv")
 _AGAIN = "make the plan again with labkit plan"
 
 
@@ -69,7 +74,9 @@ def read_plan(folder: str | Path, fleet: Fleet | None = None) -> Plan:
 def _header(path: Path) -> dict[str, Any]:
     try:
         header = json.loads(_content(path))
-    except ValueError as error:
+    except InputError:
+        raise
+    except (ValueError, RecursionError) as error:
         raise InputError(f"{path} is not JSON ({error}); {_AGAIN}.") from None
     version = header.get("schema_version") if isinstance(header, dict) else None
     if version is not None and version != VERSION:
@@ -89,13 +96,21 @@ def _table(folder: Path, name: str, about: dict[str, Any]) -> Any:
     content = _content(path)
     if sha256(content) != about["sha256"]:
         raise InputError(f"{path} is torn or altered: it does not have the digest in {HEADER}; {_AGAIN}.")
-    table = read_csv_bytes(name, content)
+    try:
+        table = read_csv_bytes(name, content)
+    except (ValueError, TypeError, LookupError, OverflowError, csv.Error) as error:
+        reason = " ".join(str(error).split())[:80]
+        raise InputError(f"{path} is no table that labkit plan writes ({reason}); {_AGAIN}.") from None
+    if name in _EXACT and list(table.columns) != list(about["columns"]):
+        raise InputError(f"{path} has other columns than {HEADER} says; {_AGAIN}.")
     if len(table) != about["rows"]:
         raise InputError(f"{path} has {len(table)} rows, and {HEADER} says {about['rows']}; {_AGAIN}.")
     return table
 
 
 def _content(path: Path) -> bytes:
+    check_inside(path, path.parent, str(path))
+    check_memory(f"{path}: its {path.stat().st_size:,} bytes", 10 * path.stat().st_size, _AGAIN)
     try:
         return path.read_bytes()
     except OSError as error:

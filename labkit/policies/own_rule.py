@@ -5,6 +5,7 @@ import inspect
 import re
 import textwrap
 from collections.abc import Callable
+from functools import lru_cache
 from typing import Any
 
 import numba
@@ -44,9 +45,9 @@ class OwnRule(Policy):
     cached = False
     looks_far = True
 
-    def __init__(self, function: Callable) -> None:
+    def __init__(self, function: Callable, source: str | None = None) -> None:
         self.function = function
-        self.source = source_of(function)
+        self.source = source_of(function) if source is None else source
         self.digest = hashlib.sha256(self.source.encode()).hexdigest()[:8]
         self.__doc__ = function.__doc__
         # A user's index is checked: a wrong one must not read somebody else's memory.
@@ -108,11 +109,25 @@ class OwnRule(Policy):
         """Call the user's function itself, not compiled."""
         return self.function(options, loads, capacity, coin)
 
+    def __reduce__(self) -> tuple:
+        """Send the function itself, since another process does not have the notebook, and its source."""
+        from labkit.sharing.work import packed
+
+        return _again, (packed(self.function), self.source)
+
     def __eq__(self, other: object) -> bool:
         return isinstance(other, OwnRule) and self.function is other.function
 
     def __hash__(self) -> int:
         return hash(self.function)
+
+
+@lru_cache(maxsize=64)
+def _again(function: bytes, source: str) -> OwnRule:
+    """Return a rule that came from another process, the same one each time, so that it is compiled once."""
+    from labkit.sharing.work import unpacked
+
+    return OwnRule(unpacked(function), source)
 
 
 def policy(function: Callable) -> OwnRule:

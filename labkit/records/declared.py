@@ -9,13 +9,15 @@ ends in ``_path`` or ``_folder``, is a path.
 import ast
 import hashlib
 import json
+import math
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
 from typing import Any
 
-from labkit.checks import nearest
+from labkit.checks import nearest, shown
 from labkit.errors import InputError
+from labkit.files import is_file_or_folder, read_text_file
 from labkit.records.project import from_root, notebook_text
 
 # What a run does with its time and place, but not with its results.
@@ -63,20 +65,23 @@ class Parameter:
             raise InputError(f"{self.name} is an empty list; give at least one item.")
         wording, types = _KINDS[self.kind]
         if not isinstance(value, types) or (isinstance(value, bool) and self.kind != "bool"):
-            raise InputError(f"{self.name} is {value!r}; give {wording} ({self.annotation}).")
+            raise InputError(f"{self.name} is {shown(value)}; give {wording} ({self.annotation}).")
         if self.kind == "float":
-            value = float(value)  # type: ignore[arg-type]
+            try:
+                value = float(value)  # type: ignore[arg-type]
+            except OverflowError:
+                value = math.inf if value > 0 else -math.inf
             if value != value or value in (float("inf"), float("-inf")):
-                raise InputError(f"{self.name} is {value!r}; give a finite number.")
+                raise InputError(f"{self.name} is {shown(value)}; give a finite number.")
         if is_path(self.name) and isinstance(value, str) and (value or self.default):
             self._check_exists(value)
         return value
 
     def _check_exists(self, text: str) -> None:
-        if not text or not from_root(text).exists():
+        if not text or not is_file_or_folder(from_root(text)):
             raise InputError(
-                f"{self.name} is {text!r}; nothing is there (a relative path counts from the project root): "
-                "give a path that exists."
+                f"{self.name} is {text!r}; nothing is there that can be read (a relative path counts from "
+                "the project root): give a path that exists."
             )
 
 
@@ -131,15 +136,19 @@ def read_notebook(path: Path) -> Notebook:
         anything but declarations.
     """
     try:
-        cells = json.loads(path.read_bytes())["cells"]
+        cells = json.loads(read_text_file(path, f"notebook {path}"))["cells"]
         code = [
             ("".join(cell["source"]).strip(), cell.get("metadata", {}).get("tags", []))
             for cell in cells
             if cell["cell_type"] == "code"
         ]
-    except (OSError, ValueError, KeyError, TypeError) as error:
+        code = [(source, tags) for source, tags in code if source and "injected-parameters" not in tags]
+        for source, _ in code:
+            source.encode()  # half of a surrogate pair is no text
+    except InputError:
+        raise
+    except (OSError, ValueError, LookupError, TypeError, AttributeError, RecursionError) as error:
         raise InputError(f"notebook {path} cannot be read as a notebook ({error}); save it anew.") from None
-    code = [(source, tags) for source, tags in code if source and "injected-parameters" not in tags]
     at = [index for index, (_, tags) in enumerate(code) if "parameters" in tags]
     if len(at) != 1:
         raise InputError(
@@ -157,10 +166,19 @@ def _modules_beside(folder: Path, sources: tuple[str, ...]) -> dict[str, str]:
         for name in _imported(pending.pop()):
             for file in (folder / f"{name}.py", *sorted((folder / name).rglob("*.py"))):
                 key = file.relative_to(folder).as_posix()
-                if key not in found and file.is_file():
-                    found[key] = file.read_text(encoding="utf-8")
+                if key not in found and is_file_or_folder(file) and file.is_file():
+                    found[key] = _text_of(file)
                     pending.append(found[key])
     return found
+
+
+def _text_of(module: Path) -> str:
+    try:
+        return read_text_file(module, f"module {module}").decode("utf-8")
+    except UnicodeDecodeError:
+        raise InputError(f"module {module} is no UTF-8 text; save it in UTF-8.") from None
+    except OSError as error:
+        raise InputError(f"module {module} cannot be read ({error.strerror}); make it readable.") from None
 
 
 def _imported(source: str) -> set[str]:
@@ -168,16 +186,24 @@ def _imported(source: str) -> set[str]:
     lines = [line for line in source.splitlines() if not line.lstrip().startswith(("%", "!"))]
     try:
         nodes = list(ast.walk(ast.parse("\n".join(lines))))
-    except SyntaxError:
+    except (SyntaxError, ValueError, RecursionError, MemoryError):
         return set()
     names = {alias.name for node in nodes if isinstance(node, ast.Import) for alias in node.names}
     names |= {node.module or "" for node in nodes if isinstance(node, ast.ImportFrom)}
-    return {name.split(".")[0] for name in names} - {""}
+    firsts = {name.split(".")[0] for name in names}
+    return {name for name in firsts if 0 < len(name.encode()) < 200}  # no file has a longer name
 
 
 def _declarations(path: Path, source: str) -> dict[str, Parameter]:
     found: dict[str, Parameter] = {}
-    for statement in ast.parse(source).body:
+    try:
+        statements = ast.parse(source).body
+    except (SyntaxError, ValueError, RecursionError, MemoryError) as error:
+        raise InputError(
+            f"notebook {path}, parameters cell, cannot be read as Python ({error}); write name: type = "
+            "literal on each line."
+        ) from None
+    for statement in statements:
         try:
             if not isinstance(statement, ast.AnnAssign) or statement.value is None:
                 raise ValueError
@@ -186,9 +212,10 @@ def _declarations(path: Path, source: str) -> dict[str, Parameter]:
             if len(kinds) != 1 or kinds[0] not in _KINDS or not isinstance(statement.target, ast.Name):
                 raise ValueError
             default = ast.literal_eval(statement.value)
-        except ValueError:
+        except (ValueError, TypeError, SyntaxError, RecursionError, MemoryError):
+            written = " ".join((ast.get_source_segment(source, statement) or "").split())[:200]
             raise InputError(
-                f"notebook {path}, parameters cell, line {statement.lineno}: {ast.unparse(statement)!r} is "
+                f"notebook {path}, parameters cell, line {statement.lineno}: {written!r} is "
                 f"no declaration; write name: type = literal with a type among {', '.join(_KINDS)}."
             ) from None
         name = statement.target.id

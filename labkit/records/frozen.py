@@ -17,6 +17,8 @@ from typing import TYPE_CHECKING, Any
 
 from labkit.checks import nearest
 from labkit.errors import InputError, StoreError
+from labkit.files import check_inside
+from labkit.memory import check_memory
 from labkit.records.identity import canonical
 from labkit.records.project import FROZEN, check_folder_name
 from labkit.records.store import decode, unwritable
@@ -241,10 +243,14 @@ def check_files(place: Path, name: str | None = None) -> tuple[dict[str, Any], l
     files = manifest.get("files", {})
     for file, expected in files.items():
         path = place / file
+        if path.is_symlink():
+            sentence = f"file {file} is a link, and links are not followed: put the file itself there."
+            findings.append(Finding("changed", file, sentence))
+            continue
         if not path.is_file():
             findings.append(Finding("missing", file, f"file {file} is missing; restore it."))
             continue
-        found = hashlib.sha256(path.read_bytes()).hexdigest()
+        found = _digest_of(path)
         if found != expected:
             findings.append(
                 Finding(
@@ -264,9 +270,22 @@ def check_files(place: Path, name: str | None = None) -> tuple[dict[str, Any], l
     return manifest, findings
 
 
+def _digest_of(path: Path) -> str:
+    try:
+        with path.open("rb") as stream:
+            return hashlib.file_digest(stream, "sha256").hexdigest()
+    except OSError as error:
+        return f"unknown ({error.strerror})"
+
+
 def _read_manifest(place: Path) -> tuple[dict[str, Any], list[Finding]]:
     try:
+        check_inside(place / MANIFEST, place, f"file {MANIFEST}")
+        size = (place / MANIFEST).stat().st_size
+        check_memory(f"file {MANIFEST}: its {size:,} bytes", 20 * size, "restore it")
         content = (place / MANIFEST).read_bytes()
+    except InputError as error:
+        return {}, [Finding("manifest", MANIFEST, str(error))]
     except OSError as error:
         sentence = f"file {MANIFEST} cannot be read ({error.strerror}); restore it."
         return {}, [Finding("manifest", MANIFEST, sentence)]
@@ -292,22 +311,71 @@ def _read_manifest(place: Path) -> tuple[dict[str, Any], list[Finding]]:
 
 
 def _is_manifest(value: Any) -> bool:
-    """Tell whether a decoded file has the fields of a manifest, and file names that stay in its folder."""
-    from labkit.records.schema import ORIGIN
+    """Tell whether a decoded file has the fields of a manifest, each of its kind.
 
-    run_keys = {*ORIGIN.names, "rows"}
+    Names of files stay in their folder, and nothing in it can be taken for anything but what it is called.
+    """
     return (
         isinstance(value, dict)
         and value.keys() == KEYS.keys()
-        and all(isinstance(value[key], kind) for key, kind in KEYS.items())
-        and value["query"].keys() == QUERY
+        and all(_is(value[key], kind) for key, kind in KEYS.items())
+        and _is_query(value["query"])
         and all(isinstance(digest, str) and _is_plain(file) for file, digest in value["files"].items())
-        and all(isinstance(run, dict) and run.keys() == run_keys for run in value["runs"])
+        and all(isinstance(version, str) for version in value["versions"].values())
+        and all(_is_run(run) for run in value["runs"])
+    )
+
+
+def _is(value: Any, kind: type) -> bool:
+    return isinstance(value, kind) and (kind is bool or not isinstance(value, bool))
+
+
+def _is_query(query: dict[str, Any]) -> bool:
+    texts = ("labels", "parameters", "measures")
+    return (
+        query.keys() == QUERY
+        and all(isinstance(query[key], str) for key in ("study", "moment"))
+        and all(isinstance(query[key], list) for key in texts)
+        and all(isinstance(name, str) for key in texts for name in query[key])
+        and all(len(set(query[key])) == len(query[key]) for key in texts)
+        and (query["risk"] is None or _is_number(query["risk"]))
+        and _is_number(query["confidence"])
+    )
+
+
+def _is_number(value: Any) -> bool:
+    return _is(value, int) or isinstance(value, float)
+
+
+def _is_run(run: Any) -> bool:
+    """Tell whether something is the origin of a run, as `labkit.records.schema.row_of_origin` returns it."""
+    from labkit.records.schema import ORIGIN
+
+    decoded = {
+        **dict.fromkeys(("versions", "parameters", "inputs", "rules"), dict),
+        **{"spawn_key": list, "entropy": int, "dirty": bool, "rows": int},
+    }
+    return (
+        isinstance(run, dict)
+        and run.keys() == {*ORIGIN.names, "rows"}
+        and _is_number(run["elapsed"])
+        and all(_is(run[key], decoded.get(key, str)) for key in run.keys() - {"elapsed"})
+        and all(
+            isinstance(text, str) for key in ("versions", "inputs", "rules") for text in run[key].values()
+        )
+        and run["inputs"].keys() <= run["parameters"].keys()
+        and all(isinstance(run["parameters"][name], str) for name in run["inputs"])
+        and min(run["entropy"], run["rows"]) >= 0
     )
 
 
 def _is_plain(file: str) -> bool:
-    return file not in ("", ".", "..", MANIFEST) and not set(file) & set("/\\\0:")
+    return (
+        file not in ("", ".", "..", MANIFEST)
+        and not set(file) & set("/\\\0:")
+        and len(file.encode("utf-8", "replace")) < 256
+        and file.isprintable()
+    )
 
 
 def encode(table: "pa.Table") -> bytes:

@@ -11,39 +11,14 @@ from functools import cache
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from labkit import __version__
+from labkit.checks import shown
 from labkit.errors import InputError
 from labkit.records.declared import EXECUTION_ONLY, Notebook, is_path
-from labkit.records.project import PACKAGE, from_root
-from labkit.sources import source_digest
+from labkit.records.project import from_root
+from labkit.sources import library_version
 
 if TYPE_CHECKING:
     import numpy as np
-
-# Rooms whose code can change a measure; the others only carry it.
-COMPUTING = (
-    "randomness.py",
-    "compiled.py",
-    "fleet",
-    "survey",
-    "policies",
-    "engine",
-    "stationary",
-    "traces",
-    "placing.py",
-    "serving.py",
-    "replaying.py",
-    # By what rule replicates are added, and in which groups, decides what rows a record has.
-    "analysis/stopping.py",
-    "analysis/precision.py",
-    "analysis/tables.py",
-    # A search for capacity goes where its limits lead it.
-    "provisioning.py",
-    "analysis/capacity_search.py",
-    "analysis/headroom.py",
-    "analysis/service_limits.py",
-    "analysis/block_bootstrap.py",
-)
 
 # These do not shape the arriving work: the rule and what it knows, what is done with tasks when they are
 # there, how often and when it is measured. Points that differ only in them meet the same arrivals, and more
@@ -110,7 +85,7 @@ def identify(notebook: Notebook, values: dict[str, Any]) -> Identity:
 def check_entropy(value: Any) -> int:
     """Return the entropy when it is a whole number of at least 0; it may have any number of digits."""
     if not isinstance(value, int) or isinstance(value, bool) or value < 0:
-        raise InputError(f"entropy is {value!r}; give a whole number of at least 0.")
+        raise InputError(f"entropy is {shown(value)}; give a whole number of at least 0.")
     return value
 
 
@@ -120,7 +95,8 @@ def canonical(value: Any) -> str:
         return json.dumps(value, sort_keys=True, separators=(",", ":"), allow_nan=False)
     except (TypeError, ValueError):
         raise InputError(
-            f"parameters are {value!r}; give only texts, finite numbers, true, false, null and lists of them."
+            f"parameters are {shown(value)}; give only texts, finite numbers, true, false, null and "
+            "lists of them."
         ) from None
 
 
@@ -149,9 +125,3 @@ def content_files(path: Path) -> list[Path]:
 def _file_digest(path: Path, size: int, changed: int) -> str:
     with path.open("rb") as stream:
         return hashlib.file_digest(stream, "sha256").hexdigest()
-
-
-@cache
-def library_version() -> str:
-    """Return the version of labkit with a short digest of the sources that compute."""
-    return f"{__version__}+{source_digest(PACKAGE, COMPUTING)}"

@@ -5,8 +5,9 @@ from pathlib import Path
 from typing import Any
 
 from labkit.errors import InputError
+from labkit.files import is_file_or_folder
+from labkit.sources import PACKAGE
 
-PACKAGE = Path(__file__).resolve().parents[1]
 ROOT = PACKAGE.parent
 NOTEBOOKS = ROOT / "notebooks"
 EXPERIMENTS = ROOT / "experiments"
@@ -23,7 +24,7 @@ def find_notebook(notebook: str | Path, root: Path = ROOT) -> Path:
     text = str(notebook)
     if text.endswith(".ipynb"):
         path = from_root(text, root)
-        if not path.is_file():
+        if not is_file_or_folder(path) or path.is_dir():
             raise InputError(f"notebook is {text!r}; there is no such file: give the path of an .ipynb file.")
         return path
     folder = root / NOTEBOOKS.name
@@ -37,7 +38,10 @@ def find_notebook(notebook: str | Path, root: Path = ROOT) -> Path:
 
 def from_root(text: str | Path, root: Path = ROOT) -> Path:
     """Return the absolute path that a text means: absolute as it is, relative to the project root."""
-    return (root / Path(text).expanduser()).resolve()
+    try:
+        return (root / Path(text).expanduser()).resolve()
+    except (OSError, ValueError, RuntimeError) as error:
+        raise InputError(f"path is {str(text)!r}, which can be none ({error}); give another.") from None
 
 
 def path_text(path: Path) -> str:

@@ -3,17 +3,12 @@
 import hashlib
 import json
 import os
-import platform
 import subprocess
-from importlib import metadata
 from pathlib import Path
 
 from labkit.randomness import BIT_GENERATOR, DRAWS
-from labkit.records.identity import library_version
 from labkit.records.project import ROOT
-
-# Some platforms lack pymetis; tree flow with and without it differs.
-PACKAGES = ("numpy", "numba", "scipy", "pandas", "pyarrow", "pymetis")
+from labkit.sources import versions
 
 # What results/ holds was computed: it is no source.
 _SOURCES = (".", ":(exclude)results/")
@@ -107,20 +102,3 @@ def git(
     if done.returncode not in codes:
         raise subprocess.CalledProcessError(done.returncode, "git", done.stdout, done.stderr)
     return done
-
-
-def versions() -> dict[str, str]:
-    """Return the versions of Python, the computing packages, labkit and the machine's kind."""
-    found = {}
-    for name in PACKAGES:
-        try:
-            found[name] = metadata.version(name)
-        except metadata.PackageNotFoundError:
-            found[name] = ""
-    return {
-        **found,
-        "python": platform.python_version(),
-        "labkit": library_version(),
-        "platform": platform.platform(),
-        "machine": platform.machine(),
-    }

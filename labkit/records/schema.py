@@ -2,15 +2,21 @@
 
 import json
 from collections.abc import Mapping
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import pyarrow as pa
 
-from labkit.errors import InputError
+from labkit.errors import InputError, StoreError
 
 if TYPE_CHECKING:
     import pandas as pd
+
+# The number of this schema, in the metadata of every record. 1 had the same columns and no number; 0 had no
+# `rules`. Another meaning or set of columns needs a new number, and a line in `migrated`.
+SCHEMA = 2
+_NUMBER = b"labkit.schema"
 
 # Columns that every row of every record has.
 ORIGIN = pa.schema(
@@ -134,6 +140,78 @@ def with_origin(measured: pa.Table, origin: Mapping[str, Any]) -> pa.Table:
     return pa.table({**columns, **{name: measured[name] for name in measured.column_names}})
 
 
+def numbered(table: pa.Table) -> pa.Table:
+    """Return a table with the number of this schema in its metadata, and nothing else there."""
+    return table.replace_schema_metadata({_NUMBER: str(SCHEMA).encode()})
+
+
+def schema_number(schema: pa.Schema) -> int:
+    """Return the number of the schema that a file was written in; -1 when it is ill-formed."""
+    text = (schema.metadata or {}).get(_NUMBER)
+    if text is None:
+        return 1 if "rules" in schema.names else 0
+    return int(text) if text.isdigit() and len(text) < 10 else -1
+
+
+def migrated(table: pa.Table, path: Path, run_id: str) -> tuple[pa.Table, int]:
+    """Return a record as today's schema has it, and the number of the schema that it was written in.
+
+    Parameters
+    ----------
+    table : pyarrow.Table
+        As it is in its file; that file is not changed.
+    path, run_id : Path, str
+        The file, named in refusals, and the run that its name says it is of.
+
+    Raises
+    ------
+    StoreError
+        When the schema is newer than this one, or the table is not the record of this run.
+    """
+    number = check_schema(table.schema, path)
+    table = table.replace_schema_metadata(None)
+    if number == 0:
+        rules = pa.array(["{}"] * table.num_rows, type=pa.string())
+        table = table.add_column(ORIGIN.names.index("rules"), "rules", rules)
+    check_run(table, path, run_id)
+    return table, number
+
+
+def check_run(table: pa.Table, path: Path, run_id: str) -> None:
+    """Refuse a record that is not that of the run in its name."""
+    if not pa.types.is_string(table["run_id"].type) or table["run_id"].unique().to_pylist() != [run_id]:
+        raise StoreError(f"record {path} is not the record of run {run_id}; move it out of the store.")
+
+
+def check_schema(schema: pa.Schema, path: Path) -> int:
+    """Return the number of a record's schema; refuse a newer one, and columns that are no record's."""
+    number = schema_number(schema)
+    if not 0 <= number <= SCHEMA:
+        named = "an ill-formed schema" if number < 0 else f"schema {number}"
+        raise StoreError(
+            f"record {path} is of {named} and this labkit reads up to {SCHEMA}; read it with the labkit that "
+            "wrote it, or a later one."
+        )
+    if len(set(schema.names)) < len(schema.names):
+        raise StoreError(f"record {path} has a column twice; move it out of the store.")
+    missing = [name for name in ORIGIN.names if name not in schema.names and (number or name != "rules")]
+    if missing and "run_id" in schema.names:
+        raise StoreError(
+            f"record {path} is of another version of labkit (it has no {missing[0]}); move it out of the "
+            "store and run its study again."
+        )
+    if missing:
+        raise StoreError(f"file {path} is not a record of this store; move it elsewhere.")
+    return number
+
+
+def has_one_origin(table: pa.Table) -> bool:
+    """Tell whether a record begins with the columns of the origin, each with one value in all rows."""
+    return list(table.schema)[: len(ORIGIN)] == list(ORIGIN) and all(
+        len(table[name].unique()) == 1 for name in ORIGIN.names
+    )
+
+
 def measured_part(table: pa.Table) -> pa.Table:
     """Return the labels and measures of a record."""
     return table.select([name for name in table.column_names if name not in ORIGIN.names])
@@ -146,6 +224,8 @@ def first_difference(left: pa.Table, right: pa.Table) -> str:
     if left.num_rows != right.num_rows:
         return f"{left.num_rows} rows against {right.num_rows}"
     for name in left.column_names:
+        if not pa.types.is_floating(left[name].type) and left[name].equals(right[name]):
+            continue
         ours, theirs = _bits(left[name]), _bits(right[name])
         if ours.dtype != theirs.dtype:
             return f"column {name!r} holds {left[name].type} against {right[name].type}"
@@ -159,6 +239,16 @@ def first_difference(left: pa.Table, right: pa.Table) -> str:
     return ""
 
 
+def exact_difference(left: pa.Table, right: pa.Table) -> str:
+    """Return where two tables first differ in type, in what is missing, or in any bit, or an empty text."""
+    if not left.schema.equals(right.schema):
+        return f"columns {left.schema.to_string()} against {right.schema.to_string()}"
+    for name in left.column_names:
+        if left.num_rows == right.num_rows and not left[name].is_null().equals(right[name].is_null()):
+            return f"missing values in column {name!r}"
+    return first_difference(left, right)
+
+
 def _bits(column: pa.ChunkedArray) -> np.ndarray:
     if pa.types.is_floating(column.type):
         values = column.to_numpy().astype(np.float64)
@@ -168,7 +258,12 @@ def _bits(column: pa.ChunkedArray) -> np.ndarray:
 
 def row_of_origin(table: pa.Table) -> dict[str, Any]:
     """Return the origin of a record, with its JSON columns decoded."""
-    row = table.select(ORIGIN.names).slice(0, 1).to_pylist()[0]
+    return decoded_origin(table.select(ORIGIN.names).slice(0, 1).to_pylist()[0])
+
+
+def decoded_origin(row: Mapping[str, Any]) -> dict[str, Any]:
+    """Return an origin as a record has it with its JSON columns decoded."""
+    row = dict(row)
     for name in ("versions", "parameters", "inputs", "rules", "spawn_key"):
         row[name] = json.loads(row[name])
     row["entropy"] = int(row["entropy"])

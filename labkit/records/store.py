@@ -1,31 +1,39 @@
-"""The results store: one verified parquet file a run, never half a file, never a silent replacement.
+"""The results store: one verified record a run, never half of one, never a silent replacement.
 
-A file is called ``<run id>-<first 32 hex digits of its SHA-256>.parquet``, in the folder of its study.
-It is written beside this name, read back, and moved into place; readers recompute the digest. Arrow is
-imported where a file is read or written, so that looking for a record costs nothing.
+A record begins as a file of its own in the folder of its study (record_files.py); compaction moves records
+into packs (packs.py, compaction.py). Several processes may write and read at the same time without a lock.
 """
 
-import hashlib
-import os
-import platform
-import re
-import secrets
-import tempfile
-import time
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, TypeVar
 
 from labkit.errors import InputError, StoreError
+from labkit.records.copies import Listing, copies_of, list_study, names_in, study_folder
+from labkit.records.leftovers import sweep
+from labkit.records.packs import PACKED, is_pack, open_pack
 from labkit.records.project import STORE, check_study_name, from_root
+from labkit.records.record_files import (
+    ID,
+    check_writable,
+    decode,
+    foreign,
+    read_content,
+    read_file,
+    unwritable,
+    write_file,
+)
 
 if TYPE_CHECKING:
     import pyarrow as pa
 
-_NAME = re.compile(r"([0-9a-f]{16})-([0-9a-f]{32})\.parquet")
-_LEFTOVER = re.compile(r"\.[0-9a-f]{16}\.([0-9a-f]{8})\.(\d+)\.[0-9a-f]+\.tmp")
-_DAY = 86_400.0
+__all__ = ["Store", "check_writable", "decode", "open_store", "unwritable"]
+
+_Result = TypeVar("_Result")
+
+# A record may be moved into a pack, and this pack into another, while it is looked for.
+_LOOKS = 5
 
 
 @dataclass(frozen=True)
@@ -46,36 +54,60 @@ class Store:
         path : Path
             The file of the record.
         new : bool
-            False when the run was recorded before with the same measures, bit for bit; that file is kept.
+            False when the run was recorded before, or by another process meanwhile, with the same measures,
+            bit for bit; that record is kept.
+
+        Raises
+        ------
+        StoreUnwritable
+            When the folder cannot be written.
+        StoreError
+            When a record of the run is damaged, or its measures differ.
+        """
+        folder = self.folder / check_study_name(study)
+        names = names_in(folder)
+        present = copies_of(folder, run_id, names)
+        if present:
+            check_same(run_id, present[0], self.read(present[0]), table)
+            return present[0], False
+        try:
+            sweep(folder, names)
+            path = write_file(folder, run_id, table)
+        except OSError as error:
+            raise unwritable("store", folder, error) from None
+        kept = settle_run(folder, run_id)
+        return (path, True) if kept is None or kept == path else (kept, False)
+
+    def settle(self, study: str) -> list[Path]:
+        """Remove what processes that died left in the folder of a study; return what was removed.
+
+        These are unfinished files, and second files of runs that were recorded by two processes at once.
 
         Raises
         ------
         StoreError
-            When the folder cannot be written, a record of the run is damaged, or its measures differ.
+            When two records of a run have different measures. Both are kept.
         """
-        from labkit.records.schema import first_difference, measured_part
-
-        present = self.find(study, run_id)
-        if present is not None:
-            difference = first_difference(measured_part(self.read(present)), measured_part(table))
-            if difference:
-                raise StoreError(
-                    f"run {run_id} was executed again and its measures differ from {present} ({difference}); "
-                    "compare versions and sources, and remove that file only when it is known to be wrong."
-                )
-            return present, False
         folder = self.folder / check_study_name(study)
-        try:
-            folder.mkdir(parents=True, exist_ok=True)
-            _sweep(folder)
-            return _write_whole(folder, run_id, table), True
-        except OSError as error:
-            raise unwritable("store", folder, error) from None
+        removed = sweep(folder, names_in(folder)) + sweep(folder / PACKED, names_in(folder / PACKED))
+        for run_id in doubled(list_study(folder, warn=lambda sentence: None)):
+            before = copies_of(folder, run_id)
+            settle_run(folder, run_id)
+            removed += [path for path in before if not is_pack(path.parent) and not path.exists()]
+        return removed
 
     def find(self, study: str, run_id: str) -> Path | None:
-        """Return the file that holds the record of a run, not read yet, or None."""
-        found = sorted((self.folder / study).glob(f"{run_id}-*.parquet"))
+        """Return where the record of a run is, not read yet, or None; `runs` is quicker for many runs."""
+        found = copies_of(self.folder / study, run_id)
         return found[0] if found else None
+
+    def runs(self, study: str, warn: Callable[[str], None] | None = None) -> dict[str, Path]:
+        """Return where the record of each run of a study is, none read yet, in the order of their ids.
+
+        A damaged pack is refused, or left out when there is someone to `warn` of it.
+        """
+        chosen = list_study(self.folder / study, warn).chosen()
+        return {run_id: folder / name for run_id, (folder, name) in chosen.items()}
 
     def studies(self) -> list[str]:
         """Return the names of the studies that have a folder here."""
@@ -86,43 +118,39 @@ class Store:
         )
 
     def files(self, study: str, warn: Callable[[str], None] | None = None) -> Iterator[Path]:
-        """Yield the record files of a study, one a run.
+        """Yield where the records of a study are, one a run.
 
         A parquet file that is no record is refused, or left out when there is someone to `warn` of it.
         """
-        seen = set()
-        for path in sorted((self.folder / study).glob("[!.]*.parquet")):
-            try:
-                run_id = _run_id(path)
-            except StoreError as error:
-                if warn is None:
-                    raise
-                warn(str(error))
-                continue
-            if run_id not in seen:
-                seen.add(run_id)
-                yield path
+        listing = list_study(self.folder / study, warn)
+        for name in listing.foreign:
+            if warn is None:
+                raise StoreError(foreign(listing.folder / name))
+            warn(foreign(listing.folder / name))
+        for folder, name in listing.chosen().values():
+            yield folder / name
 
     def locate(self, prefix: str, warn: Callable[[str], None] = lambda sentence: None) -> Path:
-        """Return the record file of the one run whose id begins with `prefix`.
+        """Return where the record of the one run is whose id begins with `prefix`.
 
-        Files with other names are not looked at. A run that stands in several studies has several files;
+        Files with other names are not looked at. A run that stands in several studies has several records;
         `warn` is called for those that are damaged, and a whole one is returned if there is one.
         """
         prefix = prefix.lower()
-        files = [
-            path for study in self.studies() for path in sorted((self.folder / study).glob("[!.]*.parquet"))
-        ]
-        named = [path for path in files if prefix and path.name.startswith(prefix)]
-        found = [path for path in named if _is_record(path)]
-        for path in named:
-            if path not in found:
-                warn(_foreign(path))
-        runs = sorted({path.name[:16] for path in found})
+        found: list[Path] = []
+        count = 0
+        for study in self.studies():
+            listing = list_study(self.folder / study, warn)
+            for name in listing.foreign:
+                if prefix and name.startswith(prefix):
+                    warn(foreign(listing.folder / name))
+            chosen = listing.chosen()
+            count += len(chosen)
+            found += [folder / name for folder, name in chosen.values() if prefix and name.startswith(prefix)]
+        runs = sorted({path.name[:ID] for path in found})
         if len(runs) == 1:
             return self._whole(found, warn)
         if not runs:
-            count = sum(map(_is_record, files))
             raise InputError(
                 f"run is {prefix!r}; none of the {count} records in {self.folder} begins so: see labkit list "
                 "for their ids."
@@ -139,46 +167,33 @@ class Store:
         return paths[-1]
 
     def read(self, path: Path) -> "pa.Table":
-        """Return a record; refuse a torn, altered or foreign file by name."""
-        from labkit.records.schema import ORIGIN
+        """Return a record with the columns of today's schema; refuse a torn, altered or foreign one by name.
 
-        run_id = _run_id(path)
-        try:
-            content = path.read_bytes()
-        except OSError as error:
-            raise StoreError(
-                f"record {path} cannot be read ({error.strerror}); run its study again."
-            ) from None
-        if _digest(content) != path.stem.split("-")[1]:
-            raise StoreError(
-                f"record {path} is torn or altered: its content does not have the digest in its name; "
-                "remove it and run its study again."
-            )
-        table = decode(content)
-        missing = [name for name in ORIGIN.names if name not in table.column_names]
-        if missing and "run_id" in table.column_names:
-            raise StoreError(
-                f"record {path} is of another version of labkit (it has no {missing[0]}); move it out of the "
-                "store and run its study again."
-            )
-        if missing or set(table["run_id"].to_pylist()) != {run_id}:
-            raise StoreError(f"record {path} is not the record of run {run_id}; move it out of the store.")
-        return table
+        A record that has been moved into a pack since its path was found is read there.
+        """
+        return self.tables([path])[0]
 
+    def tables(self, paths: Sequence[Path]) -> "list[pa.Table]":
+        """Return many records, as `read` returns each: all of a pack are read together."""
+        found: dict[Path, pa.Table] = {}
+        together: dict[Path, list[Path]] = {}
+        for path in paths:
+            if is_pack(path.parent):
+                together.setdefault(path.parent, []).append(path)
+        for pack, members in together.items():
+            try:
+                names = sorted({path.name for path in members})
+                found.update(zip([pack / name for name in names], open_pack(pack).read(names), strict=True))
+            except FileNotFoundError:
+                continue  # merged into another: each is looked for
+        return [found[path] if path in found else _following(path, _read_once) for path in paths]
 
-def check_writable(what: str, folder: Path) -> None:
-    """Refuse a folder, there already or not, in which nothing could be written; leave nothing behind."""
-    try:
-        present = next(place for place in (folder, *folder.parents) if os.path.lexists(place))
-        with tempfile.TemporaryFile(dir=present):
-            pass
-    except OSError as error:
-        raise unwritable(what, folder, error) from None
+    def verify(self, path: Path) -> None:
+        """Refuse a record whose content is not as it was written; nothing is decoded.
 
-
-def unwritable(what: str, folder: Path, error: OSError) -> StoreError:
-    """Return the refusal of a folder that cannot be written."""
-    return StoreError(f"{what} {folder} cannot be written ({error.strerror}); name a folder that can be.")
+        A pack is verified once, with all its records.
+        """
+        _following(path, _verify_once)
 
 
 def open_store(store: str | Path | None = None) -> Store:
@@ -189,99 +204,68 @@ def open_store(store: str | Path | None = None) -> Store:
     return Store(folder)
 
 
-def _run_id(path: Path) -> str:
-    name = _NAME.fullmatch(path.name)
-    if name is None:
-        raise StoreError(_foreign(path))
-    return name[1]
+def doubled(listing: Listing) -> list[str]:
+    """Return the runs with several records of different content, beyond what packs hold twice."""
+    seen: dict[str, str] = {name[:ID]: name for _, names in listing.packed for name in names}
+    found = []
+    for name in listing.loose:
+        if seen.setdefault(name[:ID], name) != name:
+            found.append(name[:ID])
+    return sorted(set(found))
 
 
-def _is_record(path: Path) -> bool:
-    return _NAME.fullmatch(path.name) is not None
-
-
-def _foreign(path: Path) -> str:
-    return f"file {path} is not a record of this store; move it elsewhere."
-
-
-def decode(content: bytes) -> "pa.Table":
-    """Return the table in the content of a file, read by this thread alone.
-
-    A worker thread of Arrow's may let go of the content, a Python object, only when Python is ending already,
-    and the process is then aborted: so no threads, and not ``read_table``, which uses them for reading.
-    """
-    import pyarrow as pa
-    import pyarrow.parquet as pq
-
-    with pq.ParquetFile(pa.BufferReader(content), pre_buffer=False) as file:
-        return file.read(use_threads=False)
-
-
-def _digest(content: bytes | memoryview) -> str:
-    return hashlib.sha256(content).hexdigest()[:32]
-
-
-def _host() -> str:
-    return hashlib.sha256(platform.node().encode()).hexdigest()[:8]
-
-
-def _write_whole(folder: Path, run_id: str, table: "pa.Table") -> Path:
-    import pyarrow as pa
-    import pyarrow.parquet as pq
-
-    from labkit.records.schema import first_difference
-
-    sink = pa.BufferOutputStream()
-    pq.write_table(table, sink, compression="zstd")
-    content = memoryview(sink.getvalue())
-    digest = _digest(content)
-    beside = folder / f".{run_id}.{_host()}.{os.getpid()}.{secrets.token_hex(4)}.tmp"
-    try:
-        with beside.open("xb") as stream:
-            stream.write(content)
-            stream.flush()
-            os.fsync(stream.fileno())
-        written = beside.read_bytes()
-        if _digest(written) != digest or first_difference(decode(written), table):
-            raise StoreError(f"record {beside} did not read back as written; check the disk.")
-        final = folder / f"{run_id}-{digest}.parquet"
-        os.replace(beside, final)
-    finally:
-        beside.unlink(missing_ok=True)
-    _sync(folder)
-    return final
-
-
-def _sync(folder: Path) -> None:
-    if os.name == "posix":
-        handle = os.open(folder, os.O_RDONLY)
+def _following(path: Path, act: Callable[[Path], _Result]) -> _Result:
+    """Do something with a record; when it is gone from there, with the copy that readers take by then."""
+    reason = ""
+    for _ in range(_LOOKS):
         try:
-            os.fsync(handle)
-        finally:
-            os.close(handle)
+            return act(path)
+        except FileNotFoundError as error:
+            reason = error.strerror or "gone"
+        copies = copies_of(study_folder(path), path.name[:ID])
+        if not copies:
+            break
+        path = copies[0]
+    raise StoreError(f"record {path} cannot be read ({reason}); run its study again.")
 
 
-def _sweep(folder: Path) -> None:
-    """Remove what writers left that died half-way; a writer elsewhere is taken for dead after a day."""
-    for path in folder.glob(".*.tmp"):
-        name = _LEFTOVER.fullmatch(path.name)
-        if name is None:
-            continue
+def _read_once(path: Path) -> "pa.Table":
+    if is_pack(path.parent):
+        return open_pack(path.parent).read([path.name])[0]
+    return read_file(path)[0]
+
+
+def _verify_once(path: Path) -> None:
+    if is_pack(path.parent):
+        open_pack(path.parent).verify(path.name)
+    else:
+        read_content(path)
+
+
+def settle_run(folder: Path, run_id: str) -> Path | None:
+    """Keep one file of a run that two processes recorded at once, the same whichever of them does it."""
+    copies = copies_of(folder, run_id)
+    if len(copies) < 2:
+        return copies[0] if copies else None
+    kept = _following(copies[0], _read_once)
+    for copy in copies[1:]:
         try:
-            old = time.time() - path.stat().st_mtime > _DAY
-            if old or (name[1] == _host() and not _alive(int(name[2]))):
-                path.unlink()
-        except OSError:
+            table = _read_once(copy)
+        except FileNotFoundError:
             continue
+        check_same(run_id, copies[0], kept, table)
+        if not is_pack(copy.parent):
+            copy.unlink(missing_ok=True)
+    return next(iter(copies_of(folder, run_id)), None)
 
 
-def _alive(process: int) -> bool:
-    if os.name != "posix":
-        return True
-    try:
-        os.kill(process, 0)
-    except ProcessLookupError:
-        return False
-    except PermissionError:
-        return True
-    return True
+def check_same(run_id: str, path: Path, present: "pa.Table", table: "pa.Table") -> None:
+    """Raise the alarm when a run has other measures than those of its record at `path`."""
+    from labkit.records.schema import first_difference, measured_part
+
+    difference = first_difference(measured_part(present), measured_part(table))
+    if difference:
+        raise StoreError(
+            f"run {run_id} was executed again and its measures differ from {path} ({difference}); "
+            "compare versions and sources, and remove that file only when it is known to be wrong."
+        )

@@ -5,13 +5,13 @@ import hashlib
 import json
 import os
 import shutil
-import tempfile
 from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 from threading import Thread
 from typing import Any
 
+from labkit.records import leftovers
 from labkit.records.store import Store, unwritable
 from labkit.studies.execution import Execution, execute
 from labkit.studies.grouping import Group
@@ -94,7 +94,9 @@ def publish(
     page = output / f"{name}.html"
     try:
         output.parent.mkdir(parents=True, exist_ok=True)
-        aside = Path(tempfile.mkdtemp(prefix=f".{name}-", dir=output.parent))
+        leftovers.sweep(output.parent, os.listdir(output.parent))
+        aside = output.parent / leftovers.name_of_new("page")
+        aside.mkdir()
     except OSError as error:
         raise unwritable("output", output, error) from None
     try:

@@ -84,7 +84,15 @@ def _project(path: Path) -> tuple[list[str], str]:
         title = content["title"]
         if not authors or not isinstance(title, str):
             raise ValueError("no title or no authors")
-    except (OSError, ValueError, KeyError, TypeError, yaml.YAMLError) as error:
+    except (
+        OSError,
+        ValueError,
+        LookupError,
+        TypeError,
+        AttributeError,
+        RecursionError,
+        yaml.YAMLError,
+    ) as error:
         raise InputError(f"{path} cannot be read as a citation ({error}); restore it.") from None
     return authors, title
 

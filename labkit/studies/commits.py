@@ -2,6 +2,7 @@
 
 import contextlib
 import os
+import re
 import shutil
 import subprocess
 import sys
@@ -18,6 +19,8 @@ from labkit.studies.place import Place
 
 # What an environment is made from, in the order in which .ci/setup writes it down after its checkout's path.
 RECIPE = (".ci/setup", "requirements.lock")
+
+HASH = re.compile(r"[0-9a-f]{40}(?:[0-9a-f]{24})?")
 
 _LONG = 600.0  # seconds, for a large repository on a slow disk
 
@@ -104,6 +107,10 @@ class Commits:
     def _check_known(self, commit: str) -> str:
         """Return the project's folder inside its repository; refuse a commit that is not there."""
         short = commit[:10]
+        if not HASH.fullmatch(commit):
+            raise InputError(
+                f"commit is {commit!r}; a commit has 40 or 64 hex digits: take a record that names one."
+            )
         try:
             inside = os.fsdecode(git(self._root, "rev-parse", "--show-prefix").stdout.rstrip(b"\n"))
             words = ("cat-file", "-e", f"{commit}^{{commit}}")

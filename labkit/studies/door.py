@@ -3,14 +3,12 @@
 What is known here about the parameters of the notebooks is known nowhere else outside them.
 """
 
-import contextlib
-import os
 from collections.abc import Iterable
-from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from labkit.checks import check_fraction, check_number, check_whole, nearest
 from labkit.errors import InputError
+from labkit.memory import check_memory
 from labkit.records.declared import Notebook
 from labkit.records.project import from_root
 
@@ -160,22 +158,9 @@ def check_answer(study: "Study", points: Iterable["Point"]) -> None:
 
 
 def _check_memory(key: str, replicates: int, servers: int, checkpoints: int, policies: int) -> None:
-    needed = 8 * policies * replicates * (servers + _MEASURES * checkpoints)
-    present = memory()
-    if present is not None and needed > present:
-        raise InputError(
-            f"{key} is {replicates:,}; with {servers:,} servers, {checkpoints:,} checkpoints and "
-            f"{policies} policies one run would take about {needed / 1e9:,.0f} GB of memory and this machine "
-            f"has {present / 1e9:,.0f} GB: give fewer replicates (a larger risk needs fewer) or checkpoints."
-        )
-
-
-def memory() -> int | None:
-    """Return the bytes of memory that this machine, or its container, has; None when it cannot be told."""
-    found = []
-    with contextlib.suppress(AttributeError, OSError, ValueError):
-        found.append(os.sysconf("SC_PAGE_SIZE") * os.sysconf("SC_PHYS_PAGES"))
-    for limit in ("memory.max", "memory/memory.limit_in_bytes"):
-        with contextlib.suppress(OSError, ValueError):  # no container, or the word "max"
-            found.append(int(Path("/sys/fs/cgroup", limit).read_text()))
-    return min(found, default=None)
+    check_memory(
+        f"{key} is {replicates:,}; with {servers:,} servers, {checkpoints:,} checkpoints and {policies} "
+        "policies one run",
+        8 * policies * replicates * (servers + _MEASURES * checkpoints),
+        "give fewer replicates (a larger risk needs fewer) or checkpoints",
+    )

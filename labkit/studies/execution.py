@@ -4,8 +4,10 @@ import json
 import logging
 import re
 import traceback
+from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
+from threading import Event, Timer
 from typing import Any
 
 import labkit.errors
@@ -16,20 +18,35 @@ from labkit.studies.place import HERE, Place
 SENTENCES = {name: each for name, each in vars(labkit.errors).items() if isinstance(each, type)}
 REFUSALS = {name for name, each in SENTENCES.items() if issubclass(each, labkit.errors.InputError)}
 
+# What an execution that was ended for its time is called.
+TOO_LONG = "TimeoutError"
+
+# Until a kernel is given up that does not answer; many may start at once.
+START_SECONDS = 180
+
 # IPython colours its tracebacks for a terminal; they go into files.
 _COLOUR = re.compile(r"\x1b\[[0-9;]*[A-Za-z]")
 
 
 @dataclass(frozen=True)
 class Execution:
-    """How an execution went; `error` is empty when every cell ran to its end."""
+    """How an execution went; `error` is empty when every cell ran to its end, `kind` names its class."""
 
     error: str = ""
     refused: bool = False
     details: str = ""
+    kind: str = ""
 
 
-def execute(notebook: Path, parameters: dict[str, Any], output: Path, place: Place = HERE) -> Execution:
+def execute(
+    notebook: Path,
+    parameters: dict[str, Any],
+    output: Path,
+    place: Place = HERE,
+    *,
+    environment: Mapping[str, str] | None = None,
+    seconds: float | None = None,
+) -> Execution:
     """Execute a notebook with these parameters in a kernel of its own; safe in several threads.
 
     Parameters
@@ -42,20 +59,40 @@ def execute(notebook: Path, parameters: dict[str, Any], output: Path, place: Pla
         Where the executed notebook goes, whole or partial.
     place : Place
         The checkout whose labkit, and the Python that, the kernel uses.
+    environment : dict, optional
+        Variables for the kernel, besides those of this process.
+    seconds : float, optional
+        When to end a kernel that still computes.
 
     Returns
     -------
     Execution
-        Errors in cells, ``sys.exit``, cells left out and dead kernels are all reported, never raised.
+        Errors in cells, ``sys.exit``, cells left out, dead kernels and too long a time are all reported,
+        never raised.
     """
-    from labkit.studies.kernels import end_kernel, own_event_loop, start_kernel
+    from labkit.studies.kernels import end_kernel, end_now, own_event_loop, start_kernel
 
     with own_event_loop():
-        kernel = start_kernel(notebook, place)
+        kernel = start_kernel(notebook, place, environment)
+        late = Event()
+
+        def end() -> None:
+            late.set()
+            end_now(kernel)
+
+        watch = Timer(seconds or 0.0, end)
+        watch.daemon = True
+        if seconds is not None:
+            watch.start()
         try:
-            return _execute(notebook, parameters, output, kernel)
+            result = _execute(notebook, parameters, output, kernel)
         finally:
+            watch.cancel()
             end_kernel(kernel)
+    if late.is_set() and result.error:
+        error = f"it took longer than {seconds:g} seconds and was ended; allow it more, or mend what hangs."
+        return Execution(error, False, result.details, TOO_LONG)
+    return result
 
 
 def _execute(notebook: Path, parameters: dict[str, Any], output: Path, kernel: type) -> Execution:
@@ -73,15 +110,17 @@ def _execute(notebook: Path, parameters: dict[str, Any], output: Path, kernel: t
             parameters=parameters,
             kernel_name="python3",
             progress_bar=False,
+            start_timeout=START_SECONDS,
             kernel_manager_class=kernel,
             shutdown_kernel="immediate",  # all is on disk by then; a polite end takes half a second
         )
     except PapermillExecutionError as error:
         refused = error.ename in REFUSALS
         sentence = error.evalue if error.ename in SENTENCES else f"{error.ename}: {error.evalue}"
-        return Execution(_plain(sentence.strip()), refused, _plain("\n".join(error.traceback)))
+        return Execution(_plain(sentence.strip()), refused, _plain("\n".join(error.traceback)), error.ename)
     except Exception as error:
-        return Execution(f"{type(error).__name__}: {error}".strip(), False, traceback.format_exc())
+        name = type(error).__name__
+        return Execution(f"{name}: {error}".strip(), False, traceback.format_exc(), name)
     return _look_through(output)
 
 

@@ -20,8 +20,9 @@ from labkit.records.frozen import (
 from labkit.records.frozen_index import index_of, index_text, write_index
 from labkit.records.identity import content_files
 from labkit.records.project import ANSWERS, FROZEN, ROOT, from_root, path_text
-from labkit.records.provenance import git, source_state, versions
+from labkit.records.provenance import git, source_state
 from labkit.records.store import Store, check_writable, decode
+from labkit.sources import versions
 from labkit.studies.answering import MADE_FROM, write_answer
 from labkit.studies.grouping import groups_of
 from labkit.studies.model import Study, find_study, read_study
@@ -168,16 +169,17 @@ def _origin(table: "pa.Table") -> dict[str, Any]:
 
 
 def _records(study: Study, asked: str, store: Store) -> "list[pa.Table]":
-    found = {point.run_id: store.find(study.name, point.run_id) for point in study.points}
+    known = store.runs(study.name)
+    found = {point.run_id: known.get(point.run_id) for point in study.points}
     missing = [run for run, path in found.items() if path is None]
     if missing:
-        others = sum(path.name[:16] not in found for path in store.files(study.name))
-        known = f" (it holds {others} runs of other code or other values)" if others else ""
+        others = len(known.keys() - found.keys())
+        besides = f" (it holds {others} runs of other code or other values)" if others else ""
         raise InputError(
             f"study {study.name}: {len(missing)} of {len(found)} runs are not recorded in {store.folder}"
-            f"{known}, the first being {missing[0]}; run labkit run {asked}."
+            f"{besides}, the first being {missing[0]}; run labkit run {asked}."
         )
-    return [store.read(path) for path in found.values() if path is not None]
+    return store.tables([path for path in found.values() if path is not None])
 
 
 def _changes(

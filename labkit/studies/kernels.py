@@ -10,9 +10,9 @@ import os
 import re
 import shutil
 import sys
-import tempfile
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from pathlib import Path
+from types import MappingProxyType
 from typing import Any
 
 from jupyter_client.manager import AsyncKernelManager
@@ -20,6 +20,7 @@ from jupyter_core.utils import ensure_event_loop, run_sync
 from traitlets import default
 
 from labkit.studies.place import HERE, Place
+from labkit.studies.scratch import new_folder
 
 # The kernels of this process that are alive; an interrupted command ends them.
 _alive: set["PrivateKernelManager"] = set()
@@ -31,14 +32,14 @@ class PrivateKernelManager(AsyncKernelManager):
     _folder: str | None = None
     preload: tuple[str, ...] = ()
     place: Place = HERE
+    extra: Mapping[str, str] = MappingProxyType({})
 
     if os.name == "posix":
         transport = "ipc"
 
         @default("ip")
         def _private_address(self) -> str:
-            self._folder = tempfile.mkdtemp(prefix="labkit-")
-            return os.path.join(self._folder, "k")
+            return os.path.join(new_folder(), "k")
 
     def format_kernel_cmd(self, extra_arguments: list[str] | None = None) -> list[str]:
         """Return the command: the place's Python, whatever kernels are installed, and no history file."""
@@ -52,13 +53,16 @@ class PrivateKernelManager(AsyncKernelManager):
 
     async def start_kernel(self, **options: Any) -> None:  # type: ignore[override]
         """Start the kernel with the place's labkit first on its path."""
-        environment = dict(options.pop("env", os.environ))
+        environment = {**options.pop("env", os.environ), **self.extra}
         if self.place != HERE:
             # machine code is kept by the path of its source, and this path will not come again
             environment["NUMBA_CACHE_DIR"] = str(self.place.root / ".numba_cache")
         paths = [str(self.place.root), *filter(None, [environment.get("PYTHONPATH")])]
         environment["PYTHONPATH"] = os.pathsep.join(paths)
         environment["PYDEVD_DISABLE_FILE_VALIDATION"] = "1"
+        if os.name == "posix":
+            self._folder = os.path.dirname(self.ip)
+            self.connection_file = os.path.join(self._folder, "connection.json")  # else it is left in /tmp
         _alive.add(self)
         await super().start_kernel(env=environment, **options)
 
@@ -76,14 +80,19 @@ class PrivateKernelManager(AsyncKernelManager):
             process.kill()
 
 
-def start_kernel(notebook: Path, place: Place = HERE) -> type[PrivateKernelManager]:
+def start_kernel(
+    notebook: Path, place: Place = HERE, environment: Mapping[str, str] | None = None
+) -> type[PrivateKernelManager]:
     """Start a kernel for a notebook and return a class that nbclient can call for its manager.
+
+    `environment` is added to that of this process.
 
     nbclient makes managers itself, from a class, and starts them when it is itself loaded. This kernel is on
     its way before that, so that both load at the same time; it begins with what the notebook will import.
     """
     manager = PrivateKernelManager(kernel_name="python3")
     manager.place, manager.preload = place, _imports(notebook)
+    manager.extra = environment or {}
     # the working directory that JupyterLab gives; papermill's own option would change it for all threads
     run_sync(manager.start_kernel)(cwd=str(notebook.parent))
 
@@ -92,6 +101,12 @@ def start_kernel(notebook: Path, place: Place = HERE) -> type[PrivateKernelManag
             return manager
 
     return Started
+
+
+def end_now(kernel: type[PrivateKernelManager]) -> None:
+    """End a kernel's process at once, from any thread; what it did is still to be cleaned up."""
+    manager: PrivateKernelManager = kernel()
+    manager.end_now()
 
 
 def end_kernel(kernel: type[PrivateKernelManager]) -> None:

@@ -3,6 +3,7 @@
 import itertools
 import math
 import os
+import re
 import tomllib
 from dataclasses import dataclass
 from functools import cached_property
@@ -10,8 +11,9 @@ from pathlib import Path
 from typing import Any
 
 from labkit.analysis.stopping import stopping_rule
-from labkit.checks import check_fraction, check_whole, nearest
+from labkit.checks import check_fraction, check_whole, nearest, shown
 from labkit.errors import InputError, TooFewReplicates
+from labkit.files import check_inside, is_file_or_folder, read_text_file
 from labkit.records.declared import EXECUTION_ONLY, Notebook, Parameter, is_path, read_notebook
 from labkit.records.identity import Identity, check_entropy, identify
 from labkit.records.project import EXPERIMENTS, ROOT, check_study_name, find_notebook, path_text
@@ -29,6 +31,9 @@ from labkit.studies.door import (
 )
 
 # Parameters of the notebook that stand at the top of the file.
+LONGEST_STUDY = 5_000_000  # bytes
+_KEYS = re.compile(rb"[\w.\-\"' \t]+")
+MOST_POINTS = 1_000_000
 AT_TOP = ("replicates", "precision", "most_replicates", "entropy")
 KEYS = ("title", "question", "notebook", *AT_TOP, "parameters", "grid", "answer")
 # Handed to an answer notebook by the runner.
@@ -70,7 +75,7 @@ class Study:
             asked = self.parameters | dict(zip(self.grid, values, strict=True))
             point = Point(asked, identify(self.notebook, self.notebook.checked(asked)))
             if point.run_id in found:
-                raise InputError(f"grid of study {self.name} has a point twice ({asked}); remove one.")
+                raise InputError(f"grid of study {self.name} has a point twice ({shown(asked)}); remove one.")
             found[point.run_id] = point
         return list(found.values())
 
@@ -85,8 +90,12 @@ def read_study(study: str | Path) -> Study:
     """
     path = find_study(str(study))
     try:
-        content = tomllib.loads(path.read_text(encoding="utf-8"))
-    except (OSError, ValueError) as error:
+        text = read_text_file(path, f"study {path}", LONGEST_STUDY)
+        _check_keys_short(path, text)
+        content = tomllib.loads(text.decode("utf-8"))
+    except InputError:
+        raise
+    except (OSError, ValueError, RecursionError) as error:
         raise InputError(f"study {path} cannot be read ({error}); correct the file.") from None
     try:
         return make_study(path.stem, content, folder=path.parent)
@@ -94,10 +103,17 @@ def read_study(study: str | Path) -> Study:
         raise type(error)(f"study {path_text(path)}: {error}") from None
 
 
+def _check_keys_short(path: Path, text: bytes) -> None:
+    """Refuse a key of very many parts, for which tomllib takes the square of their number."""
+    if any(run.count(b".") > 200 for run in _KEYS.findall(text)):
+        raise InputError(f"study {path} has a key of more than 200 parts; name one thing by one word.")
+
+
 def find_study(study: str) -> Path:
     """Return the file of a study."""
     path = Path(study) if study.endswith(".toml") else EXPERIMENTS / f"{study}.toml"
-    if path.is_file():
+    # A name stays in its folder; a path may be any.
+    if is_file_or_folder(path) and path.is_file() and (path.parent == EXPERIMENTS or study.endswith(".toml")):
         return path.resolve()
     known = sorted(each.stem for each in EXPERIMENTS.glob("*.toml"))
     raise InputError(
@@ -128,6 +144,13 @@ def make_study(name: str, content: dict[str, Any], *, folder: Path) -> Study:
             raise InputError(f"{key} is missing; give {key} = a whole number at the top of the file.")
     fixed = dict(_table(content, "parameters"))
     grid = {key: _grid_values(key, values) for key, values in _table(content, "grid").items()}
+    points = math.prod(map(len, grid.values()))
+    if points > MOST_POINTS:
+        sizes = " × ".join(f"{len(values):,}" for values in grid.values())
+        raise InputError(
+            f"grid has {sizes} = {points:,} points; a study has at most {MOST_POINTS:,}: give fewer values, "
+            "or several studies."
+        )
     for key in (*fixed, *grid):
         if key in EXECUTION_ONLY:
             raise InputError(f"parameter {key} is set by labkit itself; remove it from the study.")
@@ -201,9 +224,9 @@ def _check_reads(answer: str, run: str) -> None:
 def _mixes(names: Any, grid: dict[str, Any]) -> tuple[str, ...]:
     """Return the grid parameters in which the runs of one answer may differ, besides the usual ones."""
     if not isinstance(names, list):
-        raise InputError(f"answer: mixes is {names!r}; give a list of parameters of the grid.")
+        raise InputError(f"answer: mixes is {shown(names)}; give a list of parameters of the grid.")
     for name in names:
-        if name not in grid:
+        if not isinstance(name, str) or name not in grid:
             raise InputError(f"answer: mixes names {name!r}, which the grid does not; {nearest(name, grid)}.")
     return tuple(names)
 
@@ -235,26 +258,27 @@ def _check_keys(content: dict[str, Any], known: tuple[str, ...], what: str) -> N
 def _text(content: dict[str, Any], key: str, default: str | None = None) -> str:
     value = content.get(key, default)
     if not isinstance(value, str):
-        raise InputError(f"{key} is {value!r}; give a text.")
+        raise InputError(f"{key} is {shown(value)}; give a text.")
     return value
 
 
 def _table(content: dict[str, Any], key: str) -> dict[str, Any]:
     value = content.get(key, {})
     if not isinstance(value, dict):
-        raise InputError(f"{key} is {value!r}; give a table [{key}] of name = value lines.")
+        raise InputError(f"{key} is {shown(value)}; give a table [{key}] of name = value lines.")
     return value
 
 
 def _grid_values(key: str, values: Any) -> list[Any]:
     if not isinstance(values, list) or not values:
-        raise InputError(f"grid: {key} is {values!r}; give a list of one or more values.")
+        raise InputError(f"grid: {key} is {shown(values)}; give a list of one or more values.")
     return values
 
 
 def _notebook(text: str, folder: Path) -> Notebook:
     beside = folder / text
-    if text.endswith(".ipynb") and beside.is_file():
+    if text.endswith(".ipynb") and is_file_or_folder(beside) and beside.is_file():
+        _check_no_link_out(beside, folder, f"notebook {text!r}")
         return read_notebook(beside.resolve())
     return read_notebook(find_notebook(text))
 
@@ -267,10 +291,21 @@ def _typed(notebook: Notebook, values: dict[str, Any], folder: Path) -> dict[str
 
 def _one(parameter: Parameter, value: Any, folder: Path) -> Any:
     if is_path(parameter.name) and isinstance(value, str) and value:
-        place = Path(os.path.normpath(folder.resolve() / Path(value).expanduser()))
-        if not place.exists():
+        try:
+            place = Path(os.path.normpath(folder.resolve() / Path(value).expanduser()))
+        except RuntimeError as error:
+            raise InputError(f"{parameter.name} is {shown(value)}; {error}: give a path.") from None
+        if not is_file_or_folder(place):
+            state = "is no file and no folder" if os.path.lexists(place) else "does not exist"
             raise InputError(
-                f"{parameter.name} is {value!r}; {place} does not exist: give a path from the study's folder."
+                f"{parameter.name} is {shown(value)}; {place} {state}: give a path from the study's folder."
             )
+        _check_no_link_out(place, folder.resolve(), f"{parameter.name} {shown(value)}")
         value = path_text(place) if place.is_relative_to(ROOT) else place.as_posix()
     return parameter.checked(value)
+
+
+def _check_no_link_out(place: Path, folder: Path, what: str) -> None:
+    """Refuse what lies in the study's folder by name and elsewhere in truth; what names another place may."""
+    if Path(os.path.normpath(place)).is_relative_to(folder):
+        check_inside(place, folder, what)

@@ -1,7 +1,6 @@
 """A pilot of a study: each grid point with few replicates, in a store that is thrown away."""
 
 import math
-import tempfile
 import time
 from collections.abc import Callable
 from concurrent.futures import FIRST_COMPLETED, ThreadPoolExecutor, wait
@@ -23,6 +22,7 @@ from labkit.records.schema import measured_part, row_of_origin
 from labkit.records.store import Store
 from labkit.studies.grouping import in_words
 from labkit.studies.model import Point, Study
+from labkit.studies.scratch import scratch_folder
 from labkit.studies.warmth import COLD, compiled_files, is_warm, set_warm
 
 LEAST_PILOT = 5
@@ -115,8 +115,8 @@ def pilot_study(
         raise InputError(
             f"notebook {study.notebook.name} declares no parameter replicates, so there is nothing to size."
         )
-    with tempfile.TemporaryDirectory(prefix="labkit-") as scratch:
-        work = _Pilot(study, Path(scratch), precision, replicates, measure, threads, x, jobs)
+    with scratch_folder() as scratch:
+        work = _Pilot(study, scratch, precision, replicates, measure, threads, x, jobs)
         families = _families(study, x)
         if not is_warm():
             say(COLD)

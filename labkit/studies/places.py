@@ -11,8 +11,8 @@ from labkit.errors import InputError
 from labkit.records.declared import Notebook, read_notebook
 from labkit.records.identity import Identity, content_digest, identify
 from labkit.records.project import find_notebook, from_root
-from labkit.records.provenance import PACKAGES, versions
 from labkit.records.store import Store, decode
+from labkit.sources import PACKAGES, versions
 from labkit.studies.commits import Commits
 from labkit.studies.execution import execute
 from labkit.studies.place import HERE, Place
@@ -88,6 +88,8 @@ class Places(Commits):
                 f"notebook {notebook.name} declares no parameter {missing[0]}, so its record cannot be kept "
                 "apart; add it to the parameters cell."
             )
+        # A name becomes a line of code in the notebook: only its own may.
+        notebook.check_names(origin["parameters"])
         parameters = {**origin["parameters"], **_input_files(origin, place)}
         if place == HERE:
             identify(notebook, notebook.checked(parameters))

@@ -2,24 +2,31 @@
 
 import os
 import shutil
-import tempfile
 from collections.abc import Callable
 from concurrent.futures import FIRST_COMPLETED, ThreadPoolExecutor, wait
 from dataclasses import dataclass, field
+from itertools import islice
 from pathlib import Path
-from threading import Event
+from threading import Event, Lock
 from typing import Any
 
-from labkit.checks import check_whole
-from labkit.errors import InputError
+from labkit.checks import check_positive, check_whole
+from labkit.errors import InputError, SchedulerLost, StoreUnwritable
 from labkit.records.declared import EXECUTION_ONLY
-from labkit.records.identity import library_version
 from labkit.records.project import ANSWERS
 from labkit.records.store import Store
+from labkit.sharing import progress
+from labkit.sharing.scheduler import VARIABLE as SCHEDULER
+from labkit.sharing.scheduler import check_address
+from labkit.sources import library_version
 from labkit.studies.door import check_answer, check_points
 from labkit.studies.grouping import groups_of
 from labkit.studies.model import Point, Study
+from labkit.studies.scratch import scratch_folder, sweep_folders
 from labkit.studies.warmth import COLD, is_warm, set_warm
+
+# Nothing else of a study can be recorded either when a run fails with one of these.
+ENDING = {error.__name__: error for error in (StoreUnwritable, SchedulerLost)}
 
 
 @dataclass(frozen=True)
@@ -60,7 +67,9 @@ def run_points(
     *,
     jobs: int | None = None,
     output: Path | None = None,
-    tick: Callable[[int], None] = lambda done: None,
+    scheduler: str | None = None,
+    timeout: float | None = None,
+    tick: Callable[[int, int], None] = lambda done, replicates: None,
     say: Callable[[str], None] = lambda sentence: None,
 ) -> Report:
     """Execute the points of a study that have no record yet.
@@ -74,12 +83,18 @@ def run_points(
     store : Store
         Where its records are and go.
     jobs : int, optional
-        Kernels at the same time; default one a core. Results do not depend on it.
+        Kernels at the same time; default one a core, and two a core with a scheduler, since they wait for it.
+        Results do not depend on it.
     output : Path, optional
         Folder for what run notebooks write besides their records, each in a folder of its run's id; default
         results/answers/<study>.
+    scheduler : str, optional
+        Address of the scheduler of a cluster whose workers compute the replicates. Kernels, and whatever is
+        written, stay here.
+    timeout : float, optional
+        Seconds after which a run is ended and counts as failed.
     tick : callable
-        Called with the number of points that are done, at the start and after each.
+        Called with the number of points that are done and of replicates computed, at the start and often.
     say : callable
         Called with a sentence for the user, before the first `tick`.
 
@@ -88,50 +103,115 @@ def run_points(
     InputError
         When a value is refused, or the store cannot be written or holds a damaged record of one of the
         points.
+    SchedulerLost
+        When the scheduler does not answer any more. What is recorded is kept.
+    KeyboardInterrupt
+        With a sentence that tells how much is recorded.
     """
-    jobs = cores() if jobs is None else check_whole("jobs", jobs)
+    if scheduler is not None:
+        check_address(scheduler)
+    if timeout is not None:
+        check_positive("timeout", timeout)
+    if jobs is not None:
+        check_whole("jobs", jobs)
     check_notebook(study)
     store.check_writable(study.name)
     report = Report()
-    pending = []
-    for point in study.points:
-        present = store.find(study.name, point.run_id)
-        if present is None:
-            pending.append(point)
-        else:
-            store.read(present)
-            report.skipped.append(point.run_id)
+    pending = _without_record(study, store, report)
     if study.answer_notebook is not None:
         for group in groups_of(study):
             check_answer(study, group.points)
+    environment: dict[str, str] = {}
     if pending:
         check_points(study, pending)
-        if not is_warm():
+        if scheduler is not None:
+            environment[SCHEDULER] = scheduler
+            _join(scheduler, say)
+        elif not is_warm():
             say(COLD)
-    tick(len(report.skipped))
-    if pending:
-        jobs = min(jobs, len(pending))
-        with tempfile.TemporaryDirectory(prefix="labkit-") as scratch:
-            threads = max(1, cores() // jobs)
-            work = _Work(study, store, Path(scratch), threads, output or ANSWERS / study.name)
+    tick(len(report.skipped), 0)
+    if not pending:
+        return report
+    jobs = min(jobs or cores() * (1 if scheduler is None else 2), len(pending))
+    sweep_folders()
+    with scratch_folder() as scratch:
+        threads = max(1, cores() // jobs)
+        place = output or ANSWERS / study.name
+        work = _Work(study, store, scratch, threads, place, environment, timeout)
+        try:
             _run_pending(work, pending, jobs, report, tick)
+        except KeyboardInterrupt:
+            raise KeyboardInterrupt(_interrupted(study, store)) from None
+        except StoreUnwritable as error:
+            raise StoreUnwritable(f"{error} {_left(study, store)}") from None
     return report
 
 
-@dataclass(frozen=True)
+def _without_record(study: Study, store: Store, report: Report) -> list[Point]:
+    """Return the points that have no record yet; check the records of the others."""
+    store.settle(study.name)
+    present = store.runs(study.name)
+    for point in study.points:
+        if point.run_id in present:
+            store.verify(present[point.run_id])
+            report.skipped.append(point.run_id)
+    return [point for point in study.points if point.run_id not in present]
+
+
+def _join(scheduler: str, say: Callable[[str], None]) -> None:
+    """Refuse a scheduler that does not answer, and workers that have not what this process has."""
+    from labkit.sharing.cluster import connected
+
+    try:
+        threads = connected(scheduler).check()
+    except SchedulerLost as error:
+        raise InputError(str(error)) from None
+    if threads == 0:
+        say(f"scheduler {scheduler} has no worker yet; the study goes on as soon as one joins")
+
+
+def _left(study: Study, store: Store) -> str:
+    recorded = store.runs(study.name)
+    done = sum(point.run_id in recorded for point in study.points)
+    return f"{done} of {len(study.points)} runs are recorded; the same command goes on with the rest."
+
+
+def _interrupted(study: Study, store: Store) -> str:
+    return f"interrupted; {_left(study, store)}"
+
+
+@dataclass
 class _Work:
     study: Study
     store: Store
     scratch: Path
     threads: int
     output: Path
-    interrupted: Event = field(default_factory=Event)
+    environment: dict[str, str]
+    timeout: float | None
+    ended: Event = field(default_factory=Event)
+    # Where the runs under way tell their replicates, and the number of those that are over.
+    telling: dict[str, Path] = field(default_factory=dict)
+    replicates: int = 0
+    lock: Lock = field(default_factory=Lock)
 
     def run(self, point: Point) -> Trouble | None:
         """Execute a point in a kernel of its own; keep evidence when code fails."""
+        executed, told = (self.scratch / f"{point.run_id}{end}" for end in (".ipynb", ".progress"))
+        with self.lock:
+            self.telling[point.run_id] = told
+        try:
+            return self._run(point, executed, told)
+        finally:
+            with self.lock:
+                del self.telling[point.run_id]
+                self.replicates += progress.told(told)
+            for file in (executed, told):
+                file.unlink(missing_ok=True)
+
+    def _run(self, point: Point, executed: Path, told: Path) -> Trouble | None:
         from labkit.studies.execution import Execution, execute
 
-        executed = self.scratch / f"{point.run_id}.ipynb"
         handed = {
             "study": self.study.name,
             "store": str(self.store.folder),
@@ -140,7 +220,13 @@ class _Work:
         }
         known = {name: value for name, value in handed.items() if name in self.study.notebook.parameters}
         values = {name: point.parameters[name] for name in self.study.grid}
-        result = execute(self.study.notebook.path, point.parameters | known, executed)
+        result = execute(
+            self.study.notebook.path,
+            point.parameters | known,
+            executed,
+            environment=self.environment | {progress.VARIABLE: str(told)},
+            seconds=self.timeout,
+        )
         kept = self.store.folder / self.study.name / "failed" / point.run_id
         if not result.error:
             if self.store.find(self.study.name, point.run_id) is not None:
@@ -148,7 +234,9 @@ class _Work:
                     kept.with_suffix(suffix).unlink(missing_ok=True)
                 return None
             result = Execution(_why_no_record(point))
-        if result.refused or self.interrupted.is_set():
+        if result.kind in ENDING:
+            raise ENDING[result.kind](result.error)
+        if result.refused or self.ended.is_set():
             return Trouble(point.run_id, values, result.error, result.refused)
         try:
             kept.parent.mkdir(parents=True, exist_ok=True)
@@ -159,31 +247,37 @@ class _Work:
             return Trouble(point.run_id, values, f"{result.error} (no evidence kept: {error})", False)
         return Trouble(point.run_id, values, result.error, False, kept.with_suffix(".ipynb"))
 
+    def computed(self) -> int:
+        """Return the number of replicates computed so far."""
+        with self.lock:
+            return self.replicates + sum(map(progress.told, self.telling.values()))
+
 
 def _run_pending(
-    work: _Work, pending: list[Point], jobs: int, report: Report, tick: Callable[[int], None]
+    work: _Work, pending: list[Point], jobs: int, report: Report, tick: Callable[[int, int], None]
 ) -> None:
     troubles: dict[str, Trouble | None] = {}
     pool = ThreadPoolExecutor(jobs)
 
     def run(points: list[Point]) -> None:
-        futures = {pool.submit(work.run, point): point.run_id for point in points}
-        left = set(futures)
-        while left:
+        waiting = iter(points)
+        under_way = {pool.submit(work.run, point): point.run_id for point in islice(waiting, jobs)}
+        while under_way:
             # A signal that comes just before a wait without end would be acted on only when a run is done.
-            ended, left = wait(left, timeout=0.2, return_when=FIRST_COMPLETED)
+            ended, _ = wait(under_way, timeout=0.2, return_when=FIRST_COMPLETED)
             for future in ended:
-                troubles[futures[future]] = future.result()
-                tick(len(report.skipped) + len(troubles))
+                troubles[under_way.pop(future)] = future.result()
+                under_way |= {pool.submit(work.run, point): point.run_id for point in islice(waiting, 1)}
+            tick(len(report.skipped) + len(troubles), work.computed())
 
     try:
-        lead = 0 if jobs == 1 or is_warm() else 1
+        lead = 0 if jobs == 1 or is_warm() or work.environment else 1
         run(pending[:lead])
         run(pending[lead:])
     except BaseException:
         from labkit.studies.kernels import end_all
 
-        work.interrupted.set()
+        work.ended.set()
         pool.shutdown(wait=False, cancel_futures=True)
         end_all()
         raise
@@ -195,7 +289,7 @@ def _run_pending(
             report.recorded.append(point.run_id)
         else:
             report.troubles.append(trouble)
-    if report.recorded:
+    if report.recorded and not work.environment:
         set_warm()
 
 

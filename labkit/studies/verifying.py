@@ -1,8 +1,9 @@
 """Verifying a frozen table: every byte of it, the table from its rows, and a sample of its runs anew."""
 
 import random
+import re
 from collections import Counter
-from collections.abc import Callable
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -11,8 +12,9 @@ from labkit.checks import check_whole
 from labkit.errors import InputError
 from labkit.records.frozen import MANIFEST, RUNS, TABLE, Finding, check_files, find_frozen
 from labkit.records.frozen_index import check_index
-from labkit.records.project import FROZEN
+from labkit.records.project import FROZEN, check_study_name, from_root
 from labkit.records.store import decode
+from labkit.studies.commits import HASH
 from labkit.studies.freezing import table_of
 
 if TYPE_CHECKING:
@@ -20,6 +22,9 @@ if TYPE_CHECKING:
     import pyarrow as pa
 
     from labkit.studies.places import Places
+
+
+RUN_ID = re.compile(r"[0-9a-f]{16}")
 
 
 @dataclass(frozen=True)
@@ -113,7 +118,7 @@ def _recomputed(place: Path, manifest: dict[str, Any]) -> list[Finding]:
     tables = {}
     for file in (RUNS, TABLE):
         try:
-            tables[file] = decode((place / file).read_bytes())
+            tables[file] = _table(place / file)
         except (OSError, ValueError) as error:
             return [
                 Finding("unreadable", file, f"file {file} cannot be read as a table ({error}); restore it.")
@@ -123,12 +128,45 @@ def _recomputed(place: Path, manifest: dict[str, Any]) -> list[Finding]:
         return [Finding("recomputed", RUNS, f"file {found}; restore it.")]
     try:
         found = _difference(tables[TABLE].to_pandas(), table_of(tables[RUNS], manifest["query"]))
-    except (InputError, KeyError, TypeError) as error:
+    except (ValueError, LookupError, TypeError, AttributeError, ArithmeticError) as error:
         found = f"it cannot be computed: {error}"
     if not found:
         return []
     sentence = f"file {TABLE} is not what {RUNS} gives: {found}; one of the two was changed: restore both."
     return [Finding("recomputed", TABLE, sentence)]
+
+
+def _table(path: Path) -> "pa.Table":
+    """Return a table of a frozen folder; refuse one that Arrow cannot read or that is too large."""
+    from labkit.fleet.parquet_files import check_size, frame_of
+
+    content = path.read_bytes()
+    try:
+        check_size(path, content)
+    except InputError as error:
+        raise ValueError(str(error).rstrip(".")) from None
+    try:
+        table = decode(content)
+        table.validate(full=True)
+    except MemoryError:
+        raise
+    except Exception as error:  # Arrow's own kinds, those of Python, and those of codecs
+        about = (str(error).splitlines() or [type(error).__name__])[0]
+        raise ValueError(about) from None
+    if len(set(table.column_names)) < len(table.column_names):
+        raise ValueError("a column is there twice")
+    nested = [field.name for field in table.schema if not _is_flat(field.type)]
+    if nested:
+        raise ValueError(f"column {nested[0]!r} holds neither numbers nor texts")
+    frame_of(path, table.slice(0, 0))
+    return table
+
+
+def _is_flat(kind: "pa.DataType") -> bool:
+    import pyarrow.types as types
+
+    fitting = (types.is_integer, types.is_floating, types.is_boolean, types.is_string, types.is_large_string)
+    return types.is_null(kind) or any(fits(kind) for fits in fitting)
 
 
 def _disagreement(runs: "pa.Table", table: "pa.Table", manifest: dict[str, Any]) -> str:
@@ -173,6 +211,8 @@ def _rerun(
         result.sampled.append(Row(at, about, behind[at]))
     result.runs = list(dict.fromkeys(run for row in result.sampled for run in row.runs))
     origins = {run["run_id"]: run for run in manifest["runs"]}
+    for run in result.runs:
+        check_executable(origins[run], (place.parent, FROZEN))
     measured: dict[str, pa.Table] = {}
     with Places(say) as places:
         for run in result.runs:
@@ -191,6 +231,40 @@ def _rerun(
             sentence = f"run {run} executed again differs from {RUNS}: {difference}."
             result.findings.append(Finding("rerun", RUNS, sentence))
     _check_rows(result, place, runs, measured, manifest["query"])
+
+
+def check_executable(origin: dict[str, Any], frozen: Iterable[Path]) -> None:
+    """Refuse to execute a run whose origin is none that labkit writes, or whose notebook came with its table.
+
+    Parameters
+    ----------
+    origin : dict
+        What a manifest, which a stranger may have written, says of a run.
+    frozen : iterable of Path
+        Folders of frozen tables: what is in them is evidence, never code.
+
+    Raises
+    ------
+    InputError
+    """
+    run = origin["run_id"]
+    if not RUN_ID.fullmatch(run):
+        raise InputError(f"run is {run!r} in {MANIFEST}; a run has 16 hex digits: restore the manifest.")
+    if origin["git_hash"] and not HASH.fullmatch(origin["git_hash"]):
+        raise InputError(
+            f"run {run}: its commit is {origin['git_hash']!r} in {MANIFEST}; a commit has 40 or 64 hex "
+            "digits: restore the manifest."
+        )
+    check_study_name(origin["study"])
+    notebook = origin["notebook"]
+    if notebook.endswith(".ipynb"):
+        place = from_root(notebook)
+        for folder in frozen:
+            if place.is_relative_to(folder.resolve()):
+                raise InputError(
+                    f"run {run}: its notebook is {notebook!r}, which lies among frozen tables, and nothing "
+                    "there is executed: name a notebook of the project."
+                )
 
 
 def _measured_again(places: "Places", origin: dict[str, Any]) -> "tuple[pa.Table, list[str]]":

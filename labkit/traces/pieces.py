@@ -16,7 +16,7 @@ import pyarrow.csv as pacsv
 import pyarrow.parquet as pq
 
 from labkit.errors import InputError
-from labkit.fleet.csv_files import NUMBER, header_of, line_of, no_number, records, why_unreadable
+from labkit.fleet.csv_files import NUMBER, header_of, line_of, lines_of, no_number, records, why_unreadable
 from labkit.fleet.tables import CHUNK, Source, check_labels, table_source
 
 REQUIRED, OPTIONAL = ("time", "option_1", "option_2"), ("size", "duration", "placed")
@@ -215,7 +215,7 @@ def _first_row(path: Path, width: int) -> tuple[int, list[str] | None]:
         if len(rows) == 2 and len(rows[1][1]) != width:
             raise InputError(why_unreadable(path, width, ""))
         with path.open(encoding="utf-8-sig", newline="") as lines:
-            reader = csv.reader(lines)
+            reader = csv.reader(lines_of(lines))
             next(cells for cells in reader if cells)
             return reader.line_num, rows[1][1] if len(rows) == 2 else None
     except (UnicodeDecodeError, csv.Error):

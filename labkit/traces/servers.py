@@ -156,11 +156,13 @@ def _refuse_odd(columns: dict[str, Column], source: Source) -> None:
         if isinstance(column, pa.Array):
             row = 0 if pa.types.is_nested(column.type) else -1
             try:
-                names = column.dictionary if pa.types.is_dictionary(column.type) else column
-                names.validate(full=True)
+                column.validate(full=True)
+                if pa.types.is_dictionary(column.type):
+                    column.dictionary.validate(full=True)
             except pa.ArrowInvalid:
                 raise InputError(
-                    f"{source.label}: column {label!r} has text that is not UTF-8; write the file again."
+                    f"{source.label}: column {label!r} has text that is not UTF-8, or is damaged; write the "
+                    "file again."
                 ) from None
         elif column.dtype == object:
             row = next((row for row, value in enumerate(column) if not isinstance(value, Hashable)), -1)

@@ -40,9 +40,16 @@ def test_compiled_loop_takes_the_slow_loops_path(rule, fleet, ahead, every, size
         assert_same_path(fleet, rule, ahead=ahead, entropy=entropy, every=every, sizes=sizes)
 
 
-@pytest.mark.parametrize("rule", ["least-loaded", "mixed(beta=0.3)"])
-@pytest.mark.parametrize("fleet", [lk.ring(5), mixed_fleet(), lk.complete(6, options=3)], ids=repr)
-def test_each_dispatcher_sees_its_own_placements_at_once(rule, fleet):
+@pytest.mark.parametrize(
+    ("fleet", "rule"),
+    [
+        (lk.ring(5), "least-loaded"),
+        (lk.complete(6, options=3), "least-loaded"),
+        (mixed_fleet(), "mixed(beta=0.3)"),
+    ],
+    ids=repr,
+)
+def test_each_dispatcher_sees_its_own_placements_at_once(fleet, rule):
     for entropy in range(4):
         for count in (1, 2, 5):
             assert_same_path(fleet, rule, ahead=False, entropy=entropy, every=7, dispatchers=count)

@@ -7,7 +7,9 @@ import pytest
 
 import labkit as lk
 from labkit.errors import InputError
+from labkit.plans import dispatcher
 from labkit.plans.schema import header_digest
+from labkit.plans.tables import sha256
 from tests.plans.makers import RULES, copy_of
 
 
@@ -101,3 +103,46 @@ def test_a_row_count_that_is_wrong_is_refused(written, tmp_path):
     header["files"]["shifts.csv"]["rows"] += 1
     altered(folder, files=header["files"], digest=header_digest(header))
     refused(r"shifts\.csv has \d rows, and plan\.json says \d", folder)
+
+
+def test_names_like_formulas_are_harmless_in_the_table_and_whole_for_readers(tmp_path):
+    names = ["=1+1", "+x", "-x", "@x", "\tx", "'=x", "'", "x", -5]
+    servers = pd.DataFrame({"server": pd.Series(names, dtype=object)})
+    options = {"option_1": pd.Series(names, dtype=object), "option_2": pd.Series([*names[1:], names[0]])}
+    folder = lk.plan(lk.Fleet(servers, pd.DataFrame(options)), "least-loaded").write(tmp_path / "plan")
+    lines = (folder / "servers.csv").read_text().splitlines()[1:]
+    assert [line.split(",")[1] for line in lines] == [
+        *('"\'=1+1"', '"\'+x"', '"\'-x"', '"\'@x"', '"\'\tx"', "\"''=x\"", "\"''\"", '"x"', "-5"),
+    ]
+    assert lk.read_plan(folder).tables["servers.csv"]["name"].tolist() == names
+    assert dispatcher.Dispatcher(folder).names == [*names[:-1], "-5"]
+
+
+@pytest.mark.parametrize("text", ["[" * 100_000, '{"a":' * 50_000, "1" * 5000, "\ud800"])
+def test_a_header_of_absurd_depth_or_numbers_is_refused(written, tmp_path, text):
+    folder = copy_of(written, tmp_path / "spoilt")
+    (folder / "plan.json").write_text(text, encoding="utf-8", errors="surrogatepass")
+    refused(r"plan\.json (is not JSON|violates its schema)", folder)
+
+
+@pytest.mark.parametrize(("old", "new"), [('"number"', '"nr"'), ("0,", "x,"), ("0,", f"{2**80},"), (",", "")])
+def test_a_table_that_labkit_does_not_write_is_refused_though_its_digest_fits(written, tmp_path, old, new):
+    folder = copy_of(written, tmp_path / "spoilt")
+    content = (
+        (folder / "servers.csv").read_text(encoding="utf-8", errors="surrogatepass").replace(old, new, 1)
+    )
+    content = content.encode("utf-8", "surrogatepass")
+    (folder / "servers.csv").write_bytes(content)
+    header = json.loads((folder / "plan.json").read_text())
+    header["files"]["servers.csv"]["sha256"] = sha256(content)
+    header["digest"] = header_digest(header)
+    (folder / "plan.json").write_text(json.dumps(header))
+    with pytest.raises(InputError, match="make the plan again"):
+        lk.read_plan(folder)
+
+
+def test_a_link_out_of_the_plan_is_not_followed(written, tmp_path):
+    folder = copy_of(written, tmp_path / "spoilt")
+    (folder / "servers.csv").rename(tmp_path / "elsewhere")
+    (folder / "servers.csv").symlink_to(tmp_path / "elsewhere")
+    refused("is a link out of its folder", folder)

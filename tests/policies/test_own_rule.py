@@ -41,19 +41,16 @@ def test_two_rules_of_one_name_do_not_share_machine_code():
 def test_a_pick_outside_the_choice_is_refused_before_anything_is_written_there():
     @lk.policy
     def beyond(options, loads, capacity, coin):
+        if loads[options[0]] >= 1_000:
+            return -1
         return 2 if loads[options[0]] > 3 else 0
 
     with pytest.raises(
         lk.InputError, match=r"policy beyond picked a position outside the options of task \d+"
     ):
         lk.place(lk.ring(5), beyond, tasks=10_000, rng=1)
-
-    @lk.policy
-    def negative(options, loads, capacity, coin):
-        return -1
-
     with pytest.raises(lk.InputError, match="outside the options of task 1;"):
-        lk.place(lk.ring(5), negative, tasks=5, rng=1)
+        lk.place(lk.ring(5), beyond, tasks=5, rng=1, start=[1_000] * 5)
 
 
 def test_three_options_and_capacities_reach_the_rule():

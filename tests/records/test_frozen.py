@@ -7,7 +7,7 @@ import pytest
 
 import labkit as lk
 from labkit.records import frozen
-from labkit.records.frozen import MANIFEST, QUERY, check_files, manifest_text, read_frozen, write_frozen
+from labkit.records.frozen import MANIFEST, check_files, manifest_text, read_frozen, write_frozen
 from labkit.records.frozen_index import check_index, index_of, index_text, write_index
 from labkit.records.project import FROZEN
 from labkit.records.provenance import provenance
@@ -50,7 +50,15 @@ def facts(name="first"):
         "git_hash": "a" * 40,
         "dirty": False,
         "note": "",
-        "query": dict.fromkeys(QUERY),
+        "query": {
+            "study": "s",
+            "moment": "last checkpoint",
+            "labels": [],
+            "parameters": [],
+            "measures": ["gap"],
+            "risk": None,
+            "confidence": 0.95,
+        },
         "runs": [{**row_of_origin(origin()), "rows": 2}],
         "rows": 1,
         "versions": {"labkit": "0"},

@@ -7,7 +7,6 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from labkit.records import identity
 from labkit.records.declared import read_notebook
 from labkit.records.identity import canonical, content_digest, identify
 from labkit.studies.model import read_study
@@ -126,21 +125,6 @@ def test_a_path_counts_by_its_content_wherever_it_is(tmp_path):
     assert found[0].run_id == found[1].run_id
     (folder / "servers.csv").write_text("server\nab\n")
     assert identify(notebook, notebook.checked({"fleet": str(folder)})).run_id != found[0].run_id
-
-
-def test_the_library_version_covers_what_computes(monkeypatch, tmp_path):
-    (tmp_path / "engine").mkdir()
-    for room in ("randomness.py", "compiled.py", "engine/loop.py"):
-        (tmp_path / room).write_text("a = 1\n")
-    monkeypatch.setattr(identity, "PACKAGE", tmp_path)
-    monkeypatch.setattr(identity, "COMPUTING", ("randomness.py", "compiled.py", "engine"))
-    version = identity.library_version.__wrapped__
-    before = version()
-    (tmp_path / "figures.py").write_text("b = 1\n")
-    (tmp_path / "engine/loop.py").write_bytes(b"a = 1\r\n")
-    assert version() == before
-    (tmp_path / "engine/loop.py").write_text("a = 2\n")
-    assert version() != before
 
 
 def test_a_notebook_without_entropy_has_nothing_random(tmp_path):

@@ -11,33 +11,16 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 import labkit as lk
+from labkit.records.leftovers import machine
 from labkit.records.schema import (
-    ORIGIN,
     first_difference,
     measured_part,
     measured_table,
     row_of_origin,
-    with_origin,
 )
-from labkit.records.store import Store, _host
+from labkit.records.store import Store
+from tests.records.samples import RUN, record
 from tests.records.tiny import snapshot
-
-RUN = "0123456789abcdef"
-
-
-def record(gap=(0.25, 0.5), run=RUN, **changes):
-    frame = pd.DataFrame({"policy": "a", "replicate": range(len(gap)), "tasks": 5, "gap": list(gap)})
-    origin = {name: "" for name in ORIGIN.names}
-    origin |= {name: "{}" for name in ("versions", "parameters", "inputs", "rules")}
-    origin |= {
-        "run_id": run,
-        "study": "s",
-        "dirty": False,
-        "elapsed": 1.0,
-        "entropy": "1",
-        "spawn_key": "[3]",
-    }
-    return with_origin(measured_table(frame), origin | changes)
 
 
 @pytest.fixture
@@ -126,8 +109,8 @@ def test_the_next_write_sweeps_what_dead_writers_left(store):
     folder = store.folder / "s"
     dead = subprocess.Popen([sys.executable, "-c", ""])
     dead.wait()
-    left = folder / f".{RUN}.{_host()}.{dead.pid}.00.tmp"
-    alive = folder / f".{RUN}.{_host()}.{os.getpid()}.00.tmp"
+    left = folder / f".{RUN}.{machine()}.{dead.pid}.00.tmp"
+    alive = folder / f".{RUN}.{machine()}.{os.getpid()}.00.tmp"
     elsewhere = folder / f".{RUN}.00000000.{dead.pid}.00.tmp"
     own = folder / ".notes.tmp"
     for path in (left, alive, elsewhere, own):

@@ -30,6 +30,8 @@ if mode == "exit":
     sys.exit(0)
 if mode == "killed":
     os.kill(os.getpid(), signal.SIGKILL)
+if mode == "stopped":
+    os.kill(os.getpid(), signal.SIGSTOP)
 if mode == "slow":
     time.sleep(60)
 if mode == "refused":

@@ -5,9 +5,9 @@ from types import SimpleNamespace
 import pytest
 
 from labkit.errors import InputError
-from labkit.records.provenance import versions
 from labkit.records.schema import first_difference, measured_part, row_of_origin
 from labkit.records.store import Store
+from labkit.sources import versions
 from labkit.studies import places as places_module
 from labkit.studies.commits import Commits
 from labkit.studies.place import HERE

@@ -1,0 +1,68 @@
+"""`labkit check` and `labkit compact`: looking after the store."""
+
+import argparse
+
+from labkit.commands.parts import Commands, print_json, say, store_of
+
+
+def add(commands: Commands) -> None:
+    """Add these commands to the parser."""
+    check = commands.add(
+        "check",
+        _check,
+        "Check every file of the store and say what to do about each that is damaged, doubled, foreign or "
+        "left over; nothing is changed (labkit verify checks frozen tables).",
+    )
+    check.add_argument("study", metavar="STUDY", nargs="?", help="only the records of this study")
+
+    compact = commands.add(
+        "compact",
+        _compact,
+        "Move records from files of their own into larger files, where many are read fast; runs keep their "
+        "ids, and it may be interrupted at any time.",
+    )
+    compact.add_argument("study", metavar="STUDY", nargs="?", help="only the records of this study")
+
+
+def _check(arguments: argparse.Namespace) -> int:
+    from labkit.records.store_check import check_store
+
+    store = store_of(arguments)
+    done = check_store(store, arguments.study)
+    if arguments.json:
+        faults = [
+            {"kind": each.kind, "path": str(each.path), "sentence": each.sentence} for each in done.faults
+        ]
+        counts = {"runs": done.runs, "files": done.files, "packs": done.packs, "older_schema": done.older}
+        print_json({"store": str(store.folder), **counts, "faults": faults})
+        return 1 if done.faults else 0
+    for fault in done.faults:
+        print(f"{fault.kind}: {fault.sentence}")
+    about = f"{done.runs:,} runs in {done.files:,} files of {store.folder} were checked"
+    if done.packs:
+        about += f", {done.packs:,} packs among them"
+    if done.older:
+        about += f"; {done.older:,} records are of an older schema, which is understood"
+    print(f"{about}: {f'{len(done.faults):,} faults' if done.faults else 'all is well'}")
+    return 1 if done.faults else 0
+
+
+def _compact(arguments: argparse.Namespace) -> int:
+    from labkit.records.compaction import compact
+
+    store = store_of(arguments)
+    studies = [arguments.study] if arguments.study else store.studies()
+    done = []
+    for study in studies:
+        result = compact(store, study)
+        done.append(result)
+        for sentence in result.left:
+            say(f"left as it is: {sentence}")
+        if not arguments.json:
+            merged = f", and {result.merged:,} packs were merged" if result.merged else ""
+            print(f"study {study}: {result.runs:,} runs moved into {result.packs:,} packs{merged}")
+    if arguments.json:
+        print_json([vars(result) for result in done])
+    elif not studies:
+        print(f"no records in {store.folder}")
+    return 1 if any(result.left for result in done) else 0

@@ -1,0 +1,418 @@
+"""Packs: many records in a folder of three files, written as a whole and never changed.
+
+``<study>/packed/<first 32 hex digits of the SHA-256 of runs.parquet>/`` holds
+
+- ``runs.parquet``, the index: one row a run, with its origin, the number of its rows, the number of the
+  schema of its original file, and the name of that file; in the metadata the SHA-256 of the next file;
+- ``rows.parquet``: what the runs measured, run after run, in groups of `GROUP` runs;
+- ``names.txt``: the names in the index, so that a run is found without reading it. What it says is never
+  trusted: a reader looks the name up in the index.
+
+A packed record has the path ``<pack>/<name of its original file>``, although no such file is there: the name
+tells run and content as before.
+"""
+
+import functools
+import hashlib
+import os
+import re
+import shutil
+from collections.abc import Mapping, Sequence
+from functools import cached_property
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from labkit.errors import StoreError
+from labkit.records.leftovers import name_of_new
+from labkit.records.record_files import ID, NAME, WIDTH, decode, make_folder, sync, write_synced
+
+if TYPE_CHECKING:
+    import pyarrow as pa
+
+PACKED = "packed"
+INDEX, ROWS, NAMES = "runs.parquet", "rows.parquet", "names.txt"
+# Runs of a pack and of a group of its rows: a reader checks a whole pack and decodes whole groups.
+MOST, GROUP = 4096, 256
+
+_FOLDER = re.compile(r"[0-9a-f]{32}")
+_DIGEST, _FORM = b"labkit.rows", b"labkit.pack"
+
+
+def is_pack(path: Path) -> bool:
+    """Tell whether a path is that of a pack, there or not."""
+    return path.parent.name == PACKED and _FOLDER.fullmatch(path.name) is not None
+
+
+def packs_of(folder: Path) -> list[Path]:
+    """Return the folders of the packs of a study."""
+    try:
+        names = os.listdir(folder / PACKED)
+    except (FileNotFoundError, NotADirectoryError):
+        return []
+    return [folder / PACKED / name for name in sorted(names) if _FOLDER.fullmatch(name)]
+
+
+def packed_name(pack: Path, run_id: str) -> str | None:
+    """Return the name of the record of a run in a pack, or None.
+
+    Raises
+    ------
+    FileNotFoundError
+        When the pack is gone.
+    StoreError
+        When the pack is damaged so that it cannot be told.
+    """
+    try:
+        with (pack / NAMES).open("rb", buffering=0) as stream:
+            lines, rest = divmod(os.fstat(stream.fileno()).st_size, WIDTH + 1)
+            low, high = 0, lines
+            while low < high:
+                middle = (low + high) // 2
+                stream.seek(middle * (WIDTH + 1))
+                if stream.read(ID) < run_id.encode():
+                    low = middle + 1
+                else:
+                    high = middle
+            stream.seek(low * (WIDTH + 1))
+            name = stream.read(WIDTH).decode("ascii", "replace")
+        if lines and not rest and (low == lines or NAME.fullmatch(name)):
+            return name if name.startswith(run_id) else None
+    except FileNotFoundError:
+        pass
+    return next((name for name in open_pack(pack).names if name.startswith(run_id)), None)
+
+
+def packed_names(pack: Path) -> list[str]:
+    """Return the names of all records in a pack, sorted; refusals as in `packed_name`."""
+    try:
+        names = (pack / NAMES).read_bytes().decode("ascii", "replace").split("\n")
+        if names.pop() == "" and names and all(map(NAME.fullmatch, names)):
+            return names
+    except FileNotFoundError:
+        pass
+    return open_pack(pack).names
+
+
+def open_pack(folder: Path) -> "Pack":
+    """Return a pack whose index is as it was written; each is opened once while its files stay the same.
+
+    Raises
+    ------
+    FileNotFoundError
+        When the pack is gone: its records may be in another one.
+    StoreError
+        When a file of it is missing, or the index is damaged.
+    """
+    return _opened(folder, tuple(_state(folder, file) for file in (INDEX, ROWS)))
+
+
+def _state(folder: Path, file: str) -> tuple[int, ...]:
+    try:
+        found = os.stat(folder / file)
+    except FileNotFoundError:
+        if not folder.is_dir():
+            raise
+        raise damaged(folder, f"its file {file} is missing") from None
+    return found.st_mtime_ns, found.st_size, found.st_ino
+
+
+@functools.lru_cache(maxsize=32)
+def _opened(folder: Path, state: tuple[tuple[int, ...], ...]) -> "Pack":
+    return Pack(folder, folder.name)
+
+
+@functools.lru_cache(maxsize=4)
+def _rows_of(pack: "Pack") -> bytes:
+    content = _read(pack.folder, ROWS)
+    if hashlib.sha256(content).hexdigest() != pack.rows_digest:
+        raise damaged(pack.folder, f"{ROWS} does not have the digest that {INDEX} names")
+    return content
+
+
+def _read(folder: Path, file: str) -> bytes:
+    try:
+        return (folder / file).read_bytes()
+    except FileNotFoundError:
+        raise
+    except OSError as error:
+        raise damaged(folder, f"{file} cannot be read ({error.strerror})") from None
+
+
+def damaged(folder: Path, what: str) -> StoreError:
+    """Return the refusal of a pack."""
+    return StoreError(
+        f"pack {folder} is torn or altered: {what}; put a copy of it back, or remove the folder and run its "
+        "study again."
+    )
+
+
+def _values(column: "pa.ChunkedArray") -> list[Any]:
+    """Return the values of a column; many columns of an index have one value, which is made once."""
+    distinct = column.unique()
+    return [distinct[0].as_py()] * len(column) if len(distinct) == 1 else list(column.to_pylist())
+
+
+class Pack:
+    """A pack whose index has the digest in the name of its folder."""
+
+    def __init__(self, folder: Path, digest: str) -> None:
+        import pyarrow as pa
+        import pyarrow.parquet as pq
+
+        self.folder = folder
+        self._index = _read(folder, INDEX)
+        if hashlib.sha256(self._index).hexdigest()[:32] != digest:
+            raise damaged(folder, f"{INDEX} does not have the digest in the folder's name")
+        metadata: Mapping[bytes, bytes] = pq.read_schema(pa.BufferReader(self._index)).metadata or {}
+        if metadata.get(_FORM) != b"1":
+            raise StoreError(f"pack {folder} is of a later version of labkit; read it with that version.")
+        self.rows_digest = metadata[_DIGEST].decode()
+
+    def columns(self, names: Sequence[str]) -> dict[str, list[Any]]:
+        """Return columns of the index: those of `ORIGIN`, `rows`, `schema` and `file`."""
+        table = decode(self._index, columns=list(names))
+        return {name: _values(table[name]) for name in names}
+
+    @cached_property
+    def names(self) -> list[str]:
+        """The names of the records, sorted."""
+        return self.columns(["file"])["file"]
+
+    @cached_property
+    def _at(self) -> dict[str, int]:
+        return {name: row for row, name in enumerate(self.names)}
+
+    @cached_property
+    def index(self) -> "pa.Table":
+        """The index."""
+        return decode(self._index)
+
+    @cached_property
+    def ends(self) -> list[int]:
+        """The number of rows up to and with each run."""
+        import numpy as np
+
+        ends: list[int] = np.cumsum(self.columns(["rows"])["rows"]).tolist()
+        return ends
+
+    @property
+    def size(self) -> int:
+        """The bytes of the rows."""
+        return (self.folder / ROWS).stat().st_size
+
+    @cached_property
+    def schema(self) -> "pa.Schema":
+        """The columns of the rows."""
+        import pyarrow.parquet as pq
+
+        return pq.read_schema(self.folder / ROWS)
+
+    def verify(self, name: str) -> None:
+        """Refuse a record that is not here, or rows without the digest in the index: once for a pack."""
+        if name not in self._at or not self._verified:
+            raise self._absent(name)
+
+    @cached_property
+    def _verified(self) -> bool:
+        with (self.folder / ROWS).open("rb") as stream:
+            if hashlib.file_digest(stream, "sha256").hexdigest() != self.rows_digest:
+                raise damaged(self.folder, f"{ROWS} does not have the digest that {INDEX} names")
+        return True
+
+    def _absent(self, name: str) -> StoreError:
+        return StoreError(f"pack {self.folder} has no record {name}; see labkit list.")
+
+    def read(self, names: Sequence[str]) -> "list[pa.Table]":
+        """Return records by name, as `labkit.records.record_files.read_file` returned them."""
+        import numpy as np
+        import pyarrow as pa
+
+        from labkit.records.schema import ORIGIN
+
+        absent = [name for name in names if name not in self._at]
+        if absent:
+            raise self._absent(absent[0])
+        rows = [self._at[name] for name in names]
+        content = _rows_of(self)
+        parts: list[pa.Table] = []
+        group, measured, start = -1, None, 0
+        for row in rows:
+            if row // GROUP != group:
+                group = row // GROUP
+                measured = decode(content, groups=[group]).replace_schema_metadata(None)
+                start = self.ends[group * GROUP - 1] if group else 0
+            assert measured is not None
+            parts.append(measured.slice(self._first(row) - start, self.ends[row] - self._first(row)))
+        # One table for all, cut up again: a column made for each run would take longer than all the rest.
+        lengths = [part.num_rows for part in parts]
+        origins = self.index.select(ORIGIN.names).take(np.repeat(rows, lengths))
+        together = pa.concat_tables(parts).combine_chunks()
+        for at, name in enumerate(ORIGIN.names):
+            together = together.add_column(at, ORIGIN.field(name), origins[name])
+        ends = np.cumsum(lengths).tolist()
+        return [together.slice(end - length, length) for end, length in zip(ends, lengths, strict=True)]
+
+    def _first(self, row: int) -> int:
+        return self.ends[row - 1] if row else 0
+
+    def check(self) -> None:
+        """Refuse a pack in which anything is not as it was written."""
+        import pyarrow.parquet as pq
+
+        if self._verified and pq.read_metadata(self.folder / ROWS).num_rows != self.ends[-1]:
+            raise damaged(self.folder, f"{ROWS} has not the rows that {INDEX} names")
+        if any(NAME.fullmatch(name) is None for name in self.names):
+            raise damaged(self.folder, f"{INDEX} names files that are no records")
+        if [name[:ID] for name in self.names] != self.columns(["run_id"])["run_id"]:
+            raise damaged(self.folder, f"{INDEX} has other runs than its names")
+        if not self._names_hold():
+            raise StoreError(
+                f"pack {self.folder} reads well, but its {NAMES} is missing or is not what {INDEX} says; "
+                "labkit compact writes it anew."
+            )
+
+    def mend_names(self) -> None:
+        """Write the names anew when they are not those of the index."""
+        if not self._names_hold():
+            beside = self.folder.with_name(name_of_new("names"))
+            try:
+                write_synced(beside, _lines(self.names))
+                os.replace(beside, self.folder / NAMES)
+            finally:
+                beside.unlink(missing_ok=True)
+
+    def _names_hold(self) -> bool:
+        try:
+            return (self.folder / NAMES).read_bytes() == _lines(self.names)
+        except OSError:
+            return False
+
+
+def _lines(names: Sequence[str]) -> bytes:
+    return "".join(f"{name}\n" for name in names).encode()
+
+
+def write_pack(folder: Path, records: "Sequence[tuple[str, pa.Table, int]]") -> Path:
+    """Write records of one schema as a pack of a study, compare every bit of it, and return its folder.
+
+    Parameters
+    ----------
+    folder : Path
+        The folder of the study.
+    records : sequence of (str, pyarrow.Table, int)
+        Name of the original file, the record, and the number of the schema of that file. The rows of a
+        record must have the same origin.
+
+    Raises
+    ------
+    OSError
+        When it cannot be written; nothing is left behind.
+    StoreError
+        When the pack did not read back as the records.
+    """
+    records = sorted(records, key=lambda record: record[0])
+    rows = _rows(records)
+    index = _index(records, hashlib.sha256(rows).hexdigest())
+    digest = hashlib.sha256(index).hexdigest()[:32]
+    final = folder / PACKED / digest
+    aside = folder / PACKED / name_of_new("pack")
+    try:
+        make_folder(aside)
+        files = {INDEX: index, ROWS: rows, NAMES: _lines([name for name, _, _ in records])}
+        for file, content in files.items():
+            write_synced(aside / file, content)
+        sync(aside)
+        _compare(Pack(aside, digest), records)
+        if not _is_whole(final):
+            remove_pack(final)
+            os.rename(aside, final)
+        sync(final.parent)
+    finally:
+        shutil.rmtree(aside, ignore_errors=True)
+    return final
+
+
+def _is_whole(pack: Path) -> bool:
+    try:
+        open_pack(pack).check()
+    except (FileNotFoundError, StoreError):
+        return False
+    return True
+
+
+def remove_pack(pack: Path) -> None:
+    """Remove a pack as a whole: readers see all of it or nothing."""
+    aside = pack.with_name(name_of_new("old"))
+    try:
+        os.rename(pack, aside)
+    except FileNotFoundError:
+        return
+    sync(aside.parent)
+    shutil.rmtree(aside, ignore_errors=True)
+
+
+def _rows(records: "Sequence[tuple[str, pa.Table, int]]") -> bytes:
+    import pyarrow as pa
+    import pyarrow.parquet as pq
+
+    from labkit.records.schema import measured_part
+
+    sink = pa.BufferOutputStream()
+    parts = [measured_part(table) for _, table, _ in records]
+    with pq.ParquetWriter(sink, parts[0].schema, compression="zstd") as writer:
+        for start in range(0, len(parts), GROUP):
+            group = pa.concat_tables(parts[start : start + GROUP])
+            writer.write_table(group, row_group_size=group.num_rows)
+    return bytes(sink.getvalue().to_pybytes())
+
+
+def _index(records: "Sequence[tuple[str, pa.Table, int]]", rows_digest: str) -> bytes:
+    import pyarrow as pa
+    import pyarrow.parquet as pq
+
+    from labkit.records.schema import ORIGIN
+
+    origins = pa.concat_tables([table.select(ORIGIN.names).slice(0, 1) for _, table, _ in records])
+    index = origins.combine_chunks()
+    for name, values, kind in (
+        ("rows", [table.num_rows for _, table, _ in records], pa.int64()),
+        ("schema", [number for _, _, number in records], pa.int64()),
+        ("file", [name for name, _, _ in records], pa.string()),
+    ):
+        index = index.append_column(name, pa.array(values, type=kind))
+    sink = pa.BufferOutputStream()
+    metadata = {_FORM: b"1", _DIGEST: rows_digest.encode()}
+    pq.write_table(index.replace_schema_metadata(metadata), sink, compression="zstd")
+    return bytes(sink.getvalue().to_pybytes())
+
+
+def _compare(pack: Pack, records: "Sequence[tuple[str, pa.Table, int]]") -> None:
+    """Refuse a pack, as the disk has it, in which a record is not what it was, to the bit."""
+    import numpy as np
+    import pyarrow as pa
+
+    from labkit.records.schema import ORIGIN, exact_difference, measured_part
+
+    def same(ours: "pa.Table", theirs: "pa.Table") -> None:
+        difference = exact_difference(ours, theirs)
+        if difference:
+            raise StoreError(
+                f"pack {pack.folder} did not read back as written ({difference}); check the disk."
+            )
+
+    originals = pa.concat_tables([table for _, table, _ in records])
+    lengths = [table.num_rows for _, table, _ in records]
+    found = pack.columns(["file", "rows"])
+    same(pa.table(found), pa.table({"file": [name for name, _, _ in records], "rows": lengths}))
+    rows = np.repeat(np.arange(len(records)), lengths)
+    same(
+        pack.index.select(ORIGIN.names).replace_schema_metadata(None).take(rows),
+        originals.select(ORIGIN.names),
+    )
+    same(decode(_rows_of(pack)).replace_schema_metadata(None), measured_part(originals))
+    if (pack.folder / NAMES).read_bytes() != _lines(found["file"]):
+        raise _unlike(pack, NAMES)
+
+
+def _unlike(pack: Pack, what: str) -> StoreError:
+    return StoreError(f"pack {pack.folder} did not read back as written ({what}); check the disk.")
