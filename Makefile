@@ -6,7 +6,7 @@ PYTEST ?= -n 2 --dist loadfile
 STRIP := $(BIN)/nbstripout --keep-id --extra-keys "metadata.language_info metadata.papermill cell.metadata.papermill"
 
 .DEFAULT_GOAL := help
-.PHONY: help setup answer test lint style format strip bench readme lab lock
+.PHONY: help setup answer test lint style format strip bench fuzz readme lab lock
 
 help: ## show this list
 	@sed -n 's/^\([a-z]*\):[^#]*## /\1|/p' Makefile | awk -F'|' '{ printf "make %-8s %s\n", $$1, $$2 }'
@@ -38,6 +38,9 @@ strip: setup ## take outputs and run marks out of the notebooks
 
 bench: setup ## speed and memory (minutes; keep the machine quiet)
 	$(BIN)/python -m pytest tests/benchmarks -s
+
+fuzz: setup ## ten thousand spoilt inputs for each reader (minutes)
+	FUZZ_INPUTS=10000 $(BIN)/python -m pytest -q tests/fuzz -n 2 --dist load
 
 readme: answer ## remake the answer table and figure that README.md shows
 	$(BIN)/python .readme/update.py

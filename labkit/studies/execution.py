@@ -73,7 +73,10 @@ def execute(
     from labkit.studies.kernels import end_kernel, end_now, own_event_loop, start_kernel
 
     with own_event_loop():
-        kernel = start_kernel(notebook, place, environment)
+        try:
+            kernel = start_kernel(notebook, place, environment)
+        except Exception as error:
+            return _broken(error)
         late = Event()
 
         def end() -> None:
@@ -90,8 +93,8 @@ def execute(
             watch.cancel()
             end_kernel(kernel)
     if late.is_set() and result.error:
-        error = f"it took longer than {seconds:g} seconds and was ended; allow it more, or mend what hangs."
-        return Execution(error, False, result.details, TOO_LONG)
+        sentence = f"it took longer than {seconds:g} seconds and was ended; allow it more, or mend what hangs."
+        return Execution(sentence, False, result.details, TOO_LONG)
     return result
 
 
@@ -119,9 +122,14 @@ def _execute(notebook: Path, parameters: dict[str, Any], output: Path, kernel: t
         sentence = error.evalue if error.ename in SENTENCES else f"{error.ename}: {error.evalue}"
         return Execution(_plain(sentence.strip()), refused, _plain("\n".join(error.traceback)), error.ename)
     except Exception as error:
-        name = type(error).__name__
-        return Execution(f"{name}: {error}".strip(), False, traceback.format_exc(), name)
+        return _broken(error)
     return _look_through(output)
+
+
+def _broken(error: Exception) -> Execution:
+    """Return the account of an error that is not the notebook's."""
+    name = type(error).__name__
+    return Execution(f"{name}: {error}".strip(), False, traceback.format_exc(), name)
 
 
 def _plain(text: str) -> str:

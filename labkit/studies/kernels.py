@@ -20,7 +20,7 @@ from jupyter_core.utils import ensure_event_loop, run_sync
 from traitlets import default
 
 from labkit.studies.place import HERE, Place
-from labkit.studies.scratch import new_folder
+from labkit.studies.scratch import folder_for_sockets
 
 # The kernels of this process that are alive; an interrupted command ends them.
 _alive: set["PrivateKernelManager"] = set()
@@ -39,7 +39,7 @@ class PrivateKernelManager(AsyncKernelManager):
 
         @default("ip")
         def _private_address(self) -> str:
-            return os.path.join(new_folder(), "k")
+            return os.path.join(folder_for_sockets(), "k")
 
     def format_kernel_cmd(self, extra_arguments: list[str] | None = None) -> list[str]:
         """Return the command: the place's Python, whatever kernels are installed, and no history file."""
@@ -94,7 +94,11 @@ def start_kernel(
     manager.place, manager.preload = place, _imports(notebook)
     manager.extra = environment or {}
     # the working directory that JupyterLab gives; papermill's own option would change it for all threads
-    run_sync(manager.start_kernel)(cwd=str(notebook.parent))
+    try:
+        run_sync(manager.start_kernel)(cwd=str(notebook.parent))
+    except BaseException:
+        _end(manager)
+        raise
 
     class Started(PrivateKernelManager):
         def __new__(cls, **options: Any) -> Any:
@@ -111,7 +115,10 @@ def end_now(kernel: type[PrivateKernelManager]) -> None:
 
 def end_kernel(kernel: type[PrivateKernelManager]) -> None:
     """End a kernel and remove what it left, if that has not been done."""
-    manager: PrivateKernelManager = kernel()
+    _end(kernel())
+
+
+def _end(manager: PrivateKernelManager) -> None:
     if manager in _alive:
         manager.end_now()
         run_sync(manager.cleanup_resources)()

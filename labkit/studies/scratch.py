@@ -10,6 +10,9 @@ from pathlib import Path
 
 from labkit.records import leftovers
 
+# Where sockets lie when the path of the usual place is longer than this.
+SHORT, ROOM = "/tmp", 60
+
 _NAME = re.compile(r"labkit-([0-9a-f]{4})-([0-9a-v]{1,12})-([0-9a-v]{1,16})-\w+")
 
 
@@ -23,16 +26,27 @@ def scratch_folder() -> Iterator[Path]:
         shutil.rmtree(folder, ignore_errors=True)
 
 
-def new_folder() -> Path:
-    """Make a temporary folder of this process; its path is short, since sockets may lie in it."""
+def new_folder(place: str | None = None) -> Path:
+    """Make a temporary folder of this process, in the usual place for such or another."""
     process = os.getpid()
     numbers = (process, int(leftovers.start_of(process)))
-    return Path(tempfile.mkdtemp(prefix="-".join(["labkit", _machine(), *map(_short, numbers), ""])))
+    prefix = "-".join(["labkit", _machine(), *map(_short, numbers), ""])
+    return Path(tempfile.mkdtemp(prefix=prefix, dir=place))
+
+
+def folder_for_sockets() -> Path:
+    """Make a temporary folder with a short path: that of a socket has room for about a hundred bytes."""
+    usual = tempfile.gettempdir()
+    return new_folder(usual if len(os.fsencode(usual)) <= ROOM or not os.path.isdir(SHORT) else SHORT)
 
 
 def sweep_folders() -> None:
     """Remove the temporary folders of this user's processes on this machine that have died."""
-    place = Path(tempfile.gettempdir())
+    for place in {tempfile.gettempdir(), SHORT}:
+        _sweep_in(Path(place))
+
+
+def _sweep_in(place: Path) -> None:
     try:
         names = os.listdir(place)
     except OSError:

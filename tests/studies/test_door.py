@@ -3,6 +3,7 @@
 import pytest
 
 import labkit as lk
+from labkit import memory
 from labkit.cli import main
 from labkit.records.project import EXPERIMENTS
 from labkit.studies import door
@@ -86,16 +87,16 @@ def test_a_value_is_refused_in_one_sentence(ask, asked, sentence):
 
 
 def test_more_than_the_memory_is_refused_and_less_is_not(monkeypatch):
-    monkeypatch.setattr(door, "memory", lambda: 8 * 2 * 10 * (100 + 120))
+    monkeypatch.setattr(memory, "memory", lambda: 8 * 2 * 10 * (100 + 120))
     door._check_memory("replicates", 10, 100, 12, 2)
     with pytest.raises(lk.InputError, match=r"replicates is 11; .* would take about .* GB of memory"):
         door._check_memory("replicates", 11, 100, 12, 2)
-    monkeypatch.setattr(door, "memory", lambda: None)
+    monkeypatch.setattr(memory, "memory", lambda: None)
     door._check_memory("replicates", 11, 100, 12, 2)
 
 
 def test_the_memory_of_this_machine_is_known():
-    assert door.memory() > 2**20
+    assert memory.memory() > 2**20
 
 
 def fleet(*capacities):

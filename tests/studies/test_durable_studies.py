@@ -38,6 +38,11 @@ def measured(folder):
     return {run: measured_part(store.read(path)) for run, path in store.runs("s").items()}
 
 
+def recorded(folder):
+    """Return how many files of records a store has by now."""
+    return len(list((folder / "s").glob("*.parquet")))
+
+
 def check_equal(folder, expected):
     """The store holds just the expected runs, each once and to the bit, and nothing else."""
     found = measured(folder)
@@ -62,20 +67,21 @@ def expected(project):
 def test_25_kills_at_random_moments_lose_nothing_and_double_nothing(project, expected, tmp_path):
     scratch = tmp_path / "t"
     scratch.mkdir()
-    begin = time.monotonic()
-    undisturbed = start("run", project.study(grid="tasks = [1, 2]"), "--store", str(tmp_path / "first"))
-    undisturbed.communicate()
-    span = time.monotonic() - begin
     path = project.study(grid=f"tasks = {list(range(1, 41))}")
     expected = expected(path)
     words = ["run", path, "--store", str(tmp_path / "killed")]
     moments = random.Random(20260801)
-    for _ in range(25):
+    for at in range(25):
+        before = recorded(tmp_path / "killed")
         process = start(*words, scratch=scratch)
-        time.sleep(moments.uniform(0.1, 0.95) * span)
+        # half of them in the second after the next record, where there is one: machines differ in pace
+        patience = time.monotonic() + (60 if at % 2 else 0)
+        while time.monotonic() < patience and recorded(tmp_path / "killed") == before < 40:
+            time.sleep(0.01)
+        time.sleep(moments.uniform(0.0, 0.5 if at % 2 else 2.5))
         process.kill()
         process.communicate()
-    done = len(Store(tmp_path / "killed").runs("s")) if (tmp_path / "killed").exists() else 0
+    done = recorded(tmp_path / "killed")
     assert 0 < done < 40, "the moments of killing must fall into the study"
     process = start(*words, "--json", scratch=scratch)
     out, err = process.communicate(timeout=300)
