@@ -93,8 +93,8 @@ def execute(
             watch.cancel()
             end_kernel(kernel)
     if late.is_set() and result.error:
-        sentence = f"it took longer than {seconds:g} seconds and was ended; allow it more, or mend what hangs."
-        return Execution(sentence, False, result.details, TOO_LONG)
+        took = f"it took longer than {seconds:g} seconds and was ended; allow it more, or mend what hangs."
+        return Execution(took, False, result.details, TOO_LONG)
     return result
 
 
