@@ -19,10 +19,19 @@ def main(words: Sequence[str] | None = None) -> int:
     """Run a command and return its exit status.
 
     0: done. 1: something failed or differs. 2: input was refused, in one sentence on the standard error
-    stream. 130: interrupted.
+    stream. 130: interrupted; 143: told to end, as by a batch system; 129: the terminal was closed.
     """
+    ended_by: list[int] = []
+
+    def interrupt(number: int, frame: FrameType | None) -> None:
+        ended_by.append(number)
+        raise KeyboardInterrupt
+
     if threading.current_thread() is threading.main_thread():
-        signal.signal(signal.SIGTERM, _terminate)
+        for name in ("SIGTERM", "SIGHUP"):
+            number = getattr(signal, name, None)
+            if number is not None and signal.getsignal(number) != signal.SIG_IGN:  # nohup ignores SIGHUP
+                signal.signal(number, interrupt)
     try:
         arguments = _parser().parse_args(words)
         status = int(arguments.command(arguments))
@@ -31,20 +40,19 @@ def main(words: Sequence[str] | None = None) -> int:
     except InputError as error:
         say(str(error))
         return 2
+    except MemoryError:
+        say("there is not enough memory for this; give fewer replicates or servers, or a larger machine")
+        return 1
     except SchedulerLost as error:
         say(str(error))
         return 1
     except KeyboardInterrupt as interrupted:
         say(str(interrupted) or "interrupted; runs already recorded are kept")
-        return 130
+        return 128 + ended_by[0] if ended_by else 130
     except BrokenPipeError:
         # the reader has seen enough; python would complain once more at exit
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return 0
-
-
-def _terminate(number: int, frame: FrameType | None) -> None:
-    sys.exit(128 + number)
 
 
 class _Parser(argparse.ArgumentParser):

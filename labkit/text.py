@@ -18,11 +18,29 @@ _FORM = re.compile(r"\s*([\w-]+)\s*(?:\((.*)\))?\s*")
 
 
 def align(rows: list[list[str]]) -> str:
-    """Return rows of texts as lines with aligned columns; the first row is the header."""
+    """Return rows of texts as lines with aligned columns, each a line; the first row is the header."""
+    rows = [[printable(cell) for cell in row] for row in rows]
     widths = [max(len(cell) for cell in column) for column in zip(*rows, strict=True)]
     return "\n".join(
         "  ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=True)).rstrip() for row in rows
     )
+
+
+def printable(text: str) -> str:
+    r"""Return a text for a line of a terminal, which obeys some characters instead of showing them.
+
+    Each character that cannot be printed becomes its number, such as ``\x1b``, ``\u202e`` or ``\U000e0041``.
+    """
+    if text.isprintable():
+        return text
+    return "".join(each if each.isprintable() else _number_of(each) for each in text)
+
+
+def _number_of(character: str) -> str:
+    number = ord(character)
+    if number > 0xFFFF:
+        return f"\\U{number:08x}"
+    return f"\\u{number:04x}" if number > 0xFF else f"\\x{number:02x}"
 
 
 def harmless(value: Any) -> Any:

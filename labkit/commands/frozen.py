@@ -57,20 +57,21 @@ def _verify(arguments: argparse.Namespace) -> int:
     from dataclasses import asdict
 
     from labkit.studies.verifying import verify
+    from labkit.text import printable
 
     result = verify(arguments.name, arguments.rerun, say=say)
     if arguments.json:
         print_json({**asdict(result), "holds": not result.findings})
         return 1 if result.findings else 0
     for note in result.notes:
-        print(f"note: {note}")
+        print(f"note: {printable(note)}")
     for each in result.findings:
-        print(f"frozen table {result.name}: {each.sentence}")
+        print(f"frozen table {result.name}: {printable(each.sentence)}")
     if result.findings:
         return 1
     print(f"frozen table {result.name} holds: {result.files} files as frozen, the table as its rows give it")
     for row in result.sampled:
-        print(f"row {row.at} drawn ({row.about}): run {', '.join(row.runs)} executed again")
+        print(f"row {row.at} drawn ({printable(row.about)}): run {', '.join(row.runs)} executed again")
     if result.sampled:
         print(f"{len(result.runs)} runs are identical to the bit: {result.rows} measured rows")
     return 0

@@ -32,10 +32,13 @@ def add(commands: Commands) -> None:
 
 def _list(arguments: argparse.Namespace) -> int:
     from labkit.records.listing import failed_runs, listed
+    from labkit.records.project import check_study_name
     from labkit.records.schema import ORIGIN
 
     store = store_of(arguments)
-    studies = [arguments.study] if arguments.study else store.studies()
+    studies = store.studies() if arguments.study is None else [arguments.study]
+    if arguments.study is not None and arguments.study not in store.studies():
+        check_study_name(arguments.study)
     names = ORIGIN.names if arguments.json else _SHOWN
     found = [listed(store, study, names, warn=say) for study in studies]
     columns = {
@@ -72,6 +75,8 @@ def _whole_row(columns: dict[str, list[Any]], at: int) -> dict[str, Any]:
 
 def _print_runs(columns: dict[str, list[Any]], order: list[int]) -> None:
     """Print the table of runs column by column: quick for a hundred thousand, too."""
+    from labkit.text import printable
+
     if not order:
         return
     runs = {name: [values[at] for at in order] for name, values in columns.items()}
@@ -87,7 +92,8 @@ def _print_runs(columns: dict[str, list[Any]], order: list[int]) -> None:
         "parameters": _in_words(runs["parameters"]),
     }
     padded = []
-    for name, cells in shown.items():
+    for name, texts in shown.items():
+        cells = list(map(printable, texts))
         width = max(len(name), max(map(len, cells))) if name != "parameters" else 0
         padded.append([cell.ljust(width) for cell in (name, *cells)])
     print("\n".join(map(str.rstrip, map("  ".join, zip(*padded, strict=True)))))
@@ -110,6 +116,7 @@ def _print_failed(failed: list[tuple[str, str, Path]]) -> None:
 
 def _show(arguments: argparse.Namespace) -> int:
     from labkit.records.schema import measured_part, row_of_origin
+    from labkit.text import printable
 
     store = store_of(arguments)
     path = store.locate(arguments.run, warn=say)
@@ -125,22 +132,24 @@ def _show(arguments: argparse.Namespace) -> int:
         return 0
     for name, value in origin.items():
         for at, (key, each) in enumerate(value.items() if isinstance(value, dict) else [("", value)]):
-            print(f"{name if at == 0 else '':<16} {key + ' = ' if key else ''}{each}")
-    print(f"{'file':<16} {path}")
+            print(f"{name if at == 0 else '':<16} {printable(f'{key} = {each}' if key else str(each))}")
+    print(f"{'file':<16} {printable(str(path))}")
     print(f"{'rows':<16} {measured.num_rows}")
     frame = measured.to_pandas()
     for at, how in enumerate(frame["stopping"].unique() if "stopping" in frame.columns else []):
-        print(f"{'stopping' if at == 0 else '':<16} {how}")
+        print(f"{'stopping' if at == 0 else '':<16} {printable(str(how))}")
     telling = ("policy", "information", "network", "failures", "load_factor", "tasks")
     labels = [name for name in telling if name in frame.columns]
     if labels:
         means = frame.drop(columns="replicate", errors="ignore").groupby(labels).mean(numeric_only=True)
-        print(f"\nmeans over replicates\n{means.reset_index().to_string(index=False)}")
+        lines = means.reset_index().to_string(index=False).split("\n")
+        print("\nmeans over replicates", *map(printable, lines), sep="\n")
     return 0
 
 
 def _rerun(arguments: argparse.Namespace) -> int:
     from labkit.studies.rerun import rerun
+    from labkit.text import printable
 
     store = store_of(arguments)
     result = rerun(store, store.locate(arguments.run, warn=say), say=say, here=arguments.here)
@@ -148,11 +157,12 @@ def _rerun(arguments: argparse.Namespace) -> int:
         print_json({**vars(result), "identical": not result.difference})
         return 1 if result.difference else 0
     for note in result.notes:
-        print(f"note: {note}")
+        print(f"note: {printable(note)}")
     at = "here" if result.place == "here" else f"at commit {result.place[:10]} in a work tree of its own"
     print(f"executed {at}")
     if result.difference:
-        print(f"run {result.run_id} differs: {result.difference}")
+        print(f"run {result.run_id} differs: {printable(result.difference)}")
         return 1
-    print(f"run {result.run_id} is identical to the bit: {result.rows} rows of {', '.join(result.columns)}")
+    columns = printable(", ".join(result.columns))
+    print(f"run {result.run_id} is identical to the bit: {result.rows} rows of {columns}")
     return 0

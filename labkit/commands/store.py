@@ -38,29 +38,43 @@ def _check(arguments: argparse.Namespace) -> int:
         return 1 if done.faults else 0
     for fault in done.faults:
         print(f"{fault.kind}: {fault.sentence}")
-    about = f"{done.runs:,} runs in {done.files:,} files of {store.folder} were checked"
+    about = f"{_count(done.runs, 'run')} in {_count(done.files, 'file')} of {store.folder} were checked"
     if done.packs:
-        about += f", {done.packs:,} packs among them"
+        about += f", {_count(done.packs, 'pack')} among them"
     if done.older:
-        about += f"; {done.older:,} records are of an older schema, which is understood"
-    print(f"{about}: {f'{len(done.faults):,} faults' if done.faults else 'all is well'}")
+        about += f"; {_count(done.older, 'record')} of an older schema, which is understood"
+    print(f"{about}: {_count(len(done.faults), 'fault') if done.faults else 'all is well'}")
     return 1 if done.faults else 0
 
 
+def _count(number: int, what: str) -> str:
+    return f"{number:,} {what}{'' if number == 1 else 's'}"
+
+
 def _compact(arguments: argparse.Namespace) -> int:
-    from labkit.records.compaction import compact
+    from labkit.errors import InputError
+    from labkit.records.compaction import Compaction, compact
+    from labkit.records.project import check_study_name
 
     store = store_of(arguments)
     studies = [arguments.study] if arguments.study else store.studies()
     done = []
     for study in studies:
-        result = compact(store, study)
+        try:
+            check_study_name(study)
+        except InputError as error:
+            if arguments.study:
+                raise
+            result = Compaction(study, left=[f"folder {store.folder / study}: {error}"])
+        else:
+            result = compact(store, study)
         done.append(result)
         for sentence in result.left:
             say(f"left as it is: {sentence}")
         if not arguments.json:
-            merged = f", and {result.merged:,} packs were merged" if result.merged else ""
-            print(f"study {study}: {result.runs:,} runs moved into {result.packs:,} packs{merged}")
+            merged = f", and {_count(result.merged, 'pack')} merged" if result.merged else ""
+            moved = f"{_count(result.runs, 'run')} moved into {_count(result.packs, 'pack')}"
+            print(f"study {study}: {moved}{merged}")
     if arguments.json:
         print_json([vars(result) for result in done])
     elif not studies:

@@ -48,6 +48,7 @@ class OwnRule(Policy):
     def __init__(self, function: Callable, source: str | None = None) -> None:
         self.function = function
         self.source = source_of(function) if source is None else source
+        self._kept: bytes | None = None
         self.digest = hashlib.sha256(self.source.encode()).hexdigest()[:8]
         self.__doc__ = function.__doc__
         # A user's index is checked: a wrong one must not read somebody else's memory.
@@ -73,6 +74,7 @@ class OwnRule(Policy):
 
     def check(self, load: type) -> None:
         """Compile the rule alone, so that what is wrong with it can be told in one sentence."""
+        self._keep()
         if CONFIG.DISABLE_JIT:
             return
 
@@ -111,9 +113,17 @@ class OwnRule(Policy):
 
     def __reduce__(self) -> tuple:
         """Send the function itself, since another process does not have the notebook, and its source."""
+        self._keep()
+        return _again, (self._kept, self.source)
+
+    def _keep(self) -> None:
+        """Take the rule as it is at its first use: what is recorded and what is sent is what was compiled."""
         from labkit.sharing.work import packed
 
-        return _again, (packed(self.function), self.source)
+        if self._kept is None:
+            if _SOURCES.get(self.name) == self.source:
+                self.source = _SOURCES[self.name] = source_of(self.function)
+            self._kept = packed(self.function)
 
     def __eq__(self, other: object) -> bool:
         return isinstance(other, OwnRule) and self.function is other.function

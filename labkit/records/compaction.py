@@ -8,6 +8,7 @@ what was added is a constant, and the number says that it was.
 """
 
 import os
+import time
 from collections import Counter
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
@@ -65,8 +66,12 @@ def compact(store: Store, study: str, tick: Callable[[int], None] = lambda runs:
     work = _Work(folder, Compaction(study), tick)
     try:
         with _alone(folder, study):
+            if os.path.lexists(folder / PACKED) and not (folder / PACKED).is_dir():
+                work.leave(foreign(folder / PACKED))
+                return work.done
             sweep(folder, names_in(folder))
             sweep(folder / PACKED, names_in(folder / PACKED))
+            work.mend()
             work.settle()
             work.drop_packed()
             work.pack()
@@ -85,17 +90,40 @@ def _alone(folder: Path, study: str) -> Iterator[None]:
         return
     handle = os.open(folder, os.O_RDONLY)
     try:
-        try:
-            fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
-        except BlockingIOError:
-            raise StoreError(
-                f"study {study} is being compacted by another process; wait until that is done."
-            ) from None
-        except OSError:
-            pass  # a file system without locks
+        for attempt in (1, 2):
+            try:
+                fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
+                break
+            except BlockingIOError:
+                if attempt == 2:
+                    raise StoreError(
+                        f"study {study} is being compacted by another process; wait until that is done."
+                    ) from None
+                time.sleep(0.05)  # it may be a check that asks whether this is so
+            except OSError:
+                break  # a file system without locks
         yield
     finally:
         os.close(handle)
+
+
+def is_compacting(folder: Path) -> bool:
+    """Tell whether a process compacts the study in a folder now; False where the system cannot tell."""
+    try:
+        import fcntl
+
+        handle = os.open(folder, os.O_RDONLY)
+    except (ImportError, OSError):
+        return False
+    try:
+        fcntl.flock(handle, fcntl.LOCK_SH | fcntl.LOCK_NB)
+    except BlockingIOError:
+        return True
+    except OSError:
+        return False
+    finally:
+        os.close(handle)
+    return False
 
 
 @dataclass
@@ -122,6 +150,18 @@ class _Work:
         """Remember what was not touched."""
         if sentence not in self.done.left:
             self.done.left.append(sentence)
+
+    def mend(self) -> None:
+        """Write names of packs anew where they are not those of the index: what follows goes by them."""
+        for folder in packs_of(self.folder):
+            try:
+                open_pack(folder).mend_names()
+            except (StoreError, FileNotFoundError) as error:
+                self._leave_pack(folder, error)
+
+    def _leave_pack(self, folder: Path, error: Exception) -> None:
+        if folder.is_dir() or isinstance(error, StoreError):
+            self.leave(str(error))
 
     def settle(self) -> None:
         """Keep one file of each run that two processes recorded at once."""
@@ -179,11 +219,10 @@ class _Work:
         for folder in packs_of(self.folder):
             try:
                 pack = open_pack(folder)
-                pack.mend_names()
                 pack.check()
                 listed.append(pack)
             except (StoreError, FileNotFoundError) as error:
-                self.leave(str(error))
+                self._leave_pack(folder, error)
         for pack in sorted(listed, key=lambda pack: (-len(pack.names), pack.folder)):
             runs = {name[:ID]: pack.folder / name for name in pack.names}
             overlaps = not held.keys().isdisjoint(runs)
@@ -195,9 +234,14 @@ class _Work:
 
     def _take(self, key: str, packs: "list[_Small]") -> None:
         for small in packs:
-            pack = open_pack(small.folder)
-            numbers = pack.columns(["schema"])["schema"]
-            tables = pack.read(pack.names)
+            try:
+                pack = open_pack(small.folder)
+                numbers = pack.columns(["schema"])["schema"]
+                tables = pack.read(pack.names)
+            except StoreError as error:
+                self.leave(str(error))
+                small.needed = True
+                continue
             size = pack.size / len(tables)
             for name, table, number in zip(pack.names, tables, numbers, strict=True):
                 kept = small.elsewhere.get(name[:ID])

@@ -10,7 +10,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 
 from labkit.errors import StoreError
-from labkit.records.packs import is_pack, packed_name, packed_names, packs_of
+from labkit.records.packs import PACKED, is_pack, misnamed, packed_name, packed_names, packs_of
 from labkit.records.record_files import ID, is_record
 
 # A folder of packs may change between listing it and looking into it, by a compaction each time.
@@ -28,7 +28,7 @@ class Listing:
     packed : list of (Path, list of str)
         Packs and the names in them.
     foreign : list of str
-        Names of parquet files that are no records.
+        Names of parquet files that are no records, and of what is no pack where packs are.
     """
 
     folder: Path
@@ -45,11 +45,15 @@ class Listing:
 
 
 def names_in(folder: Path) -> list[str]:
-    """Return all names in a folder; none when it is not there."""
+    """Return all names in a folder; none when it is not there, or is a file."""
     try:
         return os.listdir(folder)
     except (FileNotFoundError, NotADirectoryError):
         return []
+    except OSError as error:
+        raise StoreError(
+            f"folder {folder} cannot be read ({error.strerror}); see to it that it can be."
+        ) from None
 
 
 def list_study(folder: Path, warn: Callable[[str], None] | None = None) -> Listing:
@@ -72,7 +76,26 @@ def list_study(folder: Path, warn: Callable[[str], None] | None = None) -> Listi
         except FileNotFoundError as error:
             if look == _LOOKS:
                 raise StoreError(f"pack {error.filename} cannot be read ({error.strerror}).") from None
+    for name in strange_in(folder):
+        sentence = misnamed(folder / name)
+        if sentence is None:
+            listing.foreign.append(name)
+        elif warn is None:
+            raise StoreError(sentence)
+        else:
+            warn(sentence)
     return listing
+
+
+def strange_in(folder: Path) -> list[str]:
+    """Return the names, from the folder of a study, of what is no pack where packs are."""
+    from labkit.records.frozen import LITTER  # which reads records
+
+    packed = folder / PACKED
+    if os.path.lexists(packed) and not packed.is_dir():
+        return [PACKED]
+    names = (name for name in names_in(packed) if name[0] != "." and name not in LITTER)
+    return sorted(f"{PACKED}/{name}" for name in names if not is_pack(packed / name))
 
 
 def copies_of(folder: Path, run_id: str, names: Iterable[str] | None = None) -> list[Path]:

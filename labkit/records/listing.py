@@ -8,7 +8,7 @@ from typing import Any
 from labkit.errors import StoreError
 from labkit.records.copies import Listing, list_study, names_in
 from labkit.records.packs import open_pack
-from labkit.records.record_files import ID, foreign, read_origin
+from labkit.records.record_files import ID, foreign, open_regular, read_origin
 from labkit.records.store import Store
 
 FAILED = "failed"
@@ -143,8 +143,8 @@ def failed_runs(store: Store, study: str) -> list[tuple[str, str, Path]]:
         if not name.endswith(".txt") or name.startswith("."):
             continue
         try:
-            with (folder / name).open(encoding="utf-8", errors="replace") as stream:
-                line = stream.readline(1000).strip()
+            with open_regular(folder / name) as stream:
+                line = stream.read(4000).decode("utf-8", "replace").partition("\n")[0][:1000].strip()
         except OSError as error:
             line = f"(cannot be read: {error.strerror})"
         found.append((name.removesuffix(".txt"), line, folder / name))

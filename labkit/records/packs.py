@@ -17,14 +17,29 @@ import hashlib
 import os
 import re
 import shutil
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from functools import cached_property
+from io import FileIO
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from labkit.errors import StoreError
 from labkit.records.leftovers import name_of_new
-from labkit.records.record_files import ID, NAME, WIDTH, decode, make_folder, sync, write_synced
+from labkit.records.record_files import (
+    ID,
+    NAME,
+    WIDTH,
+    check_kinds,
+    check_origins,
+    decode,
+    digest_of,
+    make_folder,
+    open_regular,
+    read_regular,
+    sync,
+    write_synced,
+)
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -49,7 +64,25 @@ def packs_of(folder: Path) -> list[Path]:
         names = os.listdir(folder / PACKED)
     except (FileNotFoundError, NotADirectoryError):
         return []
+    except OSError as error:
+        raise StoreError(
+            f"folder {folder / PACKED} cannot be read ({error.strerror}); see to it that it can be."
+        ) from None
     return [folder / PACKED / name for name in sorted(names) if _FOLDER.fullmatch(name)]
+
+
+def misnamed(path: Path) -> str | None:
+    """Return the sentence about a renamed pack, or None when it is none, or a copy of one that is there."""
+    try:
+        digest = digest_of(read_regular(path / INDEX))
+    except OSError:
+        return None
+    if os.path.lexists(path.with_name(digest)):
+        return None
+    return (
+        f"folder {path} is a pack under another name, and its runs are not seen; give it its name {digest} "
+        "back."
+    )
 
 
 def packed_name(pack: Path, run_id: str) -> str | None:
@@ -63,7 +96,7 @@ def packed_name(pack: Path, run_id: str) -> str | None:
         When the pack is damaged so that it cannot be told.
     """
     try:
-        with (pack / NAMES).open("rb", buffering=0) as stream:
+        with open_regular(pack / NAMES) as stream:
             lines, rest = divmod(os.fstat(stream.fileno()).st_size, WIDTH + 1)
             low, high = 0, lines
             while low < high:
@@ -77,7 +110,7 @@ def packed_name(pack: Path, run_id: str) -> str | None:
             name = stream.read(WIDTH).decode("ascii", "replace")
         if lines and not rest and (low == lines or NAME.fullmatch(name)):
             return name if name.startswith(run_id) else None
-    except FileNotFoundError:
+    except OSError:
         pass
     return next((name for name in open_pack(pack).names if name.startswith(run_id)), None)
 
@@ -85,10 +118,10 @@ def packed_name(pack: Path, run_id: str) -> str | None:
 def packed_names(pack: Path) -> list[str]:
     """Return the names of all records in a pack, sorted; refusals as in `packed_name`."""
     try:
-        names = (pack / NAMES).read_bytes().decode("ascii", "replace").split("\n")
+        names = read_regular(pack / NAMES).decode("ascii", "replace").split("\n")
         if names.pop() == "" and names and all(map(NAME.fullmatch, names)):
             return names
-    except FileNotFoundError:
+    except OSError:
         pass
     return open_pack(pack).names
 
@@ -113,6 +146,8 @@ def _state(folder: Path, file: str) -> tuple[int, ...]:
         if not folder.is_dir():
             raise
         raise damaged(folder, f"its file {file} is missing") from None
+    except OSError as error:
+        raise _unreadable(folder, file, error) from None
     return found.st_mtime_ns, found.st_size, found.st_ino
 
 
@@ -130,12 +165,35 @@ def _rows_of(pack: "Pack") -> bytes:
 
 
 def _read(folder: Path, file: str) -> bytes:
+    with _opening(folder, file) as stream:
+        return stream.read()
+
+
+@contextmanager
+def _opening(folder: Path, file: str) -> Iterator[FileIO]:
     try:
-        return (folder / file).read_bytes()
+        with open_regular(folder / file) as stream:
+            yield stream
     except FileNotFoundError:
         raise
     except OSError as error:
-        raise damaged(folder, f"{file} cannot be read ({error.strerror})") from None
+        raise _unreadable(folder, file, error) from None
+
+
+def _unreadable(folder: Path, file: str, error: OSError) -> StoreError:
+    return damaged(folder, f"{file} cannot be read ({error.strerror})")
+
+
+@contextmanager
+def _told(folder: Path, file: str) -> Iterator[None]:
+    """Say in one sentence what Arrow cannot read: a file may have its digest and be no file of a pack."""
+    try:
+        yield
+    except (StoreError, OSError):
+        raise
+    except Exception as error:
+        about = (str(error).splitlines() or [type(error).__name__])[0]
+        raise damaged(folder, f"{file} is no file of a pack ({about})") from None
 
 
 def damaged(folder: Path, what: str) -> StoreError:
@@ -163,15 +221,25 @@ class Pack:
         self._index = _read(folder, INDEX)
         if hashlib.sha256(self._index).hexdigest()[:32] != digest:
             raise damaged(folder, f"{INDEX} does not have the digest in the folder's name")
-        metadata: Mapping[bytes, bytes] = pq.read_schema(pa.BufferReader(self._index)).metadata or {}
-        if metadata.get(_FORM) != b"1":
+        with _told(folder, INDEX):
+            about = pq.read_metadata(pa.BufferReader(self._index))
+            schema = about.schema.to_arrow_schema()
+        metadata: Mapping[bytes, bytes] = schema.metadata or {}
+        if metadata.get(_FORM, b"1") != b"1":
             raise StoreError(f"pack {folder} is of a later version of labkit; read it with that version.")
-        self.rows_digest = metadata[_DIGEST].decode()
+        if _DIGEST not in metadata or not about.num_rows or not schema.equals(_columns()):
+            raise damaged(folder, f"{INDEX} has not the columns of a pack, or no runs")
+        self.rows_digest = metadata[_DIGEST].decode("ascii", "replace")
 
     def columns(self, names: Sequence[str]) -> dict[str, list[Any]]:
         """Return columns of the index: those of `ORIGIN`, `rows`, `schema` and `file`."""
-        table = decode(self._index, columns=list(names))
-        return {name: _values(table[name]) for name in names}
+        with _told(self.folder, INDEX):
+            table = decode(self._index, columns=list(names))
+            found = {name: _values(table[name]) for name in names}
+        check_origins(table, f"pack {self.folder}")
+        if any(table[name].null_count for name in names):
+            raise damaged(self.folder, f"{INDEX} lacks values")
+        return found
 
     @cached_property
     def names(self) -> list[str]:
@@ -185,7 +253,10 @@ class Pack:
     @cached_property
     def index(self) -> "pa.Table":
         """The index."""
-        return decode(self._index)
+        with _told(self.folder, INDEX):
+            table = decode(self._index)
+        check_origins(table, f"pack {self.folder}")
+        return table
 
     @cached_property
     def ends(self) -> list[int]:
@@ -205,7 +276,8 @@ class Pack:
         """The columns of the rows."""
         import pyarrow.parquet as pq
 
-        return pq.read_schema(self.folder / ROWS)
+        with _opening(self.folder, ROWS) as stream, _told(self.folder, ROWS):
+            return pq.read_schema(stream)
 
     def verify(self, name: str) -> None:
         """Refuse a record that is not here, or rows without the digest in the index: once for a pack."""
@@ -214,13 +286,16 @@ class Pack:
 
     @cached_property
     def _verified(self) -> bool:
-        with (self.folder / ROWS).open("rb") as stream:
+        with _opening(self.folder, ROWS) as stream:
             if hashlib.file_digest(stream, "sha256").hexdigest() != self.rows_digest:
                 raise damaged(self.folder, f"{ROWS} does not have the digest that {INDEX} names")
         return True
 
     def _absent(self, name: str) -> StoreError:
-        return StoreError(f"pack {self.folder} has no record {name}; see labkit list.")
+        return StoreError(
+            f"pack {self.folder} has no record {name}; if its {NAMES} has, labkit compact "
+            f"{self.folder.parents[1].name} writes that anew."
+        )
 
     def read(self, names: Sequence[str]) -> "list[pa.Table]":
         """Return records by name, as `labkit.records.record_files.read_file` returned them."""
@@ -239,10 +314,15 @@ class Pack:
         for row in rows:
             if row // GROUP != group:
                 group = row // GROUP
-                measured = decode(content, groups=[group]).replace_schema_metadata(None)
+                with _told(self.folder, ROWS):
+                    measured = decode(content, groups=[group]).replace_schema_metadata(None)
+                check_kinds(measured.schema, f"pack {self.folder}")
                 start = self.ends[group * GROUP - 1] if group else 0
             assert measured is not None
-            parts.append(measured.slice(self._first(row) - start, self.ends[row] - self._first(row)))
+            first, length = self._first(row) - start, self.ends[row] - self._first(row)
+            if first < 0 or length < 1 or first + length > measured.num_rows:
+                raise damaged(self.folder, f"{ROWS} has not the rows that {INDEX} names")
+            parts.append(measured.slice(first, length))
         # One table for all, cut up again: a column made for each run would take longer than all the rest.
         lengths = [part.num_rows for part in parts]
         origins = self.index.select(ORIGIN.names).take(np.repeat(rows, lengths))
@@ -259,17 +339,26 @@ class Pack:
         """Refuse a pack in which anything is not as it was written."""
         import pyarrow.parquet as pq
 
-        if self._verified and pq.read_metadata(self.folder / ROWS).num_rows != self.ends[-1]:
-            raise damaged(self.folder, f"{ROWS} has not the rows that {INDEX} names")
+        if self._verified:
+            with _opening(self.folder, ROWS) as stream, _told(self.folder, ROWS):
+                about = pq.read_metadata(stream)
+                rows, schema = about.num_rows, about.schema.to_arrow_schema()
+            check_kinds(schema, f"pack {self.folder}")
+            if rows != self.ends[-1]:
+                raise damaged(self.folder, f"{ROWS} has not the rows that {INDEX} names")
         if any(NAME.fullmatch(name) is None for name in self.names):
             raise damaged(self.folder, f"{INDEX} names files that are no records")
         if [name[:ID] for name in self.names] != self.columns(["run_id"])["run_id"]:
             raise damaged(self.folder, f"{INDEX} has other runs than its names")
+        check_origins(self.index, f"pack {self.folder}")
         if not self._names_hold():
-            raise StoreError(
-                f"pack {self.folder} reads well, but its {NAMES} is missing or is not what {INDEX} says; "
-                "labkit compact writes it anew."
-            )
+            raise self._unlike_names()
+
+    def _unlike_names(self) -> StoreError:
+        about = f"pack {self.folder} reads well, but its {NAMES} is missing or is not what {INDEX} says; "
+        if (self.folder / NAMES).is_dir():
+            return StoreError(f"{about}it is a folder: move it elsewhere, and labkit compact writes it anew.")
+        return StoreError(f"{about}labkit compact writes it anew.")
 
     def mend_names(self) -> None:
         """Write the names anew when they are not those of the index."""
@@ -278,12 +367,18 @@ class Pack:
             try:
                 write_synced(beside, _lines(self.names))
                 os.replace(beside, self.folder / NAMES)
+            except IsADirectoryError:
+                raise self._unlike_names() from None
             finally:
                 beside.unlink(missing_ok=True)
 
     def _names_hold(self) -> bool:
         try:
-            return (self.folder / NAMES).read_bytes() == _lines(self.names)
+            return read_regular(self.folder / NAMES) == _lines(self.names)
+        except FileNotFoundError:
+            if not self.folder.is_dir():
+                raise  # the pack is gone, not its names
+            return False
         except OSError:
             return False
 
@@ -349,6 +444,19 @@ def remove_pack(pack: Path) -> None:
         return
     sync(aside.parent)
     shutil.rmtree(aside, ignore_errors=True)
+
+
+@functools.cache
+def _columns() -> "pa.Schema":
+    """Return the columns of an index."""
+    import pyarrow as pa
+
+    from labkit.records.schema import ORIGIN
+
+    schema = ORIGIN
+    for name, kind in (("rows", pa.int64()), ("schema", pa.int64()), ("file", pa.string())):
+        schema = schema.append(pa.field(name, kind))
+    return schema
 
 
 def _rows(records: "Sequence[tuple[str, pa.Table, int]]") -> bytes:

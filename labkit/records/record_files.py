@@ -7,11 +7,14 @@ written, so that looking for a record costs nothing.
 
 import errno
 import hashlib
+import json
 import os
 import re
+import stat
 import tempfile
 from collections.abc import Iterable, Iterator, Sequence
 from contextlib import contextmanager
+from io import FileIO
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -27,6 +30,15 @@ ID, WIDTH = 16, 57
 
 # Written on trial before any computing: a file without content fits on a full disk, too.
 _TRIAL = 65_536
+# Columns of the origin that readers decode, and what they get.
+_DECODED = {
+    "versions": dict,
+    "parameters": dict,
+    "inputs": dict,
+    "rules": dict,
+    "spawn_key": list,
+    "entropy": int,
+}
 _FULL = {errno.ENOSPC, getattr(errno, "EDQUOT", errno.ENOSPC)}
 
 
@@ -53,6 +65,28 @@ def digest_of(content: bytes | memoryview) -> str:
     return hashlib.sha256(content).hexdigest()[:32]
 
 
+def open_regular(path: Path) -> FileIO:
+    """Open a file for reading, without a buffer; nothing but a file, for others may be waited for for ever.
+
+    Raises
+    ------
+    OSError
+        When it is a folder, a pipe or the like, too.
+    """
+    flags = os.O_RDONLY | getattr(os, "O_NONBLOCK", 0) | getattr(os, "O_BINARY", 0)
+    handle = os.open(path, flags)
+    if not stat.S_ISREG(os.fstat(handle).st_mode):
+        os.close(handle)
+        raise OSError(errno.EINVAL, "it is not a file with content", str(path))
+    return os.fdopen(handle, "rb", buffering=0)
+
+
+def read_regular(path: Path) -> bytes:
+    """Return the content of a file; refusals as those of `open_regular`."""
+    with open_regular(path) as stream:
+        return stream.read()
+
+
 def read_content(path: Path) -> bytes:
     """Return the content of a record file; refuse a torn, altered or foreign file by name.
 
@@ -65,10 +99,12 @@ def read_content(path: Path) -> bytes:
     if name is None:
         raise StoreError(foreign(path))
     try:
-        content = path.read_bytes()
+        content = read_regular(path)
     except FileNotFoundError:
         raise
     except OSError as error:
+        if not path.is_file():
+            raise StoreError(foreign(path)) from None
         raise StoreError(f"record {path} cannot be read ({error.strerror}); run its study again.") from None
     if digest_of(content) != name[2]:
         raise torn(path)
@@ -82,7 +118,60 @@ def read_file(path: Path) -> "tuple[pa.Table, int]":
     content = read_content(path)
     with _told(path):
         table = decode(content)
-    return migrated(table, path, path.name[:ID])
+    table, number = migrated(table, path, path.name[:ID])
+    check_origins(table, f"record {path}")
+    check_kinds(table.schema, f"record {path}")
+    return table, number
+
+
+def check_origins(table: "pa.Table", what: str) -> None:
+    """Refuse columns of origins that labkit cannot have written, whatever digest they have.
+
+    Parameters
+    ----------
+    table : pyarrow.Table
+        Of any columns; only those of `labkit.records.schema.ORIGIN` are looked at.
+    what : str
+        The subject of the refusal.
+    """
+    from labkit.records.schema import ORIGIN
+
+    for name in ORIGIN.names:
+        if name in table.column_names and not _is_of_origin(name, table[name]):
+            raise StoreError(
+                f"{what} is not a record of labkit (its column {name} has other values); move it out of the "
+                "store."
+            )
+
+
+def check_kinds(schema: "pa.Schema", what: str) -> None:
+    """Refuse columns that hold neither numbers nor texts."""
+    import pyarrow as pa
+
+    known = (pa.types.is_boolean, pa.types.is_integer, pa.types.is_floating, pa.types.is_string)
+    for field in schema:
+        if not any(is_kind(field.type) for is_kind in known):
+            raise StoreError(
+                f"{what} is not a record of labkit (its column {field.name} holds {field.type}); move it out "
+                "of the store."
+            )
+
+
+def _is_of_origin(name: str, column: "pa.ChunkedArray") -> bool:
+    from labkit.records.schema import ORIGIN
+
+    if column.type != ORIGIN.field(name).type or column.null_count:
+        return False
+    if name not in _DECODED:
+        return True
+    try:
+        texts = column.unique().to_pylist()
+        if name == "entropy":
+            return all(int(text) >= 0 for text in texts)
+        values = json.loads(f"[{','.join(texts)}]")
+        return len(values) == len(texts) and all(isinstance(value, _DECODED[name]) for value in values)
+    except (ValueError, RecursionError):
+        return False
 
 
 def read_origin(path: Path, names: Sequence[str]) -> dict[str, Any]:
@@ -98,6 +187,7 @@ def read_origin(path: Path, names: Sequence[str]) -> dict[str, Any]:
         present = [name for name in names if number or name != "rules"]
         table = file.read(columns=list({*present, "run_id"}), use_threads=False)
     check_run(table, path, path.name[:ID])
+    check_origins(table, f"record {path}")
     row = {name: table[name][0].as_py() for name in present}
     return {"rules": "{}", **row, "rows": table.num_rows}
 

@@ -6,22 +6,23 @@ import socket
 import sys
 import time
 import warnings
+from collections import deque
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import CancelledError
-from functools import cache
 from math import ceil
 from pathlib import Path
 from queue import Empty, Queue
+from threading import Lock
 from typing import Any
 
 import cloudpickle
-from distributed import Client, Future, KilledWorker
+from distributed import Client, Future, KilledWorker, Security
 
 from labkit.errors import InputError, SchedulerLost
 from labkit.sharing import progress
 from labkit.sharing.facts import facts, mismatch
 from labkit.sharing.replicates import Job
-from labkit.sharing.work import hold, refusal, work
+from labkit.sharing.work import WrongWorker, hold, refusal, work
 
 # How long a task should take, and the least that is worth sending.
 TASK_SECONDS, LEAST_SECONDS = 60.0, 0.2
@@ -31,7 +32,10 @@ IN_FLIGHT = 2
 PATIENCE, LOOK = 10.0, 5.0
 
 
-@cache
+_clusters: "dict[str, Cluster]" = {}
+_connecting = Lock()
+
+
 def connected(address: str) -> "Cluster":
     """Return the cluster of a scheduler, connected once a process.
 
@@ -40,6 +44,18 @@ def connected(address: str) -> "Cluster":
     SchedulerLost
         When nothing answers there.
     """
+    with _connecting:
+        if address not in _clusters:
+            _clusters[address] = _connect(address)
+        return _clusters[address]
+
+
+def _connect(address: str) -> "Cluster":
+    if address.startswith("tls:") and not Security().get_connection_args("client").get("ssl_context"):
+        raise InputError(
+            f"scheduler is {address!r}, and no certificates are named; name them in Dask's configuration "
+            "(distributed.comm.tls), or give a tcp address."
+        )
     # It logs lost connections, which are told in a sentence here.
     logging.getLogger("distributed").setLevel(logging.CRITICAL)
     try:
@@ -71,7 +87,15 @@ class Cluster:
             For the first worker that lacks labkit or has something else than this process.
         """
         with self._answering():
-            found = self.client.run(facts, on_error="return")
+            present = self.workers()
+            run = self.client._run  # with a limit of time, which `run` does not have
+            try:
+                found = self.client.sync(run, facts, on_error="return", callback_timeout=6 * PATIENCE)
+            except TimeoutError:
+                raise InputError(
+                    f"scheduler {self.address}: not all of its {present} workers answer within "
+                    f"{6 * PATIENCE:.0f} seconds; end those that hang, then try again."
+                ) from None
         for worker, theirs in sorted(found.items()):
             if isinstance(theirs, ModuleNotFoundError):
                 raise InputError(refusal(worker, f"has no {theirs.name or 'labkit'}"))
@@ -81,6 +105,11 @@ class Cluster:
             if wrong:
                 raise InputError(refusal(worker, wrong))
         return self.threads() if found else 0
+
+    def workers(self) -> int:
+        """Return the number of workers that the scheduler has now."""
+        with self._answering():
+            return len(self.client.nthreads())
 
     def threads(self) -> int:
         """Return the number of the workers' threads, at least 1; asked anew every few seconds."""
@@ -105,14 +134,15 @@ class Cluster:
         results: dict[int, Any] = {}
         tasks: dict[Future, range] = {}
         ended: Queue[Future] = Queue()
-        left, seconds = replicates, float("inf")
+        left = replicates
+        recent: deque[float] = deque(maxlen=8)  # seconds of a replicate; a first one may have compiled
         with self._answering(), warnings.catch_warnings():
             warnings.simplefilter("ignore")  # of jobs that are large, as a large fleet is
             held = self.client.submit(hold, _packed(job), pure=False)
             try:
                 while left or tasks:
                     while left and len(tasks) < IN_FLIGHT * self.threads():
-                        part, left = _cut(left, seconds, IN_FLIGHT * self._threads)
+                        part, left = _cut(left, min(recent, default=float("inf")), IN_FLIGHT * self._threads)
                         at = part.start - replicates.start
                         own = None if given is None else list(given[at : at + len(part)])
                         task = self.client.submit(work, held, facts(), part, own, pure=False)
@@ -122,7 +152,7 @@ class Cluster:
                     part = tasks.pop(task)
                     found, took = _result(task, part)
                     results.update(zip(part, found, strict=True))
-                    seconds = min(seconds, took / len(part))
+                    recent.append(took / len(part))
                     progress.add(len(part))
             finally:
                 with contextlib.suppress(Exception):  # nothing hides what went wrong
@@ -145,12 +175,12 @@ class Cluster:
         try:
             yield
         except (CancelledError, OSError, TimeoutError) as error:
-            connected.cache_clear()
+            _clusters.pop(self.address, None)
             with contextlib.suppress(Exception):
                 self.client.close(timeout=1)
             raise SchedulerLost(
                 f"scheduler {self.address} does not answer any more ({type(error).__name__}); start it "
-                "again, then run the same command: it goes on with what is not recorded."
+                "and its workers again, then run the same command: it goes on with what is not recorded."
             ) from None
 
 
@@ -174,13 +204,22 @@ def _cut(left: range, seconds: float, parts: int) -> tuple[range, range]:
 
 
 def _result(task: Future, part: range) -> tuple[list[Any], float]:
+    """Return what a task gave; tell apart what is wrong with the work, a worker, or the cluster."""
+    which = f"replicate {part.start}" if len(part) == 1 else f"replicates {part.start} to {part.stop - 1}"
+    failed = task.status == "error"
     try:
         return task.result()
     except KilledWorker as error:
         raise RuntimeError(
-            f"replicates {part.start} to {part.stop - 1} ended {error.allowed_failures + 1} workers one "
-            "after the other, most likely for want of memory; give each worker more memory or fewer threads."
+            f"{which} ended {error.allowed_failures + 1} workers one after the other, most likely for want "
+            "of memory; give each worker more memory or fewer threads."
         ) from None
+    except WrongWorker as error:
+        raise SchedulerLost(f"{error} It came while work was under way; what is recorded is kept.") from None
+    except (CancelledError, OSError, TimeoutError) as error:
+        if not failed:
+            raise
+        raise RuntimeError(f"{which} failed on a worker: {type(error).__name__}: {error}") from error
 
 
 def _packed(job: Job) -> bytes:
@@ -189,10 +228,19 @@ def _packed(job: Job) -> bytes:
         module
         for name, module in list(sys.modules.items())
         if name.partition(".")[0] not in ("labkit", "__main__")
-        and Path(getattr(module, "__file__", None) or "/").parent == Path.cwd()
+        and _is_beside(getattr(module, "__file__", None))
     ]
     with _by_value(beside):
         return cloudpickle.dumps(job)
+
+
+def _is_beside(file: str | None) -> bool:
+    """Tell whether a module's file lies in or below the working folder, and is no installed package."""
+    if not file:
+        return False
+    path = Path(file)
+    installed = any(path.is_relative_to(place) for place in (sys.prefix, sys.base_prefix))
+    return path.is_relative_to(Path.cwd()) and not installed
 
 
 @contextlib.contextmanager

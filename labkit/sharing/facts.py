@@ -3,7 +3,7 @@
 import hashlib
 from functools import cache
 
-from labkit.sources import PACKAGE, PACKAGES, versions
+from labkit.sources import PACKAGE, PACKAGES, source_digest, versions
 
 _OF_THE_CLUSTER = ("llvmlite", "dask", "distributed", "cloudpickle", "msgpack")
 LOCK = "requirements.lock"
@@ -17,6 +17,7 @@ def facts() -> dict[str, str]:
     """
     found = versions((*PACKAGES, *_OF_THE_CLUSTER))
     del found["platform"]
+    found["labkit.sharing"] = source_digest(PACKAGE, ("sharing",))
     lock = PACKAGE.parent / LOCK
     found[LOCK] = hashlib.sha256(lock.read_bytes()).hexdigest()[:16] if lock.is_file() else ""
     return found

@@ -2,6 +2,7 @@
 
 import os
 import re
+import warnings
 
 from labkit.errors import InputError
 
@@ -11,7 +12,8 @@ _ADDRESS = re.compile(r"(tcp|tls)://(\[[0-9a-fA-F:.%]+\]|[A-Za-z0-9._-]+):[0-9]{
 
 def in_use() -> str | None:
     """Return the address of the scheduler in use, or None."""
-    return os.environ.get(VARIABLE) or None
+    address = os.environ.get(VARIABLE)
+    return check_address(address) if address else None
 
 
 def check_address(address: object) -> str:
@@ -52,5 +54,6 @@ def use_scheduler(address: str | None) -> None:
         return
     from labkit.sharing.cluster import connected
 
-    connected(check_address(address)).check()
+    if connected(check_address(address)).check() == 0:
+        warnings.warn(f"scheduler {address} has no worker yet; calls wait until one joins", stacklevel=2)
     os.environ[VARIABLE] = address

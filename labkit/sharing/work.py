@@ -27,32 +27,47 @@ class _Prepared:
     lock: Lock = field(default_factory=Lock)
 
 
+class WrongWorker(InputError):
+    """A worker that has not what the client has."""
+
+
 def hold(data: bytes) -> bytes:
     """Return a job: as the result of a task it is sent to each worker once, and made again when lost."""
     return data
 
 
 def work(
-    data: bytes, expected: dict[str, str], replicates: range, given: list[Any] | None, address: str = ""
+    data: bytes, expected: dict[str, str], replicates: range, given: list[Any] | None
 ) -> tuple[list[Any], float]:
     """Run replicates of a job; return their results, and the seconds that took without preparing it.
 
     Raises
     ------
+    WrongWorker
+        When this worker has not what the client expects of it.
     InputError
-        When this worker has not what the client expects of it, or the job refuses what it was given.
+        When the job refuses what it was given.
     """
     wrong = mismatch(expected, facts())
     if wrong:
-        raise InputError(refusal(address or _own_address(), wrong))
-    prepared = _prepared(data)
+        raise WrongWorker(refusal(_own_address(), wrong))
+    try:
+        prepared = _prepared(data)
+    except ModuleNotFoundError as error:
+        raise WrongWorker(
+            f"worker {_own_address()} has no module {error.name}, which the rule needs; lay it beside the "
+            "notebook, or install it there."
+        ) from None
     with prepared.lock:
         if not prepared.compiled:
             prepared.job.compile()
             prepared.compiled = True
     begin = time.perf_counter()
     each = [None] * len(replicates) if given is None else given
-    results = [prepared.job.run(replicate, own) for replicate, own in zip(replicates, each, strict=True)]
+    try:
+        results = [prepared.job.run(replicate, own) for replicate, own in zip(replicates, each, strict=True)]
+    except (SystemExit, KeyboardInterrupt) as error:  # either would end the worker
+        raise RuntimeError(f"{type(error).__name__}: {error}") from None
     return results, time.perf_counter() - begin
 
 

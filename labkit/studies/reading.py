@@ -4,14 +4,16 @@ import json
 import math
 import re
 from collections.abc import Collection, Iterable, Mapping, Sequence
+from contextlib import suppress
 from itertools import groupby
+from numbers import Number
 from pathlib import Path
 from typing import Any
 
 import pandas as pd
 import pyarrow as pa
 
-from labkit.checks import nearest
+from labkit.checks import nearest, shown
 from labkit.errors import InputError
 from labkit.records.identity import canonical
 from labkit.records.listing import listed
@@ -41,7 +43,9 @@ def read_study_records(
     where : mapping of str to value or list of values, optional
         Only runs in which each of these parameters was recorded with this value, or with one of these values,
         such as ``{"tasks": [1000, 2000], "fleet": "experiments/demo"}``. Numbers compare by value, paths as
-        they are written down; a parameter that is a list may be given as this list.
+        they are written down, and ``pandas.NA`` is None. A list means any of its values, and also fits a
+        parameter that was recorded as this very list: ``{"checkpoints": [1, 2]}`` finds the runs with 1, with
+        2 and with ``[1, 2]``, and ``{"checkpoints": [[1, 2]]}`` only the last.
 
     Returns
     -------
@@ -52,11 +56,13 @@ def read_study_records(
     Raises
     ------
     InputError
-        When a run is not recorded, or no run fits `where`.
+        When a run is not recorded, no run fits `where`, or it is no mapping of names to such values.
     StoreError
         When a record is torn, altered or foreign.
     """
     check_study_name(study)
+    if where is not None:
+        _check_where(where)
     place = open_store(store)
     paths = _paths(study, list(runs or []), place, where)
     tables = place.tables(paths)
@@ -111,21 +117,27 @@ def _fitting(rows: Sequence[int], texts: list[str], study: str, where: Mapping[s
     for name in where:
         if name not in known:
             raise InputError(f"where has {name!r}, which is no parameter of a run; {nearest(name, known)}.")
-    raise InputError(f"where is {dict(where)!r}; none of {len(rows)} runs of study {study} fits.")
+    raise InputError(f"where is {shown(dict(where))}; none of {len(rows)} runs of study {study} fits.")
 
 
 class _Test:
     """Whether a parameter was recorded with a given value, or one of those given."""
 
     def __init__(self, name: str, given: Any) -> None:
+        if isinstance(given, bytes | bytearray | memoryview):
+            raise _no_value(name, given)
         values = given.tolist() if hasattr(given, "tolist") else given
         self._several = isinstance(values, Iterable) and not isinstance(values, str | Mapping)
         self._name = name
-        self._allowed = [_plain(each) for each in values] if self._several else [_plain(values)]
+        self._allowed = [_plain(name, each) for each in (values if self._several else [values])]
         numbers = [each for each in self._allowed if isinstance(each, int | float)]
         # Most runs are told apart by their text, many times faster than by decoding it.
-        texts = [re.escape(text) for each in numbers for text in _texts_of(each)]
-        ends = f"(?:{'|'.join(texts)})[,}}\\s]" if len(numbers) == len(self._allowed) and numbers else ""
+        ends = ""
+        if numbers and len(numbers) == len(self._allowed):
+            texts = [re.escape(text) for each in numbers for text in _texts_of(each)]
+            ends = f"(?:{'|'.join(texts)})[,}}\\s]"
+            # Several values may also be a list that was recorded.
+            ends = rf"(?:\[|{ends})" if self._several else ends
         self.may_fit = re.compile(f"{re.escape(json.dumps(name))}:\\s*{ends}").search
 
     def fits(self, parameters: dict[str, Any]) -> bool:
@@ -133,24 +145,67 @@ class _Test:
         if self._name not in parameters:
             return False
         value = parameters[self._name]
-        truth = isinstance(value, bool)  # true is no number, although Python takes it for 1
-        one = any(value == each and truth == isinstance(each, bool) for each in self._allowed)
-        return one or (self._several and value == self._allowed)
+        return any(_same(value, each) for each in self._allowed) or (
+            self._several and _same(value, self._allowed)
+        )
+
+
+def _same(value: Any, given: Any) -> bool:
+    """Compare by value; true is no number, although Python takes it for 1."""
+    if isinstance(value, list) and isinstance(given, list):
+        return len(value) == len(given) and all(map(_same, value, given))
+    return bool(value == given) and isinstance(value, bool) == isinstance(given, bool)
 
 
 def _texts_of(number: float) -> set[str]:
     """Return how JSON may write a number."""
-    found = {json.dumps(number), json.dumps(float(number))}
-    return found | {str(int(number))} if math.isfinite(number) and number == int(number) else found
+    if number == 0:
+        return {"0", "0.0", "-0", "-0.0"} | {json.dumps(number)}
+    found = set()
+    # Beyond every float, or beyond the digits that Python writes out and JSON reads.
+    with suppress(OverflowError):
+        found.add(json.dumps(float(number)))
+    with suppress(ValueError):
+        found.add(json.dumps(number))
+        if number == number and abs(number) != math.inf and number == int(number):
+            found.add(str(int(number)))
+    return found
 
 
-def _plain(value: Any) -> Any:
-    """Return a value as records have it."""
-    if isinstance(value, tuple):
-        return list(value)
+def _plain(name: str, value: Any) -> Any:
+    """Return a value as records have it; refuse what no record has."""
     if isinstance(value, Path):
         return path_text(from_root(value))
-    return value.item() if hasattr(value, "item") else value
+    if isinstance(value, bytes | bytearray | memoryview):
+        raise _no_value(name, value)
+    value = value.tolist() if hasattr(value, "tolist") else value
+    if value is None or value is pd.NA:
+        return None
+    if isinstance(value, list | tuple):
+        return [_plain(name, each) for each in value]
+    if isinstance(value, Mapping):
+        return {key: _plain(name, each) for key, each in value.items()}
+    if isinstance(value, str | Number):
+        return value
+    raise _no_value(name, value)
+
+
+def _no_value(name: str, value: Any) -> InputError:
+    return InputError(
+        f"where has {shown(value)} for {name!r}; give a number, a text, true or false, None, a path, or a "
+        "list of such values."
+    )
+
+
+def _check_where(where: Any) -> None:
+    if not isinstance(where, Mapping):
+        raise InputError(
+            f"where is {shown(where)}; give a mapping of parameters to values, such as "
+            "{'tasks': [1000, 2000]}."
+        )
+    for name in where:
+        if not isinstance(name, str):
+            raise InputError(f"where has {shown(name)} as a parameter; give the name of a parameter, a text.")
 
 
 def _frame_of(tables: list[pa.Table]) -> pd.DataFrame:

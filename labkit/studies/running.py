@@ -1,9 +1,11 @@
 """Running a study: grid points side by side, those already recorded left out, failures kept as evidence."""
 
+import contextlib
 import os
 import shutil
+import time
 from collections.abc import Callable
-from concurrent.futures import FIRST_COMPLETED, ThreadPoolExecutor, wait
+from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
 from dataclasses import dataclass, field
 from itertools import islice
 from pathlib import Path
@@ -17,13 +19,17 @@ from labkit.records.project import ANSWERS
 from labkit.records.store import Store
 from labkit.sharing import progress
 from labkit.sharing.scheduler import VARIABLE as SCHEDULER
-from labkit.sharing.scheduler import check_address
+from labkit.sharing.scheduler import check_address, in_use
 from labkit.sources import library_version
 from labkit.studies.door import check_answer, check_points
 from labkit.studies.grouping import groups_of
 from labkit.studies.model import Point, Study
 from labkit.studies.scratch import scratch_folder, sweep_folders
 from labkit.studies.warmth import COLD, is_warm, set_warm
+
+# Seconds between two looks at whether anybody works for the scheduler.
+LOOK = 5.0
+NO_WORKER = "scheduler {} has no worker now; the study goes on as soon as one joins"
 
 # Nothing else of a study can be recorded either when a run fails with one of these.
 ENDING = {error.__name__: error for error in (StoreUnwritable, SchedulerLost)}
@@ -108,14 +114,12 @@ def run_points(
     KeyboardInterrupt
         With a sentence that tells how much is recorded.
     """
-    if scheduler is not None:
-        check_address(scheduler)
+    scheduler = in_use() if scheduler is None else check_address(scheduler)
     if timeout is not None:
         check_positive("timeout", timeout)
     if jobs is not None:
         check_whole("jobs", jobs)
     check_notebook(study)
-    store.check_writable(study.name)
     report = Report()
     pending = _without_record(study, store, report)
     if study.answer_notebook is not None:
@@ -137,7 +141,7 @@ def run_points(
     with scratch_folder() as scratch:
         threads = max(1, cores() // jobs)
         place = output or ANSWERS / study.name
-        work = _Work(study, store, scratch, threads, place, environment, timeout)
+        work = _Work(study, store, scratch, threads, place, environment, timeout, say=say)
         try:
             _run_pending(work, pending, jobs, report, tick)
         except KeyboardInterrupt:
@@ -148,9 +152,15 @@ def run_points(
 
 
 def _without_record(study: Study, store: Store, report: Report) -> list[Point]:
-    """Return the points that have no record yet; check the records of the others."""
-    store.settle(study.name)
+    """Return the points that have no record yet; check the records of the others.
+
+    Where all are recorded nothing is written: the store may be one that can only be read.
+    """
     present = store.runs(study.name)
+    if any(point.run_id not in present for point in study.points):
+        store.check_writable(study.name)
+        store.settle(study.name)
+        present = store.runs(study.name)
     for point in study.points:
         if point.run_id in present:
             store.verify(present[point.run_id])
@@ -167,7 +177,7 @@ def _join(scheduler: str, say: Callable[[str], None]) -> None:
     except SchedulerLost as error:
         raise InputError(str(error)) from None
     if threads == 0:
-        say(f"scheduler {scheduler} has no worker yet; the study goes on as soon as one joins")
+        say(NO_WORKER.format(scheduler))
 
 
 def _left(study: Study, store: Store) -> str:
@@ -194,6 +204,9 @@ class _Work:
     telling: dict[str, Path] = field(default_factory=dict)
     replicates: int = 0
     lock: Lock = field(default_factory=Lock)
+    looked: float = field(default_factory=time.monotonic)
+    alone: bool = False
+    say: Callable[[str], None] = lambda sentence: None
 
     def run(self, point: Point) -> Trouble | None:
         """Execute a point in a kernel of its own; keep evidence when code fails."""
@@ -247,6 +260,20 @@ class _Work:
             return Trouble(point.run_id, values, f"{result.error} (no evidence kept: {error})", False)
         return Trouble(point.run_id, values, result.error, False, kept.with_suffix(".ipynb"))
 
+    def look(self) -> None:
+        """Say once that no worker is left to compute anything."""
+        scheduler = self.environment.get(SCHEDULER)
+        if scheduler is None or time.monotonic() - self.looked < LOOK:
+            return
+        from labkit.sharing.cluster import connected
+
+        self.looked = time.monotonic()
+        with contextlib.suppress(SchedulerLost):  # the runs tell it themselves
+            alone = connected(scheduler).workers() == 0
+            if alone and not self.alone:
+                self.say(NO_WORKER.format(scheduler))
+            self.alone = alone
+
     def computed(self) -> int:
         """Return the number of replicates computed so far."""
         with self.lock:
@@ -258,16 +285,23 @@ def _run_pending(
 ) -> None:
     troubles: dict[str, Trouble | None] = {}
     pool = ThreadPoolExecutor(jobs)
+    futures: list[Future] = []
+
+    def begin(point: Point) -> Future:
+        future = pool.submit(work.run, point)
+        futures[:] = [each for each in futures if not each.done()] + [future]
+        return future
 
     def run(points: list[Point]) -> None:
         waiting = iter(points)
-        under_way = {pool.submit(work.run, point): point.run_id for point in islice(waiting, jobs)}
+        under_way = {begin(point): point.run_id for point in islice(waiting, jobs)}
         while under_way:
             # A signal that comes just before a wait without end would be acted on only when a run is done.
             ended, _ = wait(under_way, timeout=0.2, return_when=FIRST_COMPLETED)
             for future in ended:
                 troubles[under_way.pop(future)] = future.result()
-                under_way |= {pool.submit(work.run, point): point.run_id for point in islice(waiting, 1)}
+                under_way |= {begin(point): point.run_id for point in islice(waiting, 1)}
+            work.look()
             tick(len(report.skipped) + len(troubles), work.computed())
 
     try:
@@ -279,7 +313,9 @@ def _run_pending(
 
         work.ended.set()
         pool.shutdown(wait=False, cancel_futures=True)
-        end_all()
+        while any(not future.done() for future in futures):
+            end_all()  # again and again: a kernel may be about to start
+            time.sleep(0.1)
         raise
     finally:
         pool.shutdown()

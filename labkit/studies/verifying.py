@@ -2,6 +2,7 @@
 
 import random
 import re
+import subprocess
 from collections import Counter
 from collections.abc import Callable, Iterable
 from dataclasses import dataclass, field
@@ -12,7 +13,8 @@ from labkit.checks import check_whole
 from labkit.errors import InputError
 from labkit.records.frozen import MANIFEST, RUNS, TABLE, Finding, check_files, find_frozen
 from labkit.records.frozen_index import check_index
-from labkit.records.project import FROZEN, check_study_name, from_root
+from labkit.records.project import FROZEN, ROOT, check_study_name, from_root
+from labkit.records.provenance import git
 from labkit.records.store import decode
 from labkit.studies.commits import HASH
 from labkit.studies.freezing import table_of
@@ -170,9 +172,12 @@ def _is_flat(kind: "pa.DataType") -> bool:
 
 
 def _disagreement(runs: "pa.Table", table: "pa.Table", manifest: dict[str, Any]) -> str:
-    """Return what of the numbers of rows in the manifest does not hold."""
+    """Return what the manifest says of columns and of numbers of rows and does not hold."""
     if "run_id" not in runs.column_names:
         return f"{RUNS} has no column 'run_id'"
+    for name in manifest["query"]["parameters"]:
+        if name == "run_id" or name not in runs.column_names:
+            return f"{RUNS} has no parameter {name!r} among its columns, and {MANIFEST} names one"
     held = Counter(runs["run_id"].to_pylist())
     for run in manifest["runs"]:
         rows = held.pop(run["run_id"], 0)
@@ -259,12 +264,28 @@ def check_executable(origin: dict[str, Any], frozen: Iterable[Path]) -> None:
     notebook = origin["notebook"]
     if notebook.endswith(".ipynb"):
         place = from_root(notebook)
-        for folder in frozen:
-            if place.is_relative_to(folder.resolve()):
-                raise InputError(
-                    f"run {run}: its notebook is {notebook!r}, which lies among frozen tables, and nothing "
-                    "there is executed: name a notebook of the project."
-                )
+        among = any(place.is_relative_to(folder.resolve()) for folder in frozen)
+        if among or not _is_of_the_project(place, origin["git_hash"]):
+            where = "lies among frozen tables" if among else "is no notebook that this project's commits hold"
+            raise InputError(
+                f"run {run}: its notebook is {notebook!r}, which {where}; a table may bring a stranger's "
+                "program, so it is not executed: if the run is yours, use labkit rerun."
+            )
+
+
+def _is_of_the_project(notebook: Path, commit: str) -> bool:
+    """Tell whether a notebook is a file of the project that git knows, now or at a commit."""
+    if not notebook.is_relative_to(ROOT):
+        return False
+    name = notebook.relative_to(ROOT).as_posix()
+    try:
+        if git(ROOT, "ls-files", "--error-unmatch", "--", f":(literal){name}", codes=(0, 1)).returncode == 0:
+            return True
+        return bool(commit) and (
+            git(ROOT, "cat-file", "-e", f"{commit}:./{name}", codes=(0, 1, 128)).returncode == 0
+        )
+    except (OSError, subprocess.SubprocessError):
+        return False
 
 
 def _measured_again(places: "Places", origin: dict[str, Any]) -> "tuple[pa.Table, list[str]]":

@@ -17,12 +17,15 @@ import pyarrow.parquet as pq
 
 from labkit.errors import InputError
 from labkit.fleet.csv_files import NUMBER, header_of, line_of, lines_of, no_number, records, why_unreadable
+from labkit.fleet.parquet_files import damaged
 from labkit.fleet.tables import CHUNK, Source, check_labels, table_source
+from labkit.text import printable
 
 REQUIRED, OPTIONAL = ("time", "option_1", "option_2"), ("size", "duration", "placed")
 AMOUNTS = ("size", "duration")
 Piece = dict[str, "pa.Array | pd.Series"]
 _BYTES = 1 << 20
+_LOOK = 1 << 26  # bytes of texts that are written out together
 _INDEX = re.compile(r"__index_level_[0-9]+__")  # how pandas stores an index without a name
 _TEXT = pa.dictionary(pa.int32(), pa.string())
 
@@ -117,26 +120,93 @@ def _open_parquet(path: Path) -> Pieces:
     if path.stat().st_size == 0:
         raise InputError(f"{path} is empty; give a table of at least one row.")
     with _whole(path), pq.ParquetFile(path) as file:
-        schema, count = file.schema_arrow, file.metadata.num_rows
+        schema, about = file.schema_arrow, file.metadata
         labels = [label for label in schema.names if not _INDEX.fullmatch(label)]
     _check(labels, source)
-    if count == 0:
+    if about.num_rows == 0:
         raise InputError(f"{path} has no rows; give at least one.")
-    kind = schema.field("time").type
+    kinds = {label: schema.field(label).type for label in labels}
+    for label, kind in kinds.items():
+        _check_kind(path, label, kind)
+    texts = [label for label, kind in kinds.items() if _is_text(kind)]
+    plain = _written_out(about, texts)
     # Text is left as parquet keeps it: a number a row and one list of the names.
-    names = [label for label in labels if label.startswith("option_") or label == "placed"]
-    coded = [label for label in names if pa.types.is_string(schema.field(label).type)]
+    coded = [label for label in texts if label not in plain]
 
     def read(columns: list[Any]) -> Iterator[Piece]:
         # Without pre_buffer=False Arrow keeps what it has read to the end of the file.
         options: dict[str, Any] = {"buffer_size": _BYTES, "pre_buffer": False}
+        longest = max((plain[label] for label in columns if label in plain), default=0)
+        rows = max(1, min(CHUNK, _LOOK // max(1, longest)))
         with _whole(path), pq.ParquetFile(path, read_dictionary=coded, **options) as file:
-            for batch in file.iter_batches(CHUNK, columns=columns, use_threads=False):
+            batches = file.iter_batches(rows, columns=columns, use_threads=False)
+            for batch in batches if rows == CHUNK else _joined(batches):
                 if batch.num_rows:
                     yield {label: batch.column(label) for label in columns}
 
-    stamped = bool(pa.types.is_timestamp(kind) or pa.types.is_date(kind))
+    stamped = bool(pa.types.is_timestamp(kinds["time"]) or pa.types.is_date(kinds["time"]))
     return Pieces(source, labels, stamped, False, read)
+
+
+def _written_out(about: pq.FileMetaData, texts: list[str]) -> dict[str, int]:
+    """Return columns whose texts Arrow can only write out, each with the bytes that one text may have."""
+    found, sizes = set(), dict.fromkeys(texts, 0)
+    for group in range(about.num_row_groups):
+        for place in range(about.num_columns):
+            chunk = about.row_group(group).column(place)
+            label = chunk.path_in_schema
+            if label in sizes:
+                sizes[label] = max(sizes[label], chunk.total_uncompressed_size)
+                if any(each.startswith("DELTA_") for each in chunk.encodings):
+                    found.add(label)
+    return {label: sizes[label] for label in texts if label in found}
+
+
+def _joined(batches: Iterable[pa.RecordBatch]) -> Iterator[pa.RecordBatch]:
+    """Join batches of a few rows as far as they are short."""
+    held: list[pa.RecordBatch] = []
+    rows = size = 0
+    for batch in batches:
+        held.append(batch)
+        rows, size = rows + batch.num_rows, size + batch.nbytes
+        if rows >= CHUNK or size >= _LOOK:
+            yield pa.concat_batches(held)
+            held, rows, size = [], 0, 0
+    if held:
+        yield pa.concat_batches(held)
+
+
+def _check_kind(path: Path, label: str, kind: pa.DataType) -> None:
+    """Refuse a column whose cells may be of any length: a small file may stand for more than any memory.
+
+    Cells of a fixed few bytes pass, and names as text, of which each is held once; whether a cell holds what
+    it should is found when it is read.
+    """
+    small = pa.types.is_primitive(kind) or pa.types.is_decimal(kind) or pa.types.is_null(kind)
+    if small or (label not in ("time", *AMOUNTS) and _is_text(kind)):
+        return
+    rules = {
+        "time": "give numbers, or timestamps such as pandas.to_datetime makes",
+        "size": "give a finite number of at least 0 in each row",
+        "duration": "give a finite number of at least 0, or a timedelta, in each row",
+    }
+    rule = rules.get(label, "give the name of one server in a cell, a text or a whole number")
+    raise InputError(f"{path}: {label} has type {_name_of(kind)}; {rule}.")
+
+
+def _is_text(kind: pa.DataType) -> bool:
+    value = kind.value_type if pa.types.is_dictionary(kind) else kind
+    return bool(
+        pa.types.is_string(value) or pa.types.is_large_string(value) or pa.types.is_string_view(value)
+    )
+
+
+def _name_of(kind: pa.DataType) -> str:
+    """Return a short name of a type: that of a nested one tells of all that is in it."""
+    if _is_text(kind):
+        return "text"
+    name = printable(str(kind))
+    return name if len(name) <= 60 else f"{name[:60]}..."
 
 
 @contextmanager
@@ -144,10 +214,12 @@ def _whole(path: Path) -> Iterator[None]:
     """Turn what Arrow says of a damaged parquet file into one sentence."""
     try:
         yield
+    except MemoryError:  # of Arrow, too, which calls it an error of its own
+        raise
     except (pa.ArrowException, OSError, UnicodeDecodeError) as error:
         if isinstance(error, OSError) and error.strerror:
             raise _unreadable(path, error) from None
-        raise InputError(f"{path} is not a whole parquet file; write it again.") from None
+        raise damaged(path) from None
 
 
 def _open_csv(path: Path) -> Pieces:

@@ -90,7 +90,7 @@ class Measured:
 
     def __exit__(self, *error):
         self.cluster.client.close()
-        connected.cache_clear()
+        cluster._clusters.clear()
         self.local.__exit__(*error)
         self.folder.cleanup()
 

@@ -16,6 +16,7 @@ import numpy as np
 import pytest
 
 import labkit as lk
+from labkit.errors import SchedulerLost
 from labkit.records.project import ROOT
 from labkit.records.schema import first_difference, measured_part
 from labkit.records.store import Store
@@ -50,6 +51,7 @@ run.record(pd.concat([outcome.measures for outcome in placed]))
 @pytest.fixture(scope="module")
 def local(tmp_path_factory):
     with LocalCluster(tmp_path_factory.mktemp("cluster")) as running:
+        wait_for_workers(running, 2)
         yield running
 
 
@@ -192,15 +194,91 @@ class TestCalls:
         with pytest.raises(lk.InputError, match="policy beyond picked a position outside the options"):
             lk.place(lk.ring(5), beyond, tasks=10, replicates=3, rng=1)
 
+    def test_a_rule_is_what_it_was_at_its_first_use(self, used):
+        lk.use_scheduler(None)
+        before = lk.place(lk.ring(8), late, tasks=300, rng=5).loads
+        monkey = pytest.MonkeyPatch()
+        monkey.setitem(globals(), "LEAST", 6)
+        try:
+            lk.use_scheduler(used.address)
+            assert np.array_equal(lk.place(lk.ring(8), late, tasks=300, rng=5).loads, before)
+        finally:
+            monkey.undo()
+        assert late.source.endswith("# LEAST = 2\n")
+
+    @pytest.mark.parametrize(
+        ("error", "sentence"),
+        [
+            (
+                OSError(28, "No space left on device"),
+                "replicate 4 failed on a worker: OSError: .*No space left",
+            ),
+            (TimeoutError("mine"), "replicate 4 failed on a worker: TimeoutError: mine"),
+            (SystemExit(3), "SystemExit: 3"),
+            (lk.InputError("x is 1."), "x is 1."),
+        ],
+    )
+    def test_what_fails_on_a_worker_is_no_lost_scheduler(self, local, error, sentence):
+        with pytest.raises((RuntimeError, lk.InputError), match=sentence) as raised:
+            sharing.connected(local.address).run(Failing(error), range(4, 5), None)
+        assert not isinstance(raised.value, SchedulerLost)
+
+    def test_a_worker_of_another_version_that_comes_late_ends_the_study(self, local, monkeypatch):
+        monkeypatch.setattr(sharing, "facts", lambda: {**facts.facts(), "numpy": "0.1"})
+        with pytest.raises(
+            SchedulerLost, match=r"worker tcp://.* has numpy .*It came while work was under way"
+        ):
+            sharing.connected(local.address).run(Failing(None), range(4, 5), None)
+
+    def test_a_package_beside_the_notebook_goes_along(self, local, tmp_path, monkeypatch):
+        (tmp_path / "beside").mkdir()
+        (tmp_path / "beside" / "__init__.py").write_text("def twice(number):\n    return 2 * number\n")
+        monkeypatch.chdir(tmp_path)
+        monkeypatch.syspath_prepend(tmp_path)
+        from beside import twice
+
+        found = sharing.connected(local.address).run(Calling(twice), range(3), None)
+        assert found == [0, 2, 4]
+
+    def test_certificates_are_asked_for(self):
+        with pytest.raises(lk.InputError, match="no certificates are named"):
+            sharing.connected("tls://127.0.0.1:9")
+
     def test_a_task_that_ends_every_worker_is_told_in_a_sentence(self, tmp_path):
         with LocalCluster(tmp_path, workers=0) as running:
             cluster = sharing.connected(running.address)
             for _ in range(5):
                 running.add_worker()
-            with pytest.raises(RuntimeError, match=r"replicates 4 to 4 ended 4 workers one after the other"):
+            with pytest.raises(RuntimeError, match=r"replicate 4 ended 4 workers one after the other"):
                 cluster.run(Deadly(), range(4, 5), None)
-            sharing.connected.cache_clear()
+            sharing._clusters.clear()
             cluster.client.close()
+
+
+class Failing:
+    """A job that raises an error."""
+
+    def __init__(self, error):
+        self.error = error
+
+    def compile(self):
+        pass
+
+    def run(self, replicate, given):
+        raise self.error
+
+
+class Calling(Failing):
+    def run(self, replicate, given):
+        return self.error(replicate)
+
+
+LEAST = 2
+
+
+@lk.policy
+def late(options, loads, capacity, coin):
+    return 1 if loads[options[1]] + LEAST <= loads[options[0]] else 0
 
 
 class Deadly:

@@ -180,7 +180,11 @@ def test_what_a_stranger_says_of_runs_is_refused_before_anything_is_executed(str
     for changes, sentence in [
         (
             {"notebook": str(inside)},
-            "evil.ipynb', which lies among frozen tables, and nothing there is executed",
+            "evil.ipynb', which lies among frozen tables; a table may bring a stranger's program",
+        ),
+        (
+            {"notebook": str(project.folder / "evil.ipynb")},
+            "evil.ipynb', which is no notebook that this project's commits hold",
         ),
         ({"notebook": str(project.folder / "link.ipynb")}, "which lies among frozen tables"),
         ({"notebook": str(strangers.folder / ".." / "frozen" / "first" / "evil.ipynb")}, "which lies among"),

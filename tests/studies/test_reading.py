@@ -1,6 +1,9 @@
 """Rows of recorded runs as one table, chosen by id or by their parameters."""
 
+import math
+
 import numpy as np
+import pandas as pd
 import pytest
 
 import labkit as lk
@@ -53,6 +56,14 @@ def test_where_also_chooses_among_given_runs(store):
         ({"number": 77}, r"where is {'number': 77}; none of 10 runs of study mine fits"),
         ({"number": True}, "none of 10 runs"),
         ({"number": "3"}, "none of 10 runs"),
+        ({"number": 10**400}, "none of 10 runs"),
+        ({"number": [10**5000, math.inf]}, "none of 10 runs"),
+        ({"number": b"3"}, r"where has b'3' for 'number'; give a number, a text"),
+        ({"number": [b"3"]}, r"where has b'3' for 'number'"),
+        ({"number": {3: {1, 2}}}, r"where has \{1, 2\} for 'number'"),
+        ({3: "number"}, "where has 3 as a parameter"),
+        ("number=3", r"where is 'number=3'; give a mapping of parameters to values"),
+        ([("number", 3)], r"where is \[\('number', 3\)\]; give a mapping"),
     ],
 )
 def test_what_fits_no_run_is_refused(store, where, said):
@@ -69,6 +80,23 @@ def test_values_of_any_kind_keep_theirs(store):
         assert len(frame) == 2 * rows
     frame = lk.read_study_records("kinds", [run_id(at) for at in range(5)], store.folder)
     assert list(frame["p"][::2]) == ['[1,"a"]', None, True, "x", 2]
+
+
+def test_a_list_means_any_of_its_values_and_a_recorded_list_like_it(store):
+    values = ["[1,2]", "1", "2.0", "[1,2,3]", "-0.0", "[true,2]", "null"]
+    for at, value in enumerate(values):
+        store.write("kinds", run_id(at), record(run=run_id(at), parameters=f'{{"p":{value}}}'))
+    for given, found in (
+        ([1, 2], [0, 1, 2]),
+        (np.array([1, 2]), [0, 1, 2]),
+        ([[1, 2]], [0]),
+        ([np.array([1, 2, 3]), pd.NA], [3, 6]),
+        (0, [4]),
+        (pd.NA, [6]),
+        ([True, 2], [2, 5]),
+    ):
+        frame = lk.read_study_records("kinds", store=store.folder, where={"p": given})
+        assert set(frame["run_id"]) == {run_id(at) for at in found}
 
 
 def test_without_runs_the_newest_is_read(store):

@@ -7,6 +7,7 @@ import sys
 
 import pytest
 
+import labkit as lk
 from labkit.records.project import ROOT
 from labkit.records.schema import first_difference, measured_part
 from labkit.records.store import Store
@@ -136,6 +137,15 @@ def test_a_store_that_cannot_be_written_is_refused_before_any_kernel(project):
         status, out, err = project(*words, store=project.folder / "file")
         assert (status, out) == (2, "")
         assert err == f"labkit: store {project.folder / 'file'} is a file; name a folder.\n"
+
+
+def test_a_study_that_is_all_recorded_needs_no_store_that_can_be_written(project, monkeypatch):
+    path = project.study(grid="tasks = [1, 2]")
+    project.record(path)
+    refused = lk.StoreError("the store cannot be written")
+    monkeypatch.setattr(Store, "check_writable", lambda *given: (_ for _ in ()).throw(refused))
+    assert project("run", path)[0] == 0
+    assert project("run", project.study(grid="tasks = [1, 2, 3]"))[0] == 2
 
 
 def test_no_kernel_at_all_is_refused(project):

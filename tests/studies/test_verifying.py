@@ -65,6 +65,11 @@ def one_bit(table, column, row, bit=0):
 class TestVerify:
     """Each thing that does not hold has its own sentence."""
 
+    @pytest.fixture(autouse=True)
+    def trusted(self, monkeypatch):
+        """The tiny notebook lies in no repository; `test_hostile_studies.py` tests what is refused."""
+        monkeypatch.setattr(verifying, "_is_of_the_project", lambda *given: True)
+
     def test_one_bit_of_the_table_is_found_by_computing_it_again(self, frozen, folder):
         place = frozen().place
         table = decode((place / TABLE).read_bytes())

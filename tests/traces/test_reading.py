@@ -370,9 +370,8 @@ def test_what_is_no_log_is_refused(write, tmp_path):
     with pytest.raises(lk.InputError, match=r"column 'option_1' has text that is not UTF-8"):
         joined(write(damaged.replace(b"uvwxyz", b"uvw\xffyz"), "log.parquet"), fleet())
     lists = pa.table([[1.0], [["a"]], ["b"]], names=["time", "option_1", "option_2"])
-    for trace in (write(lists, "log.parquet"), lists.to_pandas()):
-        with pytest.raises(lk.InputError, match=r"row 1: option_1 is .*; give the name of one server in a"):
-            joined(trace, fleet())
+    with pytest.raises(lk.InputError, match=r"row 1: option_1 is .*; give the name of one server in a"):
+        joined(lists.to_pandas(), fleet())
     two = pa.table([[1.0], ["a"], ["b"], ["b"]], names=["time", "option_1", "option_2", "option_2"])
     with pytest.raises(lk.InputError, match=r"two columns named 'option_2'"):
         open_trace(write(two, "log.parquet"), fleet())
