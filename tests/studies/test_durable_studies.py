@@ -78,7 +78,7 @@ def test_25_kills_at_random_moments_lose_nothing_and_double_nothing(project, exp
         patience = time.monotonic() + (60 if at % 2 else 0)
         while time.monotonic() < patience and recorded(tmp_path / "killed") == before < 40:
             time.sleep(0.01)
-        time.sleep(moments.uniform(0.0, 0.5 if at % 2 else 2.5))
+        time.sleep(moments.uniform(0.0, 0.5 if at % 2 else 1.8))
         process.kill()
         process.communicate()
     done = recorded(tmp_path / "killed")
