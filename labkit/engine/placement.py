@@ -183,9 +183,9 @@ class _Row(NamedTuple):
 
 
 def _row_again(at: int, loads: Any, shape: tuple[int, ...]) -> _Row:
-    if isinstance(loads, tuple):
-        loads = np.zeros(loads[0], loads[1])
-    return _Row(at, loads, np.empty(shape))
+    """Make a row in another process; what comes from there may be memory that cannot be written."""
+    own = np.zeros(*loads) if isinstance(loads, tuple) else np.array(loads)
+    return _Row(at, own, np.empty(shape))
 
 
 def measured_loads(fleet: Fleet, loads: np.ndarray) -> np.ndarray:

@@ -49,12 +49,16 @@ class OwnRule(Policy):
         self.function = function
         self.source = source_of(function) if source is None else source
         self._kept: bytes | None = None
-        self.digest = hashlib.sha256(self.source.encode()).hexdigest()[:8]
         self.__doc__ = function.__doc__
         # A user's index is checked: a wrong one must not read somebody else's memory.
         self._compiled = numba.njit(boundscheck=True, **OPTIONS)(function)
         self.choose = bind(choose, self.kernel_name, rule=self._compiled)
         _SOURCES[self.name] = self.source
+
+    @property
+    def digest(self) -> str:
+        """Eight digits for the source."""
+        return hashlib.sha256(self.source.encode()).hexdigest()[:8]
 
     @property
     def name(self) -> str:

@@ -199,14 +199,6 @@ class _Study:
             # opened afresh: what was read before says nothing about the disk
             pack = Pack(place, place.name)
             names, numbers = pack.names, pack.columns(["schema"])["schema"]
-        except FileNotFoundError as error:
-            if place.is_dir():
-                self._fault("damaged", place, _without(place, Path(str(error.filename)).name))
-            return
-        except StoreError as error:
-            self._fault("damaged", place, str(error))
-            return
-        try:
             pack.check()
         except FileNotFoundError as error:
             if place.is_dir():

@@ -145,7 +145,7 @@ def run_points(
         try:
             _run_pending(work, pending, jobs, report, tick)
         except KeyboardInterrupt:
-            raise KeyboardInterrupt(_interrupted(study, store)) from None
+            raise KeyboardInterrupt(f"interrupted; {_left(study, store)}") from None
         except StoreUnwritable as error:
             raise StoreUnwritable(f"{error} {_left(study, store)}") from None
     return report
@@ -184,10 +184,6 @@ def _left(study: Study, store: Store) -> str:
     recorded = store.runs(study.name)
     done = sum(point.run_id in recorded for point in study.points)
     return f"{done} of {len(study.points)} runs are recorded; the same command goes on with the rest."
-
-
-def _interrupted(study: Study, store: Store) -> str:
-    return f"interrupted; {_left(study, store)}"
 
 
 @dataclass

@@ -166,6 +166,8 @@ class TestCalls:
             rng = np.random.SeedSequence(3, spawn_key=(5,))
             yield lk.place(fleet, "least-loaded", tasks=500, replicates=40, rng=rng, first_replicate=7)
             yield lk.place(fleet, last_if_lower, tasks=50, replicates=3, rng=rng, start=np.arange(12))
+            large = lk.ring(200_000)  # loads of more than a megabyte travel as memory that cannot be written
+            yield lk.place(large, "least-loaded", tasks=50, rng=rng, start=np.arange(200_000))
             yield lk.place(
                 fleet, "least-loaded", tasks=60, replicates=5, rng=rng, checkpoints=[7, 60],
                 sizes=lambda generator, count: generator.random(count), information=lk.Snapshot(every=3),
