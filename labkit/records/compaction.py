@@ -19,7 +19,8 @@ from typing import TYPE_CHECKING
 from labkit.errors import InputError, StoreError
 from labkit.records.copies import list_study, names_in
 from labkit.records.leftovers import sweep
-from labkit.records.packs import MOST, PACKED, open_pack, packs_of, remove_pack, write_pack
+from labkit.records.pack_writing import remove_pack, write_pack
+from labkit.records.packs import MOST, PACKED, open_pack, packs_of
 from labkit.records.project import check_study_name
 from labkit.records.record_files import ID, foreign, read_file, sync, unwritable
 from labkit.records.store import Store, check_same, check_writable, doubled, settle_run

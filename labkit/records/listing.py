@@ -37,7 +37,11 @@ class Listed:
 
 
 def listed(
-    store: Store, study: str, names: Sequence[str], warn: Callable[[str], None] | None = None
+    store: Store,
+    study: str,
+    names: Sequence[str],
+    warn: Callable[[str], None] | None = None,
+    check: bool = True,
 ) -> Listed:
     """Return columns of the origins of all runs of a study.
 
@@ -50,6 +54,8 @@ def listed(
     warn : callable, optional
         Called with a sentence about each file that is foreign or damaged and left out; without it, such a
         file is refused.
+    check : bool
+        Whether to look into every text; without it, the texts from packs may not be what labkit writes.
 
     Raises
     ------
@@ -68,7 +74,7 @@ def listed(
     for look in range(1, _LOOKS + 1):
         listing = list_study(store.folder / study, damaged)
         try:
-            columns = _columns(store, listing, list(names), damaged)
+            columns = _columns(store, listing, list(names), damaged, check)
             break
         except FileNotFoundError as error:  # a pack was merged into another meanwhile
             if look == _LOOKS:
@@ -80,14 +86,14 @@ def listed(
 
 
 def _columns(
-    store: Store, listing: Listing, names: list[str], damaged: Callable[[str], None]
+    store: Store, listing: Listing, names: list[str], damaged: Callable[[str], None], check: bool
 ) -> dict[str, list[Any]]:
     taken = [*names, "rows"]
     columns: dict[str, list[Any]] = {name: [] for name in (*taken, "folder", "name")}
     for folder, _ in listing.packed:
         try:
             pack = open_pack(folder)
-            part = pack.columns([*taken, "file"])
+            part = pack.columns([*taken, "file"], check)
         except StoreError as error:
             damaged(str(error))
             continue

@@ -16,7 +16,6 @@ import functools
 import hashlib
 import os
 import re
-import shutil
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from functools import cached_property
@@ -34,10 +33,8 @@ from labkit.records.record_files import (
     check_origins,
     decode,
     digest_of,
-    make_folder,
     open_regular,
     read_regular,
-    sync,
     write_synced,
 )
 
@@ -50,7 +47,7 @@ INDEX, ROWS, NAMES = "runs.parquet", "rows.parquet", "names.txt"
 MOST, GROUP = 4096, 256
 
 _FOLDER = re.compile(r"[0-9a-f]{32}")
-_DIGEST, _FORM = b"labkit.rows", b"labkit.pack"
+DIGEST, FORM = b"labkit.rows", b"labkit.pack"
 
 
 def is_pack(path: Path) -> bool:
@@ -157,7 +154,8 @@ def _opened(folder: Path, state: tuple[tuple[int, ...], ...]) -> "Pack":
 
 
 @functools.lru_cache(maxsize=4)
-def _rows_of(pack: "Pack") -> bytes:
+def rows_of(pack: "Pack") -> bytes:
+    """Return the content of `ROWS`, which has the digest that the index names."""
     content = _read(pack.folder, ROWS)
     if hashlib.sha256(content).hexdigest() != pack.rows_digest:
         raise damaged(pack.folder, f"{ROWS} does not have the digest that {INDEX} names")
@@ -225,18 +223,22 @@ class Pack:
             about = pq.read_metadata(pa.BufferReader(self._index))
             schema = about.schema.to_arrow_schema()
         metadata: Mapping[bytes, bytes] = schema.metadata or {}
-        if metadata.get(_FORM, b"1") != b"1":
+        if metadata.get(FORM, b"1") != b"1":
             raise StoreError(f"pack {folder} is of a later version of labkit; read it with that version.")
-        if _DIGEST not in metadata or not about.num_rows or not schema.equals(_columns()):
+        if DIGEST not in metadata or not about.num_rows or not schema.equals(_columns()):
             raise damaged(folder, f"{INDEX} has not the columns of a pack, or no runs")
-        self.rows_digest = metadata[_DIGEST].decode("ascii", "replace")
+        self.rows_digest = metadata[DIGEST].decode("ascii", "replace")
 
-    def columns(self, names: Sequence[str]) -> dict[str, list[Any]]:
-        """Return columns of the index: those of `ORIGIN`, `rows`, `schema` and `file`."""
+    def columns(self, names: Sequence[str], check: bool = True) -> dict[str, list[Any]]:
+        """Return columns of the index: those of `ORIGIN`, `rows`, `schema` and `file`.
+
+        Without `check`, a text may not be what labkit writes: who decodes it then checks it.
+        """
         with _told(self.folder, INDEX):
             table = decode(self._index, columns=list(names))
             found = {name: _values(table[name]) for name in names}
-        check_origins(table, f"pack {self.folder}")
+        if check:
+            check_origins(table, f"pack {self.folder}")
         if any(table[name].null_count for name in names):
             raise damaged(self.folder, f"{INDEX} lacks values")
         return found
@@ -252,11 +254,9 @@ class Pack:
 
     @cached_property
     def index(self) -> "pa.Table":
-        """The index."""
+        """The index, its texts not checked."""
         with _told(self.folder, INDEX):
-            table = decode(self._index)
-        check_origins(table, f"pack {self.folder}")
-        return table
+            return decode(self._index)
 
     @cached_property
     def ends(self) -> list[int]:
@@ -308,24 +308,27 @@ class Pack:
         if absent:
             raise self._absent(absent[0])
         rows = [self._at[name] for name in names]
-        content = _rows_of(self)
+        groups = sorted({row // GROUP for row in rows})
+        with _told(self.folder, ROWS):
+            measured = decode(rows_of(self), groups=groups).replace_schema_metadata(None)
+        check_kinds(measured.schema, f"pack {self.folder}")
+        # Where a group starts in what was read, less where it starts in the file.
+        moved, total = {}, 0
+        for group in groups:
+            moved[group] = total - self._first(group * GROUP)
+            total += self.ends[min((group + 1) * GROUP, len(self.ends)) - 1] - self._first(group * GROUP)
         parts: list[pa.Table] = []
-        group, measured, start = -1, None, 0
         for row in rows:
-            if row // GROUP != group:
-                group = row // GROUP
-                with _told(self.folder, ROWS):
-                    measured = decode(content, groups=[group]).replace_schema_metadata(None)
-                check_kinds(measured.schema, f"pack {self.folder}")
-                start = self.ends[group * GROUP - 1] if group else 0
-            assert measured is not None
-            first, length = self._first(row) - start, self.ends[row] - self._first(row)
-            if first < 0 or length < 1 or first + length > measured.num_rows:
+            first = self._first(row) + moved[row // GROUP]
+            length = self.ends[row] - self._first(row)
+            if first < 0 or length < 1 or first + length > measured.num_rows or total != measured.num_rows:
                 raise damaged(self.folder, f"{ROWS} has not the rows that {INDEX} names")
             parts.append(measured.slice(first, length))
         # One table for all, cut up again: a column made for each run would take longer than all the rest.
         lengths = [part.num_rows for part in parts]
-        origins = self.index.select(ORIGIN.names).take(np.repeat(rows, lengths))
+        origins = self.index.select(ORIGIN.names).take(rows)
+        check_origins(origins, f"pack {self.folder}")
+        origins = origins.take(np.repeat(np.arange(len(rows)), lengths))
         together = pa.concat_tables(parts).combine_chunks()
         for at, name in enumerate(ORIGIN.names):
             together = together.add_column(at, ORIGIN.field(name), origins[name])
@@ -336,7 +339,7 @@ class Pack:
         return self.ends[row - 1] if row else 0
 
     def check(self) -> None:
-        """Refuse a pack in which anything is not as it was written."""
+        """Refuse a pack in which anything but `NAMES` is not as it was written."""
         import pyarrow.parquet as pq
 
         if self._verified:
@@ -351,6 +354,9 @@ class Pack:
         if [name[:ID] for name in self.names] != self.columns(["run_id"])["run_id"]:
             raise damaged(self.folder, f"{INDEX} has other runs than its names")
         check_origins(self.index, f"pack {self.folder}")
+
+    def check_names(self) -> None:
+        """Refuse names that are not those of the index; everything else may be well."""
         if not self._names_hold():
             raise self._unlike_names()
 
@@ -365,7 +371,7 @@ class Pack:
         if not self._names_hold():
             beside = self.folder.with_name(name_of_new("names"))
             try:
-                write_synced(beside, _lines(self.names))
+                write_synced(beside, lines_of(self.names))
                 os.replace(beside, self.folder / NAMES)
             except IsADirectoryError:
                 raise self._unlike_names() from None
@@ -374,7 +380,7 @@ class Pack:
 
     def _names_hold(self) -> bool:
         try:
-            return read_regular(self.folder / NAMES) == _lines(self.names)
+            return read_regular(self.folder / NAMES) == lines_of(self.names)
         except FileNotFoundError:
             if not self.folder.is_dir():
                 raise  # the pack is gone, not its names
@@ -383,67 +389,9 @@ class Pack:
             return False
 
 
-def _lines(names: Sequence[str]) -> bytes:
+def lines_of(names: Sequence[str]) -> bytes:
+    """Return what `NAMES` holds."""
     return "".join(f"{name}\n" for name in names).encode()
-
-
-def write_pack(folder: Path, records: "Sequence[tuple[str, pa.Table, int]]") -> Path:
-    """Write records of one schema as a pack of a study, compare every bit of it, and return its folder.
-
-    Parameters
-    ----------
-    folder : Path
-        The folder of the study.
-    records : sequence of (str, pyarrow.Table, int)
-        Name of the original file, the record, and the number of the schema of that file. The rows of a
-        record must have the same origin.
-
-    Raises
-    ------
-    OSError
-        When it cannot be written; nothing is left behind.
-    StoreError
-        When the pack did not read back as the records.
-    """
-    records = sorted(records, key=lambda record: record[0])
-    rows = _rows(records)
-    index = _index(records, hashlib.sha256(rows).hexdigest())
-    digest = hashlib.sha256(index).hexdigest()[:32]
-    final = folder / PACKED / digest
-    aside = folder / PACKED / name_of_new("pack")
-    try:
-        make_folder(aside)
-        files = {INDEX: index, ROWS: rows, NAMES: _lines([name for name, _, _ in records])}
-        for file, content in files.items():
-            write_synced(aside / file, content)
-        sync(aside)
-        _compare(Pack(aside, digest), records)
-        if not _is_whole(final):
-            remove_pack(final)
-            os.rename(aside, final)
-        sync(final.parent)
-    finally:
-        shutil.rmtree(aside, ignore_errors=True)
-    return final
-
-
-def _is_whole(pack: Path) -> bool:
-    try:
-        open_pack(pack).check()
-    except (FileNotFoundError, StoreError):
-        return False
-    return True
-
-
-def remove_pack(pack: Path) -> None:
-    """Remove a pack as a whole: readers see all of it or nothing."""
-    aside = pack.with_name(name_of_new("old"))
-    try:
-        os.rename(pack, aside)
-    except FileNotFoundError:
-        return
-    sync(aside.parent)
-    shutil.rmtree(aside, ignore_errors=True)
 
 
 @functools.cache
@@ -457,70 +405,3 @@ def _columns() -> "pa.Schema":
     for name, kind in (("rows", pa.int64()), ("schema", pa.int64()), ("file", pa.string())):
         schema = schema.append(pa.field(name, kind))
     return schema
-
-
-def _rows(records: "Sequence[tuple[str, pa.Table, int]]") -> bytes:
-    import pyarrow as pa
-    import pyarrow.parquet as pq
-
-    from labkit.records.schema import measured_part
-
-    sink = pa.BufferOutputStream()
-    parts = [measured_part(table) for _, table, _ in records]
-    with pq.ParquetWriter(sink, parts[0].schema, compression="zstd") as writer:
-        for start in range(0, len(parts), GROUP):
-            group = pa.concat_tables(parts[start : start + GROUP])
-            writer.write_table(group, row_group_size=group.num_rows)
-    return bytes(sink.getvalue().to_pybytes())
-
-
-def _index(records: "Sequence[tuple[str, pa.Table, int]]", rows_digest: str) -> bytes:
-    import pyarrow as pa
-    import pyarrow.parquet as pq
-
-    from labkit.records.schema import ORIGIN
-
-    origins = pa.concat_tables([table.select(ORIGIN.names).slice(0, 1) for _, table, _ in records])
-    index = origins.combine_chunks()
-    for name, values, kind in (
-        ("rows", [table.num_rows for _, table, _ in records], pa.int64()),
-        ("schema", [number for _, _, number in records], pa.int64()),
-        ("file", [name for name, _, _ in records], pa.string()),
-    ):
-        index = index.append_column(name, pa.array(values, type=kind))
-    sink = pa.BufferOutputStream()
-    metadata = {_FORM: b"1", _DIGEST: rows_digest.encode()}
-    pq.write_table(index.replace_schema_metadata(metadata), sink, compression="zstd")
-    return bytes(sink.getvalue().to_pybytes())
-
-
-def _compare(pack: Pack, records: "Sequence[tuple[str, pa.Table, int]]") -> None:
-    """Refuse a pack, as the disk has it, in which a record is not what it was, to the bit."""
-    import numpy as np
-    import pyarrow as pa
-
-    from labkit.records.schema import ORIGIN, exact_difference, measured_part
-
-    def same(ours: "pa.Table", theirs: "pa.Table") -> None:
-        difference = exact_difference(ours, theirs)
-        if difference:
-            raise StoreError(
-                f"pack {pack.folder} did not read back as written ({difference}); check the disk."
-            )
-
-    originals = pa.concat_tables([table for _, table, _ in records])
-    lengths = [table.num_rows for _, table, _ in records]
-    found = pack.columns(["file", "rows"])
-    same(pa.table(found), pa.table({"file": [name for name, _, _ in records], "rows": lengths}))
-    rows = np.repeat(np.arange(len(records)), lengths)
-    same(
-        pack.index.select(ORIGIN.names).replace_schema_metadata(None).take(rows),
-        originals.select(ORIGIN.names),
-    )
-    same(decode(_rows_of(pack)).replace_schema_metadata(None), measured_part(originals))
-    if (pack.folder / NAMES).read_bytes() != _lines(found["file"]):
-        raise _unlike(pack, NAMES)
-
-
-def _unlike(pack: Pack, what: str) -> StoreError:
-    return StoreError(f"pack {pack.folder} did not read back as written ({what}); check the disk.")

@@ -206,8 +206,13 @@ class _Study:
             return
         except StoreError as error:
             self._fault("damaged", place, str(error))
-            if "reads well" not in str(error):
-                return
+            return
+        try:
+            pack.check_names()
+        except FileNotFoundError:
+            return  # merged into another pack meanwhile
+        except StoreError as error:
+            self._fault("damaged", place, str(error))
         self.done.older += sum(number < SCHEMA for number in numbers)
         for name in names:
             self.copies.setdefault(name[:ID], []).append(place / name)

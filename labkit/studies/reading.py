@@ -5,7 +5,7 @@ import math
 import re
 from collections.abc import Collection, Iterable, Mapping, Sequence
 from contextlib import suppress
-from itertools import groupby
+from itertools import groupby, repeat
 from numbers import Number
 from pathlib import Path
 from typing import Any
@@ -14,7 +14,7 @@ import pandas as pd
 import pyarrow as pa
 
 from labkit.checks import nearest, shown
-from labkit.errors import InputError
+from labkit.errors import InputError, StoreError
 from labkit.records.identity import canonical
 from labkit.records.listing import listed
 from labkit.records.project import EXPERIMENTS, check_study_name, from_root, path_text
@@ -88,36 +88,50 @@ def _paths(study: str, runs: list[str], store: Store, where: Mapping[str, Any] |
             )
         if not where:
             return [path for path in found.values() if path is not None]
-    columns = listed(store, study, ["parameters"] if where else ["parameters", "started"]).columns
+    # All texts are looked at only where they are needed: it takes longer than all the rest.
+    columns = listed(store, study, ["parameters" if where else "started"], check=not where).columns
     if not columns["name"]:
         raise InputError(f"study is {study!r}; {store.folder} holds no record of it: run it first.")
     rows: Sequence[int] = range(len(columns["name"]))
     if runs:
         at = {name[:ID]: row for row, name in enumerate(columns["name"])}
         rows = [at[run] for run in runs]
-    if where:
-        rows = _fitting(rows, columns["parameters"], study, where)
-    else:
-        rows = [max(rows, key=columns["started"].__getitem__)]
+    started = columns.get("started", [])
+    rows = _fitting(rows, columns, study, where) if where else [max(rows, key=started.__getitem__)]
     return [columns["folder"][row] / columns["name"][row] for row in rows]
 
 
-def _fitting(rows: Sequence[int], texts: list[str], study: str, where: Mapping[str, Any]) -> list[int]:
+def _fitting(
+    rows: Sequence[int], columns: dict[str, list[Any]], study: str, where: Mapping[str, Any]
+) -> list[int]:
     """Return the rows of those runs whose parameters, as recorded, fit."""
-    tests = {name: _Test(name, given) for name, given in where.items()}
-    found = [
-        row
-        for row in rows
-        if all(test.may_fit(texts[row]) for test in tests.values())
-        and all(test.fits(json.loads(texts[row])) for test in tests.values())
-    ]
+    texts = columns["parameters"]
+    tests = [_Test(name, given) for name, given in where.items()]
+    found = rows
+    for test in tests:
+        found = [row for row in found if test.may_fit(texts[row])]
+
+    def decoded(row: int) -> dict[str, Any]:
+        return _decoded(texts[row], columns["folder"][row] / columns["name"][row])
+
+    found = [row for row in found if all(map(_Test.fits, tests, repeat(decoded(row))))]
     if found:
         return found
-    known = dict.fromkeys(name for row in rows for name in json.loads(texts[row]))
+    known = dict.fromkeys(name for row in rows for name in decoded(row))
     for name in where:
         if name not in known:
             raise InputError(f"where has {name!r}, which is no parameter of a run; {nearest(name, known)}.")
     raise InputError(f"where is {shown(dict(where))}; none of {len(rows)} runs of study {study} fits.")
+
+
+def _decoded(text: str, path: Path) -> dict[str, Any]:
+    try:
+        found = json.loads(text)
+    except (ValueError, RecursionError):
+        found = None
+    if not isinstance(found, dict):
+        raise StoreError(f"record {path} is not one of labkit (its parameters are no object of JSON).")
+    return found
 
 
 class _Test:

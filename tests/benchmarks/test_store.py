@@ -11,7 +11,8 @@ import numpy as np
 import pytest
 
 import labkit as lk
-from labkit.records.packs import MOST, write_pack
+from labkit.records.pack_writing import write_pack
+from labkit.records.packs import MOST
 from labkit.records.provenance import provenance
 from labkit.records.schema import SCHEMA, measured_table, with_origin
 from labkit.records.store import Store

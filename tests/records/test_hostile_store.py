@@ -246,6 +246,9 @@ def test_forged_packs_are_damaged_and_hide_no_other(store, packed, command, how)
     if how == "rows":
         with pytest.raises(lk.StoreError, match="has not the rows that"):
             store.read(store.find("s", run_id(3)))
+    if how == "values":
+        with pytest.raises(lk.StoreError, match="its parameters are no object of JSON"):
+            lk.read_study_records("s", store=store.folder, where={"tasks": 1})
     assert any(f"pack {forged}" in sentence for sentence in compact(store, "s").left)
     assert forged.is_dir()
 

@@ -10,7 +10,7 @@ import pytest
 
 import labkit as lk
 from labkit.cli import main
-from labkit.records import compaction, packs
+from labkit.records import compaction, pack_writing, packs
 from labkit.records.compaction import compact
 from labkit.records.packs import INDEX, NAMES, PACKED, ROWS, packs_of
 from labkit.records.record_files import decode, read_file
@@ -39,9 +39,9 @@ def same(ours, theirs):
 @pytest.fixture
 def small(monkeypatch):
     """Packs of eight runs, in groups of three."""
-    monkeypatch.setattr(packs, "MOST", 8)
     monkeypatch.setattr(compaction, "MOST", 8)
-    monkeypatch.setattr(packs, "GROUP", 3)
+    for module in (packs, pack_writing):
+        monkeypatch.setattr(module, "GROUP", 3)
 
 
 def test_compaction_keeps_every_record_to_the_bit(store, small):
@@ -92,7 +92,7 @@ def test_an_interrupted_compaction_loses_nothing_and_is_finished_by_the_next(sto
 
     with monkeypatch.context() as patch:
         if where == "before renaming":
-            patch.setattr(packs, "_compare", stop)
+            patch.setattr(pack_writing, "_compare", stop)
         elif where == "before removing":
             patch.setattr(compaction, "sync", stop)
             patch.setattr("pathlib.Path.unlink", stop)
@@ -177,7 +177,7 @@ def test_damage_in_one_pack_hides_no_other_run(store, small, capsys):
 def test_a_full_disk_stops_compaction_and_loses_nothing(store, monkeypatch):
     fill(store, 4)
     before = snapshot(store.folder)
-    monkeypatch.setattr(packs, "write_synced", lambda *arguments: os.write(10**6, b""))
+    monkeypatch.setattr(pack_writing, "write_synced", lambda *arguments: os.write(10**6, b""))
     with pytest.raises(lk.StoreError, match="cannot be written"):
         compact(store, "s")
     assert snapshot(store.folder) == before

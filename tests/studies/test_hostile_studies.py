@@ -41,16 +41,16 @@ NESTED = [
 
 
 @pytest.fixture
-def folder(tmp_path):
+def place(tmp_path):
     write_tiny(tmp_path / "tiny.ipynb")
     placed = "fleet: str = 'x'\nreplicates: int = 1\nentropy: int = 1"
     write_notebook(tmp_path / "placed.ipynb", "x = 1", parameters=placed)
     return tmp_path
 
 
-def study(folder, **changes):
+def study(place, **changes):
     content = {"notebook": "tiny.ipynb", "replicates": 3, "entropy": 1} | changes
-    return make_study("s", content, folder=folder)
+    return make_study("s", content, folder=place)
 
 
 def same(given, received):
@@ -92,23 +92,23 @@ def test_the_cell_that_papermill_puts_in_is_one_assignment_of_one_literal(at):
     "name",
     ["x = open('stolen', 'w') #", "tasks\nimport os", "tasks;x", "__builtins__", "lk", "share ", "täsks", ""],
 )
-def test_a_name_that_the_notebook_does_not_declare_is_refused(folder, name):
+def test_a_name_that_the_notebook_does_not_declare_is_refused(place, name):
     with pytest.raises(lk.InputError, match="is no parameter of the notebook"):
-        study(folder, parameters={name: 1})
+        study(place, parameters={name: 1})
     with pytest.raises(lk.InputError, match="is no parameter of the notebook"):
-        study(folder, grid={name: [1]})
+        study(place, grid={name: [1]})
 
 
-def test_a_name_in_a_record_is_refused_as_well_wherever_it_is_executed(folder, monkeypatch):
+def test_a_name_in_a_record_is_refused_as_well_wherever_it_is_executed(place, monkeypatch):
     origin = {
-        "notebook": str(folder / "tiny.ipynb"),
+        "notebook": str(place / "tiny.ipynb"),
         "notebook_digest": "",
         "parameters": {"x = open('stolen', 'w') #": 1},
         "inputs": {},
     }
     with Places() as places:
         monkeypatch.setattr(
-            places, "_choose", lambda origin: (object.__new__(type("P", (), {"root": folder})), [])
+            places, "_choose", lambda origin: (object.__new__(type("P", (), {"root": place})), [])
         )
         monkeypatch.setattr(places, "_measure", lambda *given: pytest.fail("executed"))
         with pytest.raises(lk.InputError, match="is no parameter of the notebook"):
@@ -128,7 +128,7 @@ class Strangers:
     """A frozen table whose manifest a stranger has written anew, with the digests that belong to it."""
 
     def __init__(self, frozen, folder):
-        self.place = frozen().place
+        self.place = frozen.place
         self.folder = folder
 
     def say(self, files=None, **changes):
@@ -147,29 +147,8 @@ class Strangers:
 
 
 @pytest.fixture
-def strangers(frozen, folder_of_frozen):
-    return Strangers(frozen, folder_of_frozen)
-
-
-@pytest.fixture
-def folder_of_frozen(project):
-    return project.folder / "results" / "frozen"
-
-
-@pytest.fixture
-def frozen(project, folder_of_frozen):
-    from labkit.records.store import Store
-    from labkit.studies.freezing import freeze
-
-    def make():
-        path = project.study(grid="share = [0.5]")
-        project.record(path)
-        output = project.folder / "answers"
-        return freeze(
-            path, "first", Store(project.store), folder=folder_of_frozen, allow_changes=True, output=output
-        )
-
-    return make
+def strangers(project, folder, frozen):
+    return Strangers(frozen(study=project.study(grid="share = [0.5]")), folder)
 
 
 def test_what_a_stranger_says_of_runs_is_refused_before_anything_is_executed(strangers, project, monkeypatch):
@@ -245,7 +224,7 @@ def test_links_and_pipes_in_a_frozen_table_are_named_not_followed(strangers):
     assert "is a link out of its folder" in check_files(strangers.place)[1][0].sentence
 
 
-def test_a_link_out_of_the_study_is_not_followed_but_a_path_may_name_any_place(folder, tmp_path):
+def test_a_link_out_of_the_study_is_not_followed_but_a_path_may_name_any_place(place, tmp_path):
     inside = tmp_path / "study"
     inside.mkdir()
     (tmp_path / "data").mkdir()
@@ -268,11 +247,11 @@ def test_a_link_out_of_the_study_is_not_followed_but_a_path_may_name_any_place(f
 
 
 @pytest.mark.parametrize("kind", ["pipe", "device"])
-def test_a_parameter_that_is_no_file_is_refused_without_waiting(folder, kind):
-    path = folder / "data"
+def test_a_parameter_that_is_no_file_is_refused_without_waiting(place, kind):
+    path = place / "data"
     os.mkfifo(path) if kind == "pipe" else path.symlink_to("/dev/zero")
     with pytest.raises(lk.InputError, match=r"fleet is 'data'; .* is no file and no folder"):
-        study(folder, notebook="placed.ipynb", parameters={"fleet": "data"})
+        study(place, notebook="placed.ipynb", parameters={"fleet": "data"})
     with pytest.raises(lk.InputError, match="nothing is there that can be read"):
         Parameter("fleet", "str", False, "x").checked(str(path))
 
@@ -283,13 +262,13 @@ def test_names_of_studies_stay_in_their_folder(name):
         find_study(name)
 
 
-def test_a_grid_of_millions_is_refused_before_it_is_made(folder):
+def test_a_grid_of_millions_is_refused_before_it_is_made(place):
     start = time.perf_counter()
     many = {"share": [0.5] * 2000, "tasks": [1] * 2000, "mode": ["a"] * 2000}
     with pytest.raises(
         lk.InputError, match="has 2,000 × 2,000 × 2,000 = 8,000,000,000 points; a study has at most"
     ):
-        study(folder, grid=many)
+        study(place, grid=many)
     assert time.perf_counter() - start < 2
 
 
@@ -297,21 +276,21 @@ def test_a_grid_of_millions_is_refused_before_it_is_made(folder):
     "text",
     ["a = " + "[" * 10_000, "a" + ".a" * 10_000 + " = 1", "a = " + "{b = " * 10_000, "a = 0x" + "f" * 10_000],
 )
-def test_a_study_of_absurd_depth_or_numbers_is_refused(folder, text):
-    (folder / "s.toml").write_text(text)
+def test_a_study_of_absurd_depth_or_numbers_is_refused(place, text):
+    (place / "s.toml").write_text(text)
     with pytest.raises(lk.InputError) as refusal:
-        read_study(folder / "s.toml")
+        read_study(place / "s.toml")
     assert len(str(refusal.value)) <= 2_000
 
 
-def test_texts_of_absurd_size_are_refused_unread(folder):
+def test_texts_of_absurd_size_are_refused_unread(place):
     for name in ("s.toml", "tiny.ipynb"):
-        with (folder / name).open("wb") as stream:
+        with (place / name).open("wb") as stream:
             stream.truncate(10**11)
     with pytest.raises(lk.InputError, match=r"study .* has 100,000 MB; such a file has at most 5 MB"):
-        read_study(folder / "s.toml")
+        read_study(place / "s.toml")
     with pytest.raises(lk.InputError, match=r"notebook .* has 100,000 MB"):
-        read_notebook(folder / "tiny.ipynb")
+        read_notebook(place / "tiny.ipynb")
 
 
 @pytest.mark.parametrize(
