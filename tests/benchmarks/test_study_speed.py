@@ -22,17 +22,18 @@ replicates = {replicates}
 entropy = 11
 [parameters]
 fleet = "{root}/experiments/demo"
-tasks = {tasks}
 policies = ["one-choice", "least-loaded"]
+{fixed}
 [grid]
-report_every = {reports}
+{name} = {values}
 """
 TASKS = 2_000_000
 
 
-def write(folder, replicates, reports):
+def write(folder, replicates, name, values):
+    fixed = "" if name == "tasks" else f"tasks = {TASKS}"
     path = folder / "s.toml"
-    path.write_text(STUDY.format(root=ROOT, tasks=TASKS, replicates=replicates, reports=reports))
+    path.write_text(STUDY.format(root=ROOT, fixed=fixed, replicates=replicates, name=name, values=values))
     return str(path)
 
 
@@ -48,27 +49,28 @@ def run(*words):
     return time.perf_counter() - begin
 
 
-def compiled_seconds(replicates):
-    """Return the time that a point's tasks take in the loops, on one core."""
+def core_seconds_in_loops(replicates):
+    """Return the core seconds that a point's replicates take in the loops, all cores being busy."""
     fleet = lk.read_fleet(ROOT / "experiments" / "demo")
+    shares = []
     for policy in ("one-choice", "least-loaded"):
         lk.place(fleet, policy, tasks=10, rng=1)
-    begin = time.perf_counter()
-    for policy in ("one-choice", "least-loaded"):
-        lk.place(fleet, policy, tasks=TASKS, replicates=replicates, rng=1)
-    return time.perf_counter() - begin
+        begin = time.perf_counter()
+        lk.place(fleet, policy, tasks=TASKS, replicates=replicates, rng=1, workers=cores())
+        shares.append(time.perf_counter() - begin)
+    return sum(shares) * cores()
 
 
 def test_two_workers_against_one(tmp_path, report):
     assert cores() >= 2
-    run(write(tmp_path, 2, [0, 7]), "--store", str(tmp_path / "warm"))
-    path = write(tmp_path, 1200, [0, 7])
+    run(write(tmp_path, 2, "report_every", [0, 7]), "--store", str(tmp_path / "warm"))
+    path = write(tmp_path, 1200, "report_every", [0, 7])
     walls = {}
     for workers in (1, 2):
         with LocalCluster(tmp_path, workers=workers) as running:
-            warm = write(tmp_path, 20, [0, 7])
+            warm = write(tmp_path, 20, "report_every", [0, 7])
             run(warm, "--store", str(tmp_path / f"warm-{workers}"), "--scheduler", running.address)
-            path = write(tmp_path, 1200, [0, 7])
+            path = write(tmp_path, 1200, "report_every", [0, 7])
             walls[workers] = run(
                 path, "--store", str(tmp_path / f"{workers}"), "--scheduler", running.address
             )
@@ -82,22 +84,22 @@ def test_two_workers_against_one(tmp_path, report):
 
 
 def test_time_outside_the_loops(tmp_path, report):
-    replicates = 200
-    a_point = min(compiled_seconds(replicates) for _ in range(2))
-    replicates = int(replicates * 32 / a_point)
-    reports = [0, 3, 5, 7]
-    path = write(tmp_path, replicates, reports)
-    run(write(tmp_path, 2, reports), "--store", str(tmp_path / "warm"))
-    write(tmp_path, replicates, reports)
+    """Points that differ by a task, so that all have the same loops: fresh reports of all loads."""
+    sample = 100 * cores()
+    replicates = int(sample * 33 / min(core_seconds_in_loops(sample) for _ in range(2)))
+    tasks = list(range(TASKS, TASKS + 2 * cores()))
+    run(write(tmp_path, 2, "tasks", [tasks[0]]), "--store", str(tmp_path / "warm"))
+    path = write(tmp_path, replicates, "tasks", tasks)
+    before = core_seconds_in_loops(sample)
     wall = run(path, "--store", str(tmp_path / "runs"))
+    in_loops = statistics.mean([before, core_seconds_in_loops(sample)]) / sample * replicates * len(tasks)
     store = Store(tmp_path / "runs")
-    points = [store.read(each) for each in store.runs("s").values()]
-    elapsed = [table["elapsed"][0].as_py() for table in points]
-    in_loops = statistics.mean([compiled_seconds(200) for _ in range(3)]) / 200 * replicates * len(reports)
+    elapsed = [store.read(each)["elapsed"][0].as_py() for each in store.runs("s").values()]
     outside = 1 - in_loops / (wall * cores())
     report(
-        f"a study of {len(reports)} points of {min(elapsed):.0f} to {max(elapsed):.0f} s: {wall:.1f} s on "
+        f"a study of {len(tasks)} points of {min(elapsed):.0f} to {max(elapsed):.0f} s: {wall:.1f} s on "
         f"{cores()} cores, {100 * outside:.1f} % of them outside the compiled loops"
     )
+    assert len(elapsed) == len(tasks)
     assert min(elapsed) >= 30
     assert outside <= 0.10
