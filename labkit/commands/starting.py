@@ -1,0 +1,25 @@
+"""`labkit new`."""
+
+import argparse
+from pathlib import Path
+
+from labkit.commands.parts import Commands, print_json
+
+
+def add(commands: Commands) -> None:
+    """Add this command to the parser."""
+    new = commands.add("new", _new, "Write a starter fleet, study, note and CI recipes into a new folder.")
+    new.add_argument("folder", metavar="FOLDER", type=Path, help="not there yet; its name names the study")
+
+
+def _new(arguments: argparse.Namespace) -> int:
+    from labkit.studies.starting import write_starter
+
+    study, *others = write_starter(arguments.folder)
+    if arguments.json:
+        print_json({"study": study, "files": [study, *others]})
+        return 0
+    print(f"written: {', '.join(str(path.relative_to(study.parent)) for path in (study, *others))}")
+    print(f"next:    labkit run {arguments.folder / study.name}")
+    print(f"then:    put your own tables into {study.parent / 'fleet'}; README.md there says how to go on")
+    return 0
