@@ -1,6 +1,7 @@
 """`labkit new`."""
 
 import argparse
+import shlex
 from pathlib import Path
 
 from labkit.commands.parts import Commands, print_json
@@ -20,6 +21,6 @@ def _new(arguments: argparse.Namespace) -> int:
         print_json({"study": study, "files": [study, *others]})
         return 0
     print(f"written: {', '.join(str(path.relative_to(study.parent)) for path in (study, *others))}")
-    print(f"next:    labkit run {arguments.folder / study.name}")
+    print(f"next:    labkit run {shlex.quote(str(arguments.folder / study.name))}")
     print(f"then:    put your own tables into {study.parent / 'fleet'}; README.md there says how to go on")
     return 0

@@ -134,9 +134,7 @@ def _compare(pack: Pack, records: "Sequence[tuple[str, pa.Table, int]]") -> None
     def same(ours: "pa.Table", theirs: "pa.Table") -> None:
         difference = exact_difference(ours, theirs)
         if difference:
-            raise StoreError(
-                f"pack {pack.folder} did not read back as written ({difference}); check the disk."
-            )
+            raise _unlike(pack, difference)
 
     originals = pa.concat_tables([table for _, table, _ in records])
     lengths = [table.num_rows for _, table, _ in records]

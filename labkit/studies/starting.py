@@ -9,7 +9,7 @@ from string import Template
 
 from labkit import __version__
 from labkit.errors import InputError
-from labkit.records.project import check_study_name
+from labkit.records.project import check_folder_name
 
 _STARTER = Path(__file__).with_name("starter")
 # File of a starter -> where it goes; `$name` is the study's.
@@ -45,7 +45,7 @@ def write_starter(folder: str | Path) -> list[Path]:
     given = Path(folder)
     try:
         place = given.expanduser().absolute()
-        name = check_study_name(place.resolve().name)
+        name = check_folder_name("name of the folder", "a study's name", place.resolve().name)
         if os.path.lexists(place) and (not place.is_dir() or any(place.iterdir())):
             raise InputError(
                 f"folder {given} is there and not empty; it was left as it is: give the name of a new one."
@@ -61,7 +61,6 @@ def write_starter(folder: str | Path) -> list[Path]:
 def _write(place: Path, name: str, given: Path) -> list[Path]:
     values = {
         "name": name,
-        "folder": str(given),
         "version": __version__,
         "entropy": str(secrets.randbelow(10**8)),
     }

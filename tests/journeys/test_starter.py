@@ -44,3 +44,7 @@ def test_the_recipe_names_the_variable_that_is_missing_or_wrong(tmp_path):
     done = recipe(study, LABKIT="", LABKIT_SOURCE=str(tmp_path / "nowhere"))
     assert done.returncode == 2
     assert "git could not clone it" in done.stderr
+    for _ in range(2):  # a clone at another commit must not be taken the next time
+        done = recipe(study, LABKIT="", LABKIT_SOURCE=str(ROOT), LABKIT_COMMIT="nowhere")
+        assert done.returncode == 2
+        assert "LABKIT_COMMIT is 'nowhere'; the clone has no such commit" in done.stderr

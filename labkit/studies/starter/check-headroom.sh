@@ -15,8 +15,11 @@ fail() {
 here=$$(CDPATH='' cd -- "$$(dirname -- "$$0")" && pwd)
 labkit=$${LABKIT:-$$here/labkit}
 if [ ! -e "$$labkit" ] && [ -n "$${LABKIT_SOURCE:-}" ]; then
-    git clone --quiet "$$LABKIT_SOURCE" "$$labkit" || fail "LABKIT_SOURCE is '$$LABKIT_SOURCE'; git could not clone it (see above)."
-    git -C "$$labkit" checkout --quiet "$${LABKIT_COMMIT:-HEAD}" || fail "LABKIT_COMMIT is '$$LABKIT_COMMIT'; the clone has no such commit."
+    commit=$${LABKIT_COMMIT:-HEAD}
+    rm -rf "$$labkit.part" # in place only when whole, and at the commit that was asked for
+    git clone --quiet "$$LABKIT_SOURCE" "$$labkit.part" || fail "LABKIT_SOURCE is '$$LABKIT_SOURCE'; git could not clone it (see above)."
+    git -C "$$labkit.part" checkout --quiet "$$commit" -- || fail "LABKIT_COMMIT is '$$commit'; the clone has no such commit."
+    mv "$$labkit.part" "$$labkit"
 fi
 [ -f "$$labkit/.ci/setup" ] || fail "'$$labkit' is no checkout of labkit; name one in LABKIT, or where to clone it from in LABKIT_SOURCE."
 sh "$$labkit/.ci/setup"
