@@ -588,38 +588,44 @@ def test_add_links_takes_what_the_table_says():
 @pytest.mark.parametrize(
     ("links", "sentence"),
     [
-        (None, r"links is a NoneType; give a table as lk\.advise_links returns it"),
-        (advice_table().drop(columns="taken_from"), r"links has no column 'taken_from'"),
-        (advice_table(option_1=["weest"]), r"links row 1: option_1 is 'weest'.*did you mean 'west'"),
-        (advice_table(option_1=["west"]), r"links row 1: server 'west' is at both ends"),
-        (advice_table(demand=[0.0]), r"links row 1: demand is 0\.0; give a finite number above 0"),
-        (advice_table(demand=[3.0]), r"links row 1: taken_from sums to 2, but demand is 3"),
+        (lambda: None, r"links is a NoneType; give a table as lk\.advise_links returns it"),
+        (lambda: advice_table().drop(columns="taken_from"), r"links has no column 'taken_from'"),
+        (lambda: advice_table(option_1=["weest"]), r"links row 1: option_1 is 'weest'.*did you mean 'west'"),
+        (lambda: advice_table(option_1=["west"]), r"links row 1: server 'west' is at both ends"),
+        (lambda: advice_table(demand=[0.0]), r"links row 1: demand is 0\.0; give a finite number above 0"),
+        (lambda: advice_table(demand=[3.0]), r"links row 1: taken_from sums to 2, but demand is 3"),
         (
-            advice_table(taken_from=["((0, 2.0),)"]),
+            lambda: advice_table(taken_from=["((0, 2.0),)"]),
             r"links row 1: taken_from is '\(\(0, 2\.0\),\)'; give pairs",
         ),
-        (advice_table(taken_from=[()]), r"links row 1: taken_from is \(\); give pairs"),
-        (advice_table(taken_from=[((0, 1.0, 1.0),)]), r"taken_from holds \(0, 1\.0, 1\.0\); give pairs"),
-        (advice_table(taken_from=[(("a", 2.0),)]), r"taken_from holds \('a', 2\.0\); give pairs"),
+        (lambda: advice_table(taken_from=[()]), r"links row 1: taken_from is \(\); give pairs"),
         (
-            advice_table(taken_from=[((3, 2.0),)]),
+            lambda: advice_table(taken_from=[((0, 1.0, 1.0),)]),
+            r"taken_from holds \(0, 1\.0, 1\.0\); give pairs",
+        ),
+        (lambda: advice_table(taken_from=[(("a", 2.0),)]), r"taken_from holds \('a', 2\.0\); give pairs"),
+        (
+            lambda: advice_table(taken_from=[((3, 2.0),)]),
             r"names the choice 3; name each choice once, .* from 0 to 2",
         ),
-        (advice_table(taken_from=[((0.5, 2.0),)]), r"names the choice 0\.5"),
-        (advice_table(taken_from=[((-1, 2.0),)]), r"names the choice -1"),
-        (advice_table(taken_from=[((0, 1.0), (0, 1.0))]), r"names the choice 0; name each choice once"),
-        (advice_table(taken_from=[((1, 2.0),)]), r"takes 2 from choice 1, whose demand is 1"),
-        (advice_table(taken_from=[((0, -2.0),)]), r"takes -2 from choice 0"),
-        (advice_table(taken_from=[((0, math.nan),)]), r"takes nan from choice 0"),
+        (lambda: advice_table(taken_from=[((0.5, 2.0),)]), r"names the choice 0\.5"),
+        (lambda: advice_table(taken_from=[((-1, 2.0),)]), r"names the choice -1"),
         (
-            advice_table(option_1=["north"], demand=[1.0], taken_from=[((1, 1.0),)]),
+            lambda: advice_table(taken_from=[((0, 1.0), (0, 1.0))]),
+            r"names the choice 0; name each choice once",
+        ),
+        (lambda: advice_table(taken_from=[((1, 2.0),)]), r"takes 2 from choice 1, whose demand is 1"),
+        (lambda: advice_table(taken_from=[((0, -2.0),)]), r"takes -2 from choice 0"),
+        (lambda: advice_table(taken_from=[((0, math.nan),)]), r"takes nan from choice 0"),
+        (
+            lambda: advice_table(option_1=["north"], demand=[1.0], taken_from=[((1, 1.0),)]),
             r"names choice 1, which has neither 'north' .* 'west' among its options",
         ),
     ],
 )
 def test_wrong_tables_of_links_are_refused(links, sentence):
     with pytest.raises(lk.InputError, match=sentence):
-        lk.add_links(named_path(), links)
+        lk.add_links(named_path(), links())
 
 
 def test_links_are_added_only_to_fleets_with_listed_choices():
