@@ -75,7 +75,11 @@ def specialise(loop: Callable, name: str, *, cache: bool, **pieces: Any) -> Call
 
 @lru_cache(maxsize=256)
 def kept(function: Callable) -> Callable:
-    """Return a plain function compiled, its machine code kept on disk; for calls from Python."""
+    """Return a plain function compiled, its machine code kept on disk.
+
+    For calls from Python, and for what many loops share: it is then not compiled anew with each of them. All
+    that the function calls must be defined above it.
+    """
     return specialise(function, "kept", cache=True)
 
 

@@ -113,6 +113,22 @@ def options_in(options, row):
 
 
 @compiled
+def skip_taken(picked, row, position, rank):
+    """Return the server with the given rank among those not yet picked in this row (few, so quadratic)."""
+    floor = np.int64(-1)
+    for _ in range(position):
+        smallest = np.int64(9223372036854775807)
+        for earlier in range(position):
+            server = np.int64(picked[row, np.uint64(earlier)])
+            if floor < server < smallest:
+                smallest = server
+        floor = smallest
+        if np.int64(rank) >= smallest:
+            rank += np.uint64(1)
+    return rank
+
+
+@kept
 def draw_from_table(options, threshold, alias, state, loads, picked, coins, rows, count):
     """Draw `count` arrivals of a table of choices ahead, calling their memory into the caches.
 
@@ -146,7 +162,7 @@ def draw_from_table(options, threshold, alias, state, loads, picked, coins, rows
             prefetch(loads, np.uint64(server))
 
 
-@compiled
+@kept
 def draw_from_all(servers, distinct, state, loads, picked, coins, count):
     """Draw `count` arrivals whose options are any servers, one raw word an option (see `draw_from_table`)."""
     a, b, c, counter = state[0], state[1], state[2], state[3]
@@ -176,19 +192,3 @@ def draw_from_all(servers, distinct, state, loads, picked, coins, count):
             picked[here, np.uint64(position)] = np.uint32(server)
             prefetch(loads, server)
     state[0], state[1], state[2], state[3] = a, b, c, counter
-
-
-@compiled
-def skip_taken(picked, row, position, rank):
-    """Return the server with the given rank among those not yet picked in this row (few, so quadratic)."""
-    floor = np.int64(-1)
-    for _ in range(position):
-        smallest = np.int64(9223372036854775807)
-        for earlier in range(position):
-            server = np.int64(picked[row, np.uint64(earlier)])
-            if floor < server < smallest:
-                smallest = server
-        floor = smallest
-        if np.int64(rank) >= smallest:
-            rank += np.uint64(1)
-    return rank

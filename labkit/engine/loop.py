@@ -135,9 +135,9 @@ def place_tasks(
     renewal : int
         The policy's `renew` is called just before the tasks 1, renewal + 1, ...; 0 for never; below 0 for
         just before the first task and with each report.
-    ahead : bool
+    ahead : bool or None
         Draw arrivals ahead of their placement: for fleets larger than cache, without a table of choices, or
-        with unequal demands.
+        with unequal demands; else None, so that only the loop in use is compiled.
     first, last : int
     checkpoints : int64 array
         Increasing; those in (first, last] are measured, just after their placement.
@@ -177,7 +177,13 @@ def place_tasks(
                 renew(state, seen)
             stop = min(stop, done - done % renewal + renewal)
         failed = 0
-        if ahead:
+        if ahead is None:
+            failed = place_near(
+                arrivals.options, several, arrival_state, own, state, weights, sizes, loads, seen,
+                every == 0, first, done, stop,
+            )  # fmt: skip
+            done = stop
+        else:
             while done < stop and failed == 0:
                 batch = min(AHEAD, stop - done)
                 if arrivals.servers == np.uint64(0):
@@ -200,12 +206,6 @@ def place_tasks(
                         turns, first, done,
                     )  # fmt: skip
                 done += batch
-        else:
-            failed = place_near(
-                arrivals.options, several, arrival_state, own, state, weights, sizes, loads, seen,
-                every == 0, first, done, stop,
-            )  # fmt: skip
-            done = stop
         if failed:
             return failed
         if mark < checkpoints.size and done == checkpoints[mark]:

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from labkit.compiled import compiled
+from labkit.compiled import compiled, kept
 from labkit.fleet.model import ABSENT
 
 # The columns that a kernel writes, in order.
@@ -10,6 +10,33 @@ MEASURED = ("mean_load", "max_load", "min_load", "max_utilisation", "load_varian
 
 
 @compiled
+def difference_over_rows(loads, options, demand):
+    """Return the demand-weighted mean absolute difference of load over two-server choices."""
+    total = 0.0
+    weight = 0.0
+    for row in range(options.shape[0]):
+        here = np.uint64(row)
+        if options.shape[1] > 2 and options[here, np.uint64(2)] != np.uint32(ABSENT):
+            continue
+        share = demand[here] if demand.size > 0 else 1.0
+        one = loads[np.uint64(options[here, np.uint64(0)])]
+        other = loads[np.uint64(options[here, np.uint64(1)])]
+        total += share * abs(one - other)
+        weight += share
+    return total / weight if weight > 0.0 else np.nan
+
+
+@compiled
+def difference_over_all(loads):
+    """Return the sum of absolute differences of load over all ordered pairs of servers."""
+    ranked = np.sort(loads)
+    total = 0.0
+    for rank in range(ranked.size):
+        total += (2.0 * rank - (ranked.size - 1.0)) * ranked[rank]
+    return 2.0 * total
+
+
+@kept
 def measure(loads, capacity, options, demand, pairs_of, out):
     """Write the measures of one moment into `out`, float64 of shape (len(MEASURED),).
 
@@ -52,30 +79,3 @@ def measure(loads, capacity, options, demand, pairs_of, out):
     else:
         pairs = loads.size * (loads.size - 1.0) if pairs_of == 1 else loads.size * float(loads.size)
         out[5] = difference_over_all(loads) / pairs
-
-
-@compiled
-def difference_over_rows(loads, options, demand):
-    """Return the demand-weighted mean absolute difference of load over two-server choices."""
-    total = 0.0
-    weight = 0.0
-    for row in range(options.shape[0]):
-        here = np.uint64(row)
-        if options.shape[1] > 2 and options[here, np.uint64(2)] != np.uint32(ABSENT):
-            continue
-        share = demand[here] if demand.size > 0 else 1.0
-        one = loads[np.uint64(options[here, np.uint64(0)])]
-        other = loads[np.uint64(options[here, np.uint64(1)])]
-        total += share * abs(one - other)
-        weight += share
-    return total / weight if weight > 0.0 else np.nan
-
-
-@compiled
-def difference_over_all(loads):
-    """Return the sum of absolute differences of load over all ordered pairs of servers."""
-    ranked = np.sort(loads)
-    total = 0.0
-    for rank in range(ranked.size):
-        total += (2.0 * rank - (ranked.size - 1.0)) * ranked[rank]
-    return 2.0 * total

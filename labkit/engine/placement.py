@@ -231,8 +231,8 @@ class _Job:
         self.pairs_of = _pairs_of(fleet)
         self.several = None if only_pairs(self.arrivals) else True
         touched = 8 * fleet.size * (1 if self.capacity is None else 2) + self.arrivals.options.nbytes
-        self.ahead = fleet.implicit is not None or fleet.demand is not None or touched > NEAR_BYTES
-        self.ahead |= self.dispatchers > 0
+        ahead = fleet.implicit is not None or fleet.demand is not None or touched > NEAR_BYTES
+        self.ahead = True if ahead or self.dispatchers > 0 else None
         rule.check(np.int64 if work is None and not rule.moves_work else np.float64)
         self.loop = loop_of(rule)
 

@@ -8,7 +8,7 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
-from labkit.compiled import CONFIG, compiled, inlined, kept, specialise
+from labkit.compiled import CONFIG, compiled, folded, inlined, kept, specialise
 from labkit.engine import queues as q
 from labkit.engine.arrivals import arrivals_of, read_only
 from labkit.engine.information import Information
@@ -358,7 +358,7 @@ class Loops(NamedTuple):
 
 @lru_cache(maxsize=64)
 def _loops(kernel_name: str, choose: Callable, renew: Callable, after: Callable, cache: bool) -> Loops:
-    pick = specialise(pick_open, kernel_name, cache=False, choose=inlined(choose))
+    pick = specialise(pick_open, kernel_name, cache=False, choose=folded(choose))
     serve = specialise(
         serve_tasks, kernel_name, cache=cache, choose=inlined(choose), after=inlined(after),
         renew=compiled(renew), pick_open=pick,
