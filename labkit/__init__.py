@@ -74,6 +74,7 @@ _HOMES = {
     "StudySize": "labkit.analysis.sizing",
     "fit_growth": "labkit.figures.growth",
     "GrowthFit": "labkit.figures.growth",
+    "save_figure": "labkit.figures.saving",
     "register_law": "labkit.analysis.growth_laws",
     "use_scheduler": "labkit.sharing.scheduler",
     "begin_run": "labkit.records.run",

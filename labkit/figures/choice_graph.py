@@ -8,25 +8,34 @@ import numpy as np
 import pandas as pd
 from matplotlib.axes import Axes
 from matplotlib.collections import LineCollection
-from matplotlib.figure import Figure
-from matplotlib.font_manager import FontProperties
 from matplotlib.patches import PathPatch
 from matplotlib.path import Path as MplPath
-from matplotlib.textpath import TextPath
 from scipy.spatial import KDTree
 
 from labkit.analysis.wording import writer
 from labkit.errors import InputError
+from labkit.figures.labels import listed, short, spread, width_of, wrapped
 from labkit.figures.layout import CIRCLE_AT_MOST, is_ring_in_order, positions
-from labkit.figures.style import COLOURS, FILL, INK, plain, spread, styled
+from labkit.figures.style import (
+    FAINT,
+    FILL,
+    INK,
+    PAPER,
+    TITLE,
+    VERMILLION,
+    WIDTH,
+    WORDS,
+    Drawing,
+    describe,
+    plain,
+    styled,
+)
 from labkit.fleet.model import ABSENT, Fleet, positions_of
 
 DRAWN_AT_MOST = 2_000
 NEIGHBOURHOOD = 300
 NAMED = 5
-MARK = COLOURS[1]
-# Sizes of type in points.
-TITLE, WORDS = 11, 9
+MARK = VERMILLION
 # Inches: the margin, the largest drawing, the least height, room for a dot at the edge, from the drawing to
 # the names, from line to line, before the colour bar ("mean") and from its left edge to the figure's.
 MARGIN, LARGEST, LEAST, DOT, AWAY, LINE, MEAN, BAR = 0.12, 5.4, 1.6, 0.2, 0.4, 0.2, 0.7, 0.95
@@ -41,7 +50,7 @@ def choice_graph(
     measure: str = "utilisation (load ÷ capacity)",
     ringed: Iterable[Any] = (),
     links: Iterable[tuple[Any, Any]] = (),
-) -> Figure:
+) -> Drawing:
     """Draw the choice graph, servers coloured by utilisation.
 
     Areas of the dots are proportional to capacity, widths of the lines to demand; the fullest servers, or
@@ -106,11 +115,15 @@ def choice_graph(
     if len(kept) > CIRCLE_AT_MOST and is_ring_in_order(len(kept), pairs):
         words += " · the ring is drawn as a wave to make room"
     named = np.argsort(-values, kind="stable")[:NAMED] if not len(dashed) else _first(dashed.ravel())
-    sheet = _sheet(places, values, names, named, max(_width(title, TITLE, "bold"), _width(words)))
-    figure = Figure(figsize=sheet.size)
+    room = WIDTH - 2 * MARGIN
+    title, words = wrapped(title, room, TITLE, "bold"), wrapped(words, room)
+    lines = words.count("\n") + title.count("\n")
+    widest = max(width_of(title, TITLE, "bold"), width_of(words))
+    sheet = _sheet(places, values, names, named, widest, lines)
+    figure = Drawing(figsize=sheet.size)
     width, height = sheet.size
     low_x, high_x, low_y, high_y = sheet.panel
-    foot = MARGIN + 0.35
+    foot = MARGIN + 0.35 + LINE * words.count("\n")
     axes = figure.add_axes(
         (MARGIN / width, foot / height, (high_x - low_x) / width, (high_y - low_y) / height),
         xlim=(low_x, high_x),
@@ -145,14 +158,24 @@ def choice_graph(
     )
     bar.ax.yaxis.set_major_formatter(plain)
     bar.set_label(measure)
-    bar.ax.axhline(mean, color="white", linewidth=3)
+    bar.ax.axhline(mean, color=PAPER, linewidth=3)
     bar.ax.axhline(mean, color=INK, linewidth=1.2)
     bar.ax.annotate("mean ", (0, mean), xycoords=("axes fraction", "data"), ha="right", va="center")
     figure.suptitle(
         title, x=MARGIN / width, y=1 - MARGIN / height, ha="left", va="top", fontsize=TITLE, fontweight="bold"
     )
     figure.supxlabel(words, x=MARGIN / width, y=MARGIN / height, ha="left", va="bottom", fontsize=WORDS)
-    return figure
+    write = writer(high)
+    fullest = [
+        f"{short(str(names[at]))} {write(values[at])}" for at in np.argsort(-values, kind="stable")[:3]
+    ]
+    marks = f"; {in_all:,} ringed as the bottleneck" if in_all else ""
+    marks += f"; {len(dashed):,} advised links dashed" if len(dashed) else ""
+    return describe(
+        figure,
+        f"Choice graph of {fleet.size:,} servers coloured by {measure}, from {write(float(values.min()))} to "
+        f"{write(float(values.max()))}, mean {write(mean)}; fullest: {listed(fullest)}{marks}.",
+    )
 
 
 def _checked(fleet: Fleet, utilisation: Any) -> np.ndarray:
@@ -228,7 +251,9 @@ def _choices(axes: Axes, places: np.ndarray, pairs: np.ndarray, demand: np.ndarr
     widest = min(6.0, 0.85 * diameter) if np.ptp(demand) > 0 else min(1.5, 0.3 * diameter)
     widths = np.maximum(0.3, widest * demand / max(demand.max(), 1e-300))
     axes.add_collection(
-        LineCollection(list(places[pairs]), linewidths=widths, colors="#A6A6A6", zorder=1, capstyle="butt"),
+        LineCollection(
+            list(places[pairs]), linewidths=widths, colors=FAINT, alpha=0.6, zorder=1, capstyle="butt"
+        ),
         autolim=False,
     )
 
@@ -284,26 +309,31 @@ def _first(servers: np.ndarray) -> np.ndarray:
 
 
 def _sheet(
-    places: np.ndarray, values: np.ndarray, names: np.ndarray, named: np.ndarray, words: float
+    places: np.ndarray, values: np.ndarray, names: np.ndarray, named: np.ndarray, words: float, lines: int
 ) -> _Sheet:
     """Scale the drawing to its number of servers and make room for some of their names beside it."""
     places = places - places.min(axis=0)
     extent = places.max(axis=0)
-    longest = min(LARGEST, 1.4 + 0.45 * len(places) ** 0.5)
-    places = places * (longest / max(extent.max(), 1e-12))
-    low, high = np.zeros(2), places.max(axis=0)
     write = writer(values.max())
+    named_as = {int(at): f"{short(str(names[at]))}: {write(values[at])}" for at in named}
+    right = places[named, 0] >= extent[0] / 2
+    beside = [
+        max((width_of(named_as[int(at)]) for at in named[right == side]), default=DOT - AWAY)
+        for side in (0, 1)
+    ]
+    longest = min(LARGEST, 1.4 + 0.45 * len(places) ** 0.5)
+    room = WIDTH - MARGIN - MEAN - BAR - sum(beside) - 2 * AWAY
+    scale = min(longest / max(extent.max(), 1e-12), room / max(extent[0], 1e-12))
+    places = places * scale
+    low, high = np.zeros(2), places.max(axis=0)
     labels = []
-    right = places[named, 0] >= high[0] / 2
     for side in (1, -1):
         mine = named[right == (side > 0)]
         x = high[0] + AWAY if side > 0 else -AWAY
         for at, y in zip(mine, spread(places[mine, 1], LINE), strict=True):
-            labels.append(
-                _Label(int(at), f"{_short(str(names[at]))}: {write(values[at])}", x, float(y), side)
-            )
+            labels.append(_Label(int(at), named_as[int(at)], x, float(y), side))
     labels.sort(key=lambda label: named.tolist().index(label.at))
-    ends = [label.x + label.side * _width(label.words) for label in labels]
+    ends = [label.x + label.side * width_of(label.words) for label in labels]
     heights = [label.y for label in labels]
     low_x, high_x = min(low[0] - DOT, *ends), max(high[0] + DOT, *ends)
     low_y = min(low[1] - DOT, min(heights) - LINE / 2)
@@ -311,17 +341,5 @@ def _sheet(
     missing = max(0.0, LEAST - (high_y - low_y)) / 2
     low_y, high_y = low_y - missing, high_y + missing
     width = max(MARGIN + high_x - low_x + MEAN + BAR, words + 2 * MARGIN)
-    height = 2 * MARGIN + 0.75 + high_y - low_y
+    height = 2 * MARGIN + 0.75 + LINE * lines + high_y - low_y
     return _Sheet(places, labels, (low_x, high_x, low_y, high_y), (width, height))
-
-
-def _width(words: str, size: float = WORDS, weight: str = "normal") -> float:
-    """Return the width of a line of text in inches."""
-    if not words:
-        return 0.0
-    font = FontProperties(family="DejaVu Sans", size=size, weight=weight)
-    return float(TextPath((0, 0), words, prop=font).get_extents().x1) / 72 * 1.04
-
-
-def _short(name: str) -> str:
-    return name if len(name) <= 22 else f"{name[:21]}…"

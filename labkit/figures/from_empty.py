@@ -4,14 +4,15 @@ from collections.abc import Mapping
 
 import numpy as np
 import pandas as pd
-from matplotlib.figure import Figure
 
 from labkit.analysis.service_words import tasks_over_time
-from labkit.figures.style import INK, grouped, label_ends, looks, plain, styled
+from labkit.figures.labels import label_ends, listed
+from labkit.figures.looks import looks
+from labkit.figures.style import INK, LOW, Drawing, describe, grouped, plain, sheet, styled
 
 
 @styled
-def from_empty(pilots: Mapping[str, pd.DataFrame], *, warmup: float, unit: str, smooth: int = 5) -> Figure:
+def from_empty(pilots: Mapping[str, pd.DataFrame], *, warmup: float, unit: str, smooth: int = 5) -> Drawing:
     """Draw the mean number of tasks in the fleet against time, one line a rule, and where measuring begins.
 
     Parameters
@@ -30,7 +31,7 @@ def from_empty(pilots: Mapping[str, pd.DataFrame], *, warmup: float, unit: str, 
     matplotlib.figure.Figure
     """
     style = looks(pilots)
-    figure = Figure(figsize=(7.6, 3.6), layout="constrained")
+    figure = sheet(LOW)
     axes = figure.subplots()
     ends, last = {}, 0.0
     for name in sorted(pilots):
@@ -55,4 +56,9 @@ def from_empty(pilots: Mapping[str, pd.DataFrame], *, warmup: float, unit: str, 
     axes.grid(True)
     figure.draw_without_rendering()
     label_ends(axes, last, ends, style)
-    return figure
+    levels = [f"{name} {each:.3g}" for name, each in ends.items()]
+    return describe(
+        figure,
+        f"Tasks in the fleet from the empty start to {last:,.6g} {unit}, measured from "
+        f"{warmup:,.6g} {unit} on; at the end {listed(levels)}.",
+    )

@@ -2,22 +2,40 @@
 
 import numpy as np
 from matplotlib.axes import Axes
-from matplotlib.figure import Figure
-from matplotlib.ticker import FuncFormatter, LogLocator, MaxNLocator, NullLocator
+from matplotlib.ticker import MaxNLocator
 
 from labkit.analysis.growth import GrowthFit
 from labkit.checks import check_number
 from labkit.errors import InputError
-from labkit.figures.style import COLOURS, DASHES, FAINT, INK, label_ends, plain, styled
+from labkit.figures.labels import label_ends, note
+from labkit.figures.looks import DASHES
+from labkit.figures.style import (
+    BLUE,
+    FAINT,
+    GREEN,
+    INDIGO,
+    INK,
+    PALE,
+    TALL,
+    VERMILLION,
+    Drawing,
+    counted,
+    describe,
+    log_ticks,
+    plain,
+    sheet,
+    styled,
+)
 
 # Laws below this weight are not drawn.
 LEAST_WEIGHT = 0.05
 _POINTS = 80
-_LAW_COLOURS = COLOURS[1:4]
+_UNITS = dict.fromkeys(("gap", "excess", "max_utilisation"), ", utilisation (load ÷ capacity)")
+_LAW_COLOURS = (VERMILLION, GREEN, INDIGO)
 
 
 @styled
-def growth_curve(fit: GrowthFit, *, reach: float = 4.0, measure: str | None = None) -> Figure:
+def growth_curve(fit: GrowthFit, *, reach: float = 4.0, measure: str | None = None) -> Drawing:
     """Draw the means at each size, the weighted average of the laws, and its bands.
 
     The dark band holds at each size by itself, the pale one at all drawn sizes at once. Right of the largest
@@ -52,9 +70,9 @@ def growth_curve(fit: GrowthFit, *, reach: float = 4.0, measure: str | None = No
     points = np.clip(np.geomspace(smallest, largest * reach, _POINTS), smallest, largest * reach)
     points = np.unique(np.append(points, largest))
     alone, at_once = fit.predict(points), fit.predict(points, simultaneous=True)
-    figure = Figure(figsize=(8.2, 4.8), layout="constrained")
+    figure = sheet(TALL)
     axes = figure.subplots()
-    main = COLOURS[0]
+    main = BLUE
     axes.fill_between(points, at_once["lower"], at_once["upper"], color=main, alpha=0.13, linewidth=0)
     axes.fill_between(points, alone["lower"], alone["upper"], color=main, alpha=0.25, linewidth=0)
     measured = points <= largest
@@ -63,7 +81,7 @@ def growth_curve(fit: GrowthFit, *, reach: float = 4.0, measure: str | None = No
     looks = {"average": {"color": main}}
     ends = {"average": float(alone["estimate"].iloc[-1])}
     for (law, formula, weight), curve in _heavy(fit, points).items():
-        name = f"{law}: {formula} ({100 * weight:.0f} %)"
+        name = f"{law}, weight {100 * weight:.0f} %:\n{formula}"
         colour = _LAW_COLOURS[(len(ends) - 1) % len(_LAW_COLOURS)]
         looks[name] = {"color": colour}
         ends[name] = float(curve[-1])
@@ -73,16 +91,23 @@ def growth_curve(fit: GrowthFit, *, reach: float = 4.0, measure: str | None = No
         linestyle="none", capsize=2, linewidth=1.1, zorder=5,
     )  # fmt: skip
     _axes(axes, fit.x, (float(alone["lower"].min()), float(alone["upper"].max())), smallest, largest, reach)
-    axes.set_ylabel(measure or f"mean {fit.y}")
+    words = measure or f"mean {fit.y}{_UNITS.get(fit.y, '')}"
+    axes.set_ylabel(words)
     percent = f"{100 * fit.confidence:g} %"
-    figure.suptitle(
-        f"points: means, ±1.96 standard errors · band: {percent}, choice of law included; "
-        "pale: at all sizes at once",
-        fontsize=9, x=0.01, ha="left",
-    )  # fmt: skip
+    note(
+        figure,
+        f"points: means, ±1.96 standard errors · band: {percent}, choice of law included; pale: at all sizes "
+        "at once",
+    )
     figure.draw_without_rendering()
     label_ends(axes, largest * reach, ends, looks)
-    return figure
+    last = alone.iloc[-1]
+    return describe(
+        figure,
+        f"{words} against {fit.x}, measured from {smallest:,.6g} to {largest:,.6g}; at "
+        f"{largest * reach:,.6g} the laws say {last['estimate']:.3g}, between {last['lower']:.3g} "
+        f"and {last['upper']:.3g}.",
+    )
 
 
 def _heavy(fit: GrowthFit, points: np.ndarray) -> dict[tuple[str, str, float], np.ndarray]:
@@ -100,21 +125,19 @@ def _axes(
 ) -> None:
     axes.set_xscale("log")
     axes.set_xlim(smallest / 1.1, largest * reach)
-    axes.xaxis.set_major_locator(LogLocator(subs=(1, 2, 5)))
-    axes.xaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:,.0f}"))
-    axes.xaxis.set_minor_locator(NullLocator())
+    log_ticks(axes.xaxis, smallest / 1.1, largest * reach, 8)
+    axes.xaxis.set_major_formatter(counted)
     low, high = heights
     if low > 0:
         axes.set_yscale("log")
         # The pale band may reach far down, even below zero.
         axes.set_ylim(low / 1.5, high * 1.5)
-        axes.yaxis.set_major_locator(LogLocator(subs=(1, 2, 5) if high > 20 * low else (1, 2, 3, 5, 7)))
-        axes.yaxis.set_minor_locator(NullLocator())
+        log_ticks(axes.yaxis, low / 1.5, high * 1.5, 8)
     else:
         axes.yaxis.set_major_locator(MaxNLocator(6))
     axes.yaxis.set_major_formatter(plain)
     if reach > 1:
-        axes.axvspan(largest, largest * reach, color="#F0F0F0", linewidth=0, zorder=0)
+        axes.axvspan(largest, largest * reach, color=PALE, alpha=0.45, linewidth=0, zorder=0)
         axes.annotate(
             "extrapolated", (largest, 0.02), xycoords=("data", "axes fraction"), xytext=(4, 0),
             textcoords="offset points", color=FAINT, va="bottom",

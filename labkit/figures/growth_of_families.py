@@ -4,14 +4,13 @@ from collections.abc import Sequence
 
 import numpy as np
 from matplotlib.axes import Axes
-from matplotlib.figure import Figure
-from matplotlib.ticker import FuncFormatter, LogLocator, NullLocator
 
 from labkit.analysis.growth_by_family import FamilyFit
 from labkit.checks import check_number
 from labkit.errors import InputError
-from labkit.figures.style import DASHES, FAINT, label_ends, looks, plain, styled
-from labkit.fleet.named import FAMILIES
+from labkit.figures.labels import label_ends, listed, note
+from labkit.figures.looks import DASHES, looks_of_networks
+from labkit.figures.style import PAPER, TALL, Drawing, counted, describe, log_ticks, plain, sheet, styled
 from labkit.policies.naming import shown_name
 from labkit.stationary.long_run import STATIONARY
 
@@ -21,7 +20,7 @@ _POINTS = 60
 @styled
 def growth_of_families(
     fits: Sequence[FamilyFit], *, reach: float = 4.0, measure: str = "mean excess, tasks"
-) -> Figure:
+) -> Drawing:
     """Draw means, fitted growth and its band against the number of servers, both on logarithmic axes.
 
     Parameters
@@ -49,11 +48,10 @@ def growth_of_families(
     if not fits:
         raise InputError("fits is empty; give at least one fit.")
     policies = list(dict.fromkeys(each.policy for each in fits))
-    # The networks that a study may name keep their colours whichever of them are drawn.
-    style = looks([*FAMILIES, *(each.family for each in fits)])
+    style = looks_of_networks(each.family for each in fits)
     columns = min(2, len(policies))
     rows = -(-len(policies) // columns)
-    figure = Figure(figsize=(5.6 * columns, 4.0 * rows + 0.5), layout="constrained")
+    figure = sheet((TALL - 0.6) * rows + 0.6)
     panels = figure.subplots(rows, columns, sharex=True, sharey=True, squeeze=False)
     largest = max(each.fit.sizes["x"].max() for each in fits)
     smallest = min(each.fit.sizes["x"].min() for each in fits)
@@ -76,15 +74,20 @@ def growth_of_families(
         lowest.set_xlabel("servers")
         lowest.xaxis.set_tick_params(labelbottom=True)
     percent = f"{100 * fits[0].fit.confidence:g} %"
-    figure.suptitle(
-        f"points: means, ±1.96 standard errors · band: {percent} at each size, choice of law included\n"
+    note(
+        figure,
+        f"points: means, ±1.96 standard errors · band: {percent} at each size, choice of law included · "
         f"dashed: beyond the sizes measured{_open_markers(fits)}",
-        fontsize=9, x=0.01, ha="left",
-    )  # fmt: skip
+    )
     figure.draw_without_rendering()
     for axes, ends in labels:
         label_ends(axes, largest * reach, ends, style)
-    return figure
+    return describe(
+        figure,
+        f"{measure} against servers, from {smallest:,.6g} to {largest:,.6g} and foretold to "
+        f"{largest * reach:,.6g}, on {listed(dict.fromkeys(each.family for each in fits))}, under "
+        f"{listed(policies)}.",
+    )
 
 
 def _line(axes: Axes, each: FamilyFit, reach: float, look: dict) -> float:
@@ -103,7 +106,7 @@ def _line(axes: Axes, each: FamilyFit, reach: float, look: dict) -> float:
     )
     axes.errorbar(
         sizes["x"], sizes["mean"], yerr=1.96 * sizes["standard_error"], color=colour, marker=look["marker"],
-        markersize=4.5, markerfacecolor=colour if each.moment == STATIONARY else "white",
+        markersize=4.5, markerfacecolor=colour if each.moment == STATIONARY else PAPER,
         linestyle="none", capsize=2, linewidth=1, zorder=5,
     )  # fmt: skip
     return float(said["estimate"].iloc[-1])
@@ -122,11 +125,8 @@ def _scales(panels: np.ndarray, smallest: float, farthest: float, lowest: float)
     # A band may reach far down, even below zero.
     axes.set_ylim(lowest / 2, axes.get_ylim()[1])
     for each in panels.flat:
-        each.xaxis.set_major_locator(LogLocator(subs=(1, 2, 5)))
-        each.xaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:,.0f}"))
-        each.xaxis.set_minor_locator(NullLocator())
-        each.yaxis.set_major_locator(LogLocator(subs=(1, 2, 5)))
+        log_ticks(each.xaxis, smallest / 1.15, farthest, 6)
+        each.xaxis.set_major_formatter(counted)
+        log_ticks(each.yaxis, lowest / 2, float(axes.get_ylim()[1]), 9)
         each.yaxis.set_major_formatter(plain)
-        each.yaxis.set_minor_locator(NullLocator())
         each.grid(True)
-        each.tick_params(colors=FAINT, labelcolor="#222222")

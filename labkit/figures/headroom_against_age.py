@@ -3,19 +3,20 @@
 import numpy as np
 import pandas as pd
 from matplotlib.axes import Axes
-from matplotlib.figure import Figure
-from matplotlib.ticker import FixedLocator, LogLocator, NullLocator
+from matplotlib.ticker import FixedLocator, NullLocator
 
 from labkit.analysis.wording import report_age
 from labkit.checks import check_whole
 from labkit.errors import InputError
-from labkit.figures.style import label_ends, looks, plain, styled
+from labkit.figures.labels import label_ends, listed, note
+from labkit.figures.looks import looks
+from labkit.figures.style import COLUMNS, Drawing, describe, log_ticks, plain, side_by_side, styled
 
 NEEDED = ("policy", "information", "headroom", "lower", "upper", "risk", "confidence")
 
 
 @styled
-def headroom_against_age(table: pd.DataFrame, *, servers: int) -> Figure:
+def headroom_against_age(table: pd.DataFrame, *, servers: int) -> Drawing:
     """Draw the headroom against the time between reports, one line a rule, one panel a number of dispatchers.
 
     Parameters
@@ -45,8 +46,7 @@ def headroom_against_age(table: pd.DataFrame, *, servers: int) -> Figure:
     # With fresh loads it does not matter how many there are.
     kinds = sorted(rows.loc[rows["age"] > 0, "dispatchers"].unique()) or [0]
     style = looks(rows["policy"])
-    figure = Figure(figsize=(4.4 * len(kinds) + 2.2, 4.8), layout="constrained")
-    panels = figure.subplots(1, len(kinds), sharey=True, squeeze=False)[0]
+    figure, panels = side_by_side(len(kinds), sharey=True)
     late = np.sort(rows.loc[rows["age"] > 0, "age"].unique())
     # Fresh loads have a place of their own, left of the shortest age on the logarithmic axis.
     fresh = (late[0] if late.size else 1.0) / 4.0
@@ -65,24 +65,27 @@ def headroom_against_age(table: pd.DataFrame, *, servers: int) -> Figure:
         several = f"{kind:,} dispatchers, each knows its own"
         axes.set_title(several if kind else "all see the last report")
     first = rows.iloc[0]
-    panels[0].set_ylabel(f"headroom at {100 * first['risk']:g} % risk, utilisation (load ÷ capacity)")
-    figure.suptitle(
-        f"bars: {100 * first['confidence']:g} % limits; marks are moved sideways to show all",
-        fontsize=9,
-        x=0.01,
-        ha="left",
-    )
+    percent = f"{100 * first['risk']:g} %"
+    for axes in panels[::COLUMNS]:
+        axes.set_ylabel(f"headroom at {percent} risk, utilisation (load ÷ capacity)")
+    note(figure, f"bars: {100 * first['confidence']:g} % limits · marks are moved sideways to show all")
     figure.draw_without_rendering()
     for axes in panels:
         label_ends(axes, (late[-1] if late.size else fresh) * 1.25, axes.ends, style)
-    return figure
+    oldest = rows.loc[rows["age"] == rows["age"].max()].groupby("policy")["headroom"].max()
+    needs = [f"{name} {value:.3g}" for name, value in oldest.items()]
+    return describe(
+        figure,
+        f"Headroom of each rule at {percent} risk against the tasks a server from one report of the loads to "
+        f"the next; with the oldest reports {listed(needs)}.",
+    )
 
 
 def _line(axes: Axes, rows: pd.DataFrame, look: dict, fresh: float, aside: float) -> float:
     place = np.where(rows["age"] > 0, rows["age"], fresh) * aside
     height = rows["headroom"].to_numpy()
     spans = np.array([height - rows["lower"], rows["upper"] - height])
-    axes.errorbar(place, height, yerr=spans, capsize=2, linewidth=1.4, markersize=5, **look)
+    axes.errorbar(place, height, yerr=spans, capsize=2, **look)
     return float(height[-1])
 
 
@@ -95,8 +98,7 @@ def _axes(axes: Axes, fresh: float, late: np.ndarray, wide: bool) -> None:
     axes.set_xlim(fresh * 0.7, (late[-1] if late.size else fresh) * 1.3)
     if wide:
         axes.set_yscale("log")
-        axes.yaxis.set_major_locator(LogLocator(subs=(1, 2, 5)))
-        axes.yaxis.set_minor_locator(NullLocator())
+        log_ticks(axes.yaxis, *axes.get_ylim(), 9)
     else:
         axes.set_ylim(bottom=0.0)
     axes.yaxis.set_major_formatter(plain)

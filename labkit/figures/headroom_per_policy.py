@@ -3,18 +3,18 @@
 import numpy as np
 import pandas as pd
 from matplotlib.axes import Axes
-from matplotlib.figure import Figure
-from matplotlib.lines import Line2D
 
 from labkit.analysis.wording import reports, utilisation
 from labkit.checks import check_member, nearest
 from labkit.errors import InputError
-from labkit.figures.style import FAINT, INK, looks, plain, styled
+from labkit.figures.labels import in_lines, listed, note
+from labkit.figures.looks import looks
+from labkit.figures.style import FAINT, INK, PAPER, Drawing, describe, plain, sheet, styled
 from labkit.policies.naming import shown_name
 
 
 @styled
-def headroom_per_policy(table: pd.DataFrame, *, baseline: str = "", above: str = "mean") -> Figure:
+def headroom_per_policy(table: pd.DataFrame, *, baseline: str = "", above: str = "mean") -> Drawing:
     """Draw the headroom of each policy as a dot with its limits, least first.
 
     Parameters
@@ -56,8 +56,8 @@ def headroom_per_policy(table: pd.DataFrame, *, baseline: str = "", above: str =
     kinds = sorted(rows["information"].unique())
     order = rows.groupby("policy")["headroom"].max().sort_values(ascending=False).index
     style = looks(rows["policy"])
-    step = 0.36 * len(kinds) + 0.34
-    figure = Figure(figsize=(8.6, 1.4 + step * len(order)), layout="constrained")
+    step = 0.28 * len(kinds) + 0.28
+    figure = sheet(1.5 + step * len(order))
     axes = figure.subplots()
     for place, policy in enumerate(order):
         mine = rows[rows["policy"] == policy].set_index("information")
@@ -67,7 +67,7 @@ def headroom_per_policy(table: pd.DataFrame, *, baseline: str = "", above: str =
             base = rows[(rows["policy"] == baseline) & (rows["information"] == kind)]
             _dot(axes, y, mine.loc[kind], style[policy], filled=kind == kinds[0])
             _values(axes, y, mine.loc[kind], base, baseline if policy != baseline else "")
-    axes.set_yticks(range(len(order)), [shown_name(name) for name in order])
+    axes.set_yticks(range(len(order)), [in_lines(shown_name(name)) for name in order])
     axes.tick_params(axis="y", length=0)
     axes.set_ylim(-0.6, len(order) - 0.4)
     axes.set_xlim(0, rows["upper"].max() * 1.04)
@@ -76,21 +76,27 @@ def headroom_per_policy(table: pd.DataFrame, *, baseline: str = "", above: str =
     first = rows.iloc[0]
     axes.set_xlabel(
         f"{'excess' if excess else 'headroom'} at {100 * first['risk']:g} % risk, "
-        f"utilisation (load ÷ capacity) above the {above}; "
-        f"bars: {100 * first['confidence']:g} % limits"
+        f"utilisation (load ÷ capacity) above the {above}"
     )
+    words = f"bars: {100 * first['confidence']:g} % limits"
+    if len(kinds) > 1:
+        words += " · " + " · ".join(
+            f"{'filled' if at == 0 else 'open'}: load reports {reports(kind)}"
+            for at, kind in enumerate(kinds)
+        )
+    note(figure, words)
     if excess:
         _optimum(axes, rows)
     else:
         _network(axes, rows)
-    if len(kinds) > 1:
-        marks = [
-            Line2D([], [], color=INK, marker="o", linestyle="", markerfacecolor=INK if at == 0 else "white")
-            for at in range(len(kinds))
-        ]
-        words = [f"load reports {reports(kind)}" for kind in kinds]
-        figure.legend(marks, words, loc="outside upper right", ncols=min(3, len(kinds)))
-    return figure
+    worst = rows.groupby("policy")["headroom"].max()
+    needs = [f"{name} {utilisation(worst[name])}" for name in order[::-1]]
+    late = "" if len(kinds) == 1 else ", the most of its load reports"
+    return describe(
+        figure,
+        f"{'Excess' if excess else 'Headroom'} that each rule needs above the {above} at "
+        f"{100 * first['risk']:g} % risk{late}: {listed(needs)}.",
+    )
 
 
 def _dot(axes: Axes, y: float, row: pd.Series, look: dict, filled: bool) -> None:
@@ -100,7 +106,7 @@ def _dot(axes: Axes, y: float, row: pd.Series, look: dict, filled: bool) -> None
         xerr=[[row["headroom"] - row["lower"]], [row["upper"] - row["headroom"]]],
         color=look["color"],
         marker=look["marker"],
-        markerfacecolor=look["color"] if filled else "white",
+        markerfacecolor=look["color"] if filled else PAPER,
         markersize=7,
         capsize=3,
         linewidth=1.4,
@@ -127,7 +133,7 @@ def _network(axes: Axes, rows: pd.DataFrame) -> None:
         xycoords=("data", "axes fraction"),
         xytext=(3, 2),
         textcoords="offset points",
-        color="#555555",
+        color=INK,
         annotation_clip=False,
     )
 
@@ -139,6 +145,6 @@ def _optimum(axes: Axes, rows: pd.DataFrame) -> None:
         xycoords=("data", "axes fraction"),
         xytext=(0, 2),
         textcoords="offset points",
-        color="#555555",
+        color=INK,
         annotation_clip=False,
     )

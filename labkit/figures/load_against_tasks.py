@@ -3,13 +3,14 @@
 import numpy as np
 import pandas as pd
 from matplotlib.axes import Axes
-from matplotlib.figure import Figure
-from matplotlib.ticker import FuncFormatter, LogLocator, MaxNLocator, NullLocator
+from matplotlib.ticker import MaxNLocator
 
 from labkit.analysis.headroom import headroom
 from labkit.analysis.wording import reports
 from labkit.checks import check_member
-from labkit.figures.style import label_ends, looks, plain, styled
+from labkit.figures.labels import label_ends, listed, note
+from labkit.figures.looks import looks
+from labkit.figures.style import COLUMNS, Drawing, counted, describe, log_ticks, plain, side_by_side, styled
 
 BAND = (0.05, 0.95)
 MEASURE_ABOVE = {"mean": "gap", "optimum": "excess"}
@@ -18,7 +19,7 @@ MEASURE_ABOVE = {"mean": "gap", "optimum": "excess"}
 @styled
 def load_against_tasks(
     measures: pd.DataFrame, *, risk: float, confidence: float = 0.95, above: str = "mean"
-) -> Figure:
+) -> Drawing:
     """Draw the gap against the number of tasks, one line a policy and one panel a kind of information.
 
     The line is the median over replicates, the band holds the middle 90 % of them, and the marker above is
@@ -50,8 +51,7 @@ def load_against_tasks(
     needed = headroom(last, risk=risk, confidence=confidence, of=of).set_index(["policy", "information"])
     kinds = sorted(table["information"].unique())
     style = looks(table["policy"])
-    figure = Figure(figsize=(4.2 * len(kinds) + 2.6, 4.6), layout="constrained")
-    panels = figure.subplots(1, len(kinds), sharey=True, squeeze=False)[0]
+    figure, panels = side_by_side(len(kinds), sharey=True)
     bands = table.groupby(["information", "policy", "tasks"])[of].quantile(np.array([*BAND, 0.5])).unstack()
     wide = bands.to_numpy().max() > 5 * bands[0.5].to_numpy().min() and bands.to_numpy().min() > 0
     for axes, kind in zip(panels, kinds, strict=True):
@@ -64,19 +64,25 @@ def load_against_tasks(
         _axes(axes, moments, wide, float(bands.to_numpy().min()))
         axes.set_title(f"load reports {reports(kind)}" if len(kinds) > 1 else "")
         axes.ends = ends
-    panels[0].set_ylabel(f"{of}: highest utilisation (load ÷ capacity) − {above}")
+    for axes in panels[::COLUMNS]:
+        axes.set_ylabel(f"{of}: highest utilisation (load ÷ capacity) − {above}")
     percent = f"{100 * risk:g} %"
-    figure.suptitle(
+    note(
+        figure,
         f"line: median · band: middle 90 % of replicates · end marker: {of} at {percent} risk, "
         f"{100 * confidence:g} % limits",
-        fontsize=9,
-        x=0.01,
-        ha="left",
     )
     figure.draw_without_rendering()
     for axes in panels:
         label_ends(axes, float(table["tasks"].max()) * 1.05, axes.ends, style)
-    return figure
+    medians = bands[0.5].xs(table["tasks"].max(), level="tasks").groupby("policy").max()
+    reached = [f"{name} {value:.3g}" for name, value in medians.items()]
+    late = "" if len(kinds) == 1 else ", the most of its load reports"
+    return describe(
+        figure,
+        f"The {of} of each rule in utilisation against the tasks placed, up to {table['tasks'].max():,}; the "
+        f"median at the end{late}: {listed(reached)}.",
+    )
 
 
 def _line(axes: Axes, rows: pd.DataFrame, needed: pd.Series, look: dict) -> None:
@@ -100,15 +106,13 @@ def _axes(axes: Axes, tasks: pd.Index, wide: bool, lowest: float) -> None:
     axes.set_xscale("log")
     if wide:
         axes.set_yscale("log")
-        axes.yaxis.set_major_locator(LogLocator(subs=(1, 2, 5)))
-        axes.yaxis.set_minor_locator(NullLocator())
+        log_ticks(axes.yaxis, *axes.get_ylim(), 8)
     else:
         axes.set_ylim(bottom=min(0.0, lowest * 1.05))
         axes.yaxis.set_major_locator(MaxNLocator(6))
     axes.yaxis.set_major_formatter(plain)
     axes.set_xlim(float(tasks.min()) * 0.95, float(tasks.max()) * 1.12)
-    axes.xaxis.set_major_locator(LogLocator(subs=(1, 2, 5)))
-    axes.xaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:,.0f}"))
-    axes.xaxis.set_minor_locator(NullLocator())
+    log_ticks(axes.xaxis, float(tasks.min()) * 0.95, float(tasks.max()) * 1.12, 5)
+    axes.xaxis.set_major_formatter(counted)
     axes.set_xlabel("tasks placed")
     axes.grid(True)

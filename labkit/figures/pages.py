@@ -3,7 +3,6 @@
 import json
 import math
 from collections.abc import Mapping
-from io import BytesIO
 from pathlib import Path
 from typing import Any
 
@@ -14,25 +13,26 @@ from matplotlib.figure import Figure
 
 from labkit.analysis.survey_words import rerouted_table
 from labkit.errors import InputError
-from labkit.figures.style import save_figure
+from labkit.figures.saving import save_figure
+from labkit.figures.style import ON_PAGE, Drawing, alt_text
 from labkit.survey.facts import Survey
 from labkit.text import harmless
 
-DOTS_PER_INCH = 144
+# Kinds of files that an answer's figures are written as.
+KINDS = (".png", ".svg")
 
 
-def picture(figure: Figure, alt: str) -> Image:
+def picture(figure: Drawing, alt: str = "") -> Image:
     """Return a figure as an image for a notebook's page.
 
     Parameters
     ----------
-    figure : matplotlib.figure.Figure
+    figure : Drawing
+        Any figure of the kit.
     alt : str
-        What it shows, for readers who cannot see it.
+        What it shows, for readers who cannot see it; empty: the figure's own sentence.
     """
-    stream = BytesIO()
-    figure.savefig(stream, format="png", dpi=DOTS_PER_INCH, metadata={"Software": None})
-    return Image(stream.getvalue(), width=round(100 * figure.get_figwidth()), alt=alt)
+    return Image(figure.png(), width=round(ON_PAGE * figure.get_figwidth()), alt=alt or alt_text(figure))
 
 
 def write_answer_files(
@@ -143,7 +143,7 @@ def _write(
             (folder / name).write_text(text + "\n", encoding="utf-8", newline="\n")
             written.append(folder / name)
         for name, figure in figures.items():
-            written += save_figure(figure, folder, name)
+            written += [save_figure(figure, folder / f"{name}{kind}") for kind in KINDS]
     except OSError as error:
         raise InputError(
             f"output {folder} cannot be written ({error.strerror}); name another folder."

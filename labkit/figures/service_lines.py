@@ -5,10 +5,10 @@ from collections.abc import Iterable, Sequence
 import numpy as np
 import pandas as pd
 from matplotlib.axes import Axes
-from matplotlib.ticker import FixedLocator, LogLocator, NullFormatter, NullLocator
+from matplotlib.ticker import FixedLocator, NullLocator
 
 from labkit.errors import InputError
-from labkit.figures.style import plain
+from labkit.figures.style import log_ticks, plain
 
 
 def check_columns(table: pd.DataFrame, columns: Iterable[str], source: str) -> None:
@@ -24,7 +24,7 @@ def line_with_limits(
     """Draw estimates with their limits against places; return the height of the last one."""
     height = rows["estimate"].to_numpy()
     spans = np.array([height - rows["lower"], rows["upper"] - height])
-    axes.errorbar(places, height, yerr=np.maximum(spans, 0), capsize=2, linewidth=1.4, markersize=5, **look)
+    axes.errorbar(places, height, yerr=np.maximum(spans, 0), capsize=2, **look)
     return float(height[-1])
 
 
@@ -32,9 +32,7 @@ def wide_heights(axes: Axes, low: float, high: float) -> None:
     """Use a logarithmic axis where heights span more than a factor of 8; else begin at 0."""
     if low > 0 and high > 8 * low:
         axes.set_yscale("log")
-        axes.yaxis.set_major_locator(LogLocator(subs=(1, 2, 5)))
-        axes.yaxis.set_minor_formatter(NullFormatter())
-        axes.yaxis.set_minor_locator(NullLocator())
+        log_ticks(axes.yaxis, *axes.get_ylim(), 9)
     else:
         axes.set_ylim(bottom=0.0)
     axes.yaxis.set_major_formatter(plain)
@@ -46,8 +44,3 @@ def ticks_at(axes: Axes, places: Iterable[float], words: Iterable[str] | None = 
     axes.xaxis.set_major_locator(FixedLocator(ticks))
     axes.xaxis.set_minor_locator(NullLocator())
     axes.set_xticks(ticks, [f"{tick:g}" for tick in ticks] if words is None else list(words))
-
-
-def note(figure: object, text: str) -> None:
-    """Write how a figure is to be read above it."""
-    figure.suptitle(text, fontsize=9, x=0.01, ha="left")  # type: ignore[attr-defined]

@@ -3,11 +3,12 @@
 import numpy as np
 import pandas as pd
 from matplotlib.axes import Axes
-from matplotlib.figure import Figure
 
 from labkit.analysis.herding import worse_from
-from labkit.figures.service_lines import check_columns, line_with_limits, note, ticks_at, wide_heights
-from labkit.figures.style import FAINT, INK, label_ends, looks, styled
+from labkit.figures.labels import label_ends, listed, note
+from labkit.figures.looks import looks_of_networks
+from labkit.figures.service_lines import check_columns, line_with_limits, ticks_at, wide_heights
+from labkit.figures.style import FAINT, INK, TALL, Drawing, describe, sheet, styled
 
 NEEDED = ("network", "policy", "age", "estimate", "lower", "upper")
 
@@ -15,7 +16,7 @@ NEEDED = ("network", "policy", "age", "estimate", "lower", "upper")
 @styled
 def sojourn_against_age(
     table: pd.DataFrame, *, of: str = "mean sojourn", blind: str = "one-choice", confidence: float = 0.95
-) -> Figure:
+) -> Drawing:
     """Draw a measure, relative to the rule that looks at no loads, against the age of the reports.
 
     Parameters
@@ -41,8 +42,8 @@ def sojourn_against_age(
     check_columns(table, NEEDED, "the table of against_blind")
     networks = list(dict.fromkeys(table["network"]))
     rules = table["policy"].nunique()
-    style = looks(table["network"] if rules == 1 else table["network"] + ", " + table["policy"])
-    figure = Figure(figsize=(7.6, 4.6), layout="constrained")
+    style = looks_of_networks(table["network"] if rules == 1 else table["network"] + ", " + table["policy"])
+    figure = sheet(TALL)
     axes = figure.subplots()
     ages = np.sort(table["age"].unique())
     ends = {}
@@ -64,10 +65,15 @@ def sojourn_against_age(
     axes.set_xlabel("time from one report of the loads to the next, in mean service times")
     axes.set_ylabel(f"{of} ÷ that of {blind}")
     axes.grid(True)
-    note(figure, f"bars: {100 * confidence:g} % limits of the paired difference; marks are moved sideways")
+    note(figure, f"bars: {100 * confidence:g} % limits of the paired difference · marks are moved sideways")
     figure.draw_without_rendering()
     label_ends(axes, ages[-1] * 1.05, ends, style)
-    return figure
+    reached = [f"{name} {height:.3g}" for name, height in ends.items()]
+    return describe(
+        figure,
+        f"{of} divided by that of {blind}, against the age of the load reports in mean service times; at the "
+        f"oldest, {ages[-1]:.3g}: {listed(reached)}.",
+    )
 
 
 def _crossings(axes: Axes, found: pd.DataFrame) -> None:

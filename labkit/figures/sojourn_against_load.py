@@ -3,12 +3,13 @@
 from collections.abc import Sequence
 
 import pandas as pd
-from matplotlib.figure import Figure
 
 from labkit.analysis.service_words import measure_words
 from labkit.errors import InputError
-from labkit.figures.service_lines import check_columns, line_with_limits, note, ticks_at, wide_heights
-from labkit.figures.style import label_ends, looks, styled
+from labkit.figures.labels import in_lines, label_ends, listed, note
+from labkit.figures.looks import looks
+from labkit.figures.service_lines import check_columns, line_with_limits, ticks_at, wide_heights
+from labkit.figures.style import Drawing, describe, side_by_side, styled
 
 NEEDED = ("policy", "load_factor", "measure", "estimate", "lower", "upper", "confidence")
 
@@ -16,7 +17,7 @@ NEEDED = ("policy", "load_factor", "measure", "estimate", "lower", "upper", "con
 @styled
 def sojourn_against_load(
     limits: pd.DataFrame, *, measures: Sequence[str], unit: str, limit: float | None = None
-) -> Figure:
+) -> Drawing:
     """Draw measures against the load factor, one line a rule and one panel a measure.
 
     Parameters
@@ -44,8 +45,7 @@ def sojourn_against_load(
         raise InputError("table has several rows for one policy, load and measure; keep one fleet.")
     style = looks(limits["policy"])
     loads = sorted(limits["load_factor"].unique())
-    figure = Figure(figsize=(4.4 * len(measures) + 1.4, 4.4), layout="constrained")
-    panels = figure.subplots(1, len(measures), squeeze=False)[0]
+    figure, panels = side_by_side(len(measures), sharey=False)
     step = (loads[-1] - loads[0]) or 0.1 * loads[0]
     right = loads[-1] + 0.06 * step
     for axes, measure in zip(panels, measures, strict=True):
@@ -61,11 +61,17 @@ def sojourn_against_load(
         ticks_at(axes, loads)
         axes.set_xlim(loads[0] - 0.06 * step, right)
         axes.set_xlabel("load factor (arriving work ÷ capacity)")
-        axes.set_title(measure_words(measure, unit), fontsize=10)
+        axes.set_ylabel(in_lines(measure_words(measure, unit), 46))
         axes.grid(True)
     ending = f" · no rule serves {limit:.3g} or more" if limit is not None and limit < 1 else ""
     note(figure, f"bars: {100 * limits['confidence'].iloc[0]:g} % limits{ending}")
     figure.draw_without_rendering()
     for axes in panels:
         label_ends(axes, loads[-1], axes.ends, style)
-    return figure
+    first = measure_words(measures[0], unit)
+    reached = [f"{name} {height:.3g}" for name, height in panels[0].ends.items()]
+    return describe(
+        figure,
+        f"{' and '.join(measure_words(each, unit) for each in measures)}, against the load factor from "
+        f"{loads[0]:g} to {loads[-1]:g}; at its last load each rule reaches, as {first}: {listed(reached)}.",
+    )

@@ -261,7 +261,7 @@ class TestFigure:
         ]
         named = {text.get_text() for text in panels[0].texts}
         assert named == {"ring", "complete"}
-        assert "open markers: after 200 tasks a server" in figure.get_suptitle()
+        assert "open markers: after 200 tasks a server" in figure.get_suptitle().replace("\n", " ")
         colours = [{text.get_text(): text.get_color() for text in axes.texts} for axes in panels]
         assert colours[0]["ring"] == colours[1]["ring"] == colours[2]["ring"]
 
