@@ -13,6 +13,7 @@ from labkit.analysis.block_bootstrap import block_bootstrap
 from labkit.analysis.capacity_search import Share, find_scale
 from labkit.analysis.headroom import headroom, replicates_needed
 from labkit.analysis.service_limits import service_limits
+from labkit.cards.shown import Shown
 from labkit.checks import check_fraction, check_positive, nearest
 from labkit.engine.failures import checked_failures
 from labkit.engine.placement import Outcome
@@ -35,7 +36,7 @@ RESAMPLES = 1_999
 
 
 @dataclass(frozen=True)
-class Provision:
+class Provision(Shown):
     """The capacity that holds a risk down, and what was run to find it.
 
     Attributes

@@ -13,7 +13,7 @@ PACKAGE = Path(__file__).parents[1] / "labkit"
 
 # From the top down; a line is one room or a few that share a floor.
 FLOORS = [
-    {"errors", "checks", "text", "memory", "files"},
+    {"errors", "checks", "text", "memory", "files", "cards"},
     {"sources"},
     {"randomness"},
     {"sharing"},

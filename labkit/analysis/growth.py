@@ -26,6 +26,7 @@ from labkit.analysis.growth_sizes import (
     sizes_and_values,
 )
 from labkit.analysis.growth_words import conclusions
+from labkit.cards.shown import Shown
 from labkit.checks import check_fraction, check_whole
 from labkit.errors import InputError
 from labkit.randomness import seed_sequence
@@ -35,7 +36,7 @@ _NOTABLE = 0.05
 
 
 @dataclass(frozen=True, eq=False, repr=False)
-class GrowthFit:
+class GrowthFit(Shown):
     """Fitted laws of growth; made by `fit_growth`.
 
     Attributes

@@ -8,6 +8,7 @@ from typing import Any, NamedTuple
 import numpy as np
 import pandas as pd
 
+from labkit.cards.shown import Shown
 from labkit.compiled import CONFIG, compiled, inlined, specialise
 from labkit.engine.arrivals import Arrivals, arrivals_of, read_only
 from labkit.engine.information import Fresh, Information
@@ -28,7 +29,7 @@ NEAR_BYTES = 1 << 20
 
 
 @dataclass(frozen=True)
-class Outcome:
+class Outcome(Shown):
     """What `place` measured.
 
     Attributes

@@ -7,6 +7,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from labkit.cards.shown import Shown
 from labkit.engine import queues as q
 from labkit.engine.service import INTERVAL, Progress
 from labkit.fleet.model import Fleet
@@ -86,7 +87,7 @@ def _edges(bins: np.ndarray) -> np.ndarray:
 
 
 @dataclass(frozen=True)
-class ServiceOutcome:
+class ServiceOutcome(Shown):
     """What `labkit.serve`, or `labkit.replay` of a trace with durations, measured.
 
     Attributes

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import pandas as pd
 
+from labkit.cards.shown import Shown
 from labkit.errors import InputError
 from labkit.fleet.choices import checked_options
 from labkit.fleet.digest import fleet_digest
@@ -38,7 +39,7 @@ class CompleteLaw:
     distinct: bool
 
 
-class Fleet:
+class Fleet(Shown):
     """Servers, and the choices that arriving work has among them.
 
     Parameters

@@ -10,6 +10,7 @@ from typing import Any
 
 import pandas as pd
 
+from labkit.cards.shown import Shown
 from labkit.errors import InputError
 from labkit.plans.schema import FILE as SCHEMA
 from labkit.plans.tables import csv_bytes
@@ -19,7 +20,7 @@ DISPATCHER = Path(__file__).with_name("dispatcher.py")
 
 
 @dataclass(frozen=True, repr=False)
-class Plan:
+class Plan(Shown):
     """All that a dispatcher needs to place tasks by a policy, as a header and plain tables.
 
     Attributes

@@ -9,6 +9,7 @@ import numpy as np
 import pandas as pd
 from scipy.linalg import LinAlgWarning
 
+from labkit.cards.shown import Shown
 from labkit.checks import check_fraction, check_whole
 from labkit.engine.placement import place_loads, zero_loads
 from labkit.errors import InputError
@@ -43,7 +44,7 @@ SIMULATED = 500
 
 
 @dataclass(frozen=True)
-class Forecast:
+class Forecast(Shown):
     """What `forecast` found; gaps and spread in utilisation.
 
     Attributes

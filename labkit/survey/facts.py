@@ -6,6 +6,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from labkit.cards.shown import Shown
 from labkit.compiled import kept
 from labkit.errors import InputError
 from labkit.fleet.model import ABSENT, Fleet, check_fleet
@@ -41,7 +42,7 @@ MEANINGS = {
 }
 
 
-class Survey:
+class Survey(Shown):
     """Exact facts about a fleet; made by `survey`.
 
     Attributes
