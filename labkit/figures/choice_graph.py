@@ -171,10 +171,12 @@ def choice_graph(
     ]
     marks = f"; {in_all:,} ringed as the bottleneck" if in_all else ""
     marks += f"; {len(dashed):,} advised links dashed" if len(dashed) else ""
+    begin = f"{title}: choice" if title else "Choice"
     return describe(
         figure,
-        f"Choice graph of {fleet.size:,} servers coloured by {measure}, from {write(float(values.min()))} to "
-        f"{write(float(values.max()))}, mean {write(mean)}; fullest: {listed(fullest)}{marks}.",
+        f"{begin} graph of {fleet.size:,} servers coloured by {measure}, from "
+        f"{write(float(values.min()))} to {write(float(values.max()))}, mean {write(mean)}; "
+        f"fullest: {listed(fullest)}{marks}.",
     )
 
 

@@ -6,6 +6,8 @@ from collections.abc import Iterable, Sequence
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.font_manager import FontProperties
+from matplotlib.lines import Line2D
+from matplotlib.text import Annotation
 from matplotlib.textpath import TextPath
 
 from labkit.figures.style import WIDTH, WORDS, Drawing, for_words
@@ -13,7 +15,9 @@ from labkit.policies.naming import shown_name
 
 # Characters of a line of a label; points from line to line.
 LONGEST, LINE = 26, 1.35 * WORDS
-_MOST_LINES = 3
+_MOST_LINES, _MOST_BESIDE = 3, 7
+# What a place costs where a name cannot stand.
+NO_PLACE = 1e9
 
 
 def spread(
@@ -112,6 +116,8 @@ def _make_room(axes: Axes, needed: float) -> None:
 def label_lines(axes: Axes, lines: dict[str, np.ndarray], looks_of: dict[str, dict]) -> None:
     """Write each name beside its line, where it covers least of all lines and no other name.
 
+    Where there is no such place for all of them, or they are many, there is a legend at the side instead.
+
     Parameters
     ----------
     axes : matplotlib.axes.Axes
@@ -121,24 +127,39 @@ def label_lines(axes: Axes, lines: dict[str, np.ndarray], looks_of: dict[str, di
     looks_of : dict of str to dict
         Name → look, of which the colour is taken.
     """
+    if len(lines) > _MOST_BESIDE:
+        _legend(axes, list(lines), looks_of)
+        return
     dots = axes.figure.dpi / 72
     paths = {name: _along(axes.transData.transform(line)) for name, line in lines.items()}
     placed: list[np.ndarray] = []
+    written: list[Annotation] = []
     for name, path in paths.items():
         words = in_lines(shown_name(name))
-        size = np.array([width_of(words) * 72, LINE * (words.count("\n") + 1)]) * dots
+        size = np.array([width_of(words) * 72 + 3, LINE * (words.count("\n") + 1) + 3]) * dots
         boxes = [
             _box(point, size, side, dots) for point in path[:: max(1, len(path) // 60)] for side in (1, -1)
         ]
         others = [other for each, other in paths.items() if each != name]
         inked = np.vstack([*others, np.zeros((0, 2))])
         costs = [_cost(box, axes, path, inked, placed) for box in boxes]
+        if min(costs) >= NO_PLACE:
+            for label in written:
+                label.remove()
+            _legend(axes, list(paths), looks_of)
+            return
         box = boxes[int(np.argmin(costs))]
         placed.append(box)
         at = axes.transData.inverted().transform((box[0], box[1] + size[1] / 2))
-        axes.annotate(
-            words, tuple(at), va="center", color=for_words(looks_of[name]["color"]), annotation_clip=False
-        )
+        colour = for_words(looks_of[name]["color"])
+        written.append(axes.annotate(words, tuple(at), va="center", color=colour, annotation_clip=False))
+
+
+def _legend(axes: Axes, names: list[str], looks_of: dict[str, dict]) -> None:
+    figure = axes.get_figure(root=True)
+    assert figure is not None
+    samples = [Line2D([], [], **looks_of[name]) for name in names]
+    figure.legend(samples, [in_lines(shown_name(name)) for name in names], loc="outside right upper")
 
 
 def _along(points: np.ndarray) -> np.ndarray:
@@ -164,7 +185,7 @@ def _cost(
         for other in placed
     )
     if not inside or over:
-        return 1e9 if over else 1e6
+        return NO_PLACE
     covered = np.count_nonzero(_away(box, own) == 0.0)
     distance = _away(box, others)
     covered += np.count_nonzero(distance == 0.0)
@@ -190,7 +211,7 @@ def width_of(words: str, size: float = WORDS, weight: str = "normal") -> float:
 def wrapped(words: str, room: float, size: float = WORDS, weight: str = "normal") -> str:
     """Break words into lines that fit a width in inches."""
     lines = [""]
-    for word in words.split(" "):
+    for word in words.replace(" ·", "\u00a0·").split(" "):
         longer = f"{lines[-1]} {word}".strip()
         if width_of(longer, size, weight) <= room:
             lines[-1] = longer
@@ -215,7 +236,7 @@ def short(name: str, longest: int = 22) -> str:
 
 def note(figure: Drawing, words: str) -> None:
     """Write above a figure how it is to be read."""
-    figure.suptitle(wrapped(words, WIDTH - 0.2), fontsize=WORDS, x=0.008, ha="left", fontweight="normal")
+    figure.suptitle(wrapped(words, WIDTH - 0.2), fontsize=WORDS, x=0.011, ha="left", fontweight="normal")
 
 
 def listed(names: Iterable[str], most: int = 6) -> str:

@@ -39,9 +39,9 @@ FILL = LinearSegmentedColormap.from_list("fill", ["#E8F3FA", "#56B4E9", "#0072B2
 
 # Type in points, three steps: titles, what axes measure, all other words.
 TITLE, LABEL, WORDS = 11, 10, 9
-# Inches. A page shows 100 dots an inch and JupyterLab has about 900 beside its file list, so that nothing
-# is scaled down on a screen of 1280 × 800; on A4 paper the smallest words are then 6.4 points.
-WIDTH = 8.8
+# Inches. A page shows 100 dots an inch and JupyterLab has 848 beside its file list on a screen 1280 wide, so
+# that nothing is scaled down; over the width of A4 paper the smallest words are then 6.8 points.
+WIDTH = 8.4
 LOW, TALL = 3.4, 4.4
 COLUMNS = 2
 ON_PAGE = 100
@@ -76,7 +76,10 @@ SETTINGS: dict[str, Any] = {
     "font.size": WORDS,
     "lines.linewidth": 1.6,
     "lines.markersize": 5,
+    "figure.constrained_layout.w_pad": 0.09,
+    "figure.constrained_layout.h_pad": 0.09,
     "legend.frameon": False,
+    "legend.edgecolor": PALE,
     "legend.fontsize": WORDS,
 }
 

@@ -291,6 +291,14 @@ def test_very_many_blocks_and_parts_are_gathered(drawn):
     assert mean.sum() * 100 == pytest.approx(arrivals["tasks"].sum())
 
 
+def test_lines_without_room_for_their_names_get_a_legend(drawn):
+    plain, crowded = drawn["queue_tails"]
+    assert plain.legends == []
+    assert len(plain.axes[0].texts) == len(served.RULES)
+    assert list(crowded.axes[0].texts) == []
+    assert len(crowded.legends[0].get_texts()) == len(MANY)
+
+
 def test_names_of_tails_stand_nearest_to_their_own_lines(drawn):
     figure = drawn["queue_tails"][0]
     axes = figure.axes[0]
@@ -301,7 +309,7 @@ def test_names_of_tails_stand_nearest_to_their_own_lines(drawn):
         corners = np.array([[box.x0, box.y0], [box.x1, box.y1], [box.x0, box.y1], [box.x1, box.y0]])
         near = [min(np.hypot(*(path - corner).T).min() for corner in corners) for path in paths]
         own = names.index(text.get_text())
-        assert near[own] < 10 * figure.dpi / 72
+        assert near[own] < 12 * figure.dpi / 72
         # The last two lines lie closer together than a name is high.
         assert int(np.argmin(near)) == own or own >= 2
 

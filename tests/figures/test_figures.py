@@ -133,7 +133,8 @@ def test_the_users_own_settings_do_not_show(records, tmp_path):
 
 def test_equal_figures_give_equal_files(records, table, tmp_path):
     first, second = everything(records, table), everything(records, table)
-    for name, figure in first.items():
+    for name in ("marked graph", "age", "levels"):
+        figure = first[name]
         one = save_figure(figure, tmp_path / f"{name}.svg")
         assert one.read_bytes() == save_figure(second[name], tmp_path / f"{name}-again.svg").read_bytes()
 
