@@ -82,22 +82,28 @@ def _looks(names: Iterable[str], known: Mapping[str, tuple[str, int]]) -> dict[s
     free = [PURPLE, *(colour for colour in COLOURS if colour not in {*taken, PURPLE})]
     unknown = [name for name in wanted if kinds[name] is None]
     colours = {name: free[at % len(free)] for at, name in enumerate(unknown)}
-    used: set[int] = set()
+    used: set[tuple[str, int]] = set()
     found = {}
     for name in wanted:
         kind = kinds[name]
-        shape = kind[1] if kind and name in known else _first_free(name, used)
-        used.add(shape)
+        colour = kind[0] if kind else colours[name]
+        shape = kind[1] if kind and name in known else _first_free(name, colour, used)
+        used.add((colour, shape))
         found[name] = {
-            "color": kind[0] if kind else colours[name],
+            "color": colour,
             "marker": MARKERS[shape],
             "linestyle": DASHES[shape],
         }
     return {name: found[name] for name in sorted(found)}
 
 
-def _first_free(name: str, used: set[int]) -> int:
-    """Return a shape that depends on the name alone, unless another name of the figure has it."""
+def _first_free(name: str, colour: str, used: set[tuple[str, int]]) -> int:
+    """Return a shape that depends on the name alone, unless another name of the figure has it.
+
+    Where all shapes are taken, one that no other name of this colour has.
+    """
     first = hashlib.sha256(name.encode("utf-8", "replace")).digest()[0]
     places = [(first + step) % len(MARKERS) for step in range(len(MARKERS))]
-    return next((place for place in places if place not in used), places[0])
+    taken, alike = {shape for _, shape in used}, {shape for each, shape in used if each == colour}
+    free = [place for place in places if place not in taken]
+    return next(iter([*free, *(place for place in places if place not in alike), places[0]]))

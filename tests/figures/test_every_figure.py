@@ -263,6 +263,8 @@ def test_a_rule_looks_the_same_in_every_figure():
     assert len({each["marker"] for each in variants.values()}) == 4
     own = looks([*BUILT_IN, *(f"my rule {at}" for at in range(20))])
     assert len(own) == len(BUILT_IN) + 20
+    crowded = looks(MANY)
+    assert len({(look["color"], look["marker"]) for look in crowded.values()}) == len(MANY)
     assert looks_of_networks(["a ring"])["a ring"] == looks_of_networks(NETWORKS)["ring"]
 
 
@@ -325,6 +327,7 @@ def test_files_repeat_to_the_byte_hold_words_and_no_date(drawn, tmp_path, kind):
     if kind == "svg":
         text = content.decode("utf-8")
         assert f"<title>{alt_text(figure)}</title>" in text
+        assert "'DejaVu Sans', Verdana, sans-serif" in text
         assert ">share of the total capacity, fullest first</text>" in text
     if kind == "pdf":
         assert b"/Type3" not in content
