@@ -3,29 +3,23 @@
 import hashlib
 import inspect
 import re
-import textwrap
-from collections.abc import Callable
+from collections.abc import Callable, Iterable, Mapping
 from functools import lru_cache
 from typing import Any
 
 import numba
 import numpy as np
-from numba.core.errors import NumbaError
 
+from labkit.checks import nearest
 from labkit.compiled import CONFIG, OPTIONS, bind, borrowed, compiled, unit_interval
 from labkit.errors import InputError
 from labkit.fleet.model import Fleet
 from labkit.policies.base import Policy
+from labkit.policies.compile_errors import kind_in_words, reason
+from labkit.policies.outside import fingerprints, source_of
 
 ARGUMENTS = ("options", "loads", "capacity", "coin")
-_PLAIN = "use numbers, comparisons, loops and the given arrays only"
 _SOURCES: dict[str, str] = {}
-
-# The line of numba's report that says what is wrong; its other lines say how it got there.
-_TELLING = re.compile(
-    r"(name '\w+' is not defined|Untyped global name '\w+'|Unknown attribute '\w+'|Can't unify return type"
-    r"[^\n]*|No implementation of function [^\n]*|Use of unsupported[^\n]*)"
-)
 
 
 @compiled
@@ -49,6 +43,7 @@ class OwnRule(Policy):
         self.function = function
         self.source = source_of(function) if source is None else source
         self._kept: bytes | None = None
+        self._outside: dict[str, str] = {}
         self.__doc__ = function.__doc__
         # A user's index is checked: a wrong one must not read somebody else's memory.
         self._compiled = numba.njit(boundscheck=True, **OPTIONS)(function)
@@ -82,31 +77,44 @@ class OwnRule(Policy):
         if CONFIG.DISABLE_JIT:
             return
 
-        array: Any = numba.types.Array
-        kinds = (np.uint32, load, np.float64)
-        arrays = [array(numba.from_dtype(np.dtype(kind)), 1, "C", readonly=True) for kind in kinds]
-        signature = (*arrays, numba.float64)
+        signature = self._signature(load)
         try:
             self._compiled.compile(signature)
-        except NumbaError as error:
-            refusal = self.explain(error)
-            assert refusal is not None
-            raise refusal from error
+        except Exception as error:  # numba lets AttributeError, ValueError and others of its own out, too
+            raise InputError(
+                f"policy {self.name} cannot be compiled: {reason(self.function, error, ARGUMENTS)}."
+            ) from error
         returned = self._compiled.overloads[signature].signature.return_type
         if not isinstance(returned, numba.types.Integer | numba.types.Boolean):
             raise InputError(
-                f"policy {self.name} returns {returned}; it must return a whole number on every path, the "
-                "position of the picked server within options."
+                f"policy {self.name} returns {_return_words(returned)}; it must return a whole number on "
+                "every path, the position of the picked server within options."
             )
+
+    @staticmethod
+    def _signature(load: type) -> tuple:
+        array: Any = numba.types.Array
+        kinds = (np.uint32, load, np.float64)
+        arrays = [array(numba.from_dtype(np.dtype(kind)), 1, "C", readonly=True) for kind in kinds]
+        return (*arrays, numba.float64)
+
+    def pick(self, options: np.ndarray, loads: np.ndarray, capacity: np.ndarray, coin: float) -> int:
+        """Return what the compiled rule picks, whatever it is; arrays are C-contiguous and read-only."""
+        return int(self._compiled(options, loads, capacity, coin))
+
+    def anew(self) -> "OwnRule":
+        """Return the same rule, to be compiled once more."""
+        return OwnRule(self.function, self.source)
+
+    def changed_outside(self) -> list[str]:
+        """Return the names from outside whose values are no longer those that the rule was compiled with."""
+        if self._kept is None:
+            return []
+        now = fingerprints(self.function)
+        return sorted(name for name in self._outside.keys() | now if self._outside.get(name) != now.get(name))
 
     def explain(self, error: Exception) -> InputError | None:
         """Return the refusal for an error inside the rule."""
-        if isinstance(error, NumbaError):
-            told = _TELLING.search(str(error))
-            reason = told.group(0) if told else str(error).strip().splitlines()[-1]
-            if "setitem" in reason:
-                reason = "it changes one of its arguments"
-            return InputError(f"policy {self.name} cannot be compiled: {reason.strip(' .')}; {_PLAIN}.")
         if isinstance(error, IndexError):
             return InputError(f"policy {self.name} looked beyond the end of an array: {error}.")
         return InputError(f"policy {self.name} failed with {type(error).__name__}: {error}.")
@@ -127,6 +135,7 @@ class OwnRule(Policy):
         if self._kept is None:
             if _SOURCES.get(self.name) == self.source:
                 self.source = _SOURCES[self.name] = source_of(self.function)
+            self._outside = fingerprints(self.function)
             self._kept = packed(self.function)
 
     def __eq__(self, other: object) -> bool:
@@ -185,10 +194,15 @@ def policy(function: Callable) -> OwnRule:
     name = function.__name__
     if not re.fullmatch(r"[A-Za-z]\w*", name):
         raise InputError(f"policy got a function called {name!r}; give it a name that begins with a letter.")
-    arguments = tuple(inspect.signature(function).parameters)
-    if arguments != ARGUMENTS:
+    signature = inspect.signature(function)
+    plain = all(each.kind == each.POSITIONAL_OR_KEYWORD for each in signature.parameters.values())
+    if tuple(signature.parameters) != ARGUMENTS or not plain:
+        raise InputError(f"policy {name} takes {signature}; it must take ({', '.join(ARGUMENTS)}).")
+    if function.__code__.co_flags & (
+        inspect.CO_GENERATOR | inspect.CO_COROUTINE | inspect.CO_ASYNC_GENERATOR
+    ):
         raise InputError(
-            f"policy {name} takes ({', '.join(arguments)}); it must take ({', '.join(ARGUMENTS)})."
+            f"policy {name} is a generator or a coroutine; use return instead of yield or async."
         )
     if name.replace("_", "-") in BUILT_IN:
         raise InputError(f"policy {name} has the name of a built-in policy; give it another name.")
@@ -197,23 +211,72 @@ def policy(function: Callable) -> OwnRule:
     return OwnRule(function)
 
 
-def source_of(function: Callable) -> str:
-    """Return the text of a rule as it is recorded: its source, and the values it takes from outside."""
-    code = function.__code__
-    try:
-        text = textwrap.dedent(inspect.getsource(function))
-    except (OSError, TypeError):
-        text = ""
-    # For code made from a string some Python versions return the lines of another file.
-    if f"def {code.co_name}(" not in text:
-        constants = [value for value in code.co_consts if not inspect.iscode(value)]
-        digest = hashlib.sha256(code.co_code + repr(constants).encode()).hexdigest()
-        text = f"# no source text; digest of the compiled function: {digest}\n"
-    outside = inspect.getclosurevars(function)
-    for name, value in sorted({**outside.globals, **outside.nonlocals}.items()):
-        if isinstance(value, bool | int | float | str | tuple):
-            text += f"# {name} = {value!r}\n"
-    return text
+def _return_words(kind: Any) -> str:
+    words = kind_in_words(str(kind))
+    return f"{words} ({kind})" if words.startswith("a number") else words
+
+
+def own_rules(namespace: Mapping[str, Any]) -> list[OwnRule]:
+    """Return the rules that a notebook's cells defined so far, in the order of their first definition.
+
+    Parameters
+    ----------
+    namespace : mapping
+        ``globals()`` of the notebook.
+
+    Returns
+    -------
+    list of OwnRule
+        Each rule once. A name that IPython keeps for itself (``_``, ``_12``) does not count.
+
+    Raises
+    ------
+    InputError
+        When two different rules have one name, under which records could not tell them apart.
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> @lk.policy
+    ... def always_first(options, loads, capacity, coin):
+    ...     return 0
+    >>> own_rules({"always_first": always_first, "loads": 3})
+    [<policy always-first>]
+    """
+    found: dict[str, OwnRule] = {}
+    for name, value in namespace.items():
+        if not isinstance(value, OwnRule) or name.startswith("_"):
+            continue
+        if found.setdefault(value.name, value) != value:
+            raise InputError(f"policy {value.name} is defined twice; give one of the two another name.")
+    return list(found.values())
+
+
+def rules_named(policies: Iterable[str], namespace: Mapping[str, Any]) -> list[Policy]:
+    """Return the rules that a list names: a notebook's own by their names, others as `labkit.place` does.
+
+    Parameters
+    ----------
+    policies : iterable of str
+        Such as ``["my-rule", "least-loaded"]``; a rule ``my_rule`` is called my-rule.
+    namespace : mapping
+        ``globals()`` of the notebook.
+
+    Raises
+    ------
+    InputError
+        For a name that is neither.
+    """
+    from labkit.policies.naming import BUILT_IN, parse_policy
+    from labkit.text import name_part
+
+    own = {rule.name: rule for rule in own_rules(namespace)}
+    rules = []
+    for policy in policies:
+        if policy not in own and own and isinstance(policy, str) and name_part(policy) not in BUILT_IN:
+            raise InputError(f"policy is {policy!r}; {nearest(policy, [*own, *BUILT_IN])}.")
+        rules.append(own[policy] if policy in own else parse_policy(policy))
+    return rules
 
 
 def recorded_source(name: str) -> str | None:

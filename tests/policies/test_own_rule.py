@@ -1,11 +1,12 @@
 """Rules that a user writes."""
 
+import numba
 import numpy as np
 import pandas as pd
 import pytest
 
 import labkit as lk
-from labkit.policies.own_rule import recorded_source
+from labkit.policies.own_rule import own_rules, recorded_source, rules_named
 
 
 def test_a_users_least_loaded_equals_the_built_in_one():
@@ -130,10 +131,13 @@ def gives_up(options, loads, capacity, coin):
 @pytest.mark.parametrize(
     ("function", "sentence"),
     [
-        (nothing, "policy nothing returns none; it must return a whole number on every path"),
-        (sometimes, r"policy sometimes returns .*; it must return a whole number on every path"),
-        (half, "policy half returns float64; it must return a whole number"),
-        (word, r"policy word returns .*; it must return a whole number"),
+        (nothing, "policy nothing returns nothing; it must return a whole number on every path"),
+        (
+            sometimes,
+            "policy sometimes returns nothing on one of its paths; it must return a whole number",
+        ),
+        (half, r"policy half returns a number with a fraction \(float64\); it must return a whole number"),
+        (word, "policy word returns a text; it must return a whole number"),
         (unknown, "policy unknown cannot be compiled: name 'no_such_thing' is not defined"),
         (beyond_options, "policy beyond-options looked beyond the end of an array"),
         (beyond_loads, "policy beyond-loads looked beyond the end of an array"),
@@ -190,6 +194,94 @@ def test_values_from_outside_are_recorded_with_the_source():
 def test_what_cannot_be_a_rule_is_refused(function, sentence):
     with pytest.raises(lk.InputError, match=sentence):
         lk.policy(function)
+
+
+def generating(options, loads, capacity, coin):
+    yield 0
+
+
+def by_name(options, *, loads, capacity, coin):
+    return 0
+
+
+@pytest.mark.parametrize(
+    ("function", "sentence"),
+    [
+        (generating, "policy generating is a generator or a coroutine; use return"),
+        (by_name, r"policy by_name takes \(options, \*, loads"),
+    ],
+)
+def test_functions_that_no_rule_can_be_are_refused(function, sentence):
+    with pytest.raises(lk.InputError, match=sentence):
+        lk.policy(function)
+
+
+TABLE = np.array([3, 1, 2])
+
+
+@numba.njit
+def doubled(number):
+    return FACTOR * number
+
+
+FACTOR = 2
+
+
+def test_arrays_and_helpers_from_outside_are_recorded_too():
+    @lk.policy
+    def by_table(options, loads, capacity, coin):
+        return 1 if doubled(TABLE[options[0] % 3]) > 3 else 0
+
+    assert "# TABLE = [3, 1, 2]: array of int64, 3, SHA-256 " in by_table.source
+    assert (
+        "#     def doubled(number):\n#         return FACTOR * number\n#     # FACTOR = 2" in by_table.source
+    )
+
+
+def test_a_name_of_an_attribute_is_not_taken_for_one_from_outside():
+    @lk.policy
+    def plain(options, loads, capacity, coin):
+        return 1 if loads.size > 3 else 0
+
+    plain.function.__globals__["size"] = 5
+    try:
+        assert "size = 5" not in lk.policy(plain.function).source
+    finally:
+        del plain.function.__globals__["size"]
+
+
+def test_rules_of_a_notebook_are_found_and_named():
+    @lk.policy
+    def first_one(options, loads, capacity, coin):
+        return 0
+
+    @lk.policy
+    def second_one(options, loads, capacity, coin):
+        return 1
+
+    cells = {
+        "tasks": 3,
+        "second_one": second_one,
+        "_12": first_one,
+        "first_one": first_one,
+        "same": second_one,
+    }
+    assert own_rules(cells) == [second_one, first_one]
+    assert rules_named(["least-loaded", "first-one"], cells) == [lk.LeastLoaded(), first_one]
+    with pytest.raises(lk.InputError, match="policy is 'frist-one'; did you mean 'first-one'"):
+        rules_named(["frist-one"], cells)
+    with pytest.raises(lk.InputError, match="policy is 'mixed'; it needs beta"):
+        rules_named(["mixed"], cells)
+    with pytest.raises(lk.InputError, match="policy first-one is defined twice; give one"):
+        own_rules({**cells, "other": lk.policy(lambda_like("first_one"))})
+
+
+def lambda_like(name):
+    def made(options, loads, capacity, coin):
+        return 1
+
+    made.__name__ = name
+    return made
 
 
 def test_a_built_in_name_is_refused():
