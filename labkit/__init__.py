@@ -38,6 +38,8 @@ _HOMES = {
     "PairwiseAveraging": "labkit.policies.pairwise_averaging",
     "TreeFlow": "labkit.policies.tree_flow",
     "policy": "labkit.policies.own_rule",
+    "check_policy": "labkit.trials.checking",
+    "PolicyCheck": "labkit.trials.report",
     "Fresh": "labkit.engine.information",
     "Snapshot": "labkit.engine.information",
     "Dispatchers": "labkit.engine.information",

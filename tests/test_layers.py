@@ -22,6 +22,7 @@ FLOORS = [
     {"traces"},
     {"survey"},
     {"policies"},
+    {"trials"},
     {"engine"},
     {"stationary"},
     {"placing", "serving", "replaying"},

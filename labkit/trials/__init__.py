@@ -1,0 +1,1 @@
+"""A user's own rule, tried on tiny fleets before any study relies on it."""
