@@ -81,6 +81,8 @@ _HOMES = {
     "use_scheduler": "labkit.sharing.scheduler",
     "begin_run": "labkit.records.run",
     "begin_answer": "labkit.studies.subject",
+    "write_study": "labkit.studies.own_rules",
+    "WrittenStudy": "labkit.studies.own_rules",
     "read_study_records": "labkit.studies.reading",
     "read_frozen": "labkit.records.frozen",
 }

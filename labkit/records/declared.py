@@ -21,7 +21,7 @@ from labkit.files import is_file_or_folder, read_text_file
 from labkit.records.project import from_root, notebook_text
 
 # What a run does with its time and place, but not with its results.
-EXECUTION_ONLY = frozenset({"study", "store", "workers", "output"})
+EXECUTION_ONLY = frozenset({"study", "store", "workers", "output", "new_study"})
 
 _KINDS = {
     "int": ("a whole number", (int,)),

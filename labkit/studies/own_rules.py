@@ -1,0 +1,364 @@
+"""A study of rules of one's own, made with one call: a study file, and the notebook that holds the rules."""
+
+import ast
+import json
+import os
+import secrets
+import tempfile
+import tomllib
+from collections.abc import Iterable
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from labkit.analysis.headroom import replicates_needed
+from labkit.checks import shown
+from labkit.errors import InputError
+from labkit.fleet.readers import read_fleet
+from labkit.policies.own_rule import OwnRule
+from labkit.records.declared import read_notebook
+from labkit.records.project import EXPERIMENTS, ROOT, check_study_name, find_notebook, from_root, path_text
+from labkit.studies.door import ANSWER, RUN, check_risk, policy_names
+from labkit.studies.model import make_study
+from labkit.studies.own_fleet import default_tasks
+from labkit.studies.rule_cells import cell_of_rules
+from labkit.trials.checking import check_policy
+
+_BEGIN = f'run = lk.begin_run("{RUN}", globals())'
+_PARSE = (
+    "from labkit.policies.naming import parse_policy",
+    "from labkit.policies.own_rule import rules_named",
+)
+_RULES = (
+    "rules = [parse_policy(policy) for policy in policies]",
+    "rules = rules_named(policies, globals())",
+)
+
+
+@dataclass(frozen=True)
+class WrittenStudy:
+    """A study that `labkit.write_study` made.
+
+    Attributes
+    ----------
+    name : str
+    file : pathlib.Path
+        The study file.
+    notebook : pathlib.Path
+        The notebook beside it, which holds the rules.
+    new : bool
+        Whether it was written now; False when the same study was there already.
+    """
+
+    name: str
+    file: Path
+    notebook: Path
+    new: bool
+
+    @property
+    def command(self) -> str:
+        """What runs it, from the project root."""
+        return f"labkit run {self.name if self.file.parent == EXPERIMENTS else path_text(self.file)}"
+
+    def __repr__(self) -> str:
+        state = "written" if self.new else "there already, unchanged"
+        return (
+            f"study {self.name}: {path_text(self.file)} and {path_text(self.notebook)} ({state})\n"
+            f"to run it: .venv/bin/{self.command}   (commit both files, and CI can do the same)"
+        )
+
+
+def write_study(
+    name: str,
+    rules: OwnRule | Iterable[OwnRule],
+    *,
+    fleet: str | Path,
+    against: Iterable[str] = ("least-loaded",),
+    tasks: int | None = None,
+    replicates: int | None = None,
+    risk: float = 0.01,
+    report_every: list[int] | None = None,
+    entropy: int = 1,
+    title: str | None = None,
+    folder: str | Path | None = None,
+    replace: bool = False,
+) -> WrittenStudy:
+    """Make a study of rules of your own that `labkit run` completes from a fresh session, also in CI.
+
+    It writes ``<name>.toml`` and ``<name>.ipynb``: the headroom notebook with your rules in a cell of their
+    own, with all that they take from outside. Both belong together in version control.
+
+    Parameters
+    ----------
+    name : str
+        The study's name, with which ``labkit run`` and ``labkit list`` call it.
+    rules : OwnRule or iterable of OwnRule
+        Made by `labkit.policy`. Each is checked once more (`labkit.check_policy`).
+    fleet : str or Path
+        The folder of the fleet's two tables, from the project root.
+    against : iterable of str
+        Built-in rules that meet the same arrivals; savings are counted from the first.
+    tasks : int, optional
+        Tasks placed; default as `labkit answer` chooses: as many as fill 80 % of the capacity, or 100 a
+        server.
+    replicates : int, optional
+        Independent repetitions; default 400, or more where the risk needs it.
+    risk : float
+        Accepted probability that the fullest server overflows.
+    report_every : list of int, optional
+        Kinds of information to compare: 0 for fresh loads, k for loads reported once every k tasks.
+    entropy : int
+        All randomness starts from this number.
+    title : str, optional
+        Default: the names of the rules.
+    folder : str or Path, optional
+        Where the two files go; default experiments/.
+    replace : bool
+        Write over a study of this name that this function made before.
+
+    Returns
+    -------
+    WrittenStudy
+
+    Raises
+    ------
+    InputError
+        When a name, value or rule is refused, a rule takes something from outside that a notebook cannot
+        hold, or another study of this name is there and `replace` is False. Nothing is written then.
+
+    Examples
+    --------
+    >>> import tempfile
+    >>> import labkit as lk
+    >>> @lk.policy
+    ... def second_if_lower(options, loads, capacity, coin):
+    ...     return 1 if loads[options[1]] < loads[options[0]] else 0
+    >>> with tempfile.TemporaryDirectory() as folder:
+    ...     study = lk.write_study("second", second_if_lower, fleet="experiments/demo", folder=folder)
+    ...     sorted(path.name for path in (study.file, study.notebook))
+    ['second.ipynb', 'second.toml']
+    """
+    check_study_name(name)
+    own = _checked_rules(rules)
+    others = policy_names(list(against))
+    if not others:
+        raise InputError("against is empty; name at least one built-in rule to compare with.")
+    place = _fleet_folder(fleet)
+    target = EXPERIMENTS if folder is None else from_root(folder)
+    if not target.is_dir():
+        raise InputError(f"folder is {str(folder)!r}; give a folder that exists.")
+    risk = check_risk(risk)
+    names = [*(rule.name for rule in own), *others]
+    values = {
+        "fleet": _from(place, target),
+        "tasks": default_tasks(read_fleet(place))[0] if tasks is None else tasks,
+        "policies": names,
+    }
+    content: dict[str, Any] = {
+        "title": title or f"{' and '.join(rule.name for rule in own)} against {', '.join(others)}",
+        "notebook": f"{name}.ipynb",
+        "replicates": max(400, replicates_needed(risk)) if replicates is None else replicates,
+        "entropy": entropy,
+        "parameters": values,
+        "grid": {} if report_every is None else {"report_every": report_every},
+        "answer": {"notebook": ANSWER, "risk": risk, "baseline": others[0]},
+    }
+    file, notebook = target / f"{name}.toml", target / f"{name}.ipynb"
+    page = _notebook(own, content["title"], notebook, {**values, "fleet": path_text(place)})
+    text = _toml(content)
+    _check(name, text, page, target)
+    new = _write({notebook: page, file: text}, name, replace)
+    return WrittenStudy(name, file, notebook, new)
+
+
+def _checked_rules(rules: Any) -> list[OwnRule]:
+    given = [rules] if isinstance(rules, OwnRule) else list(rules) if isinstance(rules, list | tuple) else []
+    if not given or not all(isinstance(each, OwnRule) for each in given):
+        raise InputError(
+            f"rules is {shown(rules)}; give a rule made with @lk.policy, or a list of such rules."
+        )
+    names = [rule.name for rule in given]
+    for rule in given:
+        if names.count(rule.name) > 1:
+            raise InputError(f"rules holds {rule.name} twice; give each rule once.")
+        found = check_policy(rule)
+        if not found.sound:
+            raise InputError(
+                f"policy {rule.name} {found.findings[0].fault}, as lk.check_policy({rule.function.__name__}) "
+                "shows; mend it first."
+            )
+    return given
+
+
+def _fleet_folder(fleet: Any) -> Path:
+    if not isinstance(fleet, str | Path):
+        raise InputError(
+            f"fleet is a {type(fleet).__name__}; give the folder of its two tables, such as "
+            'run.path("fleet"), since a study reads them again.'
+        )
+    return from_root(fleet)
+
+
+def _from(place: Path, folder: Path) -> str:
+    """Return a path as a study file in this folder writes it: relative inside the project, else absolute."""
+    inside = place.is_relative_to(ROOT) and folder.is_relative_to(ROOT)
+    return Path(os.path.relpath(place, folder)).as_posix() if inside else place.as_posix()
+
+
+def _notebook(rules: list[OwnRule], title: str, path: Path, values: dict[str, Any]) -> str:
+    """Return the headroom notebook with these rules in it, which records under its own name."""
+    home = find_notebook(RUN)
+    declared = read_notebook(home)
+    content = json.loads(home.read_text(encoding="utf-8"))
+    text, lines = cell_of_rules(rules)
+    _check_names(lines, _bound(declared.cells, set(declared.parameters)))
+    begin = f"run = lk.begin_run({json.dumps(path_text(path), ensure_ascii=False)}, globals())"
+    changes = [(_BEGIN, begin), _PARSE, _RULES]
+    cells = []
+    for cell in content["cells"]:
+        source = "".join(cell["source"])
+        if "parameters" in cell["metadata"].get("tags", []):
+            cells += [_cell(cell, _with_defaults(source, values)), *_rule_cells(text)]
+            continue
+        for old, new in changes.copy():
+            if cell["cell_type"] == "code" and old in source:
+                source = source.replace(old, new)
+                changes.remove((old, new))
+        cells.append(_cell(cell, source))
+    if changes:
+        raise InputError(
+            f"notebook {RUN} no longer holds the line {changes[0][0]!r}, where rules of your own are put in; "
+            "restore it."
+        )
+    cells[0]["source"] = _lines(f"# {title}\n\n{_ABOUT}")
+    content["cells"] = cells
+    return json.dumps(content, indent=1, ensure_ascii=False) + "\n"
+
+
+_ABOUT = (
+    "A **run** of rules of one's own beside built-in ones, on the same arrivals: parameters in, one record "
+    "out. `labkit run` executes it for each point of the study file beside it. To change a rule, change its "
+    "cell here: runs with the changed rule are then other runs."
+)
+
+
+def _cell(cell: dict[str, Any], source: str) -> dict[str, Any]:
+    return {**cell, "source": _lines(source)}
+
+
+def _lines(text: str) -> list[str]:
+    return text.splitlines(keepends=True)
+
+
+def _rule_cells(text: str) -> list[dict[str, Any]]:
+    about = "The rules, and all that they take from outside."
+    code: dict[str, Any] = {"cell_type": "code", "execution_count": None, "id": "own-rules"}
+    code |= {"metadata": {}, "outputs": []}
+    return [
+        {"cell_type": "markdown", "id": "about-own-rules", "metadata": {}, "source": _lines(about)},
+        {**code, "source": _lines(text)},
+    ]
+
+
+def _with_defaults(source: str, values: dict[str, Any]) -> str:
+    """Return a parameters cell with other defaults; lines without a value stay as they are."""
+    lines = []
+    for line in source.splitlines():
+        name = line.split(":")[0]
+        declared, sign, help_text = line.partition("  # ")
+        if name in values:
+            written = json.dumps(values[name], ensure_ascii=False)
+            declared = f"{declared.split(' = ')[0]} = {written}"
+        lines.append(f"{declared}{sign}{help_text}")
+    return "\n".join(lines)
+
+
+def _bound(cells: Iterable[str], parameters: set[str]) -> dict[str, str]:
+    """Return the names that a notebook gives a meaning to, imported ones with the line that imports them."""
+    found = dict.fromkeys(parameters, "")
+    for cell in cells:
+        for node in ast.walk(ast.parse(cell)):
+            if isinstance(node, ast.Import | ast.ImportFrom):
+                found |= {each.asname or each.name: ast.unparse(node) for each in node.names}
+            elif isinstance(node, ast.Name) and isinstance(node.ctx, ast.Store):
+                found.setdefault(node.id, "")
+            elif isinstance(node, ast.FunctionDef):
+                found.setdefault(node.name, "")
+    return found
+
+
+def _check_names(lines: dict[str, str], bound: dict[str, str]) -> None:
+    for name, line in lines.items():
+        if name in bound and line != bound[name]:
+            raise InputError(
+                f"name {name}, which your rules use, has a meaning of its own in the study's notebook; give "
+                "it another name in your cell."
+            )
+
+
+def _toml(content: dict[str, Any]) -> str:
+    top = {key: value for key, value in content.items() if not isinstance(value, dict)}
+    blocks = [_toml_lines(top)]
+    for key, value in content.items():
+        if isinstance(value, dict) and value:
+            blocks.append(f"[{key}]\n{_toml_lines(value)}")
+    return "\n\n".join(blocks) + "\n"
+
+
+def _toml_lines(values: dict[str, Any]) -> str:
+    # JSON's texts, numbers and lists are TOML's too, but for the one sign that TOML wants escaped as well.
+    texts = {key: json.dumps(value, ensure_ascii=False, default=str) for key, value in values.items()}
+    return "\n".join(f"{key} = {text}".replace("\x7f", "\\u007f") for key, text in texts.items())
+
+
+def _check(name: str, text: str, page: str, folder: Path) -> None:
+    """Refuse what reading the study would refuse, before anything is written where it belongs."""
+    with tempfile.TemporaryDirectory() as aside:
+        notebook = Path(aside) / f"{name}.ipynb"
+        notebook.write_text(page, encoding="utf-8", newline="\n")
+        content = tomllib.loads(text) | {"notebook": str(notebook.resolve())}
+        make_study(name, content, folder=folder)
+
+
+def _write(texts: dict[Path, str], name: str, replace: bool) -> bool:
+    """Write both files, or neither; return whether anything had to be written."""
+    there = {path: _content(path) for path in texts if path.exists()}
+    if all(there.get(path) == text for path, text in texts.items()):
+        return False
+    notebook, file = texts
+    other = [path for path in there if there[path] != texts[path]]
+    if other and not replace:
+        raise InputError(
+            f"study {name} is there already and differs ({path_text(other[0])}); choose another name, or "
+            "give replace=True to write over it."
+        )
+    if file in there and f'notebook = "{notebook.name}"' not in (there[file] or ""):
+        raise InputError(
+            f"study {name} ({path_text(file)}) was not made from rules of your own; choose another name."
+        )
+    beside = {path: path.with_name(f".{path.name}.{secrets.token_hex(8)}.tmp") for path in texts}
+    try:
+        for path, text in texts.items():
+            beside[path].write_text(text, encoding="utf-8", newline="\n")
+        for path in texts:
+            # A link fails where somebody else has written meanwhile; a rename would write over it.
+            if path in there:
+                os.replace(beside[path], path)
+            else:
+                os.link(beside[path], path)
+    except OSError as error:
+        raise InputError(
+            f"study {name} cannot be written to {path_text(file.parent)} ({error.strerror}); choose another "
+            "folder or name."
+        ) from None
+    finally:
+        for path in beside.values():
+            path.unlink(missing_ok=True)
+    return True
+
+
+def _content(path: Path) -> str | None:
+    try:
+        return path.read_text(encoding="utf-8")
+    except (OSError, UnicodeDecodeError):
+        return None
