@@ -337,5 +337,5 @@ def check_notebook(study: Study) -> None:
     if missing:
         raise InputError(
             f"notebook {study.notebook.name} declares no parameter {missing[0]}; a run notebook declares "
-            f"{', '.join(sorted(EXECUTION_ONLY))}."
+            f"{', '.join(sorted(EXECUTION_ONLY - {'new_study'}))}."
         )

@@ -95,6 +95,49 @@ def test_rules_cost_at_most_three_times_least_loaded(policy, servers, report):
     assert found <= 3
 
 
+@lk.policy
+def own_ties_first(options, loads, capacity, coin):
+    """Do as least-loaded(ties=first) does with two options of equal capacity."""
+    return 1 if loads[options[1]] < loads[options[0]] else 0
+
+
+@lk.policy
+def own_least_loaded(options, loads, capacity, coin):
+    """Do as least-loaded does with two options of equal capacity."""
+    one, other = loads[options[0]], loads[options[1]]
+    if one == other:
+        return 1 if coin >= 0.5 else 0
+    return 1 if other < one else 0
+
+
+@lk.policy
+def own_one_choice(options, loads, capacity, coin):
+    """Do as one-choice does with two options of equal capacity."""
+    return 1 if coin >= 0.5 else 0
+
+
+@pytest.mark.parametrize(
+    ("own", "law"),
+    [
+        (own_ties_first, "least-loaded(ties=first)"),
+        (own_least_loaded, "least-loaded"),
+        (own_one_choice, "one-choice"),
+    ],
+    ids=lambda value: getattr(value, "name", value),
+)
+@pytest.mark.parametrize("servers", [1_024, 2**20])
+def test_a_rule_of_ones_own_costs_at_most_1_3_times_the_built_in_of_its_law(own, law, servers, report):
+    fleet, tasks = shuffled_ring(servers), 10_000_000
+    ours, theirs = (lk.place(fleet, rule, tasks=100_000, rng=1).loads for rule in (own, law))
+    assert (ours == theirs).all()
+    found = ratio(
+        lambda: lk.place(fleet, own, tasks=tasks, rng=1),
+        lambda: lk.place(fleet, law, tasks=tasks, rng=1),
+    )
+    report(f"{own.name}, ring of {servers}: {found:.2f} x the time of {law}")
+    assert found <= 1.3
+
+
 @pytest.mark.parametrize(
     ("columns", "words"), [("capacity", "unequal capacities"), ("demand", "unequal demands")]
 )

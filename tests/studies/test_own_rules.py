@@ -1,0 +1,185 @@
+"""One call makes a study of one's own rules: its two files, and everything that it refuses."""
+
+import importlib.util
+import json
+import math
+
+import numba
+import numpy as np
+import pytest
+
+import labkit as lk
+from labkit.records.declared import read_notebook
+from labkit.records.project import find_notebook
+from labkit.studies.model import read_study
+from labkit.studies.rule_cells import cell_of_rules
+from tests.test_notebooks_clean import faults_of
+
+FLEET = "experiments/demo"
+LEAST = 2
+TABLE = np.array([0.5, 1.5])
+HUGE = np.zeros(1_001)
+tasks = 3
+
+
+@numba.njit
+def more(number):
+    return math.floor(number) + LEAST
+
+
+@lk.policy
+def stay_first(options, loads, capacity, coin):
+    """Stay with the first option."""
+    return 1 if loads[options[1]] + more(TABLE[1]) <= loads[options[0]] else 0
+
+
+@lk.policy
+def always_last(options, loads, capacity, coin):
+    return len(options) - 1
+
+
+def write(folder, rules=stay_first, name="mine", **values):
+    return lk.write_study(name, rules, **{"fleet": FLEET, "folder": folder, **values})
+
+
+def test_the_study_is_what_was_asked_for(tmp_path):
+    made = write(tmp_path, [stay_first, always_last], against=["one-choice"], risk=0.05, report_every=[0, 50])
+    assert made.new
+    study = read_study(made.file)
+    assert [path.name for path in (made.file, made.notebook)] == ["mine.toml", "mine.ipynb"]
+    assert study.title == "stay-first and always-last against one-choice"
+    assert study.parameters["policies"] == ["stay-first", "always-last", "one-choice"]
+    assert study.parameters["tasks"] == 9_600
+    assert study.parameters["replicates"] == 400
+    assert study.grid == {"report_every": [0, 50]}
+    assert study.answer_parameters == {"risk": 0.05, "baseline": "one-choice"}
+    assert len(study.points) == 2
+    assert faults_of(made.notebook) == []
+    assert made.command == f"labkit run {made.file}"
+    assert read_notebook(made.notebook).parameters["policies"].default == study.parameters["policies"]
+
+
+def test_a_name_that_needs_care_stays_what_it_is(tmp_path):
+    made = write(tmp_path, always_last, title='A "title"\twith \\ and \x7f')
+    assert read_study(made.file).title == 'A "title"\twith \\ and \x7f'
+
+
+def test_the_rules_cell_stands_alone(tmp_path):
+    text, lines = cell_of_rules([stay_first, always_last])
+    assert text.startswith(
+        "import math\n\nimport numba\nimport numpy as np\n\nimport labkit as lk\n\nTABLE = "
+    )
+    assert lines["TABLE"] == 'TABLE = np.array([0.5, 1.5], dtype="float64")'
+    file = tmp_path / "alone.py"
+    file.write_text(text)
+    spec = importlib.util.spec_from_file_location("alone", file)
+    alone = importlib.util.module_from_spec(spec)
+    spec.loader.exec_module(alone)
+    rng = np.random.default_rng(1)
+    for _ in range(50):
+        case = (np.array([0, 1]), rng.integers(0, 9, 2), np.ones(2), rng.random())
+        assert alone.stay_first(*case) == stay_first(*case)
+        assert alone.always_last(*case) == 1
+
+
+def test_nothing_is_written_over_silently(tmp_path):
+    made = write(tmp_path)
+    texts = {path: path.read_bytes() for path in (made.file, made.notebook)}
+    again = write(tmp_path)
+    assert not again.new
+    assert "there already, unchanged" in repr(again)
+    with pytest.raises(lk.InputError, match=r"study mine is there already and differs .*mine\.ipynb"):
+        write(tmp_path, always_last)
+    assert {path: path.read_bytes() for path in texts} == texts
+    assert write(tmp_path, always_last, replace=True).new
+    assert "always_last" in made.notebook.read_text()
+    # somebody else's study of that name
+    (tmp_path / "theirs.toml").write_text('notebook = "headroom"\nreplicates = 400\nentropy = 1\n')
+    for replace in (False, True):
+        with pytest.raises(lk.InputError, match=r"study theirs .*choose another name"):
+            write(tmp_path, name="theirs", replace=replace)
+    assert sorted(path.name for path in tmp_path.iterdir()) == ["mine.ipynb", "mine.toml", "theirs.toml"]
+
+
+@lk.policy
+def of_parameter(options, loads, capacity, coin):
+    return 1 if loads[options[0]] > tasks else 0
+
+
+@lk.policy
+def of_huge(options, loads, capacity, coin):
+    return 1 if HUGE[0] > 0 else 0
+
+
+@lk.policy
+def network(options, loads, capacity, coin):
+    return 0
+
+
+@lk.policy
+def faulty(options, loads, capacity, coin):
+    return 2
+
+
+@lk.policy
+def broken(options, loads, capacity, coin):
+    return unknown_thing  # noqa: F821
+
+
+def bare(options, loads, capacity, coin):
+    return 0
+
+
+@pytest.mark.parametrize(
+    ("values", "sentence"),
+    [
+        ({"name": "../mine"}, "study is '../mine'; a study's name begins with"),
+        ({"rules": bare}, "rules is <function bare"),
+        ({"rules": []}, r"rules is \[\]; give a rule made with @lk.policy"),
+        ({"rules": [always_last, always_last]}, "rules holds always-last twice"),
+        ({"rules": faulty}, r"policy faulty picks outside the options, as lk.check_policy\(faulty\) shows"),
+        ({"rules": broken}, "policy broken cannot be compiled, as lk.check_policy"),
+        ({"rules": of_parameter}, "name tasks, which your rules use, has a meaning of its own"),
+        ({"rules": network}, "name network, which your rules use, has a meaning of its own"),
+        ({"rules": of_huge}, "policy of-huge takes HUGE from outside, an array of 1,001 numbers"),
+        ({"against": []}, "against is empty"),
+        ({"against": ["fastest"]}, "policies: policy is 'fastest'"),
+        ({"fleet": lk.ring(4)}, "fleet is a Fleet; give the folder of its two tables"),
+        ({"fleet": "nowhere"}, "nowhere"),
+        ({"replicates": 10**12, "tasks": 5}, "replicates is 1,000,000,000,000; with 100 servers"),
+        ({"tasks": 0}, "tasks is 0; give a whole number of at least 1"),
+        ({"replicates": 10}, "replicates is 10; a risk of 0.01"),
+        ({"risk": 2}, "risk is 2; give a number above 0 and below 1"),
+        ({"entropy": -1}, "entropy is -1"),
+        ({"report_every": [0, 0]}, "grid of study mine has a point twice"),
+        ({"folder": "no/such/folder"}, "folder is 'no/such/folder'; give a folder that exists"),
+    ],
+)
+def test_what_cannot_be_meant_is_refused_and_nothing_written(tmp_path, values, sentence):
+    given = {"name": "mine", "rules": always_last, "folder": tmp_path, **values}
+    with pytest.raises(lk.InputError, match=sentence):
+        write(**given)
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_a_folder_that_cannot_be_written_is_told(tmp_path, monkeypatch):
+    def refuse(*_):
+        raise OSError(30, "Read-only file system")
+
+    monkeypatch.setattr("labkit.studies.own_rules.os.link", refuse)
+    with pytest.raises(lk.InputError, match=r"study mine cannot be written to .* \(Read-only file system\)"):
+        write(tmp_path, always_last)
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_a_changed_template_is_told(tmp_path, monkeypatch):
+    home = tmp_path / "headroom.ipynb"
+    content = json.loads(find_notebook("headroom").read_text(encoding="utf-8"))
+    for cell in content["cells"]:
+        cell["source"] = [
+            line.replace("parse_policy(policy) for", "parse_policy(p) for") for line in cell["source"]
+        ]
+    home.write_text(json.dumps(content))
+    monkeypatch.setattr("labkit.studies.own_rules.find_notebook", lambda name: home)
+    with pytest.raises(lk.InputError, match="notebook headroom no longer holds the line"):
+        write(tmp_path, always_last)
