@@ -76,7 +76,9 @@ def check_policy(rule: OwnRule, fleet: Fleet | None = None, *, rng: Any = 1) -> 
                 rule.check(load)
         except InputError as refusal:
             what, _, advice = str(refusal).removeprefix(f"policy {rule.name} ").partition("; ")
-            fault = Finding("cannot be compiled", f"It {what}.", f"{advice[:1].upper()}{advice[1:]}")
+            seen = what.removeprefix("cannot be compiled: ")
+            seen = seen[:1].upper() + seen[1:] if seen != what else f"It {what}"
+            fault = Finding("cannot be compiled", f"{seen}.", f"{advice[:1].upper()}{advice[1:]}")
             return PolicyCheck(rule.name, (fault,), (), (), ())
         try:
             answers, tried = _try(rule, fleet, generator)
