@@ -78,6 +78,8 @@ _HOMES = {
     "GrowthFit": "labkit.figures.growth",
     "save_figure": "labkit.figures.saving",
     "register_law": "labkit.analysis.growth_laws",
+    "explore": "labkit.explorer.explorer",
+    "Explorer": "labkit.explorer.explorer",
     "use_scheduler": "labkit.sharing.scheduler",
     "begin_run": "labkit.records.run",
     "begin_answer": "labkit.studies.subject",

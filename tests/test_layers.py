@@ -31,6 +31,7 @@ FLOORS = [
     {"provisioning"},
     {"records"},
     {"figures"},
+    {"explorer"},
     {"studies"},
     {"commands"},
     {"cli", "__main__"},
