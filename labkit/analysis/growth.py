@@ -30,6 +30,7 @@ from labkit.cards.shown import Shown
 from labkit.checks import check_fraction, check_whole
 from labkit.errors import InputError
 from labkit.randomness import seed_sequence
+from labkit.sharing.waiting import Waiting
 
 _NEGLIGIBLE = 1e-5
 _NOTABLE = 0.05
@@ -316,7 +317,11 @@ def _fit_all(
 ) -> _Fitted:
     """Fit and weigh all forms, on the means of `groups` and on the resampled `means`."""
     best = [form.fit_one(groups.x, groups.means, errors) for form in forms]
-    again = [form.fit(groups.x, means, errors) for form in forms]
+    again = []
+    with Waiting("laws fitted to resamples", len(forms), "law") as waiting:
+        for form in forms:
+            again.append(form.fit(groups.x, means, errors))
+            waiting.add()
     chi_square = np.array([fits.chi_square[0] for fits in best])
     misfit = misfit_of(forms, chi_square, len(groups.x), freedom)
     rows = int(groups.counts.sum())

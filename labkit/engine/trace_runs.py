@@ -18,6 +18,7 @@ from labkit.errors import InputError
 from labkit.fleet.model import Fleet
 from labkit.policies.one_choice import OneChoice
 from labkit.randomness import ARRIVALS, generator
+from labkit.sharing.waiting import Waiting
 from labkit.traces.choice_numbers import ChoiceNumbers
 from labkit.traces.reading import Block, Trace
 
@@ -177,14 +178,17 @@ class TraceRun:
 
     def _run(self, step: "Callable[[Lane, Batch], None]", batches: Iterator[Batch]) -> None:
         """Call ``step(lane, batch)`` for each batch and replicate."""
-        with ThreadPoolExecutor(self.workers) as pool:
+        told = Waiting("arrivals replayed", None, "arrival")
+        with told as waiting, ThreadPoolExecutor(self.workers) as pool:
             # The first call compiles, before threads share the loop.
             first = next(batches)
             step(self.lanes[0], first)
             spread: Callable[..., Iterator[None]] = map if self.workers == 1 else pool.map
             list(spread(step, self.lanes[1:], repeat(first)))
+            waiting.add(len(first.times))
             for batch in batches:
                 list(spread(step, self.lanes, repeat(batch)))
+                waiting.add(len(batch.times))
 
 
 class Lane:

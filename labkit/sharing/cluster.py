@@ -119,8 +119,14 @@ class Cluster:
             self._looked = time.monotonic()
         return self._threads
 
-    def run(self, job: Job, replicates: range, given: Sequence[Any] | None) -> list[Any]:
-        """Run replicates on the workers and return their results in order.
+    def run(
+        self,
+        job: Job,
+        replicates: range,
+        given: Sequence[Any] | None,
+        count: Callable[[int], None] = lambda done: None,
+    ) -> list[Any]:
+        """Run replicates on the workers and return their results in order; `count` is told of those done.
 
         Raises
         ------
@@ -154,6 +160,7 @@ class Cluster:
                     results.update(zip(part, found, strict=True))
                     recent.append(took / len(part))
                     progress.add(len(part))
+                    count(len(part))
             finally:
                 with contextlib.suppress(Exception):  # nothing hides what went wrong
                     self.client.cancel([*tasks, held])

@@ -1,11 +1,12 @@
 """The one place where replicates are run side by side: threads of this process, or workers of a cluster."""
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from itertools import repeat
 from typing import Any, Protocol
 
 from labkit.sharing import progress, scheduler
+from labkit.sharing.waiting import Waiting
 
 
 class Job(Protocol):
@@ -35,23 +36,31 @@ def run_replicates(
         Threads of this process; with a scheduler they do not count.
     """
     address = scheduler.in_use()
-    if address is None:
-        results = run_here(job, replicates, given, workers)
-    else:
-        from labkit.sharing.cluster import connected
+    with Waiting("replicates computed", len(replicates), "replicate") as waiting:
+        if address is None:
+            results = run_here(job, replicates, given, workers, waiting.add)
+        else:
+            from labkit.sharing.cluster import connected
 
-        results = connected(address).run(job, replicates, given)
+            results = connected(address).run(job, replicates, given, waiting.add)
     progress.add(0)
     return results
 
 
-def run_here(job: Job, replicates: range, given: Sequence[Any] | None, workers: int) -> list[Any]:
-    """Run replicates in threads of this process."""
+def run_here(
+    job: Job,
+    replicates: range,
+    given: Sequence[Any] | None,
+    workers: int,
+    count: Callable[[int], None] = lambda done: None,
+) -> list[Any]:
+    """Run replicates in threads of this process; `count` is told of those that are done."""
     each = repeat(None) if given is None else given
 
     def run(replicate: int, own: Any) -> Any:
         result = job.run(replicate, own)
         progress.add(1)
+        count(1)
         return result
 
     job.compile()

@@ -11,6 +11,7 @@ from threading import Event, Timer
 from typing import Any
 
 import labkit.errors
+from labkit.sharing.waiting import VARIABLE
 from labkit.studies.light import import_jsonschema
 from labkit.studies.place import HERE, Place
 
@@ -74,7 +75,7 @@ def execute(
 
     with own_event_loop():
         try:
-            kernel = start_kernel(notebook, place, environment)
+            kernel = start_kernel(notebook, place, {VARIABLE: "off", **(environment or {})})
         except Exception as error:
             return _broken(error)
         late = Event()

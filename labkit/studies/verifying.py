@@ -16,6 +16,7 @@ from labkit.records.frozen_index import check_index
 from labkit.records.project import FROZEN, ROOT, check_study_name, from_root
 from labkit.records.provenance import git
 from labkit.records.store import decode
+from labkit.sharing.waiting import Waiting
 from labkit.studies.commits import HASH
 from labkit.studies.freezing import table_of
 
@@ -219,7 +220,7 @@ def _rerun(
     for run in result.runs:
         check_executable(origins[run], (place.parent, FROZEN))
     measured: dict[str, pa.Table] = {}
-    with Places(say) as places:
+    with Places(say) as places, Waiting("runs executed again", len(result.runs), "run") as waiting:
         for run in result.runs:
             try:
                 again, notes = _measured_again(places, origins[run])
@@ -229,6 +230,7 @@ def _rerun(
                 continue
             result.notes += [f"run {run}: {note}" for note in notes]
             measured[run] = again
+            waiting.add()
     for run, again in measured.items():
         difference = _run_difference(runs, run, again, manifest["query"]["parameters"])
         result.rows += again.num_rows

@@ -11,6 +11,7 @@ import pandas as pd
 from labkit.checks import check_whole
 from labkit.errors import InputError
 from labkit.fleet.model import Fleet
+from labkit.sharing.waiting import Waiting
 from labkit.survey.demand import total_demand
 from labkit.survey.fair import FairProfile, fair_profile, top_of_profile
 from labkit.survey.link_candidates import Pool, read_candidates
@@ -217,14 +218,16 @@ def _relieve(fleet: Fleet, pool: Pool, count: int) -> list[_Step]:
     with each taking as much as it can use, and then given the least that the optimum in the end asks for.
     """
     steps: list[_Step] = []
-    while len(steps) < count and not _balanced(_proved(fleet)):
-        most = np.inf if len(steps) + 1 == count else 0.0
-        step = _relief(fleet, *pool.across(fair_profile(fleet).block == 0), most)
-        if step is None:
-            break
-        pool.drop(step.one, step.other)
-        steps.append(step)
-        fleet = step.after
+    with Waiting("links chosen", count, "link") as waiting:
+        while len(steps) < count and not _balanced(_proved(fleet)):
+            most = np.inf if len(steps) + 1 == count else 0.0
+            step = _relief(fleet, *pool.across(fair_profile(fleet).block == 0), most)
+            if step is None:
+                break
+            pool.drop(step.one, step.other)
+            steps.append(step)
+            waiting.add()
+            fleet = step.after
     if not steps or count == 1:
         return steps
     last, before = fair_profile(fleet), fair_profile(steps[-1].before)
@@ -297,17 +300,19 @@ def _connect(fleet: Fleet, pool: Pool, count: int) -> list[_Step]:
     steps: list[_Step] = []
     first, second = pool.all()
     present = Resistances(fleet)
-    while len(steps) < count and len(first):
-        step = _best_connection(fleet, present, first, second)
-        if step is None:
-            break
-        pool.drop(step.one, step.other)
-        stays = ~((first == step.one) & (second == step.other))
-        first, second = first[stays], second[stays]
-        following = Resistances(step.after)
-        step.resistance_before, step.resistance = present.total, following.total
-        steps.append(step)
-        fleet, present = step.after, following
+    with Waiting("links chosen", count, "link") as waiting:
+        while len(steps) < count and len(first):
+            step = _best_connection(fleet, present, first, second)
+            if step is None:
+                break
+            pool.drop(step.one, step.other)
+            stays = ~((first == step.one) & (second == step.other))
+            first, second = first[stays], second[stays]
+            following = Resistances(step.after)
+            step.resistance_before, step.resistance = present.total, following.total
+            steps.append(step)
+            waiting.add()
+            fleet, present = step.after, following
     return steps
 
 

@@ -12,6 +12,7 @@ import pandas as pd
 from labkit.compiled import kept
 from labkit.errors import InputError
 from labkit.fleet.model import CompleteLaw, Fleet, check_fleet, positions_of
+from labkit.sharing.waiting import Waiting
 from labkit.survey.demand import choices_of_law
 from labkit.survey.fair import FairProfile, fair_profile, sum_blocks
 from labkit.survey.first_split import share_by_capacity, thread_entries
@@ -172,25 +173,27 @@ def _by_rows(fleet: Fleet, first: np.ndarray, second: np.ndarray, bottlenecks: b
     base = _base(split, profile)
     names = _Names(fleet, profile.bottleneck)
     start = 0
-    while start < rows:
-        stop = kept(lose_rows)(
-            first, second, start, *base, optimum, unplaced, unplaced_lost, size, kind, ends, listed,
-            bottlenecks,
-        )  # fmt: skip
-        if start == 0:
-            _check_proved(split, profile.optimum)
-        failed = np.flatnonzero(kind[start:stop] == FAILED) + start
-        for row in range(start, stop) if bottlenecks else failed:
-            if kind[row] == FAILED:
-                optimum[row], members = _from_zero(split, first[row], second[row])
-                size[row] = members.size
-                if bottlenecks:
-                    names.add(members)
-            elif kind[row] == TOP_BLOCK:
-                names.add_known()
-            else:
-                names.add(listed[ends[row - 1] if row > start else 0 : ends[row]])
-        start = stop
+    with Waiting("losses worked out", rows, "case") as waiting:
+        while start < rows:
+            stop = kept(lose_rows)(
+                first, second, start, *base, optimum, unplaced, unplaced_lost, size, kind, ends, listed,
+                bottlenecks,
+            )  # fmt: skip
+            if start == 0:
+                _check_proved(split, profile.optimum)
+            failed = np.flatnonzero(kind[start:stop] == FAILED) + start
+            for row in range(start, stop) if bottlenecks else failed:
+                if kind[row] == FAILED:
+                    optimum[row], members = _from_zero(split, first[row], second[row])
+                    size[row] = members.size
+                    if bottlenecks:
+                        names.add(members)
+                elif kind[row] == TOP_BLOCK:
+                    names.add_known()
+                else:
+                    names.add(listed[ends[row - 1] if row > start else 0 : ends[row]])
+            waiting.add(stop - start)
+            start = stop
     placed = _less(split.demand, unplaced, unplaced_lost)
     left = _less(split.capacity, split.capacity[first], np.where(second >= 0, split.capacity[second], 0.0))
     columns: dict[str, Any] = {
