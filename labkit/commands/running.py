@@ -2,7 +2,6 @@
 
 import argparse
 import contextlib
-import sys
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -145,24 +144,20 @@ def _run_points(
 
     with contextlib.ExitStack() as shown:
         bar: Any = None
-        lively = sys.stderr.isatty()  # a log gets a line a run, no more
 
         def tick(done: int, replicates: int) -> None:
             nonlocal bar
             if bar is None:
-                from tqdm import tqdm
+                from labkit.sharing.waiting import Waiting
 
                 if note:
                     say(note)
-                bar = shown.enter_context(
-                    tqdm(total=len(study.points), desc=study.name, unit="run", file=sys.stderr)
-                )
+                work = Waiting(study.name, len(study.points), "run", first=done, logged=True)
+                bar = shown.enter_context(work)
             if replicates:
-                bar.set_postfix_str(f"{replicates:,} replicates", refresh=False)
-            if done > bar.n:
-                bar.update(done - bar.n)
-            elif lively:
-                bar.refresh()
+                bar.note = f"{replicates:,} replicates"
+            if done > bar.done:
+                bar.add(done - bar.done)
 
         return run_points(
             study,

@@ -2,7 +2,7 @@
 
 In a terminal it is a line of the error stream that is written over; in a notebook with a reader, a line that
 is replaced; in a notebook that a program executes, one line when the work is done; in a pipe or a log,
-nothing. The environment variable LABKIT_WAITING=off turns it off.
+nothing, or a line each tenth where a command asks for it. LABKIT_WAITING=off in the environment turns it off.
 """
 
 import os
@@ -36,11 +36,22 @@ class Waiting:
         Number of steps, None when it is not known.
     unit : str
         What is counted, in the singular, for the pace.
+    first : int
+        Steps that were done before, which say nothing about the pace.
+    logged : bool
+        Whether it is shown at once, and in a log a line each tenth: for a command that runs for long.
+
+    Attributes
+    ----------
+    note : str
+        Written behind the pace.
     """
 
-    def __init__(self, what: str, total: int | None, unit: str) -> None:
-        self.what, self.total, self.unit = what, total, unit
-        self.done = 0
+    def __init__(
+        self, what: str, total: int | None, unit: str, *, first: int = 0, logged: bool = False
+    ) -> None:
+        self.what, self.total, self.unit, self.first, self.logged = what, total, unit, first, logged
+        self.done, self.note = first, ""
         self.began = 0.0
         self.context: Context | None = None
         self._show: Any = None
@@ -64,18 +75,22 @@ class Waiting:
 
         meter: Callable[..., str] = tqdm.format_meter
         seconds = time.monotonic() - self.began
-        return meter(self.done, self.total, seconds, ncols=COLUMNS, prefix=self.what, unit=f" {self.unit}")
+        return meter(
+            self.done, self.total, seconds, ncols=COLUMNS, prefix=self.what, unit=f" {self.unit}",
+            initial=self.first, postfix=self.note,
+        )  # fmt: skip
 
     def last_line(self) -> str:
         """Return what was done in what time."""
         seconds = time.monotonic() - self.began
         time_taken = f"{seconds:.0f} s" if seconds < 120 else f"{seconds / 60:.0f} min"
-        return f"{self.what}: {self.done:,} in {time_taken}"
+        note = f", {self.note}" if self.note else ""
+        return f"{self.what}: {self.done - self.first:,} in {time_taken}{note}"
 
     def draw(self) -> None:
         """Show the line, for the first time or again."""
         if self._show is None:
-            self._show = _Nothing() if _off() else _place()
+            self._show = _Nothing() if _off() else _place(self)
         self._show.line(self.line())
 
     def finish(self, whole: bool) -> None:
@@ -105,7 +120,9 @@ class _Watch:
             if self.thread is None:
                 self.thread = Thread(target=self.run, name="labkit-waiting", daemon=True)
                 self.thread.start()
-            if self.asleep:  # else it looks by itself in time: waking it would cost a short call a third
+            if (
+                self.asleep or waiting.logged
+            ):  # else it looks by itself in time: waking it would cost a short call a third
                 self.changed.notify()
 
     def end(self, waiting: Waiting, whole: bool) -> None:
@@ -122,7 +139,7 @@ class _Watch:
                     self.changed.wait()
                 self.asleep = False
                 first = self.under_way[0]
-                due = first.began + PATIENCE - time.monotonic()
+                due = 0.0 if first.logged else first.began + PATIENCE - time.monotonic()
                 if due <= 0 and first.context is not None:
                     first.context.run(first.draw)
                 self.changed.wait(min(PATIENCE, max(due, LOOK)))
@@ -136,11 +153,13 @@ def _off() -> bool:
     return os.environ.get(VARIABLE, "").lower() in {"off", "0", "no"} or bool(os.environ.get(TELLING))
 
 
-def _place() -> Any:
+def _place(waiting: Waiting) -> Any:
     """Return where the line goes."""
     if notebook_kernel() is not None:
         return _Cell(read=somebody_at_the_notebook())
-    return _Terminal() if sys.stderr is not None and sys.stderr.isatty() else _Nothing()
+    if sys.stderr is not None and sys.stderr.isatty():
+        return _Terminal()
+    return _Log(waiting) if waiting.logged and sys.stderr is not None else _Nothing()
 
 
 class _Nothing:
@@ -162,6 +181,27 @@ class _Terminal:
         self.line(words[:COLUMNS])
         sys.stderr.write("\n")
         sys.stderr.flush()
+
+
+class _Log:
+    """Whole lines, one each tenth of the work."""
+
+    def __init__(self, waiting: Waiting) -> None:
+        self.waiting = waiting
+        self.tenth = 0
+
+    def line(self, words: str) -> None:
+        """Write a line when another tenth is done."""
+        work = self.waiting
+        tenth = 10 * (work.done - work.first) // max(1, (work.total or 0) - work.first)
+        if work.total and self.tenth < tenth < 10:
+            self.tenth = tenth
+            note = f", {work.note}" if work.note else ""
+            print(f"{work.what}: {work.done:,} of {work.total:,}{note}", file=sys.stderr, flush=True)
+
+    def last(self, words: str) -> None:
+        """Write the last line."""
+        print(words, file=sys.stderr, flush=True)
 
 
 class _Cell:

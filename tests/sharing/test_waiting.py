@@ -76,6 +76,17 @@ def test_a_pipe_gets_nothing():
     assert (done.stdout, done.stderr) == ("", "")
 
 
+def test_a_command_that_asks_for_it_logs_a_line_each_tenth():
+    script = SLOW.replace('"stone")', '"stone", first=2, logged=True)').replace('counted", 4', 'counted", 6')
+    done = subprocess.run(
+        [sys.executable, "-c", script], env=environment(), capture_output=True, check=True, text=True
+    )
+    *lines, last = done.stderr.splitlines()
+    assert last == LAST
+    assert set(lines) <= {f"stones counted: {at} of 6" for at in (3, 4, 5)}
+    assert len(lines) == len(set(lines)) >= 2
+
+
 class Reader(NotebookClient):
     """Executes cells as a front end with a person does: it takes questions."""
 
@@ -108,7 +119,15 @@ def test_a_notebook_keeps_one_tidy_line_in_its_own_cell(outputs):
 
 def test_a_single_long_step_is_seen(monkeypatch):
     lines = []
-    place = type("Place", (), {"line": lambda self, words: lines.append(words), "last": lambda *_: None})
+    place = type(
+        "Place",
+        (),
+        {
+            "__init__": lambda *_: None,
+            "line": lambda self, words: lines.append(words),
+            "last": lambda *_: None,
+        },
+    )
     monkeypatch.setattr(waiting, "PATIENCE", 0.1)
     monkeypatch.setattr(waiting, "LOOK", 0.05)
     monkeypatch.setattr(waiting, "_place", place)
@@ -121,7 +140,15 @@ def test_a_single_long_step_is_seen(monkeypatch):
 
 def test_work_that_fails_says_so_and_leaves_nothing_behind(monkeypatch):
     ends = []
-    place = type("Place", (), {"line": lambda *_: None, "last": lambda self, words: ends.append(words)})
+    place = type(
+        "Place",
+        (),
+        {
+            "__init__": lambda *_: None,
+            "line": lambda *_: None,
+            "last": lambda self, words: ends.append(words),
+        },
+    )
     monkeypatch.setattr(waiting, "PATIENCE", 0.0)
     monkeypatch.setattr(waiting, "LOOK", 0.05)
     monkeypatch.setattr(waiting, "_place", place)
@@ -139,7 +166,7 @@ def test_work_that_fails_says_so_and_leaves_nothing_behind(monkeypatch):
 
 
 def test_short_work_shows_nothing_and_costs_next_to_nothing(monkeypatch):
-    monkeypatch.setattr(waiting, "_place", lambda: pytest.fail("something was shown"))
+    monkeypatch.setattr(waiting, "_place", lambda _: pytest.fail("something was shown"))
     begun = time.process_time()
     for _ in range(1_000):
         with Waiting("quick", 10, "step") as work:
