@@ -85,7 +85,8 @@ class Waiting:
         seconds = time.monotonic() - self.began
         time_taken = f"{seconds:.0f} s" if seconds < 120 else f"{seconds / 60:.0f} min"
         note = f", {self.note}" if self.note else ""
-        return f"{self.what}: {self.done - self.first:,} in {time_taken}{note}"
+        of_total = f" of {self.total:,}" if self.logged and self.total else ""
+        return f"{self.what}: {self.done:,}{of_total} in {time_taken}{note}"
 
     def draw(self) -> None:
         """Show the line, for the first time or again."""

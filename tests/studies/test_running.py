@@ -49,7 +49,7 @@ def test_a_study_picks_up_where_it_stopped(project):
     report = json.loads(out)
     assert (status, report["skipped"]) == (0, first)
     assert len(report["recorded"]) == 1
-    assert "2/2" in err
+    assert "s: 2 of 2 in " in err
     after = snapshot(project.store)
     assert before.items() < after.items()
     status, out, _ = project("run", project.study(grid="tasks = [2, 1]"))
