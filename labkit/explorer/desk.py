@@ -7,9 +7,8 @@ import ipywidgets as widgets
 
 from labkit.errors import InputError
 from labkit.explorer.board import Board
-from labkit.explorer.state import HIGHEST, MEAN, State
+from labkit.explorer.state import HIGHEST, MEAN, State, server_called
 from labkit.explorer.words import facts_in_html, heading, key_in_words, safe
-from labkit.fleet.model import positions_of
 from labkit.text import printable
 
 # Names offered while typing, and neighbours with a button of their own.
@@ -150,7 +149,7 @@ def find(state: State, words: str) -> int:
     """Return the server of a typed name; a fleet with whole numbers for names takes their digits."""
     names = state.fleet.names
     given: Any = int(words) if names.dtype.kind in "iu" and words.strip().lstrip("-").isdecimal() else words
-    return int(positions_of(state.fleet, [given], "server")[0])
+    return server_called(state.fleet, given)
 
 
 def _button(words: str, tooltip: str, act: Callable[[], None]) -> Any:

@@ -5,9 +5,9 @@ from typing import Any
 from labkit.checks import check_whole
 from labkit.errors import InputError
 from labkit.explorer.sides import sides_of
-from labkit.explorer.state import State
+from labkit.explorer.state import State, server_called
 from labkit.explorer.words import alt_in_words
-from labkit.fleet.model import Fleet, check_fleet, positions_of
+from labkit.fleet.model import Fleet, check_fleet
 from labkit.sharing.audience import somebody_at_the_notebook
 from labkit.survey.facts import Survey
 
@@ -86,8 +86,7 @@ class Explorer:
         InputError
             When no server has this name.
         """
-        (at,) = positions_of(self.fleet, [server], "server")
-        moved = self._state.select(int(at))
+        moved = self._state.select(server_called(self.fleet, server))
         if self._desk is not None:
             self._desk.refresh(moved)
         return self

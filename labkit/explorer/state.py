@@ -6,10 +6,11 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from labkit.checks import shown
 from labkit.errors import InputError
 from labkit.explorer.sides import Side, capacities
 from labkit.explorer.surroundings import Part, Surroundings
-from labkit.fleet.model import Fleet
+from labkit.fleet.model import Fleet, positions_of
 from labkit.survey.facts import Survey
 
 MEAN, HIGHEST = "mean", "highest"
@@ -174,3 +175,13 @@ class State:
 def _share(shares: np.ndarray) -> float:
     """Return the highest share in which one of some servers was the fullest."""
     return float(shares.max())
+
+
+def server_called(fleet: Fleet, name: Any) -> int:
+    """Return the position of a server by name."""
+    try:
+        return int(positions_of(fleet, [name], "server")[0])
+    except InputError as refusal:
+        _, found, hint = str(refusal).partition("did you mean ")
+        ending = f"{found}{hint}" if found else "give the name of a server of this fleet."
+        raise InputError(f"no server is called {shown(name)}; {ending}") from None

@@ -144,6 +144,8 @@ def test_of_a_large_fleet_the_nearest_are_drawn():
     assert part.cut.tolist() == [True, *7 * [False], True]
     assert len(part.pairs) == 8
     assert find(around._state, "17") == 17
+    with pytest.raises(InputError, match="no server is called -3; give the name of a server of this fleet"):
+        find(around._state, "-3")
     assert "9 of 5,000 servers are drawn" in around._repr_mimebundle_()["text/html"]
 
 
@@ -223,7 +225,10 @@ def test_a_fleet_alone_shows_its_fair_split(yard):
         (lambda fleet, pair: lk.explore(lk.ring(5), pair), "is of another fleet"),
         (lambda fleet, pair: lk.explore(fleet, survey=lk.survey(lk.ring(5))), "survey is of another fleet"),
         (lambda fleet, pair: lk.explore(fleet, survey=3), "survey is int"),
-        (lambda fleet, pair: lk.explore(fleet, select="kiln-3"), "did you mean 'kiln-[12]'"),
+        (
+            lambda fleet, pair: lk.explore(fleet, select="kiln-3"),
+            "no server is called 'kiln-3'; did you mean 'kiln-[12]'",
+        ),
         (lambda fleet, pair: lk.explore(fleet, nearby=1), "nearby is 1; give a whole number of at least 2"),
         (lambda fleet, pair: lk.explore(fleet, nearby=500), "nearby is 500; give at most 400"),
     ],
