@@ -7,13 +7,12 @@ from typing import Any
 
 import numpy as np
 from matplotlib.axes import Axes
-from matplotlib.figure import Figure
 
 from labkit.explorer import strokes
 from labkit.explorer.board import REACH
 from labkit.explorer.state import State
 from labkit.explorer.words import alt_in_words, facts_in_html, key_in_words, measure_in_words, side_in_words
-from labkit.figures.style import FILL, INK, plain, styled
+from labkit.figures.style import FILL, INK, Drawing, plain, styled
 from labkit.text import printable
 
 # Inches: side of a panel; dots an inch, and the width on the page.
@@ -21,10 +20,10 @@ SIDE, DOTS, PIXELS = 3.8, 144, 100
 
 
 @styled
-def sheet(state: State) -> Figure:
+def sheet(state: State) -> Drawing:
     """Draw the state, one panel a rule."""
     panels = len(state.shown)
-    figure = Figure(figsize=(SIDE * panels + 0.9, SIDE + 0.5), layout="constrained")
+    figure = Drawing(figsize=(SIDE * panels + 0.9, SIDE + 0.5), layout="constrained")
     low, high = state.limits()
     every = figure.subplots(1, panels, squeeze=False)[0]
     for axes, name in zip(every, state.shown, strict=True):
