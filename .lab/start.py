@@ -18,6 +18,7 @@ if __name__ == "__main__":
     flags = [
         *(["--allow-root"] if hasattr(os, "getuid") and os.getuid() == 0 else []),
         f"--ServerApp.root_dir={ROOT}",
+        "--LabApp.default_url=/lab/tree/notebooks/start.ipynb",
         *sys.argv[1:],
         "--ServerApp.ip=127.0.0.1",
         "--ServerApp.sock=",

@@ -7,7 +7,16 @@ import pytest
 
 import labkit as lk
 from labkit.records.project import ROOT
-from tests.journeys.test_browser import PATIENCE, jupyterlab, page, restart_and_run_all
+from tests.journeys.lab_in_browser import (
+    ERRORS,
+    PATIENCE,
+    in_theme,
+    jupyterlab,
+    keep,
+    open_notebook,
+    page,
+    restart_and_run_all,
+)
 
 __all__ = ["page"]  # a fixture
 
@@ -16,7 +25,6 @@ ZOOMED = """() => {
     const [low, high] = document.querySelector(".js-plotly-plot").layout.xaxis2.range;
     return high - low < 1.5;
 }"""
-SCREENS = ROOT / "build" / "screenshots"
 CELLS = (
     "import labkit as lk",
     f"""fleet = lk.read_fleet({str(DEMO)!r})
@@ -41,20 +49,9 @@ def heading(facts, other_than="Nothing is selected"):
     return title.inner_text()
 
 
-def in_theme(page, name):
-    page.get_by_role("menuitem", name="Settings", exact=True).click()
-    entries = page.locator(".lm-Menu-item")
-    entries.filter(has_text="Theme").first.hover()
-    entries.filter(has_text=name).first.click()
-    page.wait_for_selector(f"body[data-jp-theme-name='{name}']", state="attached", timeout=1000 * PATIENCE)
-
-
-def keep(page, name):
-    SCREENS.mkdir(parents=True, exist_ok=True)
-    page.mouse.move(5, 5)
+def keep_explorer(page, name):
     page.locator(".choice-explorer").scroll_into_view_if_needed()
-    page.wait_for_timeout(500)
-    page.screenshot(path=SCREENS / f"{name}.png")
+    keep(page, name)
 
 
 @pytest.mark.browser
@@ -62,10 +59,8 @@ def test_the_explorer_answers_clicks_names_and_buttons(tmp_path, page):
     root = tmp_path / "root"
     root.mkdir()
     write_notebook(root / "look.ipynb")
-    page.set_viewport_size({"width": 1280, "height": 800})
-    with jupyterlab(root, tmp_path) as (address, token):
-        page.goto(f"{address}/lab/tree/look.ipynb?token={token}&reset", wait_until="domcontentloaded")
-        page.wait_for_selector(".jp-Notebook .jp-Cell", timeout=1000 * PATIENCE)
+    with jupyterlab(root, tmp_path) as lab:
+        open_notebook(page, lab, "look")
         assert restart_and_run_all(page) == ["[1]:", "[2]:"]
         box = page.locator(".choice-explorer")
         box.locator(".js-plotly-plot .point").first.wait_for(timeout=1000 * PATIENCE)
@@ -78,7 +73,7 @@ def test_the_explorer_answers_clicks_names_and_buttons(tmp_path, page):
         second = heading(facts, other_than=first)
         assert {first, second} <= set(lk.read_fleet(DEMO).names)
         assert "Capacity" in facts.inner_text()
-        keep(page, "explorer-server-light")
+        keep_explorer(page, "explorer-server-light")
 
         box.locator(".neighbour-button").first.focus()
         page.keyboard.press("Enter")
@@ -97,7 +92,6 @@ def test_the_explorer_answers_clicks_names_and_buttons(tmp_path, page):
         box.locator(".bottleneck-button").click()
         assert heading(facts, other_than="Yarlorquay") == "The bottleneck: 6 servers"
         assert all(name in facts.inner_text() for name in lk.survey(lk.read_fleet(DEMO)).bottleneck)
-        in_theme(page, "JupyterLab Dark")
-        keep(page, "explorer-bottleneck-dark")
-        errors = page.locator(".jp-RenderedText[data-mime-type='application/vnd.jupyter.stderr']")
-        assert errors.all_inner_texts() == []
+        in_theme(page, "dark")
+        keep_explorer(page, "explorer-bottleneck-dark")
+        assert page.locator(ERRORS).all_inner_texts() == []
