@@ -161,7 +161,7 @@ def page_table(table: pd.DataFrame, total_capacity: float) -> pd.DataFrame:
                 "rule": shown_name(row["policy"]),
                 "load reports": reports(row["information"]),
                 "headroom": write(row["headroom"]),
-                confidence: f"{write(row['lower'])} – {write(row['upper'])}",
+                confidence: f"{write(row['lower'])}\u00a0–\u00a0{write(row['upper'])}",
                 "% of mean utilisation": percent(100 * row["of_mean"]),
                 "owed to the network": write(row["network"]),
                 "owed to the rule": write(row["rule"]),
@@ -186,7 +186,7 @@ def paired_table(paired: pd.DataFrame) -> pd.DataFrame:
                 "rule": shown_name(row["policy"]),
                 "load reports": reports(row["information"]),
                 f"gap less that of {row['baseline']}": write(row["difference"]),
-                band: f"{write(row['lower'])} to {write(row['upper'])}",
+                band: f"{write(row['lower'])}\u00a0to\u00a0{write(row['upper'])}",
                 "ended lower in": f"{lower:,} of {row['replicates']:,} replicates",
             }
         )
