@@ -15,7 +15,6 @@ from labkit.memory import check_memory
 from labkit.policies.base import Policy
 from labkit.policies.naming import parse_policy
 from labkit.randomness import check_replicates, seed_sequence
-from labkit.stationary.start import forecast_start
 
 # Numbers kept for each replicate and checkpoint, more or less.
 _MEASURES = 10
@@ -110,6 +109,8 @@ def place(
             raise InputError(f'start is {start!r}; give loads, or "forecast".')
         if work is not None:
             raise InputError('start is "forecast", which knows tasks of size 1 only; leave sizes out.')
+        from labkit.stationary.start import forecast_start  # with all of linear algebra, rarely needed
+
         loads = forecast_start(fleet, rule, replicates, seed, whole, first_replicate)
     else:
         loads = _starting_loads(start, fleet.size, replicates, whole)

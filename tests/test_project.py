@@ -103,6 +103,16 @@ def test_importing_labkit_loads_nothing_heavy():
     assert (done.returncode, done.stdout.strip()) == (0, "[]"), done.stderr
 
 
+def test_the_kernel_of_a_run_imports_no_more_than_it_needs():
+    start = "from pathlib import Path; from labkit.studies.kernels import _imports; from importlib import import_module"
+    modules = "[import_module(name) for name in _imports(Path('notebooks/headroom.ipynb'))]"
+    slow = ["scipy.stats", "scipy.linalg", "matplotlib", "networkx", "papermill", "plotly"]
+    done = python(
+        "-c", f"{start}; import sys; {modules}; print([name for name in {slow} if name in sys.modules])"
+    )
+    assert (done.returncode, done.stdout.strip()) == (0, "[]"), done.stderr
+
+
 def test_every_public_name_is_there():
     assert [name for name in labkit.__all__ if not hasattr(labkit, name)] == []
 

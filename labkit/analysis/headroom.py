@@ -4,7 +4,6 @@ import math
 
 import numpy as np
 import pandas as pd
-from scipy.stats import binom
 
 from labkit.analysis.tables import describe, moments_of, prepare
 from labkit.checks import check_fraction
@@ -124,6 +123,8 @@ def _quantile_rank(replicates: int, risk: float) -> int:
 
 def _limit_ranks(replicates: int, risk: float, confidence: float) -> tuple[int, int]:
     """Return the ranks, counted from 1, of the two limits; 0 or replicates + 1 when there is none."""
+    from scipy.stats import binom  # slow to import, and needed for limits only
+
     tail = (1 - confidence) / 2 * (1 + _ROUNDING)
     law = binom(replicates, 1 - risk)
     lower = int(law.ppf(tail))
