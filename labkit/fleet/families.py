@@ -25,6 +25,11 @@ def ring(n: int) -> Fleet:
     n : int
         Servers, at least 3; there are as many choices.
 
+    Returns
+    -------
+    Fleet
+        Capacities and demands are 1.
+
     Raises
     ------
     InputError
@@ -57,6 +62,17 @@ def torus(*sides: int) -> Fleet:
     ------
     InputError
         When there is no side, or one is no whole number of at least 3.
+
+    Examples
+    --------
+    The neighbours of server 0 on a grid of 3 by 4:
+
+    >>> import labkit as lk
+    >>> grid = lk.torus(3, 4)
+    >>> grid
+    Fleet(12 servers, 24 choices of 2 options, capacity 1 each, demand 1 each)
+    >>> sorted(grid.to_networkx()[0])
+    [1, 3, 4, 8]
     """
     if not sides:
         raise InputError("sides is empty; give at least one side, for example torus(16, 16).")
@@ -79,10 +95,23 @@ def hypercube(dimension: int) -> Fleet:
     dimension : int
         From 1 to 31; there are dimension · 2^(dimension - 1) choices.
 
+    Returns
+    -------
+    Fleet
+        Choices by digit, the last digit first; capacities and demands are 1.
+
     Raises
     ------
     InputError
         When `dimension` is no whole number from 1 to 31.
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> lk.hypercube(2).choices[["option_1", "option_2"]].values.tolist()
+    [[0, 1], [2, 3], [0, 2], [1, 3]]
+    >>> lk.hypercube(10)
+    Fleet(1024 servers, 5120 choices of 2 options, capacity 1 each, demand 1 each)
     """
     dimension = check_whole("dimension", dimension)
     if dimension > 31:
@@ -107,10 +136,21 @@ def ladder(n: int) -> Fleet:
     n : int
         Rungs, at least 1; there are 2n servers and 3n - 2 choices.
 
+    Returns
+    -------
+    Fleet
+        The two paths first, then the rungs; capacities and demands are 1.
+
     Raises
     ------
     InputError
         When `n` is no whole number of at least 1.
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> lk.ladder(3).choices[["option_1", "option_2"]].values.tolist()
+    [[0, 1], [1, 2], [3, 4], [4, 5], [0, 3], [1, 4], [2, 5]]
     """
     n = check_whole("n", n)
     _total("n", (2, n))
@@ -177,6 +217,14 @@ def ring_with_chords(n: int, chords: int, *, rng: Any) -> Fleet:
     ------
     InputError
         When a number is out of range.
+
+    Examples
+    --------
+    A ring of 4 has room for two chords:
+
+    >>> import labkit as lk
+    >>> lk.ring_with_chords(4, 2, rng=1).choices[["option_1", "option_2"]].values.tolist()
+    [[0, 1], [1, 2], [2, 3], [3, 0], [0, 2], [1, 3]]
     """
     seed = seed_sequence(rng)
     n = _servers("n", n, least=3)
@@ -225,6 +273,15 @@ def random_regular(n: int, degree: int, *, rng: Any) -> Fleet:
     up to 5,000 choices are then mixed by random switches of two choices, a chain whose limit law is uniform
     (C. Cooper, M. Dyer and C. Greenhill, "Sampling regular graphs and a peer-to-peer network", Combin.
     Probab. Comput. 16, 2007). Above half of n - 1, the missing choices are drawn instead.
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> fleet = lk.random_regular(8, 3, rng=1)
+    >>> fleet
+    Fleet(8 servers, 12 choices of 2 options, capacity 1 each, demand 1 each)
+    >>> [choices for _, choices in fleet.to_networkx().degree]
+    [3, 3, 3, 3, 3, 3, 3, 3]
     """
     seed = seed_sequence(rng)
     n = _servers("n", n, least=2)

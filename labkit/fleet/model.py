@@ -67,6 +67,10 @@ class Fleet(Shown):
         float64 of shape (choices,), read-only; None when all demands are equal to `equal_demand`.
     equal_demand : float
         The demand of each choice when all are equal, else NaN.
+    servers, choices : pandas.DataFrame
+        The checked tables, with capacities (units of work) and demands filled in; new ones at each access.
+    digest : str
+        SHA-256 in hex of all that makes the fleet.
     total_capacity : float
         Sum of the capacities.
     implicit : CompleteLaw or None
@@ -92,8 +96,10 @@ class Fleet(Shown):
     >>> fleet = lk.Fleet(servers, choices)
     >>> fleet
     Fleet(3 servers, 2 choices of 2 options, capacity 1 to 2, demand 1 each)
-    >>> fleet.choices["demand"].tolist()
-    [1.0, 1.0]
+    >>> fleet.servers["capacity"].tolist(), fleet.choices["demand"].tolist()
+    ([2.0, 1.0, 1.0], [1.0, 1.0])
+    >>> fleet.digest == lk.Fleet(servers, choices).digest
+    True
     """
 
     size: int
@@ -253,6 +259,15 @@ class Fleet(Shown):
         ------
         InputError
             When a choice has three or more options, or a complete fleet is too large to list.
+
+        Examples
+        --------
+        >>> import labkit as lk
+        >>> graph = lk.ring(4).to_networkx()
+        >>> sorted(graph.edges)
+        [(0, 1), (0, 3), (1, 2), (2, 3)]
+        >>> graph.nodes[0]["capacity"], graph.edges[0, 1]["demand"]
+        (1.0, 1.0)
         """
         from labkit.fleet.graphs import graph_of
 
