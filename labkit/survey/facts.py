@@ -71,6 +71,26 @@ class Survey(Shown):
     split : pandas.DataFrame
         A split that reaches the profile, one row a choice: its options and demand, and for each option the
         share of the demand that goes there (share_1, share_2, ...; NaN where the option is absent).
+
+    Examples
+    --------
+    A path of three servers: north and east share 18, east and south 12.
+
+    >>> import pandas as pd
+    >>> import labkit as lk
+    >>> servers = pd.DataFrame({"server": ["north", "east", "south"], "capacity": [10, 10, 40]})
+    >>> choices = pd.DataFrame(
+    ...     {"option_1": ["north", "east"], "option_2": ["east", "south"], "demand": [18, 12]}
+    ... )
+    >>> best = lk.survey(lk.Fleet(servers, choices))
+    >>> best
+    <survey of 3 servers: optimum 0.9 (1.8 × mean, in 2 of 3 servers)>
+    >>> best.bottleneck, best.components
+    (('north', 'east'), 1)
+    >>> best.profile[["server", "fair_load", "bottleneck"]].values.tolist()
+    [['north', 9.0, True], ['east', 9.0, True], ['south', 12.0, False]]
+    >>> best.split[["option_1", "share_1", "option_2", "share_2"]].values.tolist()
+    [['north', 0.5, 'east', 0.5], ['east', 0.0, 'south', 1.0]]
     """
 
     def __init__(self, fleet: Fleet) -> None:
@@ -139,6 +159,15 @@ class Survey(Shown):
             One row a fact: `fact`, `value` (a number, a truth value or a tuple of names) and `meaning`.
             `connectivity` and `algebraic_connectivity` are of the demand-weighted graph, in which a choice of
             k > 2 options is a clique of pairs with demand ÷ (k − 1) each.
+
+        Examples
+        --------
+        Two choices must be cut to divide a ring:
+
+        >>> import labkit as lk
+        >>> facts = lk.survey(lk.ring(4)).table().set_index("fact")["value"]
+        >>> facts[["choices", "mean", "optimum", "connectivity"]].tolist()
+        [4, 1.0, 1.0, 2.0]
         """
         values = self._facts
         return pd.DataFrame(
