@@ -39,6 +39,17 @@ class Policy:
         A uniform word that belongs to the arrival, the same for every policy.
     own : uint64 array, shape (4,)
         A second stream (``labkit.compiled.next_raw(own)``) for a policy that needs more randomness.
+
+    Examples
+    --------
+    Rules are equal when their names are; those with one chooser share compiled code:
+
+    >>> import labkit as lk
+    >>> rule = lk.Mixed(beta=0.25)
+    >>> rule.name, rule.kernel_name
+    ('mixed(beta=0.25)', 'Mixed')
+    >>> rule == lk.Mixed(beta=0.5), rule.kernel_name == lk.Mixed(beta=0.5).kernel_name
+    (False, True)
     """
 
     choose: Any
@@ -70,25 +81,128 @@ class Policy:
         return type(self).__name__
 
     def prepare(self, fleet: Fleet) -> tuple[Any, ...]:
-        """Return what the chooser needs to know about the fleet, a tuple of arrays and numbers."""
+        """Return what the chooser needs to know about the fleet.
+
+        Parameters
+        ----------
+        fleet : Fleet
+
+        Returns
+        -------
+        tuple of arrays and numbers
+            The `state` of the chooser; empty for a rule that needs none.
+
+        Raises
+        ------
+        InputError
+            When the rule cannot work on this fleet.
+
+        Examples
+        --------
+        >>> import labkit as lk
+        >>> lk.LeastLoaded().prepare(lk.ring(4))
+        ()
+        >>> (beta,) = lk.Mixed(beta=0.25).prepare(lk.ring(4))
+        >>> float(beta)
+        0.25
+        """
         return ()
 
     def renewal(self, fleet: Fleet) -> int:
         """Return how often, in tasks, `renew` is called, just before the task; 0 for never.
 
         `WITH_REPORTS` stands for before the first task and whenever loads are reported.
+
+        Parameters
+        ----------
+        fleet : Fleet
+
+        Returns
+        -------
+        int
+
+        Examples
+        --------
+        >>> import labkit as lk
+        >>> lk.LeastLoaded().renewal(lk.ring(8)), lk.SmoothFeedback(every=20).renewal(lk.ring(8))
+        (0, 20)
         """
         return 0
 
     def own_state(self, state: tuple[Any, ...]) -> tuple[Any, ...]:
-        """Return the state for one replicate: with copies of the arrays that `renew` and `after` change."""
+        """Return the state for one replicate: with copies of the arrays that `renew` and `after` change.
+
+        Parameters
+        ----------
+        state : tuple
+            What `prepare` returned.
+
+        Returns
+        -------
+        tuple
+            Arrays that nothing changes are shared.
+
+        Examples
+        --------
+        Differences change with every placement, tables never do:
+
+        >>> import numpy as np
+        >>> import labkit as lk
+        >>> differences, tables = np.zeros(3), np.ones(3)
+        >>> mine = lk.TreeFlow().own_state((differences, tables))
+        >>> mine[0] is differences, mine[1] is tables
+        (False, True)
+        """
         return state
 
     def check(self, load: type) -> None:
-        """Refuse a rule that cannot be compiled for loads of this type."""
+        """Refuse a rule that cannot be compiled for loads of this type.
+
+        Parameters
+        ----------
+        load : type
+            Of one server's load: whole numbers, or floats where tasks have sizes.
+
+        Raises
+        ------
+        InputError
+            Only for rules made by `labkit.policy`; built-in rules suit both types.
+
+        Examples
+        --------
+        >>> import labkit as lk
+        >>> @lk.policy
+        ... def by_name(options, loads, capacity, coin):
+        ...     return "first"
+        >>> by_name.check(int)  # doctest: +ELLIPSIS
+        Traceback (most recent call last):
+            ...
+        labkit.errors.InputError: policy by-name returns a text; it must return a whole number ...
+        """
 
     def explain(self, error: Exception) -> InputError | None:
-        """Return the refusal for an error inside the rule, or None when it is not the rule's."""
+        """Return the refusal for an error inside the rule, or None when it is not the rule's.
+
+        Parameters
+        ----------
+        error : Exception
+            What the compiled loop raised.
+
+        Returns
+        -------
+        InputError or None
+
+        Examples
+        --------
+        >>> import labkit as lk
+        >>> @lk.policy
+        ... def beyond(options, loads, capacity, coin):
+        ...     return loads[len(loads)]
+        >>> print(beyond.explain(IndexError("index is out of bounds")))
+        policy beyond looked beyond the end of an array: index is out of bounds.
+        >>> lk.LeastLoaded().explain(IndexError("index is out of bounds")) is None
+        True
+        """
         return None
 
     def __repr__(self) -> str:

@@ -27,9 +27,25 @@ class Mixed(Policy):
     beta : float
         From 0 (one-choice) to 1 (least-loaded).
 
+    Raises
+    ------
+    InputError
+        When `beta` lies outside.
+
     Notes
     -----
     Peres, Talwar & Wieder (2015). It also models load reports for a share of the tasks only.
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> rule = lk.Mixed(beta=0.25)
+    >>> rule.name, rule.compares
+    ('mixed(beta=0.25)', 0.25)
+    >>> lk.Mixed(beta=1.5)
+    Traceback (most recent call last):
+        ...
+    labkit.errors.InputError: beta is 1.5; give a number from 0 to 1.
     """
 
     choose = staticmethod(choose)

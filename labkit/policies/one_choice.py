@@ -32,6 +32,15 @@ class OneChoice(Policy):
 
     For n tasks on n servers the gap is of order log n / log log n; for many more tasks it is near
     sqrt(2 m ln n / n) (Raab & Steger 1998).
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> rule = lk.OneChoice()
+    >>> rule.name, rule.knows
+    ('one-choice', 'nothing')
+    >>> lk.place(lk.ring(4), rule, tasks=4000, rng=1).loads.tolist()
+    [[1024, 1024, 973, 979]]
     """
 
     choose = staticmethod(choose)

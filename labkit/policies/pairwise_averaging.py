@@ -35,6 +35,21 @@ class PairwiseAveraging(Policy):
     -----
     On a ring of n servers the mean square of the difference between servers k apart is (k(n − k) − 1) / n,
     so its spread grows like sqrt(n), too (as a bound: Alistarh, Nadiradze & Sabour 2020).
+
+    Examples
+    --------
+    A task has been put on the first of two servers, which then share all that they have; the third is no
+    option of it:
+
+    >>> import numpy as np
+    >>> import labkit as lk
+    >>> rule = lk.PairwiseAveraging()
+    >>> rule.name, rule.moves_work
+    ('pairwise-averaging', True)
+    >>> loads, options = np.array([3.0, 0.0, 5.0]), np.array([[0, 1]], np.uint32)
+    >>> rule.after((), loads, None, options, 0, 2, 0, 1.0, True)
+    >>> loads.tolist()
+    [1.5, 1.5, 5.0]
     """
 
     choose = staticmethod(choose)

@@ -120,6 +120,12 @@ class SmoothFeedback(Policy):
     every : int, optional
         Tilts are worked out anew just before the tasks 1, every + 1, ...; default 10 tasks a server.
 
+    Raises
+    ------
+    InputError
+        When `gain` is not above 0 and at most 100, or `every` no whole number of at least 1; where the rule
+        is used, also for a fleet whose choices are not listed.
+
     Notes
     -----
     A dispatcher needs the present loads of the two options and a table of one number a server. L^(-1/2) is
@@ -133,6 +139,17 @@ class SmoothFeedback(Policy):
     Most tilts are far below one task, and decide between equal loads. A coin is part of it there: with late
     reports, tasks that all follow the same tilt would crowd. Where no pattern lasts until the tilts are
     renewed, as on complete graphs, there are none, and servers are picked as by least-loaded.
+
+    Examples
+    --------
+    Tilts are renewed every 10 tasks a server, unless told otherwise:
+
+    >>> import labkit as lk
+    >>> rule = lk.SmoothFeedback(gain=0.5, every=8)
+    >>> rule.name, lk.SmoothFeedback().name
+    ('smooth-feedback(gain=0.5, every=8)', 'smooth-feedback')
+    >>> rule.renewal(lk.ring(16)), lk.SmoothFeedback().renewal(lk.ring(16))
+    (8, 160)
     """
 
     choose = staticmethod(choose)

@@ -31,6 +31,24 @@ class StaticSplit(Policy):
     leaves is chance: with m tasks a server's load varies like sqrt(m).
 
     Where an even split is fair already, as on regular fleets, it is the same as one-choice.
+
+    Examples
+    --------
+    Of the 18 that north and east share, half goes north; of the 12 that east and south share, all goes south,
+    since east is full enough:
+
+    >>> import pandas as pd
+    >>> import labkit as lk
+    >>> servers = pd.DataFrame({"server": ["north", "east", "south"], "capacity": [10, 10, 40]})
+    >>> choices = pd.DataFrame(
+    ...     {"option_1": ["north", "east"], "option_2": ["east", "south"], "demand": [18, 12]}
+    ... )
+    >>> rule = lk.StaticSplit()
+    >>> rule.name, rule.knows
+    ('static-split', 'the demands; no loads')
+    >>> (bounds,) = rule.prepare(lk.Fleet(servers, choices))
+    >>> bounds.tolist()
+    [[0.5], [0.0]]
     """
 
     choose = staticmethod(choose)

@@ -53,6 +53,11 @@ class TreeFlow(Policy):
         them up to date with each placement, or with each report where reports are late. Default: 2 tasks a
         server, and 0 for fewer than 256 servers.
 
+    Raises
+    ------
+    InputError
+        When a parameter is none of these; where it is used, also for a fleet whose choices are not listed.
+
     Notes
     -----
     ``tree-flow(strengths=equal, leftover=coin)`` is balancing by orthogonal flows over a hierarchical
@@ -64,6 +69,15 @@ class TreeFlow(Policy):
     The same fleet has the same tables in every run. The halves are those of the library `pymetis` where it is
     installed (always with the same seed and one cut), and otherwise our own: both serve, but they differ, so
     results to the bit need it on both sides or on neither.
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> rule = lk.TreeFlow(strengths="equal", leftover="coin")
+    >>> rule.name, lk.TreeFlow().name
+    ('tree-flow(strengths=equal, leftover=coin)', 'tree-flow')
+    >>> lk.TreeFlow().renewal(lk.ring(1000))
+    2000
     """
 
     knows = "the loads of the options, and for each of its server sets which half is fuller"
@@ -124,6 +138,19 @@ class TreeFlow(Policy):
         -------
         float64 array, shape (sets,)
             Probability, per unit demand and unit flow, with which a task draws the set.
+
+        Raises
+        ------
+        InputError
+            When the choices of the fleet are not listed.
+
+        Examples
+        --------
+        A ring of 4 is halved, and each half once more: three sets.
+
+        >>> import labkit as lk
+        >>> lk.TreeFlow(strengths="equal", leftover="coin").strengths_of(lk.ring(4)).round(3).tolist()
+        [1.0, 1.0, 1.0]
         """
         frame = self._frame(fleet)
         flows, authority = frame.flows, frame.pairs.authority
@@ -176,7 +203,20 @@ class TreeFlow(Policy):
         Returns
         -------
         dict
-            Sets, entries a choice on average and at most, and bytes of all tables.
+            `sets`; `entries_mean` and `entries_max`, entries a choice on average and at most; `bytes` of all
+            tables.
+
+        Raises
+        ------
+        InputError
+            When the choices of the fleet are not listed.
+
+        Examples
+        --------
+        >>> import labkit as lk
+        >>> tables = lk.TreeFlow(strengths="equal").memory(lk.ring(4))
+        >>> tables["sets"], tables["entries_max"]
+        (3, 1)
         """
         state = self.prepare(fleet)
         size = sum(part.nbytes for part in state if isinstance(part, np.ndarray))
@@ -205,8 +245,21 @@ class TreeFlow(Policy):
         Returns
         -------
         pandas.DataFrame
-            One row a level: sets, mean number of servers, mean strength, and the share of all demand that
-            draws a set of this level.
+            One row a level, from the whole fleet (level 0) down: sets, servers (mean number), strength
+            (mean), and share_of_demand, the share of all demand that draws a set of this level.
+
+        Raises
+        ------
+        InputError
+            When the choices of the fleet are not listed.
+
+        Examples
+        --------
+        >>> import labkit as lk
+        >>> lk.TreeFlow(strengths="equal", leftover="coin").table(lk.ring(4)).round(3)
+           level  sets  servers  strength  share_of_demand
+        0      0     1      4.0       1.0             0.25
+        1      1     2      2.0       1.0             0.50
         """
         import pandas as pd
 

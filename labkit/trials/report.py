@@ -32,6 +32,20 @@ class PolicyCheck:
         The fleets it was tried on, in words, and the tasks there; empty when it could not be tried.
     unseen : tuple of str
         What such a check cannot find.
+    sound : bool
+        Whether nothing was found.
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> @lk.policy
+    ... def by_name(options, loads, capacity, coin):
+    ...     return "first"
+    >>> found = lk.check_policy(by_name)
+    >>> found.sound, [finding.fault for finding in found.findings]
+    (False, ['cannot be compiled'])
+    >>> found.tried
+    ()
     """
 
     policy: str
