@@ -48,6 +48,8 @@ class Failures:
     >>> failures = lk.Failures(schedule)
     >>> failures.availability(lk.ring(3), horizon=100.0)
     0.9
+    >>> failures.name == lk.Failures(schedule).name
+    True
     """
 
     def __init__(self, schedule: pd.DataFrame | str | Path) -> None:
@@ -72,6 +74,7 @@ class Failures:
         fleet : Fleet
             Whose servers the schedule names, also those after the horizon.
         horizon : float
+            Above 0, in the run's unit of time.
         generator : numpy.random.Generator
             Not used; the same schedule happens in each replicate.
 
@@ -88,6 +91,17 @@ class Failures:
         ------
         InputError
             When the fleet has no server of a name.
+
+        Examples
+        --------
+        >>> import numpy as np
+        >>> import pandas as pd
+        >>> import labkit as lk
+        >>> schedule = pd.DataFrame({"time": [10.0, 40.0], "server": [2, 2], "state": ["down", "up"]})
+        >>> failures = lk.Failures(schedule)
+        >>> times, servers, ups = failures.events(lk.ring(3), 30.0, np.random.default_rng(1))
+        >>> times.tolist(), servers.tolist(), ups.tolist()
+        ([10.0], [2], [False])
         """
         servers = self._positions(fleet)
         count = int(np.searchsorted(self.times, horizon, side="left"))
@@ -96,14 +110,57 @@ class Failures:
     def check_servers(self, fleet: Fleet) -> None:
         """Refuse a schedule that names a server the fleet does not have.
 
+        Parameters
+        ----------
+        fleet : Fleet
+
         Raises
         ------
         InputError
+            The sentence names the schedule and the server.
+
+        Examples
+        --------
+        >>> import pandas as pd
+        >>> import labkit as lk
+        >>> failures = lk.Failures(pd.DataFrame({"time": [10.0], "server": [7], "state": ["down"]}))
+        >>> failures.check_servers(lk.ring(8))
+        >>> failures.check_servers(lk.ring(3))  # doctest: +ELLIPSIS
+        Traceback (most recent call last):
+            ...
+        labkit.errors.InputError: schedule holds 7, which names no server; ...
         """
         self._positions(fleet)
 
     def availability(self, fleet: Fleet, horizon: float) -> float:
-        """Return the mean share of the time up to the horizon that a server is up."""
+        """Return the mean share of the time up to the horizon that a server is up.
+
+        Parameters
+        ----------
+        fleet : Fleet
+        horizon : float
+            Above 0, in the run's unit of time.
+
+        Returns
+        -------
+        float
+            From 0 to 1.
+
+        Raises
+        ------
+        InputError
+            When the fleet has no server of a name.
+
+        Examples
+        --------
+        One of four servers is down half of the time:
+
+        >>> import pandas as pd
+        >>> import labkit as lk
+        >>> failures = lk.Failures(pd.DataFrame({"time": [10.0], "server": [0], "state": ["down"]}))
+        >>> failures.availability(lk.ring(4), horizon=20.0)
+        0.875
+        """
         times, _, ups = self.events(fleet, horizon, np.random.default_rng(0))
         down = np.where(ups, -1.0, 1.0) @ (horizon - times)
         return float(1 - down / (horizon * len(fleet)))
@@ -156,10 +213,34 @@ class RandomFailures:
 
         The draws do not depend on the horizon: a longer one only adds events.
 
+        Parameters
+        ----------
+        fleet : Fleet
+        horizon : float
+            Above 0, in the run's unit of time.
+        generator : numpy.random.Generator
+            Source of the times.
+
+        Returns
+        -------
+        times, servers, ups : numpy.ndarray
+            As from `Failures.events`.
+
         Raises
         ------
         InputError
             When more events are to be expected than memory holds.
+
+        Examples
+        --------
+        Four servers, each of which fails about once in 90 + 10 units of time; one is still down at the end:
+
+        >>> import numpy as np
+        >>> import labkit as lk
+        >>> failures = lk.RandomFailures(up=90, down=10)
+        >>> times, servers, ups = failures.events(lk.ring(4), 10_000.0, np.random.default_rng(1))
+        >>> int((~ups).sum()), int(ups.sum())
+        (382, 381)
         """
         expected = 2 * horizon * len(fleet) / (self.up + self.down)
         if expected > MOST_EVENTS:
@@ -192,7 +273,26 @@ class RandomFailures:
             now = times[:, -1]
 
     def availability(self, fleet: Fleet, horizon: float) -> float:
-        """Return the share of time that a server is up in the long run, up/(up + down)."""
+        """Return the share of time that a server is up in the long run, up/(up + down).
+
+        Parameters
+        ----------
+        fleet : Fleet
+            Not used; all servers are alike.
+        horizon : float
+            Not used.
+
+        Returns
+        -------
+        float
+            Above 0 and below 1.
+
+        Examples
+        --------
+        >>> import labkit as lk
+        >>> lk.RandomFailures(up=90, down=10).availability(lk.ring(4), horizon=1000.0)
+        0.9
+        """
         return self.up / (self.up + self.down)
 
     def __repr__(self) -> str:

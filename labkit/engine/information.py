@@ -42,7 +42,16 @@ class Information:
 
 
 class Fresh(Information):
-    """A policy sees the loads as they are when the task arrives."""
+    """A policy sees the loads as they are when the task arrives.
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> lk.Fresh().name, lk.Fresh().every
+    ('fresh', 0)
+    >>> lk.place(lk.ring(4), "least-loaded", tasks=400, rng=1, information=lk.Fresh()).loads.tolist()
+    [[100, 100, 100, 100]]
+    """
 
 
 class Snapshot(Information):
@@ -53,6 +62,22 @@ class Snapshot(Information):
     every : int or float
         Where work stays: a report is made before the first task and after every `every` tasks, a whole
         number; ``Snapshot(1)`` is the same as ``Fresh()``. Where work leaves: the time between reports.
+
+    Raises
+    ------
+    InputError
+        When `every` is not above 0; where work stays, also when it is not whole.
+
+    Examples
+    --------
+    Until the next report tasks crowd onto the server that was emptiest at the last one:
+
+    >>> import labkit as lk
+    >>> late = lk.Snapshot(every=200)
+    >>> late.name
+    'snapshot(every=200)'
+    >>> lk.place(lk.ring(4), "least-loaded", tasks=400, rng=1, information=late).loads.tolist()
+    [[152, 104, 62, 82]]
     """
 
     def __init__(self, every: float) -> None:
@@ -71,6 +96,22 @@ class Dispatchers(Information):
         Number of dispatchers, from 1 to 4,096. With one alone it is as if loads were fresh.
     every : int or float
         From one report of all loads to the next, as in `Snapshot`.
+
+    Raises
+    ------
+    InputError
+        When a number is out of range.
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> several = lk.Dispatchers(count=4, every=50)
+    >>> several.name, several.dispatchers, several.every
+    ('dispatchers(count=4, every=50)', 4, 50)
+    >>> lk.Dispatchers(count=0, every=50)
+    Traceback (most recent call last):
+        ...
+    labkit.errors.InputError: count is 0; give a whole number of at least 1.
     """
 
     def __init__(self, count: int, every: float) -> None:

@@ -48,8 +48,23 @@ class Outcome(Shown):
         How many tasks were placed in each replicate.
     first_replicate : int
         The number of the first replicate; row i of `loads` is replicate first_replicate + i.
+    replicates : numpy.ndarray, shape (replicates,)
+        The numbers of the replicates.
     by_server : pandas.DataFrame
         The loads after the last task beside each server's fair utilisation, one row a replicate and server.
+
+    Examples
+    --------
+    402 tasks on four servers: two of them must have one more.
+
+    >>> import labkit as lk
+    >>> outcome = lk.place(lk.ring(4), "least-loaded", tasks=402, replicates=2, rng=1)
+    >>> outcome.replicates.tolist(), outcome.loads.tolist()
+    ([0, 1], [[101, 101, 100, 100], [100, 100, 101, 101]])
+    >>> outcome.measures[["replicate", "mean_load", "max_load", "gap"]].values.tolist()
+    [[0.0, 100.5, 101.0, 0.5], [1.0, 100.5, 101.0, 0.5]]
+    >>> outcome.by_server[["server", "load", "fair_utilisation", "excess"]].head(2).values.tolist()
+    [[0.0, 101.0, 100.5, 0.5], [1.0, 101.0, 100.5, 0.5]]
     """
 
     fleet: Fleet

@@ -121,6 +121,26 @@ class ServiceOutcome(Shown):
         What was run, in words.
     warmup_found_by : str
         "given", or the method that found it.
+
+    Examples
+    --------
+    Three servers with work for half of their capacity:
+
+    >>> import labkit as lk
+    >>> outcome = lk.serve(
+    ...     lk.ring(3), "least-loaded", load_factor=0.5, horizon=2000.0, warmup=100.0, replicates=2, rng=1,
+    ...     levels=1, intervals=10,
+    ... )
+    >>> outcome.policy, outcome.service, outcome.warmup_found_by
+    ('least-loaded', 'exponential', 'given')
+    >>> outcome.measures[["replicate", "utilisation", "queue_mean"]].round(2).values.tolist()
+    [[0.0, 0.52, 0.72], [1.0, 0.52, 0.69]]
+    >>> outcome.by_server[["server", "queue_mean", "share_at_least_1"]].head(3).round(2).values.tolist()
+    [[0.0, 0.75, 0.53], [1.0, 0.69, 0.51], [2.0, 0.71, 0.51]]
+    >>> outcome.tails[["at_least", "share"]].head(3).round(2).values.tolist()
+    [[0.0, 1.0], [1.0, 0.52], [2.0, 0.17]]
+    >>> len(outcome.by_interval)
+    20
     """
 
     fleet: Fleet
