@@ -66,6 +66,15 @@ class Forecast(Shown):
         Values of the gap and their probabilities.
     profile : pandas.DataFrame
         One row a server: server, utilisation (mean, beyond the fleet's mean).
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> ahead = lk.forecast(lk.complete(1000), "least-loaded")
+    >>> ahead
+    <forecast of least-loaded on 1,000 servers: mean gap 2.217 ± 0.067, spread 0.9538 (fluid limit)>
+    >>> bool(abs(ahead.gaps @ ahead.weights - ahead.mean_gap) < 1e-9)
+    True
     """
 
     policy: str
@@ -86,6 +95,27 @@ class Forecast(Shown):
         ----------
         probability : float
             Above 0 and below 1.
+
+        Returns
+        -------
+        float
+            One of `gaps`.
+
+        Raises
+        ------
+        InputError
+            When `probability` lies outside.
+
+        Examples
+        --------
+        >>> import labkit as lk
+        >>> ahead = lk.forecast(lk.complete(1000))
+        >>> [round(ahead.quantile(probability), 2) for probability in (0.01, 0.5, 0.99)]
+        [1.55, 2.2, 2.95]
+        >>> ahead.quantile(1.0)
+        Traceback (most recent call last):
+            ...
+        labkit.errors.InputError: probability is 1.0; give a number above 0 and below 1.
         """
         probability = check_fraction("probability", probability)
         order = np.argsort(self.gaps, kind="stable")
@@ -94,7 +124,20 @@ class Forecast(Shown):
         return float(self.gaps[order[min(place, order.size - 1)]])
 
     def table(self) -> pd.DataFrame:
-        """Return the forecast as a table, one row a fact: fact, value, meaning."""
+        """Return the forecast as a table.
+
+        Returns
+        -------
+        pandas.DataFrame
+            One row a fact: fact, value (in utilisation), meaning.
+
+        Examples
+        --------
+        >>> import labkit as lk
+        >>> facts = lk.forecast(lk.complete(1000)).table().set_index("fact")["value"]
+        >>> facts[["mean_gap", "error", "gap_median", "gap_q99"]].round(2).tolist()
+        [2.22, 0.07, 2.2, 2.95]
+        """
         rows = [
             ("mean_gap", self.mean_gap, "mean stationary gap, in utilisation"),
             ("error", self.error, "half-width of what it may be wrong by, at about 95 %"),
