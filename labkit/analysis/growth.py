@@ -59,6 +59,19 @@ class GrowthFit(Shown):
         None when every law needs all sizes).
     left_out : dict
         Laws that were not fitted, with the reason.
+
+    Examples
+    --------
+    A gap of 2√n, measured twice at each size and off by 0.1:
+
+    >>> import pandas as pd
+    >>> import labkit as lk
+    >>> table = pd.DataFrame({"servers": 2 * [16, 64, 256], "gap": [7.9, 15.9, 31.9, 8.1, 16.1, 32.1]})
+    >>> grown = lk.fit_growth(table, rng=1, resamples=200)
+    >>> grown
+    <GrowthFit of gap on servers from 16 to 256: square root 0.99>
+    >>> grown.sizes[["x", "replicates", "mean"]].round(3).values.tolist()
+    [[16.0, 2.0, 8.0], [64.0, 2.0, 16.0], [256.0, 2.0, 32.0]]
     """
 
     x: str
@@ -87,6 +100,15 @@ class GrowthFit(Shown):
             exponent_upper (percentiles over resamples), offset (c), chi_square, freedom (sizes − parameters),
             aicc, weight, held_out (relative error at the largest size when fitted to the others),
             held_out_errors (the same in standard errors of that difference).
+
+        Examples
+        --------
+        >>> import pandas as pd
+        >>> import labkit as lk
+        >>> table = pd.DataFrame({"servers": 2 * [16, 64, 256], "gap": [7.9, 15.9, 31.9, 8.1, 16.1, 32.1]})
+        >>> best = lk.fit_growth(table, rng=1, resamples=200).table().iloc[0]
+        >>> best["law"], best["formula"], round(float(best["factor"]), 2)
+        ('square root', 'a·√x', 2.0)
         """
         return self._rows.copy()
 
@@ -114,6 +136,17 @@ class GrowthFit(Shown):
         ------
         InputError
             When a size is not a number above 0, too far outside, or where a fitted law is not defined.
+
+        Examples
+        --------
+        >>> import pandas as pd
+        >>> import labkit as lk
+        >>> table = pd.DataFrame({"servers": 2 * [16, 64, 256], "gap": [7.9, 15.9, 31.9, 8.1, 16.1, 32.1]})
+        >>> ahead = lk.fit_growth(table, rng=1, resamples=200).predict([256, 4096])
+        >>> ahead[["x", "estimate", "extrapolated"]].round(1).values.tolist()
+        [[256.0, 32.0, False], [4096.0, 128.0, True]]
+        >>> bool((ahead["lower"] < ahead["estimate"]).all() and (ahead["estimate"] < ahead["upper"]).all())
+        True
         """
         low, high = self.sizes["x"].iloc[0], self.sizes["x"].iloc[-1]
         points = self._points(xs, force)
@@ -147,6 +180,15 @@ class GrowthFit(Shown):
         ------
         InputError
             As in `predict`.
+
+        Examples
+        --------
+        >>> import pandas as pd
+        >>> import labkit as lk
+        >>> table = pd.DataFrame({"servers": 2 * [16, 64, 256], "gap": [7.9, 15.9, 31.9, 8.1, 16.1, 32.1]})
+        >>> curves = lk.fit_growth(table, rng=1, resamples=200).by_law([4096])
+        >>> curves[["law", "formula", "estimate"]].head(3).round(1).values.tolist()
+        [['square root', 'a·√x', 128.0], ['square root', 'c + a·√x', 128.0], ['power', 'a·x^b', 128.0]]
         """
         points = self._points(xs, force)
         fitted, rows = self._fitted, []
@@ -158,7 +200,21 @@ class GrowthFit(Shown):
         return pd.DataFrame(rows, columns=["law", "formula", "weight", "x", "estimate"])
 
     def notes(self) -> list[str]:
-        """Return what can and what cannot be concluded, one sentence each."""
+        """Return what can and what cannot be concluded.
+
+        Returns
+        -------
+        list of str
+            One sentence each.
+
+        Examples
+        --------
+        >>> import pandas as pd
+        >>> import labkit as lk
+        >>> table = pd.DataFrame({"servers": 2 * [16, 64, 256], "gap": [7.9, 15.9, 31.9, 8.1, 16.1, 32.1]})
+        >>> lk.fit_growth(table, rng=1, resamples=200).notes()[0]
+        'Among the laws tried, the data single out square root (0.99).'
+        """
         heavy = [at for at, weight in enumerate(self._fitted.weights) if weight >= _NOTABLE]
         limits = [
             form.formula

@@ -104,10 +104,23 @@ def replicates_needed(risk: float, confidence: float = 0.95) -> int:
     risk, confidence : float
         As in `headroom`; both in (0, 1).
 
+    Returns
+    -------
+    int
+        At least 1.
+
     Raises
     ------
     InputError
         When either lies outside (0, 1).
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> lk.replicates_needed(risk=0.01)
+    368
+    >>> 0.99**367 > 0.025 >= 0.99**368
+    True
     """
     risk = check_fraction("risk", risk)
     confidence = check_fraction("confidence", confidence)

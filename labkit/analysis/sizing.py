@@ -48,6 +48,23 @@ class StudySize:
         asked for.
     most_replicates : int
         A cap that leaves room: half as much again as the point that needs most.
+
+    Examples
+    --------
+    >>> import pandas as pd
+    >>> import labkit as lk
+    >>> pilot = pd.DataFrame({
+    ...     "point": ["small", "large"], "mean": [1.0, 2.0], "deviation": [0.2, 0.8], "replicates": [20, 20],
+    ...     "seconds_a_replicate": [0.01, 0.5], "seconds_fixed": [2.0, 2.0],
+    ... })
+    >>> size = lk.size_study(pilot, precision=0.05, seconds=240)
+    >>> size.table[["point", "replicates", "seconds", "piloted"]].values.tolist()
+    [['small', 88, 2.88, True], ['large', 343, 173.5, True]]
+    >>> size.fits, round(size.seconds), size.left_out
+    (True, 176, [])
+    >>> hurried = lk.size_study(pilot, precision=0.05, seconds=60)
+    >>> hurried.fits, hurried.left_out, hurried.precision_in_time
+    (False, ['large'], 0.089)
     """
 
     table: pd.DataFrame

@@ -15,7 +15,17 @@ P = ParamSpec("P")
 
 @dataclass(frozen=True, eq=False, repr=False)
 class GrowthFit(growth.GrowthFit):
-    """Fitted laws of growth that can be drawn; attributes are those of `labkit.analysis.growth.GrowthFit`."""
+    """Fitted laws of growth that can be drawn; attributes are those of `labkit.analysis.growth.GrowthFit`.
+
+    Examples
+    --------
+    >>> import pandas as pd
+    >>> import labkit as lk
+    >>> table = pd.DataFrame({"servers": 2 * [16, 64, 256], "gap": [7.9, 15.9, 31.9, 8.1, 16.1, 32.1]})
+    >>> grown = lk.fit_growth(table, rng=1, resamples=200)
+    >>> grown
+    <GrowthFit of gap on servers from 16 to 256: square root 0.99>
+    """
 
     def figure(self, *, reach: float = 4.0, measure: str | None = None) -> "Figure":
         """Draw the means at each size, the average of the laws and its bands; see `growth_curve`.
@@ -35,6 +45,20 @@ class GrowthFit(growth.GrowthFit):
         ------
         InputError
             When `reach` lies outside.
+
+        Examples
+        --------
+        >>> import pandas as pd
+        >>> import labkit as lk
+        >>> table = pd.DataFrame({"servers": 2 * [16, 64, 256], "gap": [7.9, 15.9, 31.9, 8.1, 16.1, 32.1]})
+        >>> grown = lk.fit_growth(table, rng=1, resamples=200)
+        >>> (axes,) = grown.figure(reach=4).axes
+        >>> axes.get_ylabel(), round(axes.get_xlim()[1])
+        ('mean gap, utilisation (load ÷ capacity)', 1024)
+        >>> grown.figure(reach=40)
+        Traceback (most recent call last):
+            ...
+        labkit.errors.InputError: reach is 40; give a number from 1 to 16.
         """
         from labkit.figures.growth_curve import growth_curve
 
