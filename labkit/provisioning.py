@@ -48,6 +48,20 @@ class Provision(Shown):
     curve : pandas.DataFrame
         One row a scale that was run: scale, share (how often the criterion failed), lower, upper; empty when
         one run tells all.
+
+    Examples
+    --------
+    Three servers, made for one session at a time each: in nine runs of ten at most three meet on one server.
+
+    >>> import labkit as lk
+    >>> found = lk.serve_headroom(
+    ...     lk.ring(3), "least-loaded", load_factor=0.5, risk=0.1, discipline="sessions", horizon=100.0,
+    ...     warmup=10.0, replicates=50, rng=1,
+    ... )
+    >>> found.table[["scale", "lower", "upper", "capacity"]].values.tolist()
+    [[3.0, 3.0, 4.0, 9.0]]
+    >>> found.curve.empty
+    True
     """
 
     table: pd.DataFrame
@@ -220,6 +234,21 @@ def replay_headroom(
     ------
     InputError, TooFewReplicates
         As in `labkit.serve_headroom`; the second also when the trace has too few blocks.
+
+    Examples
+    --------
+    Sessions of an hour and a half begin every hour, so that two overlap, one on each server; capacities of 1
+    are just enough:
+
+    >>> import pandas as pd
+    >>> import labkit as lk
+    >>> hours = [float(hour) for hour in range(24 * 60)]
+    >>> trace = pd.DataFrame({"time": hours, "option_1": "north", "option_2": "east", "duration": 1.5})
+    >>> found = lk.replay_headroom(
+    ...     lk.fleet_from_trace(trace), trace, "least-loaded", risk=0.1, block=24.0, rng=1
+    ... )
+    >>> found.table[["scale", "lower", "upper", "capacity"]].values.tolist()
+    [[1.0, 1.0, 1.0, 2.0]]
     """
     check_fleet(fleet)
     risk, confidence, tolerance = _checked(risk, confidence, tolerance)
