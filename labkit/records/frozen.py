@@ -121,6 +121,19 @@ def read_frozen(name: str, folder: str | Path | None = None) -> Frozen:
         When there is no frozen table of this name.
     StoreError
         When a file is missing, changed or added, in the sentence of `labkit verify`.
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> frozen = lk.read_frozen("demo")
+    >>> frozen.manifest["study"], len(frozen.table) == frozen.manifest["rows"]
+    ('demo', True)
+    >>> "least-loaded" in set(frozen.runs["policy"])
+    True
+    >>> lk.read_frozen("demos")  # doctest: +ELLIPSIS
+    Traceback (most recent call last):
+        ...
+    labkit.errors.InputError: frozen table is 'demos'; did you mean 'demo' ...
     """
     place = find_frozen(name, FROZEN if folder is None else Path(folder))
     manifest, findings = check_files(place, name)

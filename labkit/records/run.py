@@ -164,6 +164,26 @@ def begin_run(notebook: str, namespace: MutableMapping[str, Any]) -> Run:
     InputError
         When a name was injected that the notebook does not declare, a value is of the wrong type, a path does
         not exist, or the store cannot be written. Nothing is written.
+
+    Examples
+    --------
+    A notebook gives its ``globals()``; a dictionary with some of its parameters does here:
+
+    >>> import tempfile
+    >>> import labkit as lk
+    >>> with tempfile.TemporaryDirectory() as store:
+    ...     values = {"tasks": 400, "replicates": 3, "study": "tiny", "store": store}
+    ...     run = lk.begin_run("headroom", values)
+    ...     outcome = lk.place(lk.ring(4), "least-loaded", tasks=400, replicates=3, rng=run.seed)
+    ...     file = run.record(outcome.measures)
+    ...     file.parent.name, file.name.startswith(run.id)
+    ('tiny', True)
+    >>> values["precision_of"]  # what was not given has the notebook's default
+    'gap'
+    >>> lk.begin_run("headroom", {"tasks": "many"})
+    Traceback (most recent call last):
+        ...
+    labkit.errors.InputError: tasks is 'many'; give a whole number (int).
     """
     saved = read_notebook(find_notebook(notebook))
     saved.check_names(injected_names(executed_cells(namespace) or []))

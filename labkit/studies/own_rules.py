@@ -48,6 +48,17 @@ class WrittenStudy:
         The notebook beside it, which holds the rules.
     new : bool
         Whether it was written now; False when the same study was there already.
+    command : str
+        What runs it, from the project root.
+
+    Examples
+    --------
+    >>> import labkit as lk
+    >>> from labkit.records.project import EXPERIMENTS
+    >>> file, notebook = EXPERIMENTS / "second.toml", EXPERIMENTS / "second.ipynb"
+    >>> study = lk.WrittenStudy("second", file, notebook, new=True)
+    >>> study.command
+    'labkit run second'
     """
 
     name: str

@@ -59,6 +59,21 @@ def read_study_records(
         When a run is not recorded, no run fits `where`, or it is no mapping of names to such values.
     StoreError
         When a record is torn, altered or foreign.
+
+    Examples
+    --------
+    Two recorded runs, and the rows of one of them:
+
+    >>> import tempfile
+    >>> import labkit as lk
+    >>> with tempfile.TemporaryDirectory() as store:
+    ...     for tasks in (400, 800):
+    ...         run = lk.begin_run("headroom", {"tasks": tasks, "study": "tiny", "store": store})
+    ...         outcome = lk.place(lk.ring(4), "least-loaded", tasks=tasks, replicates=2, rng=run.seed)
+    ...         file = run.record(outcome.measures)
+    ...     records = lk.read_study_records("tiny", store=store, where={"tasks": 800})
+    >>> records[["policy", "replicate", "tasks", "mean_load"]].values.tolist()
+    [['least-loaded', 0, 800, 200.0], ['least-loaded', 1, 800, 200.0]]
     """
     check_study_name(study)
     if where is not None:

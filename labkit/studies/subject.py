@@ -59,10 +59,27 @@ def begin_answer(notebook: str, namespace: MutableMapping[str, Any]) -> Path:
     namespace : dict
         ``globals()`` of the notebook, after its parameters cell. Values are put back in their declared type.
 
+    Returns
+    -------
+    pathlib.Path
+        The parameter `output` where it is given, else a folder in results/answers; it need not be there yet.
+
     Raises
     ------
     InputError
         When a name was injected that the notebook does not declare, or a value is of the wrong type.
+
+    Examples
+    --------
+    A notebook gives its ``globals()``; a dictionary with some of its parameters does here:
+
+    >>> import labkit as lk
+    >>> lk.begin_answer("headroom_answer", {"study": "tiny"}).parts[-3:]
+    ('results', 'answers', 'tiny')
+    >>> lk.begin_answer("headroom_answer", {"study": "tiny", "risk": "high"})
+    Traceback (most recent call last):
+        ...
+    labkit.errors.InputError: risk is 'high'; give a number (float).
     """
     saved = read_notebook(find_notebook(notebook))
     saved.check_names(injected_names(executed_cells(namespace) or []))
