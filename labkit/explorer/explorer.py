@@ -36,6 +36,28 @@ class Explorer:
     neighbours : pandas.DataFrame
         Servers that share choices with the selected one: server, capacity, shared (demand of the choices with
         both), and the utilisation under each rule that is shown.
+    widget : ipywidgets.VBox
+        The drawing with its buttons, made when it is first asked for.
+
+    Examples
+    --------
+    >>> import pandas as pd
+    >>> import labkit as lk
+    >>> servers = pd.DataFrame({"server": ["north", "east", "south"], "capacity": [10, 10, 40]})
+    >>> choices = pd.DataFrame(
+    ...     {"option_1": ["north", "east"], "option_2": ["east", "south"], "demand": [18, 12]}
+    ... )
+    >>> around = lk.explore(lk.Fleet(servers, choices), select="south")
+    >>> around.fleet
+    Fleet(3 servers, 2 choices of 2 options, capacity 10 to 40, demand 12 to 18)
+    >>> around.selected, around.drawn
+    ('south', ['north', 'east', 'south'])
+    >>> around.loads[["rule", "load", "utilisation"]].values.tolist()
+    [['fair split', 12.0, 0.3]]
+    >>> around.neighbours[["server", "shared", "fair split"]].values.tolist()
+    [['east', 12.0, 0.9]]
+    >>> type(around.widget).__name__
+    'VBox'
     """
 
     def __init__(self, state: State) -> None:
@@ -85,6 +107,17 @@ class Explorer:
         ------
         InputError
             When no server has this name.
+
+        Examples
+        --------
+        >>> import labkit as lk
+        >>> around = lk.explore(lk.ladder(3))
+        >>> around.select(1).selected, around.neighbours["server"].tolist()
+        (1, ['0', '2', '4'])
+        >>> around.select(6)
+        Traceback (most recent call last):
+            ...
+        labkit.errors.InputError: no server is called 6; give the name of a server of this fleet.
         """
         moved = self._state.select(server_called(self.fleet, server))
         if self._desk is not None:
@@ -94,10 +127,29 @@ class Explorer:
     def select_bottleneck(self) -> "Explorer":
         """Select the bottleneck: the largest set of servers that holds the optimum up.
 
+        Returns
+        -------
+        Explorer
+            Itself.
+
         Raises
         ------
         InputError
             When some split fills all servers alike, so that there is none.
+
+        Examples
+        --------
+        Together north and east carry 18 at a capacity of 20:
+
+        >>> import pandas as pd
+        >>> import labkit as lk
+        >>> servers = pd.DataFrame({"server": ["north", "east", "south"], "capacity": [10, 10, 40]})
+        >>> choices = pd.DataFrame(
+        ...     {"option_1": ["north", "east"], "option_2": ["east", "south"], "demand": [18, 12]}
+        ... )
+        >>> around = lk.explore(lk.Fleet(servers, choices)).select_bottleneck()
+        >>> around.loads[["rule", "load", "utilisation"]].values.tolist()
+        [['fair split', 18.0, 0.9]]
         """
         moved = self._state.select_bottleneck()
         if self._desk is not None:

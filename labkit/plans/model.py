@@ -31,6 +31,8 @@ class Plan(Shown):
     tables : dict of str to pandas.DataFrame
         By file name: ``servers.csv``, ``choices.csv``, what the policy needs besides, and the test vectors
         ``vectors.csv`` and ``vectors_loads.csv``.
+    digest : str
+        SHA-256 in hex of the header.
 
     Examples
     --------
@@ -40,6 +42,8 @@ class Plan(Shown):
     {'looks': True, 'ties': 'first'}
     >>> list(plan.tables["choices.csv"])
     ['number', 'demand', 'option_1', 'option_2']
+    >>> len(plan.digest)
+    64
     """
 
     header: dict[str, Any]
