@@ -104,12 +104,14 @@ def test_importing_labkit_loads_nothing_heavy():
 
 
 def test_the_kernel_of_a_run_imports_no_more_than_it_needs():
-    start = "from pathlib import Path; from labkit.studies.kernels import _imports; from importlib import import_module"
-    modules = "[import_module(name) for name in _imports(Path('notebooks/headroom.ipynb'))]"
     slow = ["scipy.stats", "scipy.linalg", "matplotlib", "networkx", "papermill", "plotly"]
-    done = python(
-        "-c", f"{start}; import sys; {modules}; print([name for name in {slow} if name in sys.modules])"
+    lines = (
+        "import importlib, pathlib, sys",
+        "from labkit.studies.kernels import _imports",
+        "for name in _imports(pathlib.Path('notebooks/headroom.ipynb')): importlib.import_module(name)",
+        f"print([name for name in {slow} if name in sys.modules])",
     )
+    done = python("-c", "\n".join(lines))
     assert (done.returncode, done.stdout.strip()) == (0, "[]"), done.stderr
 
 
