@@ -2,7 +2,7 @@
 
 BIN := .venv/bin
 UV ?= uv
-PYTEST ?= -n 2 --dist loadfile --no-loadscope-reorder
+PYTEST ?= -n 3 --dist loadfile --no-loadscope-reorder
 STRIP := $(BIN)/nbstripout --keep-id --extra-keys "metadata.language_info metadata.papermill cell.metadata.papermill"
 
 .DEFAULT_GOAL := help

@@ -13,6 +13,18 @@ BROWSERS = ("chromium", "chromium-browser", "google-chrome")
 BROWSER = next((path for path in map(shutil.which, BROWSERS) if path), None)
 NO_BROWSER = f"no browser on the PATH ({', '.join(BROWSERS)})"
 
+# Files that take longest begin first, so that no process is left alone with one of them at the end.
+LONGEST = (
+    "journeys/test_notebooks_in_browser.py",
+    "studies/test_durable_studies.py",
+    "journeys/test_cluster.py",
+    "journeys/test_growth.py",
+    "plans/test_dispatcher.py",
+    "journeys/test_frozen.py",
+    "studies/test_rerun.py",
+    "test_docstrings.py",
+)
+
 settings.register_profile("fixed", derandomize=True, deadline=None, database=None)
 settings.load_profile("fixed")
 
@@ -24,6 +36,9 @@ def pytest_report_header():
 
 
 def pytest_collection_modifyitems(config, items):
+    items.sort(
+        key=lambda item: next((at for at, name in enumerate(LONGEST) if item.path.match(name)), len(LONGEST))
+    )
     if BROWSER or IN_CI:
         return
     left_out = [item for item in items if item.get_closest_marker("browser")]
