@@ -10,6 +10,7 @@ import urllib.error
 import urllib.request
 from contextlib import suppress
 from pathlib import Path
+from urllib.parse import urlsplit
 
 import pytest
 
@@ -100,6 +101,8 @@ def test_a_hostile_configuration_opens_neither_the_address_nor_the_token(tmp_pat
         assert status_of(address) == 403
         assert status_of(f"{address}?token=") == 403
         assert status_of(f"{address}?token={about['token']}") == 200
+        with urllib.request.urlopen(f"http://127.0.0.1:{port}/?token={about['token']}", timeout=10) as first:
+            assert urlsplit(first.url).path == "/lab/tree/notebooks/start.ipynb"
         assert listening(about["pid"]) == {"0100007F"}
         assert about["token"] not in Path(f"/proc/{about['pid']}/cmdline").read_text()
     finally:
