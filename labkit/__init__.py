@@ -87,6 +87,7 @@ _HOMES = {
     "WrittenStudy": "labkit.studies.own_rules",
     "read_study_records": "labkit.studies.reading",
     "read_frozen": "labkit.records.frozen",
+    "write_report": "labkit.reports.report",
 }
 
 __all__ = [*_HOMES, "__version__"]

@@ -10,7 +10,7 @@ from types import FrameType
 from typing import NoReturn
 
 from labkit import __version__
-from labkit.commands import frozen, planning, records, running, sizing, starting, store, surveying
+from labkit.commands import frozen, planning, records, reporting, running, sizing, starting, store, surveying
 from labkit.commands.parts import Commands, say
 from labkit.errors import InputError, SchedulerLost
 
@@ -72,7 +72,7 @@ def _parser() -> argparse.ArgumentParser:
     )
     parser.add_argument("--version", action="version", version=f"labkit {__version__}")
     commands = Commands(parser)
-    for module in (starting, running, sizing, surveying, planning, records, store, frozen):
+    for module in (starting, running, sizing, surveying, reporting, planning, records, store, frozen):
         module.add(commands)
     return parser
 

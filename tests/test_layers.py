@@ -33,6 +33,7 @@ FLOORS = [
     {"figures"},
     {"explorer"},
     {"studies"},
+    {"reports"},
     {"commands"},
     {"cli", "__main__"},
 ]

@@ -20,6 +20,13 @@ _ROUNDING = 1e-12
 
 
 def decision(table: pd.DataFrame, verdict: Verdict, *, baseline: str, total_capacity: float) -> str:
+    """Return the decision in words: the sentences of `decision_sentences` as one text."""
+    return " ".join(decision_sentences(table, verdict, baseline=baseline, total_capacity=total_capacity))
+
+
+def decision_sentences(
+    table: pd.DataFrame, verdict: Verdict, *, baseline: str, total_capacity: float
+) -> list[str]:
     """Return the decision: what the rule needs and what it saves, then what to be careful about.
 
     Parameters
@@ -62,7 +69,7 @@ def decision(table: pd.DataFrame, verdict: Verdict, *, baseline: str, total_capa
             f"Its limits overlap with those of {' and '.join(others)}: "
             f"{worst['replicates']:,} replicates cannot rank them at this risk."
         )
-    return " ".join(sentences)
+    return sentences
 
 
 def _saving(row: pd.Series, baseline: str, total_capacity: float, subject: str = "that") -> str:

@@ -14,6 +14,7 @@ EXPERIMENTS = ROOT / "experiments"
 STORE = ROOT / "results" / "runs"
 ANSWERS = ROOT / "results" / "answers"
 PLANS = ROOT / "results" / "plans"
+REPORTS = ROOT / "results" / "reports"
 FROZEN = ROOT / "results" / "frozen"
 
 _FOLDER_NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9_.-]{0,63}")

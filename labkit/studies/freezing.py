@@ -26,6 +26,7 @@ from labkit.sources import versions
 from labkit.studies.answering import MADE_FROM, write_answer
 from labkit.studies.grouping import groups_of
 from labkit.studies.model import Study, find_study, read_study
+from labkit.studies.recorded import recorded_tables
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -84,7 +85,7 @@ def freeze(
     check_writable("index", index_of(folder).parent)
     index_text(folder)
     asked = read_study(study)
-    tables = _records(asked, study, store)
+    tables = recorded_tables(asked, study, store)
     origins = [_origin(table) for table in tables]
     state = source_state(root)
     changes = _changes(find_study(study), asked, origins, state, root)
@@ -166,20 +167,6 @@ def _origin(table: "pa.Table") -> dict[str, Any]:
     from labkit.records.schema import row_of_origin
 
     return {**row_of_origin(table), "rows": table.num_rows}
-
-
-def _records(study: Study, asked: str, store: Store) -> "list[pa.Table]":
-    known = store.runs(study.name)
-    found = {point.run_id: known.get(point.run_id) for point in study.points}
-    missing = [run for run, path in found.items() if path is None]
-    if missing:
-        others = len(known.keys() - found.keys())
-        besides = f" (it holds {others} runs of other code or other values)" if others else ""
-        raise InputError(
-            f"study {study.name}: {len(missing)} of {len(found)} runs are not recorded in {store.folder}"
-            f"{besides}, the first being {missing[0]}; run labkit run {asked}."
-        )
-    return store.tables([path for path in found.values() if path is not None])
 
 
 def _changes(

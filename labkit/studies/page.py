@@ -58,10 +58,15 @@ def write_page(notebook: Path, page: Path, title: str, question: str = "") -> No
     content.cells.insert(0, nbformat.v4.new_markdown_cell(heading))
     made, _ = exporter.from_notebook_node(content, resources={"metadata": {"name": title}})
     made = _UNUSED.sub("", made)
-    left = _FETCHED.search(made)
-    if left:
-        raise RuntimeError(f"the page would fetch {made[left.start() : left.start() + 120]!r}")
+    check_nothing_fetched(made)
     page.write_text(made, encoding="utf-8")
+
+
+def check_nothing_fetched(page: str) -> None:
+    """Raise a RuntimeError when opening a page would fetch anything from elsewhere."""
+    left = _FETCHED.search(page)
+    if left:
+        raise RuntimeError(f"the page would fetch {page[left.start() : left.start() + 120]!r}")
 
 
 def _heading(title: str, question: str) -> str:

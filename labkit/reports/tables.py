@@ -1,0 +1,88 @@
+"""Tables of a report: a caption, one row of headers that say what they head, numbers aligned to the right."""
+
+import re
+
+from bs4 import BeautifulSoup
+from bs4.element import Tag
+
+_NUMBER = re.compile(r"[+−-]?[\d,. ]*\d[\d,.]*(e[+-]?\d+)?( ?%)?( ?(–|to|±) ?[+−-]?\d[\d,.]*)?")
+_NOTHING = ("", "–", "-", "NaN", "nan", "None", "<NA>")
+
+
+def mend_table(page: BeautifulSoup, table: Tag, caption: str) -> None:
+    """Give a table, in place, its caption and headers, and room to scroll in where it is too wide.
+
+    Parameters
+    ----------
+    page : bs4.BeautifulSoup
+        What the table stands in.
+    table : bs4.Tag
+    caption : str
+    """
+    head = table.find("thead")
+    if head is not None:
+        _join_headers(head)
+        _drop_row_numbers(table, head)
+    for cell in table.find_all("th"):
+        in_head = cell.find_parent("thead") is not None
+        cell["scope"] = "col" if in_head else "rowgroup" if cell.has_attr("rowspan") else "row"
+        if not cell.get_text(strip=True) and not cell.find(True):
+            cell.name = "td"  # an empty header heads nothing
+            del cell["scope"]
+    _align(table)
+    if table.caption is None:
+        title = page.new_tag("caption")
+        title.string = caption
+        table.insert(0, title)
+    frame = page.new_tag("div", attrs={"class": "table", "tabindex": "0", "role": "region"})
+    frame["aria-label"] = caption
+    table.wrap(frame)
+
+
+def _join_headers(head: Tag) -> None:
+    """Make one row of the two that pandas writes: names of columns, and below them names of the index."""
+    rows = head.find_all("tr")
+    if len(rows) != 2:
+        return
+    above, below = (row.find_all(["th", "td"]) for row in rows)
+    texts = [[cell.get_text(strip=True) for cell in row] for row in (above, below)]
+    named = next((at for at, text in enumerate(texts[1]) if not text), len(below))
+    if len(above) != len(below) or any(texts[1][named:]) or not named:
+        return
+    for cell, other in zip(above[:named], below[:named], strict=True):
+        cell.clear()
+        cell.extend(list(other.contents))
+    rows[1].decompose()
+
+
+def _drop_row_numbers(table: Tag, head: Tag) -> None:
+    """Leave out a first column of nothing but 0, 1, 2 ... without a name: pandas numbers rows so."""
+    rows = [row for body in table.find_all("tbody") for row in body.find_all("tr")]
+    firsts = [row.find(["th", "td"]) for row in rows]
+    first_of_head = head.find(["th", "td"])
+    if first_of_head is None or first_of_head.get_text(strip=True) or head.find(attrs={"colspan": True}):
+        return
+    texts = [cell.get_text(strip=True) if cell is not None and cell.name == "th" else "" for cell in firsts]
+    if texts and texts == [str(at) for at in range(len(texts))]:
+        for cell in (first_of_head, *firsts):
+            if cell is not None:
+                cell.decompose()
+
+
+def _align(table: Tag) -> None:
+    """Mark the columns that hold nothing but numbers, their headers too."""
+    rows = [row.find_all(["th", "td"]) for row in table.find_all("tr") if row.find_parent("thead") is None]
+    if any(cell.has_attr("rowspan") or cell.has_attr("colspan") for row in rows for cell in row):
+        for cell in table.find_all("td"):
+            if _NUMBER.fullmatch(cell.get_text(strip=True)):
+                cell["class"] = "number"
+        return
+    headers = [row.find_all(["th", "td"]) for row in table.select("thead tr")]
+    for at in range(max((len(row) for row in rows), default=0)):
+        column = [row[at] for row in rows if at < len(row)]
+        texts = [cell.get_text(strip=True) for cell in column]
+        if any(map(_NUMBER.fullmatch, texts)) and all(
+            text in _NOTHING or _NUMBER.fullmatch(text) for text in texts
+        ):
+            for cell in (*column, *(row[at] for row in headers if at < len(row))):
+                cell["class"] = "number"
