@@ -63,8 +63,7 @@ def chapters_of(sources: Sequence[Source], taken: Sequence[str] = ()) -> list[Ch
 
 
 def _chapter(source: Source, anchors: set[str], counts: dict[str, int]) -> Chapter:
-    page = BeautifulSoup(_exported(source.notebook), "html.parser")
-    clean(page)
+    page = _exported(source.notebook)
     for element in page.find_all("div"):
         if not element.find_parent("table"):
             element.unwrap()
@@ -81,15 +80,11 @@ def _chapter(source: Source, anchors: set[str], counts: dict[str, int]) -> Chapt
     return Chapter(top, page.decode(formatter="minimal").strip())
 
 
-def _exported(path: Path) -> str:
+def _exported(path: Path) -> BeautifulSoup:
+    """Return what a notebook shows; each piece is cleaned alone, so that none can swallow those after it."""
     import nbformat
     from nbconvert.exporters import HTMLExporter
 
-    notebook = nbformat.read(path, as_version=4)
-    notebook.cells = [cell for cell in notebook.cells if _PAPERMILL not in cell.metadata.get("tags", [])]
-    for cell in notebook.cells:
-        if cell.cell_type == "code":
-            cell.outputs = list(_shown(cell.outputs))
     exporter = HTMLExporter(
         template_name="basic",
         exclude_input=True,
@@ -98,8 +93,19 @@ def _exported(path: Path) -> str:
         exclude_anchor_links=True,
         exclude_raw=True,
     )
-    made, _ = exporter.from_notebook_node(notebook)
-    return str(made)
+    notebook = nbformat.read(path, as_version=4)
+    page = BeautifulSoup("", "html.parser")
+    for cell in notebook.cells:
+        if _PAPERMILL in cell.metadata.get("tags", []):
+            continue
+        outputs = [[output] for output in _shown(cell.outputs)] if cell.cell_type == "code" else [[]]
+        for output in outputs:
+            piece = {**cell, "outputs": output} if output else cell
+            made, _ = exporter.from_notebook_node(nbformat.from_dict({**notebook, "cells": [piece]}))
+            part = BeautifulSoup(made, "html.parser")
+            clean(part)
+            page.extend(list(part.contents))
+    return page
 
 
 def _shown(outputs: Sequence[Any]) -> Iterator[Any]:

@@ -117,8 +117,8 @@ def another_network(case: Case) -> str:
     least = float(case.best.optimum) * case.mean / case.best.mean
     return (
         f"{write(owed)} of the headroom is owed to the network: {in_words(case.best.bottleneck)} will on "
-        f"average be at least {write(least)} full whatever the rule. A link or capacity there changes that; no "
-        "rule can."
+        f"average be at least {write(least)} full whatever the rule. A link or capacity there changes that; "
+        "no rule can."
     )
 
 

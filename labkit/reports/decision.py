@@ -10,6 +10,7 @@ from labkit.errors import HeadroomExceeded
 from labkit.reports.case import Case
 from labkit.reports.changes import RISK_HEADERS, other_risks, what_would_change
 
+HEADING = "Recommendation"
 CAUTION = (
     "These are results of models. Codes, safety rules and licensed practice that apply where the fleet "
     "stands come first; a responsible engineer decides."
@@ -70,7 +71,7 @@ def headroom_decision(case: Case, about: str = "") -> Decision:
         sentences.append(_capacity_sentence(case))
     confidence = f"{100 * case.verdict.worst['confidence']:g} % limits"
     return Decision(
-        "The decision",
+        HEADING,
         tuple(sentences[:2]),
         about=about,
         warning=guard_warning(case),

@@ -6,6 +6,8 @@ from bs4 import BeautifulSoup
 from bs4.element import Tag
 
 _NUMBER = re.compile(r"[+−-]?[\d,. ]*\d[\d,.]*(e[+-]?\d+)?( ?%)?( ?(–|to|±) ?[+−-]?\d[\d,.]*)?")
+# Letters of a cell whose line is not broken on the screen.
+SHORT = 24
 _NOTHING = ("", "–", "-", "NaN", "nan", "None", "<NA>")
 
 
@@ -57,32 +59,33 @@ def _join_headers(head: Tag) -> None:
 
 def _drop_row_numbers(table: Tag, head: Tag) -> None:
     """Leave out a first column of nothing but 0, 1, 2 ... without a name: pandas numbers rows so."""
-    rows = [row for body in table.find_all("tbody") for row in body.find_all("tr")]
-    firsts = [row.find(["th", "td"]) for row in rows]
     first_of_head = head.find(["th", "td"])
-    if first_of_head is None or first_of_head.get_text(strip=True) or head.find(attrs={"colspan": True}):
+    if first_of_head is None or first_of_head.get_text(strip=True) or head.select_one("[colspan]"):
         return
-    texts = [cell.get_text(strip=True) if cell is not None and cell.name == "th" else "" for cell in firsts]
+    firsts = table.select("tbody tr > :first-child")
+    texts = [cell.get_text(strip=True) if cell.name == "th" else "" for cell in firsts]
     if texts and texts == [str(at) for at in range(len(texts))]:
         for cell in (first_of_head, *firsts):
-            if cell is not None:
-                cell.decompose()
+            cell.decompose()
 
 
 def _align(table: Tag) -> None:
-    """Mark the columns that hold nothing but numbers, their headers too."""
+    """Mark cells by what their columns hold, headers too: numbers, short words or long ones."""
     rows = [row.find_all(["th", "td"]) for row in table.find_all("tr") if row.find_parent("thead") is None]
-    if any(cell.has_attr("rowspan") or cell.has_attr("colspan") for row in rows for cell in row):
-        for cell in table.find_all("td"):
-            if _NUMBER.fullmatch(cell.get_text(strip=True)):
-                cell["class"] = "number"
-        return
     headers = [row.find_all(["th", "td"]) for row in table.select("thead tr")]
-    for at in range(max((len(row) for row in rows), default=0)):
-        column = [row[at] for row in rows if at < len(row)]
-        texts = [cell.get_text(strip=True) for cell in column]
-        if any(map(_NUMBER.fullmatch, texts)) and all(
-            text in _NOTHING or _NUMBER.fullmatch(text) for text in texts
-        ):
-            for cell in (*column, *(row[at] for row in headers if at < len(row))):
-                cell["class"] = "number"
+    if table.select_one("tbody [rowspan], tbody [colspan]"):  # cells do not stand under their headers
+        columns, headers = [[cell] for row in rows for cell in row], []
+    else:
+        columns = [[row[at] for row in rows if at < len(row)] for at in range(max(map(len, rows), default=0))]
+    for at, column in enumerate(columns):
+        kind = _kind_of([cell.get_text(strip=True) for cell in column])
+        for cell in (*column, *(row[at] for row in headers if at < len(row))):
+            cell["class"] = kind
+
+
+def _kind_of(texts: list[str]) -> str:
+    if any(map(_NUMBER.fullmatch, texts)) and all(
+        text in _NOTHING or _NUMBER.fullmatch(text) for text in texts
+    ):
+        return "number"
+    return "short" if max(map(len, texts)) <= SHORT else "long"
