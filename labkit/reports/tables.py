@@ -6,6 +6,8 @@ from bs4 import BeautifulSoup
 from bs4.element import Tag
 
 _NUMBER = re.compile(r"[+−-]?[\d,. ]*\d[\d,.]*(e[+-]?\d+)?( ?%)?( ?(–|to|±) ?[+−-]?\d[\d,.]*)?")
+# Columns of a table that paper holds only in small type.
+WIDE = 13
 # Letters of a cell whose line is not broken on the screen.
 SHORT = 24
 _NOTHING = ("", "–", "-", "NaN", "nan", "None", "<NA>")
@@ -32,6 +34,8 @@ def mend_table(page: BeautifulSoup, table: Tag, caption: str) -> None:
             cell.name = "td"  # an empty header heads nothing
             del cell["scope"]
     _align(table)
+    if max(len(row.find_all(["th", "td"])) for row in table.find_all("tr") or [table]) > WIDE:
+        table["class"] = "wide"
     if table.caption is None:
         title = page.new_tag("caption")
         title.string = caption
