@@ -17,12 +17,12 @@ NO_BROWSER = f"no browser on the PATH ({', '.join(BROWSERS)})"
 LONGEST = (
     "journeys/test_notebooks_in_browser.py",
     "studies/test_durable_studies.py",
-    "journeys/test_cluster.py",
     "journeys/test_growth.py",
     "plans/test_dispatcher.py",
     "journeys/test_frozen.py",
     "studies/test_rerun.py",
     "test_docstrings.py",
+    "journeys/test_cluster.py",
 )
 
 settings.register_profile("fixed", derandomize=True, deadline=None, database=None)

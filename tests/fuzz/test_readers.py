@@ -13,7 +13,7 @@ import pytest
 from labkit.errors import LONGEST, InputError
 from tests.fuzz.readers import READERS
 
-INPUTS = int(os.environ.get("FUZZ_INPUTS", "500"))
+INPUTS = int(os.environ.get("FUZZ_INPUTS", "300"))
 # A reader of two files is two entries in the list, each with a part of the inputs.
 HALF = ("servers.parquet", "choices.parquet", "failures.csv", "failures.parquet")
 PATIENCE = 5.0  # seconds for an input, on a machine with much else to do

@@ -95,14 +95,6 @@ def test_more_precision_means_more_replicates_and_says_so(done, capsys):
         assert row["stopping"].startswith("mean excess within 5 % at 95 %: reached with ")
 
 
-def test_the_growth_page_is_made_from_the_frozen_table(tmp_path):
-    """As it is opened in JupyterLab: no study, no records, only what the repository holds."""
-    output = tmp_path / "out"
-    result = execute(NOTEBOOKS / "growth.ipynb", {"output": str(output)}, tmp_path / "growth.ipynb")
-    assert result.error == ""
-    assert "On a ring of 1,600 servers smooth-feedback" in (output / "answer.txt").read_text()
-
-
 @pytest.mark.parametrize(
     ("values", "sentence"),
     [

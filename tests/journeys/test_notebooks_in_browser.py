@@ -1,4 +1,4 @@
-"""Each notebook in a real JupyterLab: opened, run from top to bottom as it is, kept as a picture."""
+"""Each notebook in a real JupyterLab: opened, run from top to bottom kept as a picture."""
 
 import json
 import re
@@ -7,7 +7,7 @@ import shutil
 import pytest
 
 from labkit.cli import main
-from labkit.records.project import NOTEBOOKS
+from labkit.records.project import NOTEBOOKS, ROOT
 from tests.journeys.lab_in_browser import (
     ERRORS,
     in_theme,
@@ -18,9 +18,21 @@ from tests.journeys.lab_in_browser import (
     restart_and_run_all,
     wait_for_kernel,
 )
+from tests.journeys.ways import a_record, assert_same
 
 __all__ = ["page"]  # a fixture
 
+DEMO = ROOT / "experiments" / "demo"
+# Sizes at which a notebook shows all that it has in less time; tests/benchmarks executes them as they are.
+SMALL = {
+    "rules": {"report_ages": [25, 1600], "forecast_rounds": 1000},
+    "serve": {
+        "load_factors": [0.3, 0.6],
+        "horizon": 5000.0,
+        "report_ages": [2.5, 20.0, 80.0],
+        "replicates": 4,
+    },
+}
 # More than any notebook takes, also on a busy machine that has compiled nothing yet.
 LONGEST = 300
 TALLEST = 16_000  # dots that a browser still draws in one piece
@@ -40,7 +52,7 @@ def set_parameters(path, **values):
     source = "".join(cell["source"])
     for name, value in values.items():
         source = re.sub(
-            rf"(?m)^({name}: \w+ = )\S+", lambda found, value=value: f"{found[1]}{value!r}", source
+            rf"(?m)^({name}: \w+ = ).*?(?=  #)", lambda found, value=value: f"{found[1]}{value!r}", source
         )
     cell["source"] = source
     path.write_text(json.dumps(content), encoding="utf-8")
@@ -53,7 +65,8 @@ def lab(tmp_path_factory):
     root = scratch / "root"
     shutil.copytree(NOTEBOOKS, root)
     for path in root.glob("*.ipynb"):
-        set_parameters(path, store=str(scratch / "store"), output=str(scratch / "answers"))
+        places = {"store": str(scratch / "store"), "output": str(scratch / "answers")}
+        set_parameters(path, **places, **SMALL.get(path.stem, {}))
     with jupyterlab(root, scratch) as served:
         yield served
 
@@ -98,11 +111,24 @@ def listed(lab, notebook, capsys):
     return run, json.loads(capsys.readouterr().out)
 
 
+def record_of_a_study(folder, run):
+    """Record what the headroom notebook says by itself, as a study."""
+    study = folder / "s.toml"
+    study.write_text(
+        f'notebook = "headroom"\nreplicates = 400\nentropy = 1\n[parameters]\nfleet = "{DEMO.as_posix()}"\n'
+    )
+    assert main(["run", str(study), "--store", str(folder / "runs")]) == 0
+    return a_record(folder / "runs", run)
+
+
 @pytest.mark.browser
-def test_a_run_by_hand_becomes_an_answer(lab, page, capsys):
+def test_a_run_by_hand_is_that_of_a_study_and_becomes_an_answer(lab, page, tmp_path, capsys):
     open_notebook(page, lab, "headroom")
     run_all(lab, page, "headroom")
-    run, _ = listed(lab, "headroom", capsys)
+    run, about = listed(lab, "headroom", capsys)
+    assert run in page.locator(".jp-OutputArea").last.inner_text()
+    assert about["study"] == "by-hand"
+    assert_same(a_record(lab.root.parent / "store", run), record_of_a_study(tmp_path, run))
     set_parameters(lab.root / "headroom_answer.ipynb", study="by-hand", runs=[run])
     open_notebook(page, lab, "headroom_answer")
     run_all(lab, page, "headroom_answer")

@@ -8,12 +8,11 @@ from axe_playwright_python.sync_playwright import Axe
 
 from labkit.cli import main
 from labkit.records.project import ROOT
-from tests.journeys.test_browser import page
+from tests.journeys.lab_in_browser import SCREENS, page
 from tests.reports.small import HOSTILE
 
 __all__ = ["page"]  # a fixture
 
-SCREENS = ROOT / "build" / "screenshots"
 NAME = "Vreckethwick"  # one of those that are fullest whatever the rule, so that the report names it
 STUDY = """title = "Vaults <b>next</b> year"
 question = "Which <i>rule</i>?"
@@ -50,7 +49,6 @@ def test_the_report_is_read_in_light_in_dark_and_on_paper(folder, page):
     asked, dialogs = [], []
     page.on("request", lambda request: asked.append(request.url))
     page.on("dialog", lambda dialog: (dialogs.append(dialog.message), dialog.dismiss()))
-    page.set_viewport_size({"width": 1280, "height": 800})
     SCREENS.mkdir(parents=True, exist_ok=True)
     address = (folder / "out.html").as_uri()
     for scheme in ("light", "dark"):

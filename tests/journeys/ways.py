@@ -64,13 +64,19 @@ def finish(process: subprocess.Popen) -> tuple[int, str, str]:
     return process.returncode, out, err
 
 
+def a_record(store: Path, run: str):
+    """Return one record of a store: its origin and measures."""
+    place = Store(store)
+    table = place.read(place.locate(run))
+    return row_of_origin(table), measured_part(table)
+
+
 def the_record(store: Path):
     """Return the only record of a store: its origin and measures."""
     place = Store(store)
     (study,) = place.studies()
-    (path,) = place.files(study)
-    table = place.read(path)
-    return row_of_origin(table), measured_part(table)
+    (run,) = place.runs(study)
+    return a_record(store, run)
 
 
 def assert_same(one, other) -> None:
