@@ -55,7 +55,7 @@ def decision_sentences(
         if verdict.given
         else f"Use {verdict.policy}: it needs"
     )
-    sentences = [f"{opening} a headroom of {needs}."]
+    sentences = [f"{opening} a headroom of {needs}{_shortage(worst, total_capacity)}."]
     if verdict.policy != baseline:
         sentences.append(_saving(worst, baseline, total_capacity))
     elif verdict.given and verdict.best != baseline:
@@ -70,6 +70,22 @@ def decision_sentences(
             f"{worst['replicates']:,} replicates cannot rank them at this risk."
         )
     return sentences
+
+
+def _shortage(row: pd.Series, total_capacity: float) -> str:
+    """Return a clause where today's fleet is too small for the rule's need, or even for the work alone."""
+    needed, work = row["capacity_needed"], row["mean_utilisation"] * total_capacity
+    missing = needed - total_capacity
+    if missing <= _ROUNDING * needed:
+        return ""
+    share = percent(100 * missing / total_capacity)
+    clause = (
+        f", and so {quantity(needed)} work units of capacity, {quantity(missing)} ({share} %) more than "
+        f"today's {quantity(total_capacity)}"
+    )
+    if work > total_capacity * (1 + _ROUNDING):
+        clause += f", which do not hold even the work alone, {quantity(work)}"
+    return clause
 
 
 def _saving(row: pd.Series, baseline: str, total_capacity: float, subject: str = "that") -> str:

@@ -6,6 +6,7 @@ from pathlib import Path
 from typing import Any
 
 from labkit.commands.parts import Commands, print_json, say, store_of
+from labkit.errors import InputError
 
 # Columns of a record that `labkit list` shows, besides the number of rows.
 _SHOWN = ("run_id", "study", "notebook", "started", "elapsed", "git_hash", "dirty", "parameters")
@@ -31,6 +32,7 @@ def add(commands: Commands) -> None:
 
 
 def _list(arguments: argparse.Namespace) -> int:
+    from labkit.checks import nearest
     from labkit.records.listing import failed_runs, listed
     from labkit.records.project import check_study_name
     from labkit.records.schema import ORIGIN
@@ -39,6 +41,9 @@ def _list(arguments: argparse.Namespace) -> int:
     studies = store.studies() if arguments.study is None else [arguments.study]
     if arguments.study is not None and arguments.study not in store.studies():
         check_study_name(arguments.study)
+        if store.studies():
+            there = nearest(arguments.study, store.studies())
+            raise InputError(f"study is {arguments.study!r}, which has no records; {there}.")
     names = ORIGIN.names if arguments.json else _SHOWN
     found = [listed(store, study, names, warn=say) for study in studies]
     columns = {

@@ -62,7 +62,7 @@ def _run(arguments: argparse.Namespace) -> int:
 
 
 def _answer(arguments: argparse.Namespace) -> int:
-    from labkit.studies.own_fleet import study_of_fleet
+    from labkit.studies.own_fleet import check_own_records, study_of_fleet
 
     study, note = study_of_fleet(
         arguments.folder,
@@ -74,6 +74,7 @@ def _answer(arguments: argparse.Namespace) -> int:
         policies=arguments.policies,
         entropy=arguments.entropy,
     )
+    check_own_records(study.name, study.points[0].identity.parameters["fleet"], store_of(arguments))
     return _run_and_answer(study, arguments, note)
 
 

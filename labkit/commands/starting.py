@@ -2,6 +2,7 @@
 
 import argparse
 import shlex
+import sys
 from pathlib import Path
 
 from labkit.commands.parts import Commands, print_json
@@ -21,6 +22,7 @@ def _new(arguments: argparse.Namespace) -> int:
         print_json({"study": study, "files": [study, *others]})
         return 0
     print(f"written: {', '.join(str(path.relative_to(study.parent)) for path in (study, *others))}")
-    print(f"next:    labkit run {shlex.quote(str(arguments.folder / study.name))}")
+    command = shlex.quote(sys.argv[0]) if Path(sys.argv[0]).stem == "labkit" else "labkit"
+    print(f"next:    {command} run {shlex.quote(str(arguments.folder / study.name))}")
     print(f"then:    put your own tables into {study.parent / 'fleet'}; README.md there says how to go on")
     return 0

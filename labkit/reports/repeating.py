@@ -9,7 +9,9 @@ from labkit.reports.origin import Origin
 LABKIT = ".venv/bin/labkit"
 
 
-def steps_to_repeat(asked: str, origin: Origin, store: Store) -> list[tuple[str, str]]:
+def steps_to_repeat(
+    asked: str, origin: Origin, store: Store, *, output: str = "", to: str = ""
+) -> list[tuple[str, str]]:
     """Return the commands that make everything again, each with what it does.
 
     Parameters
@@ -18,8 +20,11 @@ def steps_to_repeat(asked: str, origin: Origin, store: Store) -> list[tuple[str,
         The study as the user named it.
     origin : Origin
     store : Store
+    output, to : str
+        Where the answers are and the page goes; empty: where they are by default.
     """
-    where = [] if store.folder == STORE else ["--store", str(store.folder)]
+    records = [] if store.folder == STORE else ["--store", str(store.folder)]
+    where = [*records, *(["--output", output] if output else [])]
     steps = []
     if len(origin.commits) == 1:
         checkout = _line("git", "checkout", origin.commits[0])
@@ -32,8 +37,8 @@ def steps_to_repeat(asked: str, origin: Origin, store: Store) -> list[tuple[str,
         *steps,
         ("make setup", "the versions of requirements.lock, in .venv"),
         (_line(LABKIT, "run", asked, *where), "executes what is not recorded, then writes the answer"),
-        (_line(LABKIT, "rerun", origin.run_ids[0], *where), f"{rerun}{more if others else ''}"),
-        (_line(LABKIT, "report", asked, "--replace", *where), again),
+        (_line(LABKIT, "rerun", origin.run_ids[0], *records), f"{rerun}{more if others else ''}"),
+        (_line(LABKIT, "report", asked, "--replace", *where, *(["--to", to] if to else [])), again),
     ]
 
 

@@ -96,6 +96,7 @@ def write_report(
     ...
     labkit.errors.InputError: to is 'report.txt'; give a folder that is there, or a file that ends in .html.
     """
+    study = str(study)
     _check_no_folder(study)
     asked = read_study(study)
     check_answered(asked)
@@ -110,7 +111,8 @@ def write_report(
     decisions, sources = sources_of(asked, records, answers / asked.name, say)
     origin = origin_of(asked, find_study(study), origins, root)
     chapters = chapters_of(sources, ANCHORS)
-    steps, notes = steps_to_repeat(study, origin, records), notes_to_repeat(origin)
+    places = {"output": str(answers) if output else "", "to": str(page) if to else ""}
+    steps, notes = steps_to_repeat(study, origin, records, **places), notes_to_repeat(origin)
     content = Content(asked, decisions, chapters, origin, steps, notes)
     text = render(content, moment or datetime.now(UTC)).encode("utf-8")
     if paper is not None:

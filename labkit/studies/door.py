@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 from labkit.checks import check_fraction, check_number, check_whole, nearest
 from labkit.errors import InputError
 from labkit.memory import check_memory
+from labkit.policies.naming import moves_placed_work
 from labkit.records.declared import Notebook
 from labkit.records.project import from_root
 
@@ -89,6 +90,11 @@ def check_points(study: "Study", points: Iterable["Point"]) -> None:
     for point in points:
         values = point.identity.parameters
         policies = policy_names(values["policies"])
+        if study.answer_notebook is not None and all(map(moves_placed_work, policies)):
+            raise InputError(
+                f"policies is {policies}, which moves work already placed, as no placement rule can; give a "
+                "rule to answer for."
+            )
         place = values["fleet"]
         if place not in sizes:
             sizes[place] = len(read_fleet(from_root(place)))

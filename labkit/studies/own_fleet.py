@@ -1,5 +1,6 @@
 """A study without a file: the headroom question put to a folder with a fleet's two tables."""
 
+import json
 import re
 from pathlib import Path
 from typing import Any
@@ -9,7 +10,9 @@ from labkit.errors import InputError
 from labkit.fleet.model import Fleet
 from labkit.fleet.readers import read_fleet
 from labkit.records.declared import read_notebook
-from labkit.records.project import find_notebook
+from labkit.records.listing import listed
+from labkit.records.project import EXPERIMENTS, find_notebook
+from labkit.records.store import Store
 from labkit.studies.door import ANSWER, RUN, check_risk, policy_names
 from labkit.studies.model import Study, make_study
 
@@ -90,6 +93,34 @@ def study_of_fleet(
     if report_every is not None:
         content["grid"] = {"report_every": report_every}
     return make_study(name_of_folder(folder) if name is None else name, content, folder=place.parent), note
+
+
+def check_own_records(study: str, fleet: str, store: Store) -> None:
+    """Refuse the name of a study without a file that is in use: by a study's file, or for another fleet.
+
+    Their records and answers would be mixed.
+
+    Parameters
+    ----------
+    study : str
+    fleet : str
+        The fleet, as a record's parameters name it.
+    store : Store
+
+    Raises
+    ------
+    InputError
+        When it is in use.
+    """
+    other_name = "give another with --name NAME."
+    if (EXPERIMENTS / f"{study}.toml").is_file():
+        raise InputError(f"study is {study!r}, as one of experiments/ is called; {other_name}")
+    if study not in store.studies():
+        return
+    recorded = listed(store, study, ["parameters"], warn=lambda _: None).columns["parameters"]
+    others = sorted({str(json.loads(text).get("fleet")) for text in set(recorded)} - {fleet})
+    if others:
+        raise InputError(f"study is {study!r}, which has records of another fleet, {others[0]}; {other_name}")
 
 
 def name_of_folder(folder: Path) -> str:

@@ -14,7 +14,7 @@ from labkit.records.store import Store, check_writable
 from labkit.studies.answering import Answer, execute_for_page, file_digest, is_made, publish
 from labkit.studies.door import SURVEY, check_values
 from labkit.studies.execution import Execution
-from labkit.studies.own_fleet import name_of_folder
+from labkit.studies.own_fleet import check_own_records, name_of_folder
 from labkit.studies.warmth import COLD, is_warm, sources_digest
 
 # What the notebook writes for programs to read.
@@ -77,7 +77,9 @@ def survey_folder(
     place = output / study
     check_writable("output", place)
     asked = {**given, "fleet": folder.resolve().as_posix(), "study": study, "store": str(store.folder)}
-    run_id = identify(notebook, notebook.checked(asked)).run_id
+    identity = identify(notebook, notebook.checked(asked))
+    run_id = identity.run_id
+    check_own_records(study, identity.parameters["fleet"], store)
     origin = {
         "study": study,
         "title": f"Survey of {fleet}",

@@ -224,6 +224,27 @@ def test_a_saving_is_a_share_or_a_multiple_of_the_fleet(draws, capacity, words):
     assert stated == pytest.approx(share if share > 1 else 100 * share, rel=1e-2)
 
 
+def test_a_fleet_too_small_is_told_so_by_how_much(draws):
+    table = answer(draws)
+    worst = judge(table).worst
+    needed, work = worst["capacity_needed"], worst["mean_utilisation"] * CAPACITY
+
+    def said(capacity):
+        # the same work and need in work units, on a fleet of another capacity
+        given = table.assign(mean_utilisation=work / capacity)
+        return decision(given, judge(given), baseline="one-choice", total_capacity=capacity)
+
+    assert "today's" not in said(needed * 1.001)
+    short = said(needed / 1.05)
+    found = re.search(
+        r"so ([0-9.,]+) work units of capacity, ([0-9.,]+) \(([0-9.]+) %\) more than today's", short
+    )
+    stated = [float(text.replace(",", "")) for text in found.groups()]
+    assert stated == pytest.approx([needed, needed - needed / 1.05, 5], rel=1e-2)
+    assert "hold even the work" not in short
+    assert f"which do not hold even the work alone, {quantity(work)}." in said(work / 1.1)
+
+
 def test_equal_rules_save_nothing(draws):
     twin = draws[draws["policy"] == "one-choice"].assign(policy="a twin")
     table = answer(pd.concat([draws[draws["policy"] == "one-choice"], twin]))

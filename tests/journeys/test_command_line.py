@@ -2,6 +2,7 @@
 
 import json
 import os
+import shutil
 import signal
 import subprocess
 import sys
@@ -118,6 +119,14 @@ class TestOwnFleet:
             ),
             (["--replicates", "0"], "replicates is 0; give a whole number of at least 1"),
             (["--name", "a/b"], "study is 'a/b'; a study's name"),
+            (
+                ["--name", "demo"],
+                "study is 'demo', as one of experiments/ is called; give another with --name",
+            ),
+            (
+                ["--policies", "pairwise-averaging"],
+                "which moves work already placed, as no placement rule can",
+            ),
             (["--tasks", "0"], "tasks is 0; give a whole number of at least 1"),
             (["--tasks", "1" + "0" * 22], "tasks is 1e+22; give a whole number of at most"),
             (["--tasks", "1.5"], "--tasks is '1.5'; give a whole number."),
@@ -147,6 +156,24 @@ class TestOwnFleet:
         assert err.startswith("labkit: ")
         assert err.count("\n") == 1
         assert snapshot(fleet.parent) == before
+
+    def test_two_folders_of_one_name_are_not_mixed(self, fleet, tmp_path, capsys):
+        other = tmp_path / "elsewhere" / fleet.name
+        shutil.copytree(fleet, other)
+        places = ["--store", str(tmp_path / "runs"), "--output", str(tmp_path / "answers")]
+        words = [*places, "--risk", "0.2", "--replicates", "20"]
+        assert main(["answer", str(fleet), *words]) == 0
+        before = snapshot(tmp_path)
+        capsys.readouterr()
+        assert main(["answer", str(other), *words]) == 2
+        err = capsys.readouterr().err
+        assert err == (
+            f"labkit: study is 'my-sites', which has records of another fleet, {fleet.as_posix()}; "
+            "give another with --name NAME.\n"
+        )
+        assert main(["list", "my-site", "--store", str(tmp_path / "runs")]) == 2
+        assert "which has no records; did you mean 'my-sites'" in capsys.readouterr().err
+        assert snapshot(tmp_path) == before
 
     def test_a_refused_table_is_one_sentence(self, fleet, capsys):
         (fleet / "choices.csv").write_text("option_1,option_2\ns0,elsewhere\n")
