@@ -1,7 +1,9 @@
 """`labkit new`."""
 
 import argparse
+import os
 import shlex
+import shutil
 import sys
 from pathlib import Path
 
@@ -22,7 +24,8 @@ def _new(arguments: argparse.Namespace) -> int:
         print_json({"study": study, "files": [study, *others]})
         return 0
     print(f"written: {', '.join(str(path.relative_to(study.parent)) for path in (study, *others))}")
-    command = shlex.quote(sys.argv[0]) if Path(sys.argv[0]).stem == "labkit" else "labkit"
+    here = Path(sys.executable).with_name("labkit")  # rarely on the PATH
+    command = "labkit" if shutil.which("labkit") or not here.is_file() else shlex.quote(os.path.relpath(here))
     print(f"next:    {command} run {shlex.quote(str(arguments.folder / study.name))}")
     print(f"then:    put your own tables into {study.parent / 'fleet'}; README.md there says how to go on")
     return 0

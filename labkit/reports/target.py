@@ -31,6 +31,8 @@ def place_of(study: str, to: str | Path | None) -> Path:
         return path / f"{study}.html"
     if path.suffix.lower() != ".html":
         raise InputError(f"to is {str(to)!r}; give a folder that is there, or a file that ends in .html.")
+    if not path.parent.is_dir():
+        raise InputError(f"to is {str(to)!r}; name a file in a folder that is there.")
     return path
 
 

@@ -43,7 +43,8 @@ def test_a_place_that_is_taken_or_no_place(asked, tmp_path):
     assert "ends in .html" in asked("--to", str(tmp_path / "report.txt"))
     (tmp_path / "folder.html").symlink_to(tmp_path / "nowhere")
     assert "is no file" in asked("--to", str(tmp_path / "folder.html"))
-    assert "there.html cannot be written" in asked("--to", str(there / "wrong.html"))
+    assert "in a folder that is there" in asked("--to", str(there / "wrong.html"))
+    assert "in a folder that is there" in asked("--to", str(tmp_path / "deep" / "new.html"))
 
 
 def test_a_pdf_without_a_browser(asked, tmp_path, monkeypatch):
@@ -54,7 +55,7 @@ def test_a_pdf_without_a_browser(asked, tmp_path, monkeypatch):
 def test_where_it_goes(tmp_path):
     assert place_of("demo", None) == report.ROOT / "results" / "reports" / "demo.html"
     assert place_of("demo", tmp_path) == tmp_path / "demo.html"
-    path = place_of("demo", tmp_path / "deep" / "x.html")
+    path = place_of("demo", tmp_path / "x.html")
     write_beside(path, b"one")
     check_target(path, replace=True)
     write_beside(path, b"two")
