@@ -15,7 +15,7 @@ import pyarrow.compute as pc
 import pyarrow.parquet as pq
 
 from labkit.errors import InputError
-from labkit.fleet.parquet_footer import Chunk, chunks_of
+from labkit.fleet.parquet_footer import LENGTHS_FIRST, Chunk, chunks_of
 from labkit.memory import check_memory, memory
 
 # A table as Arrow has it, as pandas has it, and what is made of it.
@@ -86,7 +86,7 @@ def check_size(path: Path, content: bytes | None = None) -> None:
     if present is None:
         return
     # A text in a dictionary stands there once, however often it comes.
-    coded = [each for each in chunks if each.is_text and each.encodings]
+    coded = [each for each in chunks if each.is_text and each.encodings - {LENGTHS_FIRST}]
     needed = sum(each.values * (_TEXT if each.is_text else _VALUE) + each.size for each in chunks)
     what = f"{path}: its table of {sum(each.values for each in chunks):,} cells"
     check_memory(what, _COPIES * needed, _ADVICE)

@@ -8,7 +8,8 @@ from dataclasses import dataclass
 from typing import Any, BinaryIO
 
 _DEEPEST = 20
-_ENCODINGS = {7: "DELTA_BYTE_ARRAY", 2: "DICTIONARY", 8: "DICTIONARY"}
+LENGTHS_FIRST = "DELTA_LENGTH_BYTE_ARRAY"
+_ENCODINGS = {6: LENGTHS_FIRST, 7: "DELTA_BYTE_ARRAY", 2: "DICTIONARY", 8: "DICTIONARY"}
 _TEXTS = (6, 7)  # physical types: bytes of any length, and of a fixed one
 
 

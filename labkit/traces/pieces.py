@@ -18,6 +18,7 @@ import pyarrow.parquet as pq
 from labkit.errors import InputError
 from labkit.fleet.csv_files import NUMBER, header_of, line_of, lines_of, no_number, records, why_unreadable
 from labkit.fleet.parquet_files import damaged
+from labkit.fleet.parquet_footer import chunks_of
 from labkit.fleet.tables import CHUNK, Source, check_labels, table_source
 from labkit.text import printable
 
@@ -129,7 +130,7 @@ def _open_parquet(path: Path) -> Pieces:
     for label, kind in kinds.items():
         _check_kind(path, label, kind)
     texts = [label for label, kind in kinds.items() if _is_text(kind)]
-    plain = _written_out(about, texts)
+    plain = _written_out(path, texts)
     # Text is left as parquet keeps it: a number a row and one list of the names.
     coded = [label for label in texts if label not in plain]
 
@@ -148,17 +149,19 @@ def _open_parquet(path: Path) -> Pieces:
     return Pieces(source, labels, stamped, False, read)
 
 
-def _written_out(about: pq.FileMetaData, texts: list[str]) -> dict[str, int]:
+def _written_out(path: Path, texts: list[str]) -> dict[str, int]:
     """Return columns whose texts Arrow can only write out, each with the bytes that one text may have."""
     found, sizes = set(), dict.fromkeys(texts, 0)
-    for group in range(about.num_row_groups):
-        for place in range(about.num_columns):
-            chunk = about.row_group(group).column(place)
-            label = chunk.path_in_schema
-            if label in sizes:
-                sizes[label] = max(sizes[label], chunk.total_uncompressed_size)
-                if any(each.startswith("DELTA_") for each in chunk.encodings):
-                    found.add(label)
+    try:
+        with path.open("rb") as stream:
+            chunks = chunks_of(stream)
+    except ValueError:
+        raise damaged(path) from None
+    for chunk in chunks:
+        if chunk.column in sizes:
+            sizes[chunk.column] = max(sizes[chunk.column], chunk.size)
+            if any(each.startswith("DELTA_") for each in chunk.encodings):
+                found.add(chunk.column)
     return {label: sizes[label] for label in texts if label in found}
 
 

@@ -399,6 +399,20 @@ def test_a_parquet_file_cut_anywhere_is_refused(write):
             open_trace(write(content[:cut], "log.parquet"), fleet())
 
 
+def test_a_parquet_footer_with_names_that_are_no_text_is_read_or_refused(write):
+    table = pa.table([[0.0, 1.0], ["a", "b"], ["b", "c"]], names=["time", "option_1", "option_2"])
+    content = write(table, "log.parquet").read_bytes()
+    refused, at = 0, -1
+    while (at := content.find(b"option_1", at + 1)) >= 0:
+        path = write(content[:at] + b"option_\xff" + content[at + 8 :], "log.parquet")
+        for read in (lk.fleet_from_trace, lambda each: open_trace(each, fleet())):
+            try:
+                read(path)
+            except lk.InputError:
+                refused += 1
+    assert refused
+
+
 def test_memory_does_not_grow_with_the_length_of_a_file(write, monkeypatch):
     # Arrow reads some pieces of a CSV ahead; small ones, so that a short file has more than those.
     monkeypatch.setattr("labkit.traces.pieces._BYTES", 1 << 16)
