@@ -1,6 +1,7 @@
 """A study of rules of one's own, made with one call: a study file, and the notebook that holds the rules."""
 
 import ast
+import contextlib
 import json
 import os
 import secrets
@@ -24,6 +25,8 @@ from labkit.studies.own_fleet import default_tasks
 from labkit.studies.rule_cells import cell_of_rules
 from labkit.trials.checking import check_policy
 
+# The id of the cell that holds the rules; by it a notebook made here is known again.
+OWN_RULES = "own-rules"
 _BEGIN = f'run = lk.begin_run("{RUN}", globals())'
 _PARSE = (
     "from labkit.policies.naming import parse_policy",
@@ -263,7 +266,7 @@ def _lines(text: str) -> list[str]:
 
 def _rule_cells(text: str) -> list[dict[str, Any]]:
     about = "The rules, and all that they take from outside."
-    code: dict[str, Any] = {"cell_type": "code", "execution_count": None, "id": "own-rules"}
+    code: dict[str, Any] = {"cell_type": "code", "execution_count": None, "id": OWN_RULES}
     code |= {"metadata": {}, "outputs": []}
     return [
         {"cell_type": "markdown", "id": "about-own-rules", "metadata": {}, "source": _lines(about)},
@@ -337,31 +340,29 @@ def _check(name: str, text: str, page: str, folder: Path, others: list[str]) -> 
 
 def _write(texts: dict[Path, str], name: str, replace: bool) -> bool:
     """Write both files, or neither; return whether anything had to be written."""
-    there = {path: _content(path) for path in texts if path.exists()}
-    if all(there.get(path) == text for path, text in texts.items()):
+    there = {path: _content(path) for path in texts if os.path.lexists(path)}
+    if all(there.get(path) == text.encode() for path, text in texts.items()):
         return False
     notebook, file = texts
-    other = [path for path in there if there[path] != texts[path]]
+    _check_made_here(name, notebook, file, there)
+    other = [path for path in there if there[path] != texts[path].encode()]
     if other and not replace:
         raise InputError(
             f"study {name} is there already and differs ({path_text(other[0])}); choose another name, or "
             "give replace=True to write over it."
         )
-    if file in there and f'notebook = "{notebook.name}"' not in (there[file] or ""):
-        raise InputError(
-            f"study {name} ({path_text(file)}) was not made from rules of your own; choose another name."
-        )
     beside = {path: path.with_name(f".{path.name}.{secrets.token_hex(8)}.tmp") for path in texts}
+    done: list[Path] = []
     try:
         for path, text in texts.items():
             beside[path].write_text(text, encoding="utf-8", newline="\n")
         for path in texts:
             # A link fails where somebody else has written meanwhile; a rename would write over it.
-            if path in there:
-                os.replace(beside[path], path)
-            else:
-                os.link(beside[path], path)
+            (os.replace if path in there else os.link)(beside[path], path)
+            done.append(path)
     except OSError as error:
+        for path in done:
+            _undo(path, there.get(path))
         raise InputError(
             f"study {name} cannot be written to {path_text(file.parent)} ({error.strerror}); choose another "
             "folder or name."
@@ -372,8 +373,47 @@ def _write(texts: dict[Path, str], name: str, replace: bool) -> bool:
     return True
 
 
-def _content(path: Path) -> str | None:
+def _undo(path: Path, before: bytes | None) -> None:
+    """Bring back what was there before this call, or nothing."""
+    with contextlib.suppress(OSError):
+        if before is None:
+            path.unlink()
+        else:
+            path.write_bytes(before)
+
+
+def _content(path: Path) -> bytes | None:
     try:
-        return path.read_text(encoding="utf-8")
-    except (OSError, UnicodeDecodeError):
+        return path.read_bytes()
+    except OSError:
         return None
+
+
+def _check_made_here(name: str, notebook: Path, file: Path, there: dict[Path, bytes | None]) -> None:
+    """Refuse when a file is there that `write_study` did not make: it is never written over."""
+    made = _holds_rules(there.get(notebook))
+    if file in there:
+        made = made and _names(there[file], notebook.name)
+    if there and not made:
+        found = " and ".join(path.name for path in there)
+        raise InputError(
+            f"study {name} ({found} in {path_text(file.parent)}) was not made from rules of your own, and is "
+            "not written over; choose another name or folder."
+        )
+
+
+def _holds_rules(text: bytes | None) -> bool:
+    """Tell whether this is a notebook with the cell that `write_study` puts in."""
+    try:
+        cells = json.loads(text or b"null")["cells"]
+        return any(cell.get("id") == OWN_RULES for cell in cells)
+    except (ValueError, TypeError, KeyError, AttributeError, RecursionError):
+        return False
+
+
+def _names(text: bytes | None, notebook: str) -> bool:
+    """Tell whether this is a study file of this notebook."""
+    try:
+        return tomllib.loads((text or b"").decode()).get("notebook") == notebook
+    except (ValueError, RecursionError):
+        return False

@@ -3,6 +3,7 @@
 import importlib.util
 import json
 import math
+import os
 
 import numba
 import numpy as np
@@ -101,6 +102,19 @@ def test_nothing_is_written_over_silently(tmp_path):
     assert sorted(path.name for path in tmp_path.iterdir()) == ["mine.ipynb", "mine.toml", "theirs.toml"]
 
 
+def test_what_was_not_made_here_is_never_written_over(tmp_path):
+    shipped = find_notebook("headroom").read_text(encoding="utf-8")
+    (tmp_path / "lone.ipynb").write_text(shipped)
+    (tmp_path / "pair.ipynb").write_text(shipped)
+    (tmp_path / "pair.toml").write_text('notebook = "pair.ipynb"\nreplicates = 400\nentropy = 1\n')
+    (tmp_path / "half.toml").symlink_to(tmp_path / "nowhere" / "half.toml")
+    before = {path: path.read_bytes() for path in tmp_path.iterdir() if path.exists()}
+    for name in ("lone", "pair", "half"):
+        with pytest.raises(lk.InputError, match=f"study {name} .* was not made from rules of your own"):
+            write(tmp_path, always_last, name, replace=True)
+    assert {path: path.read_bytes() for path in tmp_path.iterdir() if path.exists()} == before
+
+
 @lk.policy
 def of_parameter(options, loads, capacity, coin):
     return 1 if loads[options[0]] > tasks else 0
@@ -163,9 +177,12 @@ def test_what_cannot_be_meant_is_refused_and_nothing_written(tmp_path, values, s
 
 
 def test_a_folder_that_cannot_be_written_is_told(tmp_path, monkeypatch):
-    def refuse(*_):
-        raise OSError(30, "Read-only file system")
+    def refuse(new, path):
+        if path.suffix == ".toml":
+            raise OSError(30, "Read-only file system")
+        link(new, path)
 
+    link = os.link
     monkeypatch.setattr("labkit.studies.own_rules.os.link", refuse)
     with pytest.raises(lk.InputError, match=r"study mine cannot be written to .* \(Read-only file system\)"):
         write(tmp_path, always_last)
