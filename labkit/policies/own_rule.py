@@ -43,6 +43,7 @@ class OwnRule(Policy):
         self.function = function
         self.source = source_of(function) if source is None else source
         self._kept: bytes | None = None
+        self._keeping = False
         self._outside: dict[str, str] = {}
         self.__doc__ = function.__doc__
         # A user's index is checked: a wrong one must not read somebody else's memory.
@@ -132,11 +133,17 @@ class OwnRule(Policy):
         """Take the rule as it is at its first use: what is recorded and what is sent is what was compiled."""
         from labkit.sharing.work import packed
 
+        if self._keeping:  # its function holds the rule, so that packing the one asks for the other
+            raise InputError(f"policy {self.name} cannot be compiled: it calls itself; write a loop instead.")
         if self._kept is None:
             if _SOURCES.get(self.name) == self.source:
                 self.source = _SOURCES[self.name] = source_of(self.function)
             self._outside = fingerprints(self.function)
-            self._kept = packed(self.function)
+            self._keeping = True
+            try:
+                self._kept = packed(self.function)
+            finally:
+                self._keeping = False
 
     def __eq__(self, other: object) -> bool:
         return isinstance(other, OwnRule) and self.function is other.function

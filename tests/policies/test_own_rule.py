@@ -154,6 +154,27 @@ def test_a_rule_that_goes_wrong_is_refused_in_one_sentence(function, sentence):
     assert "\n" not in str(refusal.value)
 
 
+@lk.policy
+def recurring(options, loads, capacity, coin):
+    return recurring(options, loads, capacity, coin)
+
+
+@lk.policy
+def by_helper(options, loads, capacity, coin):
+    return asking(options, loads, capacity, coin)
+
+
+@numba.njit
+def asking(options, loads, capacity, coin):
+    return by_helper(options, loads, capacity, coin)
+
+
+@pytest.mark.parametrize("rule", [recurring, by_helper])
+def test_a_rule_that_calls_itself_is_refused_in_one_sentence(rule):
+    with pytest.raises(lk.InputError, match=r"cannot be compiled: it calls itself; write a loop instead\."):
+        lk.place(lk.ring(8), rule, tasks=2, rng=1)
+
+
 def test_a_rule_made_without_source_text_is_told_apart_by_its_code():
     made = []
     for last in (0, 1):
