@@ -74,8 +74,8 @@ class OwnRule(Policy):
 
     def check(self, load: type) -> None:
         """Compile the rule alone, so that what is wrong with it can be told in one sentence."""
-        self._keep()
         if CONFIG.DISABLE_JIT:
+            self._keep()
             return
 
         signature = self._signature(load)
@@ -85,6 +85,7 @@ class OwnRule(Policy):
             raise InputError(
                 f"policy {self.name} cannot be compiled: {reason(self.function, error, ARGUMENTS)}."
             ) from error
+        self._keep()
         returned = self._compiled.overloads[signature].signature.return_type
         if not isinstance(returned, numba.types.Integer | numba.types.Boolean):
             raise InputError(

@@ -1,5 +1,8 @@
 """Rules that a user writes."""
 
+import pickle
+import threading
+
 import numba
 import numpy as np
 import pandas as pd
@@ -78,6 +81,13 @@ def drawing(options, loads, capacity, coin):
     return int(np.random.random() < 0.5)  # noqa: NPY002
 
 
+LOCK = threading.Lock()
+
+
+def of_lock(options, loads, capacity, coin):
+    return 1 if LOCK else 0
+
+
 def nothing(options, loads, capacity, coin):
     return None
 
@@ -144,6 +154,7 @@ def gives_up(options, loads, capacity, coin):
         (changes_loads, "policy changes-loads cannot be compiled: it changes one of its arguments"),
         (changes_options, "policy changes-options cannot be compiled: it changes one of its arguments"),
         (changes_capacity, "policy changes-capacity cannot be compiled: it changes one of its arguments"),
+        (of_lock, "policy of-lock cannot be compiled: it reads LOCK, a Python lock"),
         (gives_up, "policy gives-up failed with ValueError: enough"),
     ],
     ids=lambda value: getattr(value, "__name__", ""),
@@ -171,8 +182,10 @@ def asking(options, loads, capacity, coin):
 
 @pytest.mark.parametrize("rule", [recurring, by_helper])
 def test_a_rule_that_calls_itself_is_refused_in_one_sentence(rule):
-    with pytest.raises(lk.InputError, match=r"cannot be compiled: it calls itself; write a loop instead\."):
+    with pytest.raises(lk.InputError, match=r"cannot be compiled: it calls itself .*; write a loop instead\."):
         lk.place(lk.ring(8), rule, tasks=2, rng=1)
+    with pytest.raises(lk.InputError, match="it calls itself; write a loop instead"):
+        pickle.dumps(rule)
 
 
 def test_a_rule_made_without_source_text_is_told_apart_by_its_code():
