@@ -3,6 +3,7 @@
 import dis
 import hashlib
 import inspect
+import re
 import textwrap
 from collections.abc import Callable, Iterator
 from types import CodeType, FunctionType, ModuleType
@@ -102,7 +103,8 @@ def text_of(function: Callable) -> str:
     except (OSError, TypeError):
         return ""
     # For code made from a string some Python versions return the lines of another file.
-    return text if f"def {function.__code__.co_name}(" in text else ""
+    name = re.escape(function.__code__.co_name)
+    return text if re.search(rf"def\s+{name}\s*[\[(]", text) else ""
 
 
 def source_of(function: Callable, seen: frozenset = frozenset()) -> str:

@@ -1,10 +1,11 @@
 """A user's rules as the text of one notebook cell that needs nothing else."""
 
 import ast
+import builtins
 import inspect
 import sys
 from collections.abc import Callable, Iterable
-from types import ModuleType
+from types import FunctionType, ModuleType
 from typing import Any
 
 import numpy as np
@@ -24,6 +25,7 @@ class _Cell:
         self.imports: dict[str, str] = {}
         self.values: dict[str, str] = {}
         self.functions: dict[str, str] = {}
+        self.done: set[Callable] = set()
 
     def put(self, kind: dict[str, str], name: str, line: str) -> None:
         for known in (self.imports, self.values, self.functions):
@@ -63,52 +65,84 @@ def cell_of_rules(rules: Iterable[OwnRule]) -> tuple[str, dict[str, str]]:
     """
     cell = _Cell()
     for rule in rules:
-        if not text_of(rule.function):
+        text = text_of(rule.function)
+        if not text:
             raise InputError(f"policy {rule.name} has no source text; write it in a cell of a notebook.")
-        _add_function(cell, rule.name, rule.function.__name__, rule.function)
+        node = _definition(rule.name, rule.function)[1]
+        if node.name != rule.function.__name__ or not node.decorator_list:
+            raise InputError(
+                f"policy {rule.name} was not made by writing @lk.policy above def {rule.function.__name__}; "
+                "write it so, since a study takes its text."
+            )
+        _add_function(cell, rule.name, rule.function)
     return cell.text(), cell.imports | cell.values | dict.fromkeys(cell.functions, "def")
 
 
-def _add_function(cell: _Cell, rule: str, name: str, function: Callable) -> None:
+def _definition(rule: str, function: Callable) -> tuple[str, ast.FunctionDef]:
+    """Return the text of a function as it can stand in a cell, and what it parses to."""
     text = text_of(function)
-    if name in cell.functions and cell.functions[name] == text:
+    # A text over several lines, or a comment, may begin further left than the function: no indent goes then.
+    for whole in (text, f"if True:\n{text}"):
+        try:
+            tree = ast.parse(whole)
+        except (SyntaxError, ValueError, RecursionError):
+            continue
+        found = [node for node in ast.walk(tree) if isinstance(node, ast.FunctionDef)]
+        if found and found[0].name == function.__code__.co_name:
+            return whole, found[0]
+    raise InputError(
+        f"policy {rule} needs {function.__code__.co_name}, whose text cannot stand alone; write it in a cell "
+        "of its own, without indent."
+    )
+
+
+def _add_function(cell: _Cell, rule: str, function: Callable) -> None:
+    if function in cell.done:
         return
-    for known, value in {**outside_of(function), **_around(function, text)}.items():
+    cell.done.add(function)
+    text, node = _definition(rule, function)
+    for known, value in {**outside_of(function), **_around(rule, function, node)}.items():
         if value is not function and plain_function(value) is not function:
             _add_value(cell, rule, known, value)
-    cell.put(cell.functions, name, text)
+    cell.put(cell.functions, node.name, text)
 
 
-def _around(function: Callable, text: str) -> dict[str, Any]:
+def _around(rule: str, function: Callable, node: ast.FunctionDef) -> dict[str, Any]:
     """Return what the decorators, defaults and annotations of a function name."""
-    node = ast.parse(text).body[0]
-    if not isinstance(node, ast.FunctionDef):
-        return {}
-    arguments = node.args.args
-    parts = [*node.decorator_list, *node.args.defaults, *(each.annotation for each in arguments)]
-    names = {
-        each.id
-        for part in [*parts, node.returns]
-        if part
-        for each in ast.walk(part)
-        if isinstance(each, ast.Name)
-    }
-    known = {**inspect.getclosurevars(function).nonlocals, **function.__globals__}
+    arguments = [*node.args.posonlyargs, *node.args.args, *node.args.kwonlyargs]
+    parts = [*node.decorator_list, *node.args.defaults, *node.args.kw_defaults, node.returns]
+    parts += [each.annotation for each in arguments]
+    names = {each.id for part in parts if part for each in ast.walk(part) if isinstance(each, ast.Name)}
+    known = {**inspect.getclosurevars(function).nonlocals, **getattr(function, "__globals__", {})}
+    # What a default was when the function was made, whatever its name means now.
+    defaults = zip(node.args.defaults, getattr(function, "__defaults__", None) or (), strict=False)
+    known |= {part.id: value for part, value in defaults if isinstance(part, ast.Name)}
+    for name in sorted(names):
+        if name not in known and not hasattr(builtins, name):
+            raise InputError(
+                f"policy {rule} needs {node.name}, whose decorators, defaults or annotations name {name}, "
+                "which means nothing where a study would put it; define it in a cell."
+            )
     return {name: known[name] for name in sorted(names) if name in known}
 
 
 def _add_value(cell: _Cell, rule: str, name: str, value: Any) -> None:
     inner = plain_function(value)
-    home = str(getattr(value, "__module__", None) or "")
     if isinstance(value, ModuleType):
-        if getattr(value, "__file__", None) is None and value.__name__ not in sys.stdlib_module_names:
-            raise InputError(_refusal(rule, name, "a module that no file holds"))
+        if not _kept(value.__name__):
+            raise InputError(
+                f"policy {rule} takes {name} from outside, a module that is not installed, which another "
+                f"session may not find; take what the rule needs by its name, as in from {value.__name__} "
+                "import LIMIT."
+            )
         alone = value.__name__ == name
         cell.put(cell.imports, name, f"import {value.__name__}" + ("" if alone else f" as {name}"))
-    elif home and home != "__main__" and getattr(sys.modules.get(home), name, None) is value and _kept(home):
-        cell.put(cell.imports, name, f"from {home} import {name}")
-    elif inner is not None and text_of(inner):
-        _add_function(cell, rule, name, inner)
+        return
+    line = _import_line(name, value)
+    if line:
+        cell.put(cell.imports, name, line)
+    elif inner is not None and text_of(inner) and not _kept(str(inner.__module__)):
+        _add_helper(cell, rule, name, value, inner)
     else:
         line = _literal(rule, name, value)
         if line.startswith("np."):
@@ -116,10 +150,37 @@ def _add_value(cell: _Cell, rule: str, name: str, value: Any) -> None:
         cell.put(cell.values, name, f"{name} = {line}")
 
 
+def _add_helper(cell: _Cell, rule: str, name: str, value: Any, inner: FunctionType) -> None:
+    """Put in a function of the user's, and the name by which a rule calls it where that is another one."""
+    own = _definition(rule, inner)[1]
+    if value is not inner and not own.decorator_list:
+        raise InputError(
+            f"policy {rule} takes {name} from outside, compiled by a call; write @numba.njit above "
+            f"def {own.name} instead, so that its text says it."
+        )
+    _add_function(cell, rule, inner)
+    if name != own.name:
+        cell.put(cell.functions, name, f"{name} = {own.name}")
+
+
+def _import_line(name: str, value: Any) -> str:
+    """Return the line that imports an object of an installed module under this name, or ""."""
+    home = str(getattr(value, "__module__", None) or "")
+    if not _kept(home):
+        return ""
+    real = str(getattr(value, "__name__", None) or name)
+    for module in (home.split(".")[0], home):
+        if getattr(sys.modules.get(module), real, None) is value:
+            return f"from {module} import {real}" + ("" if real == name else f" as {name}")
+    return ""
+
+
 def _kept(home: str) -> bool:
     """Tell whether a module is an installed one, which another session finds, too."""
     package = home.split(".")[0]
     file = getattr(sys.modules.get(package), "__file__", None) or ""
+    if package in ("", "__main__"):
+        return False
     return package in sys.stdlib_module_names or package == "labkit" or "site-packages" in file
 
 

@@ -182,7 +182,9 @@ def asking(options, loads, capacity, coin):
 
 @pytest.mark.parametrize("rule", [recurring, by_helper])
 def test_a_rule_that_calls_itself_is_refused_in_one_sentence(rule):
-    with pytest.raises(lk.InputError, match=r"cannot be compiled: it calls itself .*; write a loop instead\."):
+    with pytest.raises(
+        lk.InputError, match=r"cannot be compiled: it calls itself .*; write a loop instead\."
+    ):
         lk.place(lk.ring(8), rule, tasks=2, rng=1)
     with pytest.raises(lk.InputError, match="it calls itself; write a loop instead"):
         pickle.dumps(rule)

@@ -4,12 +4,16 @@ import importlib.util
 import json
 import math
 import os
+import types
+from math import floor as round_down
 
 import numba
 import numpy as np
 import pytest
+from numba import njit as fast
 
 import labkit as lk
+from labkit import policy as as_rule
 from labkit.records.declared import read_notebook
 from labkit.records.project import find_notebook
 from labkit.studies.model import read_study
@@ -71,16 +75,118 @@ def test_the_rules_cell_stands_alone(tmp_path):
         "import math\n\nimport numba\nimport numpy as np\n\nimport labkit as lk\n\nTABLE = "
     )
     assert lines["TABLE"] == 'TABLE = np.array([0.5, 1.5], dtype="float64")'
-    file = tmp_path / "alone.py"
-    file.write_text(text)
-    spec = importlib.util.spec_from_file_location("alone", file)
-    alone = importlib.util.module_from_spec(spec)
-    spec.loader.exec_module(alone)
+    alone = as_module(text, tmp_path)
     rng = np.random.default_rng(1)
     for _ in range(50):
         case = (np.array([0, 1]), rng.integers(0, 9, 2), np.ones(2), rng.random())
         assert alone.stay_first(*case) == stay_first(*case)
         assert alone.always_last(*case) == 1
+
+
+def make(factor):
+    @fast
+    def inner(number, by=factor):
+        return number * factor + by - factor
+
+    return inner
+
+
+def make_twice(factor):
+    compiled = fast
+
+    @compiled
+    def inner(number, by=factor):
+        return number * by
+
+    return inner
+
+
+def by_hand(number):
+    return number
+
+
+triple, double, early = make(3), make(2), make_twice(2)
+called_otherwise = more
+by_call = numba.njit(by_hand)
+own_module = types.ModuleType("own_module")
+own_module.LIMIT = 3
+
+
+@as_rule
+def of_aliases(options, loads, capacity, coin):
+    return triple(called_otherwise(round_down(loads[0])))
+
+
+@lk.policy
+def of_double(options, loads, capacity, coin):
+    return double(1)
+
+
+@lk.policy
+def of_early(options, loads, capacity, coin):
+    return early(1)
+
+
+@lk.policy
+def of_module(options, loads, capacity, coin):
+    return 1 if loads[0] > own_module.LIMIT else 0
+
+
+@lk.policy
+def of_call(options, loads, capacity, coin):
+    return by_call(0)
+
+
+if True:
+
+    @lk.policy
+    def spaced (options, loads, capacity, coin):  # fmt: skip
+        """Begin further left
+
+in the second line."""  # fmt: skip
+        return 0
+
+
+def test_names_that_a_cell_gave_itself_stay_what_they_are(tmp_path):
+    text, lines = cell_of_rules([of_aliases, spaced])
+    assert lines["as_rule"] == "from labkit import policy as as_rule"
+    assert lines["fast"] == "from numba import njit as fast"
+    assert lines["round_down"] == "from math import floor as round_down"
+    alone = as_module(text, tmp_path)
+    case = (np.array([0, 1]), np.array([1, 2]), np.ones(2), 0.5)
+    assert alone.of_aliases(*case) == of_aliases(*case) == 9
+    assert alone.spaced(*case) == 0
+    assert alone.spaced.name == "spaced"
+
+
+def as_module(text, folder):
+    file = folder / "alone.py"
+    file.write_text(text)
+    spec = importlib.util.spec_from_file_location("alone", file)
+    alone = importlib.util.module_from_spec(spec)
+    spec.loader.exec_module(alone)
+    return alone
+
+
+@pytest.mark.parametrize(
+    ("rules", "sentence"),
+    [
+        ([of_aliases, of_double], "name factor means one thing to one rule and another to another"),
+        ([of_early], "inner, whose decorators, defaults or annotations name compiled, which means nothing"),
+        ([of_module], "takes own_module from outside, a module that is not installed"),
+        ([of_call], "takes by_call from outside, compiled by a call; write @numba.njit above def by_hand"),
+    ],
+)
+def test_what_a_cell_cannot_say_is_refused(rules, sentence):
+    with pytest.raises(lk.InputError, match=sentence):
+        cell_of_rules(rules)
+
+
+def test_a_rule_made_by_a_call_is_refused():
+    with pytest.raises(
+        lk.InputError, match=r"policy bare was not made by writing @lk\.policy above def bare"
+    ):
+        cell_of_rules([lk.policy(bare)])
 
 
 def test_nothing_is_written_over_silently(tmp_path):
