@@ -12,12 +12,16 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+
 from labkit.analysis.headroom import replicates_needed
-from labkit.checks import shown
+from labkit.checks import check_whole, shown
 from labkit.errors import InputError
+from labkit.files import is_file_or_folder
 from labkit.fleet.readers import read_fleet
 from labkit.policies.own_rule import OwnRule
 from labkit.records.declared import read_notebook
+from labkit.records.identity import check_entropy
 from labkit.records.project import EXPERIMENTS, ROOT, check_study_name, find_notebook, from_root, path_text
 from labkit.studies.door import ANSWER, RUN, check_points, check_risk, policy_names
 from labkit.studies.model import make_study
@@ -87,7 +91,7 @@ def write_study(
     rules: OwnRule | Iterable[OwnRule],
     *,
     fleet: str | Path,
-    against: Iterable[str] = ("least-loaded",),
+    against: str | Iterable[str] = ("least-loaded",),
     tasks: int | None = None,
     replicates: int | None = None,
     risk: float = 0.01,
@@ -110,7 +114,7 @@ def write_study(
         Made by `labkit.policy`. Each is checked once more (`labkit.check_policy`).
     fleet : str or Path
         The folder of the fleet's two tables, from the project root.
-    against : iterable of str
+    against : str or list of str
         Built-in rules that meet the same arrivals; savings are counted from the first.
     tasks : int, optional
         Tasks placed; default as `labkit answer` chooses: as many as fill 80 % of the capacity, or 100 a
@@ -154,27 +158,27 @@ def write_study(
     """
     check_study_name(name)
     own = _checked_rules(rules)
-    others = policy_names(list(against))
-    if not others:
-        raise InputError("against is empty; name at least one built-in rule to compare with.")
+    others = _checked_others(against)
     place = _fleet_folder(fleet)
-    target = EXPERIMENTS if folder is None else from_root(folder)
-    if not target.is_dir():
-        raise InputError(f"folder is {str(folder)!r}; give a folder that exists.")
+    target = _target(folder)
     risk = check_risk(risk)
+    entropy = check_entropy(int(entropy) if isinstance(entropy, np.integer) else entropy)
+    title = _checked_title(title)
     names = [*(rule.name for rule in own), *others]
     values = {
         "fleet": _from(place, target),
-        "tasks": default_tasks(read_fleet(place))[0] if tasks is None else tasks,
+        "tasks": default_tasks(read_fleet(place))[0] if tasks is None else check_whole("tasks", tasks),
         "policies": names,
     }
     content: dict[str, Any] = {
         "title": title or f"{' and '.join(rule.name for rule in own)} against {', '.join(others)}",
         "notebook": f"{name}.ipynb",
-        "replicates": max(400, replicates_needed(risk)) if replicates is None else replicates,
+        "replicates": max(400, replicates_needed(risk))
+        if replicates is None
+        else check_whole("replicates", replicates),
         "entropy": entropy,
         "parameters": values,
-        "grid": {} if report_every is None else {"report_every": report_every},
+        "grid": {} if report_every is None else {"report_every": _checked_every(report_every)},
         "answer": {"notebook": ANSWER, "risk": risk, "baseline": others[0]},
     }
     file, notebook = target / f"{name}.toml", target / f"{name}.ipynb"
@@ -202,6 +206,47 @@ def _checked_rules(rules: Any) -> list[OwnRule]:
                 "shows; mend it first."
             )
     return given
+
+
+def _checked_others(against: Any) -> list[str]:
+    given = [against] if isinstance(against, str) else against
+    if not isinstance(given, Iterable):
+        raise InputError(f"against is {shown(against)}; give a list of built-in rules to compare with.")
+    names = policy_names(list(given))
+    if not names:
+        raise InputError("against is empty; name at least one built-in rule to compare with.")
+    return names
+
+
+def _checked_every(report_every: Any) -> list[int]:
+    if not isinstance(report_every, list | tuple | range) or not report_every:
+        raise InputError(
+            f"report_every is {shown(report_every)}; give a list of whole numbers, such as [0, 50]."
+        )
+    return [check_whole("report_every", each, least=0) for each in report_every]
+
+
+def _checked_title(title: Any) -> str | None:
+    if title is not None and not (isinstance(title, str) and _writable(title)):
+        raise InputError(f"title is {shown(title)}; give a text of ordinary characters.")
+    return title
+
+
+def _writable(text: str) -> bool:
+    try:
+        text.encode()
+    except UnicodeEncodeError:
+        return False
+    return True
+
+
+def _target(folder: Any) -> Path:
+    if not isinstance(folder, str | Path | None):
+        raise InputError(f"folder is {shown(folder)}; give a folder that exists.")
+    target = EXPERIMENTS if folder is None else from_root(folder)
+    if not is_file_or_folder(target) or not target.is_dir():
+        raise InputError(f"folder is {str(folder)!r}; give a folder that exists.")
+    return target
 
 
 def _fleet_folder(fleet: Any) -> Path:

@@ -64,6 +64,15 @@ def test_the_study_is_what_was_asked_for(tmp_path):
     assert read_notebook(made.notebook).parameters["policies"].default == study.parameters["policies"]
 
 
+def test_numbers_of_numpy_and_one_rule_alone_are_taken(tmp_path):
+    study = read_study(
+        write(tmp_path, always_last, against="one-choice", tasks=np.int64(300), entropy=np.int64(3)).file
+    )
+    assert study.parameters["tasks"] == 300
+    assert study.parameters["entropy"] == 3
+    assert study.parameters["policies"] == ["always-last", "one-choice"]
+
+
 def test_a_name_that_needs_care_stays_what_it_is(tmp_path):
     made = write(tmp_path, always_last, title='A "title"\twith \\ and \x7f')
     assert read_study(made.file).title == 'A "title"\twith \\ and \x7f'
@@ -267,6 +276,16 @@ def bare(options, loads, capacity, coin):
         ({"fleet": lk.ring(4)}, "fleet is a Fleet; give the folder of its two tables"),
         ({"fleet": "nowhere"}, "nowhere"),
         ({"replicates": 10**12, "tasks": 5}, "replicates is 1,000,000,000,000; with 100 servers"),
+        ({"against": None}, "against is None; give a list of built-in rules"),
+        ({"against": [3]}, "policies: policy is 3"),
+        ({"tasks": math.nan}, "tasks is nan; give a whole number of at least 1"),
+        ({"tasks": math.inf}, "tasks is inf; give a whole number of at least 1"),
+        ({"replicates": 400.5}, "replicates is 400.5; give a whole number of at least 1"),
+        ({"entropy": None}, "entropy is None; give a whole number of at least 0"),
+        ({"title": "\ud800"}, "title is '.ud800'; give a text of ordinary characters"),
+        ({"folder": 5}, "folder is 5; give a folder that exists"),
+        ({"folder": "a\0b"}, "path is 'a.x00b', which can be none"),
+        ({"report_every": 5}, "report_every is 5; give a list of whole numbers"),
         ({"tasks": 0}, "tasks is 0; give a whole number of at least 1"),
         ({"replicates": 10}, "replicates is 10; a risk of 0.01"),
         ({"risk": 2}, "risk is 2; give a number above 0 and below 1"),
