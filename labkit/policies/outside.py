@@ -4,6 +4,7 @@ import dis
 import hashlib
 import inspect
 import re
+import sys
 import textwrap
 from collections.abc import Callable, Iterator
 from types import CodeType, FunctionType, ModuleType
@@ -14,6 +15,8 @@ import numpy as np
 # Values of an array that a record writes out.
 SHOWN = 100
 
+# Installed packages that rules use; records name their versions.
+_LIBRARIES = ("numpy", "numba", "scipy", "pandas", "labkit", "math")
 _LOADS = ("LOAD_GLOBAL", "LOAD_NAME", "LOAD_DEREF", "LOAD_CLASSDEREF")
 
 
@@ -44,21 +47,54 @@ def outside_of(function: Callable) -> dict[str, Any]:
 
 
 def _names_read(code: CodeType) -> Iterator[str]:
+    return (chain[0] for chain in _chains(code))
+
+
+def _chains(code: CodeType) -> Iterator[tuple[str, ...]]:
+    """Return each name that code reads from outside, with the attributes read of it right away."""
+    chain: tuple[str, ...] = ()
     for step in dis.get_instructions(code):
-        if step.opname in _LOADS:
-            yield step.argval
+        if step.opname == "EXTENDED_ARG":
+            continue
+        if chain and step.opname in ("LOAD_ATTR", "LOAD_METHOD"):
+            chain += (step.argval,)
+            continue
+        if chain:
+            yield chain
+        chain = (step.argval,) if step.opname in _LOADS else ()
     for inner in filter(inspect.iscode, code.co_consts):
-        yield from _names_read(inner)
+        yield from _chains(inner)
+
+
+def values_reached(function: Callable) -> dict[str, Any]:
+    """Return what `outside_of` does, with attributes of the user's own modules, and default arguments.
+
+    Attributes go by ``module.name``, defaults by the name of their argument.
+    """
+    found = outside_of(function)
+    attributes = {}
+    for name, *rest in _chains(function.__code__):
+        value, path = found.get(name), name
+        for attribute in rest:
+            if not isinstance(value, ModuleType) or _is_library(value.__name__):
+                break
+            value, path = getattr(value, attribute, None), f"{path}.{attribute}"
+        if path != name:
+            attributes[path] = value
+    code, given = function.__code__, getattr(function, "__defaults__", None) or ()
+    names = code.co_varnames[code.co_argcount - len(given) : code.co_argcount]
+    defaults = dict(zip(names, given, strict=True)) | (getattr(function, "__kwdefaults__", None) or {})
+    return found | dict(sorted(attributes.items())) | defaults
 
 
 def fingerprints(function: Callable, seen: frozenset = frozenset()) -> dict[str, str]:
     """Return a text for each value from outside that differs when the value does.
 
-    Functions count by their code and what they take from outside themselves, as ``helper.name``; modules
-    and objects that cannot be looked into by what they are only.
+    Functions count by their code and what they take from outside themselves, as ``helper.name``; library
+    modules and objects that cannot be looked into by what they are only.
     """
     found = {}
-    for name, value in outside_of(function).items():
+    for name, value in values_reached(function).items():
         inner = plain_function(value)
         found[name] = _fingerprint(value)
         if inner is not None and inner not in seen and inner is not function and not _of_library(inner):
@@ -80,8 +116,12 @@ def _fingerprint(value: Any) -> str:
 
 def _of_library(function: FunctionType) -> bool:
     """Tell whether a function comes from an installed package, whose text no record needs."""
-    module = (function.__module__ or "").split(".")[0]
-    return module in ("numpy", "numba", "scipy", "pandas", "labkit", "math")
+    return (function.__module__ or "").split(".")[0] in _LIBRARIES
+
+
+def _is_library(module: str) -> bool:
+    package = module.split(".")[0]
+    return package in _LIBRARIES or package in sys.stdlib_module_names
 
 
 def _array_words(array: np.ndarray) -> str:
@@ -115,7 +155,7 @@ def source_of(function: Callable, seen: frozenset = frozenset()) -> str:
         constants = [value for value in code.co_consts if not inspect.iscode(value)]
         digest = hashlib.sha256(code.co_code + repr(constants).encode()).hexdigest()
         text = f"# no source text; digest of the compiled function: {digest}\n"
-    for name, value in outside_of(function).items():
+    for name, value in values_reached(function).items():
         inner = plain_function(value)
         if isinstance(value, bool | int | float | str | tuple | np.generic):
             text += f"# {name} = {value!r}\n"

@@ -5,7 +5,7 @@ from typing import Any
 import numpy as np
 
 from labkit.policies.compile_errors import NO_MEMORY
-from labkit.policies.outside import outside_of, plain_function
+from labkit.policies.outside import plain_function, values_reached
 from labkit.policies.own_rule import OwnRule
 from labkit.trials.asking import AGAIN, ANEW, ELSEWHERE, LATER, PLAIN, STEPS, Answers
 from labkit.trials.report import Finding
@@ -153,7 +153,7 @@ def notes_of(rule: OwnRule, answers: Answers) -> tuple[str, ...]:
     notes = []
     if AGAIN not in answers.other and LATER not in answers.other:
         notes.append(_NEEDS_MORE if answers.beyond else _NEEDS_OPTIONS)
-    outside = outside_of(rule.function)
+    outside = values_reached(rule.function)
     values = [name for name, value in outside.items() if isinstance(value, _VALUES)]
     if values:
         notes.append(
@@ -191,7 +191,7 @@ def unseen_by(rule: OwnRule, answers: Answers, *, own_fleet: bool) -> tuple[str,
     if not own_fleet:
         own = "what goes wrong on your fleet alone: lk.check_policy(rule, fleet) tries it there, too"
         unseen.insert(1, own)
-    helpers = [name for name, value in outside_of(rule.function).items() if _is_helper(value)]
+    helpers = [name for name, value in values_reached(rule.function).items() if _is_helper(value)]
     if helpers:
         unseen.append(
             f"positions beyond an array and loops without end inside {', '.join(helpers)}: only the rule "

@@ -2,6 +2,7 @@
 
 import pickle
 import threading
+import types
 
 import numba
 import numpy as np
@@ -272,6 +273,40 @@ def test_arrays_and_helpers_from_outside_are_recorded_too():
     assert (
         "#     def doubled(number):\n#         return FACTOR * number\n#     # FACTOR = 2" in by_table.source
     )
+
+
+settings = types.ModuleType("settings")
+settings.LIMIT = 3
+settings.inner = types.ModuleType("inner")
+settings.inner.SHARE = 0.5
+
+
+def helper_with(default):
+    @numba.njit
+    def beyond(number, limit=default):
+        return number > limit
+
+    return beyond
+
+
+def test_settings_of_ones_own_and_defaults_are_recorded_and_watched(monkeypatch):
+    beyond = helper_with(4)
+
+    @lk.policy
+    def by_settings(options, loads, capacity, coin):
+        if beyond(loads[0]) and coin < settings.inner.SHARE and coin < np.pi:
+            return 0
+        return 1 if loads[options[0]] > settings.LIMIT else 0
+
+    for line in ("#     # limit = 4\n", "\n# settings.LIMIT = 3\n", "\n# settings.inner.SHARE = 0.5\n"):
+        assert line in by_settings.source
+    assert "np.pi =" not in by_settings.source
+    pickle.dumps(by_settings)  # its first use
+    assert by_settings.changed_outside() == []
+    monkeypatch.setattr(settings, "LIMIT", 7)
+    assert by_settings.changed_outside() == ["settings.LIMIT"]
+    beyond = helper_with(5)
+    assert by_settings.changed_outside() == ["beyond.limit", "settings.LIMIT"]
 
 
 def test_a_name_of_an_attribute_is_not_taken_for_one_from_outside():
