@@ -1,6 +1,5 @@
 """A study of rules of one's own, made with one call: a study file, and the notebook that holds the rules."""
 
-import ast
 import contextlib
 import json
 import os
@@ -26,11 +25,9 @@ from labkit.records.project import EXPERIMENTS, ROOT, check_study_name, find_not
 from labkit.studies.door import ANSWER, RUN, check_points, check_risk, policy_names
 from labkit.studies.model import make_study
 from labkit.studies.own_fleet import default_tasks
-from labkit.studies.rule_cells import cell_of_rules
+from labkit.studies.rule_cells import bound_names, cell_of_rules, cells_around, check_names, holds_rules
 from labkit.trials.checking import check_policy
 
-# The id of the cell that holds the rules; by it a notebook made here is known again.
-OWN_RULES = "own-rules"
 _BEGIN = f'run = lk.begin_run("{RUN}", globals())'
 _PARSE = (
     "from labkit.policies.naming import parse_policy",
@@ -270,14 +267,14 @@ def _notebook(rules: list[OwnRule], title: str, path: Path, values: dict[str, An
     declared = read_notebook(home)
     content = json.loads(home.read_text(encoding="utf-8"))
     text, lines = cell_of_rules(rules)
-    _check_names(lines, _bound(declared.cells, set(declared.parameters)))
+    check_names(lines, bound_names(declared.cells, set(declared.parameters)))
     begin = f"run = lk.begin_run({json.dumps(path_text(path), ensure_ascii=False)}, globals())"
     changes = [(_BEGIN, begin), _PARSE, _RULES]
     cells = []
     for cell in content["cells"]:
         source = "".join(cell["source"])
         if "parameters" in cell["metadata"].get("tags", []):
-            cells += [_cell(cell, _with_defaults(source, values)), *_rule_cells(text)]
+            cells += [_cell(cell, _with_defaults(source, values)), *cells_around(text)]
             continue
         for old, new in changes.copy():
             if cell["cell_type"] == "code" and old in source:
@@ -309,16 +306,6 @@ def _lines(text: str) -> list[str]:
     return text.splitlines(keepends=True)
 
 
-def _rule_cells(text: str) -> list[dict[str, Any]]:
-    about = "The rules, and all that they take from outside."
-    code: dict[str, Any] = {"cell_type": "code", "execution_count": None, "id": OWN_RULES}
-    code |= {"metadata": {}, "outputs": []}
-    return [
-        {"cell_type": "markdown", "id": "about-own-rules", "metadata": {}, "source": _lines(about)},
-        {**code, "source": _lines(text)},
-    ]
-
-
 def _with_defaults(source: str, values: dict[str, Any]) -> str:
     """Return a parameters cell with other defaults; lines without a value stay as they are."""
     lines = []
@@ -330,29 +317,6 @@ def _with_defaults(source: str, values: dict[str, Any]) -> str:
             declared = f"{declared.split(' = ')[0]} = {written}"
         lines.append(f"{declared}{sign}{help_text}")
     return "\n".join(lines)
-
-
-def _bound(cells: Iterable[str], parameters: set[str]) -> dict[str, str]:
-    """Return the names that a notebook gives a meaning to, imported ones with the line that imports them."""
-    found = dict.fromkeys(parameters, "")
-    for cell in cells:
-        for node in ast.walk(ast.parse(cell)):
-            if isinstance(node, ast.Import | ast.ImportFrom):
-                found |= {each.asname or each.name: ast.unparse(node) for each in node.names}
-            elif isinstance(node, ast.Name) and isinstance(node.ctx, ast.Store):
-                found.setdefault(node.id, "")
-            elif isinstance(node, ast.FunctionDef):
-                found.setdefault(node.name, "")
-    return found
-
-
-def _check_names(lines: dict[str, str], bound: dict[str, str]) -> None:
-    for name, line in lines.items():
-        if name in bound and line != bound[name]:
-            raise InputError(
-                f"name {name}, which your rules use, has a meaning of its own in the study's notebook; give "
-                "it another name in your cell."
-            )
 
 
 def _toml(content: dict[str, Any]) -> str:
@@ -436,7 +400,7 @@ def _content(path: Path) -> bytes | None:
 
 def _check_made_here(name: str, notebook: Path, file: Path, there: dict[Path, bytes | None]) -> None:
     """Refuse when a file is there that `write_study` did not make: it is never written over."""
-    made = _holds_rules(there.get(notebook))
+    made = holds_rules(there.get(notebook))
     if file in there:
         made = made and _names(there[file], notebook.name)
     if there and not made:
@@ -445,15 +409,6 @@ def _check_made_here(name: str, notebook: Path, file: Path, there: dict[Path, by
             f"study {name} ({found} in {path_text(file.parent)}) was not made from rules of your own, and is "
             "not written over; choose another name or folder."
         )
-
-
-def _holds_rules(text: bytes | None) -> bool:
-    """Tell whether this is a notebook with the cell that `write_study` puts in."""
-    try:
-        cells = json.loads(text or b"null")["cells"]
-        return any(cell.get("id") == OWN_RULES for cell in cells)
-    except (ValueError, TypeError, KeyError, AttributeError, RecursionError):
-        return False
 
 
 def _names(text: bytes | None, notebook: str) -> bool:

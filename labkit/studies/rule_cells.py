@@ -3,6 +3,7 @@
 import ast
 import builtins
 import inspect
+import json
 import sys
 from collections.abc import Callable, Iterable
 from types import FunctionType, ModuleType
@@ -16,6 +17,9 @@ from labkit.policies.own_rule import OwnRule
 
 # Numbers of an array that a cell writes out.
 MOST_NUMBERS = 1_000
+
+# The id of the cell that holds the rules; by it a notebook made here is known again.
+OWN_RULES = "own-rules"
 
 
 class _Cell:
@@ -112,7 +116,8 @@ def _around(rule: str, function: Callable, node: ast.FunctionDef) -> dict[str, A
     arguments = [*node.args.posonlyargs, *node.args.args, *node.args.kwonlyargs]
     parts = [*node.decorator_list, *node.args.defaults, *node.args.kw_defaults, node.returns]
     parts += [each.annotation for each in arguments]
-    names = {each.id for part in parts if part for each in ast.walk(part) if isinstance(each, ast.Name)}
+    inside = [each for part in parts if part for each in ast.walk(part) if isinstance(each, ast.Name)]
+    names = {each.id for each in inside} - {each.id for each in inside if isinstance(each.ctx, ast.Store)}
     known = {**inspect.getclosurevars(function).nonlocals, **getattr(function, "__globals__", {})}
     # What a default was when the function was made, whatever its name means now.
     defaults = zip(node.args.defaults, getattr(function, "__defaults__", None) or (), strict=False)
@@ -208,3 +213,52 @@ def _refusal(rule: str, name: str, kind: str) -> str:
         f"policy {rule} takes {name} from outside, {kind}; a study can hold finite numbers, texts, tuples, "
         f"arrays of up to {MOST_NUMBERS:,} numbers and compiled functions: use one of these."
     )
+
+
+def cells_around(text: str) -> list[dict[str, Any]]:
+    """Return this text as a notebook's cell, below one that tells what it is."""
+    about = "The rules, and all that they take from outside."
+    code: dict[str, Any] = {"cell_type": "code", "execution_count": None, "id": OWN_RULES}
+    code |= {"metadata": {}, "outputs": []}
+    return [
+        {
+            "cell_type": "markdown",
+            "id": "about-own-rules",
+            "metadata": {},
+            "source": about.splitlines(keepends=True),
+        },
+        {**code, "source": text.splitlines(keepends=True)},
+    ]
+
+
+def holds_rules(text: bytes | None) -> bool:
+    """Tell whether this is a notebook with the cell that `write_study` puts in."""
+    try:
+        cells = json.loads(text or b"null")["cells"]
+        return any(cell.get("id") == OWN_RULES for cell in cells)
+    except (ValueError, TypeError, KeyError, AttributeError, RecursionError):
+        return False
+
+
+def bound_names(cells: Iterable[str], parameters: set[str]) -> dict[str, str]:
+    """Return the names that a notebook gives a meaning to, imported ones with the line that imports them."""
+    found = dict.fromkeys(parameters, "")
+    for cell in cells:
+        for node in ast.walk(ast.parse(cell)):
+            if isinstance(node, ast.Import | ast.ImportFrom):
+                found |= {each.asname or each.name: ast.unparse(node) for each in node.names}
+            elif isinstance(node, ast.Name) and isinstance(node.ctx, ast.Store):
+                found.setdefault(node.id, "")
+            elif isinstance(node, ast.FunctionDef):
+                found.setdefault(node.name, "")
+    return found
+
+
+def check_names(lines: dict[str, str], bound: dict[str, str]) -> None:
+    """Refuse a name of the rules' cell that the rest of the notebook uses for something else."""
+    for name, line in lines.items():
+        if name in bound and line != bound[name]:
+            raise InputError(
+                f"name {name}, which your rules use, has a meaning of its own in the study's notebook; give "
+                "it another name in your cell."
+            )
