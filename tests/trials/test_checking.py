@@ -262,12 +262,13 @@ class TestOutside:
         table[3] = 8
         assert "hold other values now: table." in lk.check_policy(by_table).findings[0].seen
 
-    def test_what_a_module_holds_is_seen_by_compiling_again(self):
+    def test_what_a_module_holds_under_another_name_is_seen_by_compiling_again(self):
         settings.LIMIT = 2
 
         @lk.policy
         def limited(options, loads, capacity, coin):
-            return 1 if loads[options[0]] > settings.LIMIT else 0
+            held = settings
+            return 1 if loads[options[0]] > held.LIMIT else 0
 
         assert lk.check_policy(limited).sound
         settings.LIMIT = 30
