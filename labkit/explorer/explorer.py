@@ -113,7 +113,7 @@ class Explorer:
         >>> import labkit as lk
         >>> around = lk.explore(lk.ladder(3))
         >>> around.select(1).selected, around.neighbours["server"].tolist()
-        (1, ['0', '2', '4'])
+        (1, [0, 2, 4])
         >>> around.select(6)
         Traceback (most recent call last):
             ...

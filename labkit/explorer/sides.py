@@ -14,6 +14,8 @@ from labkit.survey.facts import Survey
 
 # The exact split of the survey, shown like a rule.
 FAIR = "fair split"
+# Columns of the table of neighbours, in which the utilisations under the rules stand under their names.
+NEAR = ("server", "capacity", "shared")
 
 
 @dataclass(frozen=True)
@@ -110,6 +112,11 @@ def _check(fleet: Fleet, name: Any, outcome: Any) -> None:
         raise InputError(
             f"outcomes holds the name {name!r}; give each outcome a text of its own, "
             f"other than {FAIR!r}, which is shown beside them."
+        )
+    if name in NEAR:
+        raise InputError(
+            f"outcomes holds the name {name!r}; give each outcome a text of its own, other than "
+            f"{', '.join(map(repr, NEAR))}, which are columns of the table of neighbours."
         )
     if not isinstance(outcome, Outcome):
         raise InputError(

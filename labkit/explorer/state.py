@@ -8,7 +8,7 @@ import pandas as pd
 
 from labkit.checks import shown
 from labkit.errors import InputError
-from labkit.explorer.sides import Side, capacities
+from labkit.explorer.sides import NEAR, Side, capacities
 from labkit.explorer.surroundings import Part, Surroundings
 from labkit.fleet.model import Fleet, positions_of
 from labkit.survey.facts import Survey
@@ -163,9 +163,9 @@ class State:
         """
         shared = {} if self.selected is None else self.surroundings.neighbours(self.selected)
         at = np.array(list(shared), dtype=np.int64)
-        table = {"server": [self.name(each) for each in at], "capacity": self.capacity[at]}
-        table["shared"] = np.array(list(shared.values()), dtype=np.float64)
-        return pd.DataFrame(table | {name: self.values(name)[at] for name in self.shown})
+        demand = np.array(list(shared.values()), dtype=np.float64)
+        about = zip(NEAR, (self.fleet.names.take(at), self.capacity[at], demand), strict=True)
+        return pd.DataFrame(dict(about) | {name: self.values(name)[at] for name in self.shown})
 
     def show(self, left: str, right: str) -> None:
         """Put two rules side by side."""

@@ -136,6 +136,9 @@ def test_the_highest_of_the_replicates_can_be_coloured(around):
 def test_of_a_large_fleet_the_nearest_are_drawn():
     around = lk.explore(lk.ring(5_000), select=1_000, nearby=9)
     assert around.drawn == list(range(996, 1005))
+    near = around.neighbours["server"].tolist()
+    assert near == [999, 1_001]
+    assert around.select(near[1]).selected == 1_001
     around.select(1_002)
     assert around.drawn == list(range(996, 1005))
     around.select(3_000)
@@ -221,6 +224,10 @@ def test_a_fleet_alone_shows_its_fair_split(yard):
         (lambda fleet, pair: lk.explore(fleet, 3), "outcomes is int; give outcomes of lk.place"),
         (lambda fleet, pair: lk.explore(fleet, {"a": 3}), r"outcomes\['a'\] is int; give an outcome"),
         (lambda fleet, pair: lk.explore(fleet, {"fair split": pair[0]}), "the name 'fair split'"),
+        (
+            lambda fleet, pair: lk.explore(fleet, {"even": pair[0], "capacity": pair[1]}),
+            "the name 'capacity'; .* other than 'server', 'capacity', 'shared', which are columns",
+        ),
         (lambda fleet, pair: lk.explore(fleet, [pair[0], pair[0]]), "holds 'even' twice"),
         (lambda fleet, pair: lk.explore(lk.ring(5), pair), "is of another fleet"),
         (lambda fleet, pair: lk.explore(fleet, survey=lk.survey(lk.ring(5))), "survey is of another fleet"),
