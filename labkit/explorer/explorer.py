@@ -197,9 +197,9 @@ def explore(
     fleet : Fleet
         A fleet whose choices are listed.
     outcomes : Outcome, list of Outcome or dict of str to Outcome, optional
-        What `place` measured on this fleet under the rules to compare, as many tasks under each. Beside them
-        stands the fair split of as much work, the best that any rule could do; alone it shows the fair split
-        of the demand, placed once.
+        What `place` measured on this fleet under the rules to compare, as many tasks and replicates under
+        each. Beside them stands the fair split of as much work, the best that any rule could do; alone it
+        shows the fair split of the demand, placed once.
     survey : Survey, optional
         What `labkit.survey` found about this fleet, where it is at hand; default: it is made.
     select : str or int, optional
@@ -216,8 +216,8 @@ def explore(
     Raises
     ------
     InputError
-        When the choices are not listed, outcomes are of another fleet or of different numbers of tasks, or
-        there is no such server.
+        When the choices are not listed, outcomes are of another fleet, of different numbers of tasks or
+        replicates, or called like a column of `Explorer.neighbours`, or there is no such server.
 
     Examples
     --------

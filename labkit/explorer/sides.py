@@ -86,11 +86,15 @@ def named_outcomes(fleet: Fleet, outcomes: Any) -> dict[str, Outcome]:
         )
     for name, outcome in named.items():
         _check(fleet, name, outcome)
-    counts = {name: outcome.tasks for name, outcome in named.items()}
+    _check_alike("tasks", {name: outcome.tasks for name, outcome in named.items()})
+    _check_alike("replicates", {name: len(outcome.loads) for name, outcome in named.items()})
+    return named
+
+
+def _check_alike(what: str, counts: dict[str, int]) -> None:
     if len(set(counts.values())) > 1:
         words = ", ".join(f"{count:,} ({name})" for name, count in counts.items())
-        raise InputError(f"outcomes hold different numbers of tasks, {words}; place as many under each rule.")
-    return named
+        raise InputError(f"outcomes hold different numbers of {what}, {words}; place as many under each rule.")
 
 
 def _by_policy(outcomes: list[Any]) -> dict[str, Any]:

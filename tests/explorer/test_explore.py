@@ -249,3 +249,6 @@ def test_outcomes_of_different_amounts_are_refused(yard, pair):
     other = placed(yard, "more", [[9, 9, 3, 4, 0]])
     with pytest.raises(InputError, match=r"different numbers of tasks, 24 \(even\), 25 \(more\)"):
         lk.explore(yard, [pair[0], other])
+    once = placed(yard, "once", [[9, 9, 3, 3, 0]])
+    with pytest.raises(InputError, match=r"different numbers of replicates, 2 \(even\), 1 \(once\); place"):
+        lk.explore(yard, [pair[0], once])
