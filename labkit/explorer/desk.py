@@ -1,5 +1,6 @@
 """The widget around the drawing: what can be reached with keys as well, and the facts beneath."""
 
+import re
 from collections.abc import Callable
 from typing import Any
 
@@ -147,8 +148,8 @@ class Desk:
 
 def find(state: State, words: str) -> int:
     """Return the server of a typed name; a fleet with whole numbers for names takes their digits."""
-    names = state.fleet.names
-    given: Any = int(words) if names.dtype.kind in "iu" and words.strip().lstrip("-").isdecimal() else words
+    whole = state.fleet.names.dtype.kind in "iu" and re.fullmatch(r"-?\d{1,19}", words.strip())
+    given: Any = int(words) if whole else words
     return server_called(state.fleet, given)
 
 

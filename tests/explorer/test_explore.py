@@ -147,8 +147,10 @@ def test_of_a_large_fleet_the_nearest_are_drawn():
     assert part.cut.tolist() == [True, *7 * [False], True]
     assert len(part.pairs) == 8
     assert find(around._state, "17") == 17
-    with pytest.raises(InputError, match="no server is called -3; give the name of a server of this fleet"):
-        find(around._state, "-3")
+    assert find(around._state, " 017 ") == 17
+    for typed in ("-3", "--5", "-", "9" * 19, "9" * 5_000):
+        with pytest.raises(InputError, match="no server is called .*; give the name of a server of this fleet"):
+            find(around._state, typed)
     assert "9 of 5,000 servers are drawn" in around._repr_mimebundle_()["text/html"]
 
 
