@@ -90,14 +90,21 @@ class Waiting:
 
     def draw(self) -> None:
         """Show the line, for the first time or again."""
-        if self._show is None:
-            self._show = _Nothing() if _off() else _place(self)
-        self._show.line(self.line())
+        self._tell(lambda show: show.line(self.line()))
 
     def finish(self, whole: bool) -> None:
         """Leave one tidy line, when anything was to be seen."""
         if self._show is not None:
-            self._show.last(self.last_line() if whole else f"{self.last_line()}, then ended")
+            words = self.last_line() if whole else f"{self.last_line()}, then ended"
+            self._tell(lambda show: show.last(words))
+
+    def _tell(self, put: Callable[[Any], None]) -> None:
+        try:
+            if self._show is None:
+                self._show = _Nothing() if _off() else _place(self)
+            put(self._show)
+        except (OSError, ValueError):  # nobody reads any more, or the stream is closed: the work goes on
+            self._show = _Nothing()
 
 
 class _Watch:

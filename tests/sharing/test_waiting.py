@@ -1,5 +1,6 @@
 """What is seen while work takes its time: in a terminal, a pipe, a notebook with a reader and one without."""
 
+import io
 import os
 import re
 import subprocess
@@ -163,6 +164,29 @@ def test_work_that_fails_says_so_and_leaves_nothing_behind(monkeypatch):
         fail()
     assert ends == ["doomed: 1 in 0 s, then ended"]
     assert waiting._watch.under_way == []
+
+
+@pytest.mark.parametrize("error", [BrokenPipeError, ValueError("I/O operation on closed file")])
+@pytest.mark.parametrize("place", [waiting._Log, lambda _: waiting._Terminal()])
+def test_work_goes_on_where_nothing_can_be_shown(monkeypatch, place, error):
+    tries = []
+
+    class Gone(io.StringIO):
+        def write(self, words):
+            tries.append(words)
+            raise error
+
+    monkeypatch.setattr(sys, "stderr", Gone())
+    monkeypatch.setattr(waiting, "_place", place)
+    with Waiting("stones counted", 9, "stone") as work:
+        work.add(5)
+        with waiting._watch.changed:
+            work.draw()
+            work.draw()
+        assert len(tries) == 1
+    with Waiting("shells counted", 9, "shell") as work:
+        work._show = place(work)  # what fails only at the end
+    assert len(tries) == 2
 
 
 def test_short_work_shows_nothing_and_costs_next_to_nothing(monkeypatch):
