@@ -67,7 +67,7 @@ def headroom_against_age(table: pd.DataFrame, *, servers: int) -> Drawing:
     first = rows.iloc[0]
     percent = f"{100 * first['risk']:g} %"
     for axes in panels[::COLUMNS]:
-        axes.set_ylabel(f"headroom at {percent} risk, utilisation (load ÷ capacity)")
+        axes.set_ylabel(f"headroom at {percent} risk (load ÷ capacity)")
     note(figure, f"bars: {100 * first['confidence']:g} % limits · marks are moved sideways to show all")
     figure.draw_without_rendering()
     for axes in panels:

@@ -65,7 +65,7 @@ def load_against_tasks(
         axes.set_title(f"load reports {reports(kind)}" if len(kinds) > 1 else "")
         axes.ends = ends
     for axes in panels[::COLUMNS]:
-        axes.set_ylabel(f"{of}: highest utilisation (load ÷ capacity) − {above}")
+        axes.set_ylabel(f"{of}: highest load ÷ capacity − {above}")
     percent = f"{100 * risk:g} %"
     note(
         figure,

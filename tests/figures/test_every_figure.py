@@ -111,7 +111,7 @@ def drawn():
         load_against_tasks: [
             load_against_tasks(records, risk=0.02),
             load_against_tasks(records, risk=0.02, above="optimum"),
-            load_against_tasks(measures(MANY), risk=0.02),
+            load_against_tasks(measures(MANY), risk=0.02, above="optimum"),
         ],
         headroom_per_policy: [
             headroom_per_policy(table, baseline="one-choice"),
@@ -173,6 +173,14 @@ def test_words_lie_inside_and_apart(drawn):
         for (one, a), (other, b) in itertools.combinations(boxes.items(), 2):
             apart = a.x1 <= b.x0 + 1 or b.x1 <= a.x0 + 1 or a.y1 <= b.y0 + 1 or b.y1 <= a.y0 + 1
             assert apart, (name, one.get_text(), other.get_text())
+
+
+def test_words_beside_an_axis_are_no_longer_than_it(drawn):
+    for name, figure in every(drawn):
+        for axes in figure.axes:
+            words = axes.yaxis.label
+            if axes.get_visible() and words.get_text():
+                assert words.get_window_extent().height <= axes.bbox.height + 1, (name, words.get_text())
 
 
 def test_type_has_three_sizes_and_figures_one_width(drawn):
