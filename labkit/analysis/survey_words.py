@@ -1,7 +1,7 @@
 """The survey in words and in tables of text: what a reader gets, and what a record keeps."""
 
 import textwrap
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from typing import Any
 
 import numpy as np
@@ -81,12 +81,19 @@ def links_in_words(links: pd.DataFrame, best: Survey, distance: int) -> str:
         apart = f"No link between servers at most {distance} choices apart lowers the optimum"
         return f"{apart}; other pairs can be given to lk.advise_links as candidates."
     last = links.iloc[-1]
-    count = f"{len(links)} links" if len(links) > 1 else "link"
+    count, verb = (f"{len(links)} links", "lower") if len(links) > 1 else ("link", "lowers")
     if last["optimum"] < best.optimum * (1 - 1e-9):
+        share = percent(100 * links["demand"].sum() / best.fleet.demand.sum())
+        write = writer(best.optimum)
+        before, after = write(best.optimum), write(last["optimum"])
+        if before == after:
+            return (
+                f"The {count} below, with {share} % of all demand re-routed, {verb} the optimum, {before}, by "
+                f"less than the digits shown; the mean is {utilisation(best.mean)}."
+            )
         return (
-            f"The {count} below, with {quantity(links['demand'].sum())} work units of demand re-routed, "
-            f"lower the optimum from {utilisation(best.optimum)} to {utilisation(last['optimum'])}; the mean "
-            f"is {utilisation(best.mean)}."
+            f"The {count} below, with {share} % of all demand re-routed, {verb} the optimum from {before} to "
+            f"{after}; the mean is {utilisation(best.mean)}.{_unseen(links, write)}"
         )
     if best.balanceable:
         return (
@@ -95,6 +102,16 @@ def links_in_words(links: pd.DataFrame, best: Survey, distance: int) -> str:
             f"{links['resistance_before'].iloc[0]:,.4g} to {last['resistance']:,.4g}."
         )
     return f"The {count} below make the bottleneck smaller, but do not lower the optimum yet."
+
+
+def _unseen(links: pd.DataFrame, write: Callable[[float], str]) -> str:
+    """Return a sentence about the steps whose effect the digits shown do not tell."""
+    pairs = zip(links["step"], links["optimum_before"], links["optimum"], strict=True)
+    steps = [str(step) for step, before, after in pairs if write(before) == write(after)]
+    if not steps:
+        return ""
+    which = f"Step {steps[0]} has" if len(steps) == 1 else f"Steps {', '.join(steps[:-1])} and {steps[-1]} have"
+    return f" {which} no visible effect on it."
 
 
 def fact_rows(best: Survey) -> pd.DataFrame:

@@ -9,6 +9,8 @@ import pandas as pd
 import pytest
 
 import labkit as lk
+from labkit.analysis.survey_words import links_in_words
+from labkit.analysis.wording import percent
 from labkit.cli import main
 from labkit.records.project import ROOT
 from labkit.records.store import Store
@@ -70,12 +72,15 @@ def test_a_folder_is_surveyed_recorded_and_repeated(barn, tmp_path, capsys):
     page = (place / "barn-survey.html").read_text(encoding="utf-8")
     assert "No rule can keep the fullest server" in page
     assert "Stopped:" not in page
+    assert "The next cell is" not in page  # a page has no code
 
     # The same survey again is not made again; it prints the words.
     before = {path: path.stat().st_mtime_ns for path in place.iterdir()}
     assert main(["survey", str(barn), *places]) == 0
     words = capsys.readouterr().out
     assert "the servers kiln-1 and kiln-2" in words
+    share = 100 * sum(row["demand"] for row in answer["links"]) / 28
+    assert f"with {percent(share)} % of all demand re-routed," in " ".join(words.split())
     assert f"record: {answer['record']}" in words
     assert {path: path.stat().st_mtime_ns for path in place.iterdir()} == before
 
@@ -87,6 +92,20 @@ def test_a_folder_is_surveyed_recorded_and_repeated(barn, tmp_path, capsys):
     assert value["outage", "kiln-1", "optimum"] == losses["kiln-1"]["optimum"]
     assert main(["rerun", answer["run"], *places[:2]]) == 0
     assert "identical to the bit" in capsys.readouterr().out
+
+
+def test_links_are_told_with_the_share_of_demand_and_what_shows_of_them():
+    fleet = lk.read_fleet(DEMO)
+    best, links = lk.survey(fleet), lk.advise_links(fleet, count=3)
+    assert links["optimum"].round(4).tolist() == [0.8, 0.8, 0.8]
+    told = links_in_words(links, best, 2)
+    assert "with 1.8 % of all demand re-routed, lower the optimum from 0.8333 to 0.8000" in told
+    assert told.endswith("Steps 2 and 3 have no visible effect on it.")
+    alone = links_in_words(links.head(1), best, 2)
+    assert alone.startswith("The link below, with 0.25 % of all demand re-routed, lowers the optimum from")
+    assert "visible" not in alone
+    slight = links.head(1).assign(optimum=best.optimum * (1 - 1e-7))
+    assert "lowers the optimum, 0.8333, by less than the digits shown;" in links_in_words(slight, best, 2)
 
 
 def test_parts_can_be_left_out(barn, tmp_path, capsys):
