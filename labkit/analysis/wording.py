@@ -344,11 +344,11 @@ def quantity(value: float) -> str:
     """Return an amount of work units with thousands separated and at least three digits."""
     if not np.isfinite(value):
         return "–"
-    size = abs(value)
+    size, whole = abs(float(value)), value == round(value)
     if size >= 1e15 or 0 < size < 1e-4:
         return f"{value:.3g}"
-    if 100 <= size < 1000 and value != round(value):
-        return f"{value:.1f}"
-    if size >= 100 or value == round(value):
+    if whole or round(size, 1) >= 1000:  # as it will be written: 999.96 is 1,000
         return f"{value:,.0f}"
+    if round(size, 2) >= 100:
+        return f"{value:.1f}"
     return f"{value:.{max(2, 2 - math.floor(math.log10(size)))}f}"

@@ -82,15 +82,17 @@ def number(value: Any, digits: int = 4) -> str:
         return str(value)
     if isinstance(value, numbers.Integral):
         whole = int(value)
-        return f"{whole:,}" if abs(whole) < 10**15 else f"about 10^{len(str(abs(whole))) - 1}"
+        if abs(whole) < 10**15:
+            return f"{whole:,}".replace("-", "−")
+        return f"about {'−' if whole < 0 else ''}10^{len(str(abs(whole))) - 1}"
     amount = float(value)
     if not math.isfinite(amount):
         return "–" if math.isnan(amount) else ("∞" if amount > 0 else "−∞")
     if amount == round(amount) and abs(amount) < 1e15:
         return f"{amount:,.0f}".replace("-", "−")
-    if abs(amount) >= 10**digits:
-        return f"{amount:,.0f}".replace("-", "−") if abs(amount) < 1e15 else f"{amount:.{digits}g}"
     words = f"{amount:#.{digits}g}"
+    if abs(float(words)) >= 10**digits:  # as it will be written: 9999.99 is 10,000
+        words = f"{amount:,.0f}" if abs(amount) < 1e15 else f"{amount:.{digits}g}"
     return words.rstrip(".").replace("-", "−", 1) if amount < 0 else words.rstrip(".")
 
 

@@ -279,6 +279,9 @@ def test_numbers_are_written_for_reading():
     assert quantity(3.25) == "3.25"
     assert quantity(300.5) == "300.5"
     assert quantity(300.0) == "300"
+    # The form follows what is written, not what was rounded.
+    assert [quantity(value) for value in (999.96, 999.94, 1050.0)] == ["1,000", "999.9", "1,050"]
+    assert [quantity(value) for value in (99.996, 99.99)] == ["100.0", "99.99"]
     assert quantity(np.nan) == "–"
     assert quantity(0.00234) == "0.00234"
     assert utilisation(0.18333) == "0.1833"
