@@ -36,6 +36,12 @@ def printable(text: str) -> str:
     return "".join(each if each.isprintable() else _number_of(each) for each in text)
 
 
+def short(name: Any, longest: int = 40) -> str:
+    """Return a name for a table, cut when it is so long that it would push the other columns out."""
+    text = str(name)
+    return text if len(text) <= longest else f"{text[: longest - 1]}…"
+
+
 def _number_of(character: str) -> str:
     number = ord(character)
     if number > 0xFFFF:

@@ -11,6 +11,7 @@ from labkit.analysis.balance import in_words
 from labkit.analysis.wording import percent, quantity, utilisation, writer
 from labkit.fleet.model import Fleet
 from labkit.survey.facts import Survey
+from labkit.text import short
 
 # Facts that come out of linear algebra, whose last digits differ between processors; a record keeps these.
 _INEXACT = ("algebraic_connectivity", "resistance", "resistance_before")
@@ -110,7 +111,9 @@ def _unseen(links: pd.DataFrame, write: Callable[[float], str]) -> str:
     steps = [str(step) for step, before, after in pairs if write(before) == write(after)]
     if not steps:
         return ""
-    which = f"Step {steps[0]} has" if len(steps) == 1 else f"Steps {', '.join(steps[:-1])} and {steps[-1]} have"
+    which = (
+        f"Step {steps[0]} has" if len(steps) == 1 else f"Steps {', '.join(steps[:-1])} and {steps[-1]} have"
+    )
     return f" {which} no visible effect on it."
 
 
@@ -128,7 +131,7 @@ def outage_rows(lost: pd.DataFrame, most: int = SHOWN) -> pd.DataFrame:
     write = writer(worst["optimum"].max() if len(worst) else 1.0)
     rows = [
         {
-            "lost": " + ".join(str(row[name]) for name in ("server", "second") if name in worst),
+            "lost": " + ".join(short(row[name]) for name in ("server", "second") if name in worst),
             "optimum then": write(row["optimum"]),
             "extra headroom": write(row["extra_headroom"]),
             "mean then": write(row["mean"]),
@@ -151,7 +154,7 @@ def fullest_rows(best: Survey, most: int = SHOWN) -> pd.DataFrame:
         "level": rows["level"].astype(str),
         "bottleneck": rows["bottleneck"].map({True: "yes", False: "no"}),
     }
-    named = pd.Index(rows["server"].astype(str), name="fullest servers")
+    named = pd.Index(rows["server"].map(short), name="fullest servers")
     return pd.DataFrame(found).set_index(named)
 
 
@@ -194,9 +197,9 @@ def rerouted_rows(fleet: Fleet, links: pd.DataFrame, most: int = 2 * SHOWN) -> p
     rows = [
         {
             "step": row["step"],
-            "move to": f"{row['link_1']} – {row['link_2']}",
+            "move to": f"{short(row['link_1'])} – {short(row['link_2'])}",
             "demand": quantity(row["amount"]),
-            "of choice": " – ".join(str(row[name]) for name in options if row[name] == row[name]),
+            "of choice": " – ".join(short(row[name]) for name in options if row[name] == row[name]),
         }
         for row in table.astype(object).to_dict("records")
     ]
@@ -211,7 +214,7 @@ def link_rows(links: pd.DataFrame) -> pd.DataFrame:
         rows.append(
             {
                 "step": row["step"],
-                "link": f"{row['option_1']} – {row['option_2']}",
+                "link": f"{short(row['option_1'])} – {short(row['option_2'])}",
                 "demand re-routed": quantity(row["demand"]),
                 "optimum": f"{write(row['optimum_before'])} → {write(row['optimum'])}",
                 "bottleneck then": _names(row["bottleneck"], row["bottleneck_servers"]),
@@ -340,7 +343,7 @@ def _value(fact: str, value: Any) -> str:
 
 
 def _names(names: Sequence[Any], count: int) -> str:
-    first = [str(name) for name in names[:3]]
+    first = [short(name) for name in names[:3]]
     left = count - len(first)
     more = f"{left:,} more" if first else f"{left:,} servers"
     return ", ".join([*first, *([more] if left > 0 else [])]) or "none"

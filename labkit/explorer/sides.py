@@ -94,7 +94,9 @@ def named_outcomes(fleet: Fleet, outcomes: Any) -> dict[str, Outcome]:
 def _check_alike(what: str, counts: dict[str, int]) -> None:
     if len(set(counts.values())) > 1:
         words = ", ".join(f"{count:,} ({name})" for name, count in counts.items())
-        raise InputError(f"outcomes hold different numbers of {what}, {words}; place as many under each rule.")
+        raise InputError(
+            f"outcomes hold different numbers of {what}, {words}; place as many under each rule."
+        )
 
 
 def _by_policy(outcomes: list[Any]) -> dict[str, Any]:

@@ -9,6 +9,7 @@ import pandas as pd
 import pytest
 
 import labkit as lk
+from labkit.analysis import survey_words
 from labkit.analysis.survey_words import links_in_words
 from labkit.analysis.wording import percent
 from labkit.cli import main
@@ -106,6 +107,24 @@ def test_links_are_told_with_the_share_of_demand_and_what_shows_of_them():
     assert "visible" not in alone
     slight = links.head(1).assign(optimum=best.optimum * (1 - 1e-7))
     assert "lowers the optimum, 0.8333, by less than the digits shown;" in links_in_words(slight, best, 2)
+
+
+def test_long_names_are_cut_in_tables_for_reading_only(barn):
+    long = "kiln-" + "x" * 195
+    for path in barn.iterdir():
+        path.write_text(path.read_text().replace("kiln-1", long))
+    fleet = lk.read_fleet(barn)
+    best, lost, links = lk.survey(fleet), lk.outages(fleet), lk.advise_links(fleet, count=1)
+    cut = f"{long[:39]}…"
+    for table in (
+        survey_words.fact_rows(best), survey_words.fullest_rows(best), survey_words.outage_rows(lost),
+        survey_words.link_rows(links), survey_words.rerouted_rows(fleet, links),
+    ):  # fmt: skip
+        shown = table.drop(columns="meaning", errors="ignore").reset_index().astype(str)
+        assert shown.map(len).to_numpy().max() <= 2 * 40 + 3
+        assert shown.map(lambda cell: cut in cell).to_numpy().any()
+    assert long in survey_words.rerouted_table(fleet, links)["option_1"].tolist()
+    assert long in survey_words.survey_record(best, lost, links)["subject"].tolist()
 
 
 def test_parts_can_be_left_out(barn, tmp_path, capsys):
