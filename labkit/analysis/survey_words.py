@@ -84,13 +84,13 @@ def links_in_words(links: pd.DataFrame, best: Survey, distance: int) -> str:
     last = links.iloc[-1]
     count, verb = (f"{len(links)} links", "lower") if len(links) > 1 else ("link", "lowers")
     if last["optimum"] < best.optimum * (1 - 1e-9):
-        share = percent(100 * links["demand"].sum() / best.fleet.demand.sum())
+        share = percent(100 * links["demand"].sum() / (best.mean * best.fleet.total_capacity))
         write = writer(best.optimum)
         before, after = write(best.optimum), write(last["optimum"])
         if before == after:
             return (
-                f"The {count} below, with {share} % of all demand re-routed, {verb} the optimum, {before}, by "
-                f"less than the digits shown; the mean is {utilisation(best.mean)}."
+                f"The {count} below, with {share} % of all demand re-routed, {verb} the optimum, {before}, "
+                f"by less than the digits shown; the mean is {utilisation(best.mean)}."
             )
         return (
             f"The {count} below, with {share} % of all demand re-routed, {verb} the optimum from {before} to "

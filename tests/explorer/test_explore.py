@@ -149,9 +149,7 @@ def test_of_a_large_fleet_the_nearest_are_drawn():
     assert find(around._state, "17") == 17
     assert find(around._state, " 017 ") == 17
     for typed in ("-3", "--5", "-", "9" * 19, "9" * 5_000):
-        with pytest.raises(
-            InputError, match="no server is called .*; give the name of a server of this fleet"
-        ):
+        with pytest.raises(InputError, match=r"no server is called .*; give the name of a server of"):
             find(around._state, typed)
     assert "9 of 5,000 servers are drawn" in around._repr_mimebundle_()["text/html"]
 
