@@ -207,7 +207,9 @@ class TestRecords:
         (row,) = json.loads(out)
         assert (row["study"], row["rows"], row["parameters"]["tasks"]) == ("s", 6, 4)
         assert row["run_id"] in project("list")[1]
-        assert project("list", "other")[1].startswith("no records in ")
+        status, out, err = project("list", "other")
+        assert (status, out) == (2, "")
+        assert "study is 'other', which has no records; allowed: s." in err
         _, out, _ = project("show", row["run_id"][:6], "--json")
         shown = json.loads(out)
         assert shown["run_id"] == row["run_id"]
